@@ -1,0 +1,260 @@
+"""BenchCore: the bench without its wires. Bytes and requests in; bytes to send and entries to record out.
+
+Pure: it owns no descriptor, clock, file or socket, so that the bench process, the virtual clock and a replay run the
+same lines. The shell must write `Outcome.writes` before it takes the entries: stop first, then tell.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import TypeAlias
+
+from daq.cards.derived import silence_s
+from daq.cards.frame import FrameCard
+from daq.stream.entry import Kind
+from daq.stream.payloads import pack_block, pack_event, pack_raw
+from daq.watch.pipeline import Pipeline
+from daq.watch.requests import Request, StopRequest
+from daq.watch.values import Event, Move, Severity, State, Step, Stop
+from drivers.motion import (
+    Acknowledged,
+    InputsKnown,
+    MotionFact,
+    MotionPort,
+    NotAnswered,
+    UnknownReply,
+)
+from drivers.registry import Decoded, Decoder
+
+NewEntry: TypeAlias = tuple[Kind, int, bytes]
+
+NS = 1_000_000_000
+RECORDER_CAUTION_S = 10.0   # job.md 4, row 27
+RECORDER_STOP_S = 45.0      # job.md 4, row 27; the ring holds 60 s
+MOVING = frozenset(
+    {
+        State.APPROACHING,
+        State.IN_CONTACT,
+        State.SEATING,
+        State.LOADING,
+        State.HOLDING,
+        State.UNLOADING,
+        State.RETURNING,
+    }
+)
+
+
+@dataclass(frozen=True, slots=True)
+class Write:
+    """Bytes for one link. urgent: a STOP, which passes everything that waits."""
+
+    link: int
+    data: bytes
+    urgent: bool = False
+
+
+@dataclass(frozen=True, slots=True)
+class Health:
+    """What the shell sees of the processes around the bench. recorder_silent_s: since its last acknowledgement."""
+
+    stopper_alive: bool
+    recorder_silent_s: float
+
+
+class BenchCore:
+    """One frame's bench. Give it everything that happens, in the order in which it happens."""
+
+    def __init__(
+        self,
+        frame: FrameCard,
+        pipeline: Pipeline,
+        decoders: Sequence[Decoder],
+        motion: MotionPort | None,
+        *,
+        origin_ns: int,
+    ) -> None:
+        assert len(decoders) == len(frame.links)
+        self._frame = frame
+        self.pipeline = pipeline
+        self._decoders = list(decoders)
+        self._motion = motion
+        self._origin_ns = origin_ns
+        self._motion_link = -1
+        if frame.motion is not None:
+            self._motion_link = [link.name for link in frame.links].index(frame.motion.link)
+        self._fresh_s = min(silence_s(link) for link in frame.links)
+        self._heard_s = float("-inf")
+        self._kept_s = float("-inf")
+        self._asked_s = float("-inf")
+        self._writes: list[Write] = []
+        self._entries: list[NewEntry] = []
+        self._received: list[tuple[int, int, bytes]] = []
+        self._blocks: list[tuple[int, Decoded]] = []
+        self._steps: list[tuple[int, Step]] = []
+        self._sent: list[tuple[int, int, bytes]] = []
+        self.discarded_bytes = 0
+        self.rejected: dict[str, int] = {}
+
+    def seconds(self, now_ns: int) -> float:
+        """Stream time of a monotonic instant, s."""
+        return (now_ns - self._origin_ns) * 1e-9
+
+    # --- what happens -------------------------------------------------------------------------------------------
+    def received(self, link: int, data: bytes, now_ns: int) -> list[Write]:
+        """Bytes arrived on a link. Returns what must be written now."""
+        now_s = self.seconds(now_ns)
+        decoded = self._decoders[link].feed(data, now_s)
+        self._received.append((now_ns, link, data))
+        for block in decoded.blocks:
+            self._heard_s = now_s
+            self._obey(self.pipeline.advance(block, now_s), now_ns)
+        if decoded.blocks or decoded.discarded_bytes or decoded.rejected:
+            self._blocks.append((now_ns, decoded))
+        if decoded.inputs:
+            latest = {sample.name: sample.active for sample in decoded.inputs}
+            self._obey(self.pipeline.inputs(latest, now_s), now_ns)
+        for reply in decoded.replies:
+            self._hear(reply, now_ns)
+        return self._take_writes()
+
+    def tick(self, now_ns: int, health: Health) -> list[Write]:
+        """Time passed. Judges silence, asks for the status word, and sends the keep-alive where it is earned."""
+        now_s = self.seconds(now_ns)
+        self._obey(self.pipeline.advance(None, now_s), now_ns)
+        if self._motion is not None:
+            for fact in self._motion.expire(now_s):
+                self._heed(fact, now_ns)
+            self._ask(now_s, now_ns)
+            self._keep_alive(now_s, now_ns, health)
+        return self._take_writes()
+
+    def request(self, request: Request, now_ns: int) -> list[Write]:
+        """The operator asks. Raises Refused with the missing conditions."""
+        self._obey(self.pipeline.request(request, self.seconds(now_ns)), now_ns)
+        return self._take_writes()
+
+    def stop(self, who: str, now_ns: int) -> list[Write]:
+        """A stop request: never refused."""
+        return self.request(StopRequest(who), now_ns)
+
+    def fault(self, name: str, detail: str, now_ns: int) -> list[Write]:
+        """Something around the watch broke: link lost, station silent, recorder behind, ring full."""
+        self._obey(self.pipeline.fault(name, detail, self.seconds(now_ns)), now_ns)
+        return self._take_writes()
+
+    def recorder_silence(self, silent_s: float, now_ns: int) -> list[Write]:
+        """How long the recorder has acknowledged nothing: a caution, then a stop (job.md 4, row 27)."""
+        if silent_s > RECORDER_STOP_S:
+            return self.fault("recorder_lag", f"nothing recorded for {silent_s:.0f} s", now_ns)
+        if silent_s > RECORDER_CAUTION_S:
+            return self.fault("recorder_slow", f"nothing recorded for {silent_s:.0f} s", now_ns)
+        return []
+
+    def reopened(self, link: int, decoder: Decoder, now_ns: int) -> list[Write]:
+        """A lost link is back. Nothing resumes by itself."""
+        self._decoders[link] = decoder
+        return self.fault("link_back", self._frame.links[link].name, now_ns)
+
+    def modem(self, inputs: dict[str, bool | None], now_ns: int) -> list[Write]:
+        """Status inputs read from modem lines."""
+        self._obey(self.pipeline.inputs(inputs, self.seconds(now_ns)), now_ns)
+        return self._take_writes()
+
+    def note(self, name: str, now_ns: int, severity: Severity = Severity.REMARK, **fields: object) -> None:
+        """An event of the shell's own: ports opened, scheduling granted, stopper acted."""
+        event = Event(name, self.seconds(now_ns), severity, fields)  # type: ignore[arg-type]
+        self._steps.append((now_ns, Step(events=(event,))))
+
+    def entries(self) -> list[NewEntry]:
+        """What happened since the last call, ready for the ring; RAW stands directly before its BLOCK."""
+        out: list[NewEntry] = []
+        for now_ns, link, data in self._received:
+            out.append((Kind.RAW, now_ns, pack_raw(link, False, data)))
+        for now_ns, decoded in self._blocks:
+            self._count(decoded, now_ns, out)
+        for now_ns, step in self._steps:
+            out.extend((Kind.EVENT, now_ns, pack_event(flat(event))) for event in step.events)
+        for now_ns, link, data in self._sent:
+            out.append((Kind.RAW, now_ns, pack_raw(link, True, data)))
+        self._received.clear()
+        self._blocks.clear()
+        self._steps.clear()
+        self._sent.clear()
+        return out
+
+    # --- obeying ------------------------------------------------------------------------------------------------
+    def _obey(self, step: Step, now_ns: int) -> None:
+        for action in step.actions:
+            if self._motion is None:
+                continue
+            if isinstance(action, Stop):
+                self._send(self._motion.encode_stop(self.seconds(now_ns)), now_ns, urgent=True)
+            elif isinstance(action, Move):
+                self._send(self._motion.encode_move(action, self.seconds(now_ns)), now_ns)
+                self._kept_s = self.seconds(now_ns)
+        if step.events:
+            self._steps.append((now_ns, step))
+
+    def _send(self, data: bytes, now_ns: int, *, urgent: bool = False) -> None:
+        self._writes.append(Write(self._motion_link, data, urgent))
+        self._sent.append((now_ns, self._motion_link, data))
+
+    def _hear(self, reply: bytes, now_ns: int) -> None:
+        if self._motion is None:
+            self._obey(self.pipeline.fault("unknown_reply", reply[:40].decode("latin-1"), self.seconds(now_ns)), now_ns)
+            return
+        for fact in self._motion.reply(reply, self.seconds(now_ns)):
+            self._heed(fact, now_ns)
+
+    def _heed(self, fact: MotionFact, now_ns: int) -> None:
+        now_s = self.seconds(now_ns)
+        if isinstance(fact, InputsKnown):
+            self._obey(self.pipeline.inputs(dict(fact.inputs), now_s), now_ns)
+        elif isinstance(fact, NotAnswered):
+            self._obey(self.pipeline.fault("not_answered", fact.command, now_s), now_ns)
+        elif isinstance(fact, UnknownReply):
+            self._obey(self.pipeline.fault("unknown_reply", fact.text, now_s), now_ns)
+        else:
+            assert isinstance(fact, Acknowledged)
+
+    # --- what is sent unasked -----------------------------------------------------------------------------------
+    def _ask(self, now_s: float, now_ns: int) -> None:
+        assert self._motion is not None and self._frame.motion is not None
+        status = self._frame.motion.status
+        if status is not None and now_s - self._asked_s >= status.every_s:
+            self._asked_s = now_s
+            self._send(self._motion.query(now_s), now_ns)
+
+    def _keep_alive(self, now_s: float, now_ns: int, health: Health) -> None:
+        assert self._motion is not None and self._frame.motion is not None
+        keep = self._frame.motion.keep_alive
+        if keep is None or self.pipeline.state not in MOVING or now_s - self._kept_s < keep.every_s:
+            return
+        fresh = now_s - self._heard_s <= self._fresh_s
+        if fresh and health.stopper_alive and health.recorder_silent_s <= RECORDER_STOP_S:
+            self._kept_s = now_s
+            self._send(self._motion.keep_alive(now_s), now_ns)
+
+    def _take_writes(self) -> list[Write]:
+        writes, self._writes = self._writes, []
+        return writes
+
+    def _count(self, decoded: Decoded, now_ns: int, out: list[NewEntry]) -> None:
+        out.extend((Kind.BLOCK, now_ns, pack_block(block)) for block in decoded.blocks)
+        if decoded.discarded_bytes or decoded.rejected:
+            self.discarded_bytes += decoded.discarded_bytes
+            for reason, rows in decoded.rejected.items():
+                self.rejected[reason] = self.rejected.get(reason, 0) + rows
+            lost = Event(
+                "rejected",
+                self.seconds(now_ns),
+                Severity.REMARK,
+                {"discarded_bytes": decoded.discarded_bytes, **{f"rows_{k}": v for k, v in decoded.rejected.items()}},
+            )
+            out.append((Kind.EVENT, now_ns, pack_event(flat(lost))))
+
+
+def flat(event: Event) -> dict[str, object]:
+    """An event as the record and the feed carry it."""
+    return {"event": event.name, "time_s": event.time_s, "severity": event.severity.value, **event.fields}

@@ -1,0 +1,405 @@
+"""The bench process: owns the links, the stop socket and the clock; everything that decides is in BenchCore.
+
+It never waits for disk, network or another process. Stop first, then tell: bytes for the machine leave before the
+entries go into the ring. It refuses nothing and decides nothing itself.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import select
+import socket
+import sys
+import time
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+from daq.bench import messages
+from daq.bench.core import BenchCore, Health, Write
+from daq.bench.schedule import hurry, quiet_collector
+from daq.cards.frame import FrameCard
+from daq.errors import DriverError, LinkLost, Refused
+from daq.stream.ring import Ring
+from daq.watch.pipeline import Pipeline, Proven
+from daq.watch.values import Severity
+from drivers.links import Link, open_link
+from drivers.motion import MotionPort
+from drivers.registry import decoder_for
+
+TICK_NS = 10_000_000                # silence, keep-alive and status are judged at least every 10 ms
+STOPPER_BEAT_NS = 20_000_000
+ALIVE_NS = 500_000_000
+REOPEN_NS = 1_000_000_000
+STATION_SILENT_NS = 1_000_000_000   # design.md 2: a station silent for 1 s means a controlled stop
+SUSPEND_NS = 500_000_000            # boot-time clock ahead of the monotonic clock: the computer slept
+PENDING_BYTES_MAX = 4096            # commands waiting for a full output; more means the link is dead
+
+
+@dataclass(frozen=True, slots=True)
+class BenchConfig:
+    """Everything the process is told at its start."""
+
+    frame: dict[str, Any]
+    stream_id: int
+    ring_path: str
+    ring_bytes: int
+    stop_socket: str
+    bench_socket: str
+    life_fd: int
+    stopper_fd: int
+    deadline_s: float
+    clean_start: bool
+    proven: dict[str, bool]
+    fifo: bool = True
+
+
+@dataclass(slots=True)
+class Port:
+    """One link while it lives, and the command bytes its full output has not taken yet."""
+
+    link: Link
+    pending: bytearray = field(default_factory=bytearray)
+    lost: bool = False
+    reopen_ns: int = 0
+
+
+class BenchProcess:
+    """The shell around BenchCore."""
+
+    def __init__(self, config: BenchConfig) -> None:
+        self._config = config
+        self._frame = FrameCard.model_validate_json(json.dumps(config.frame))
+        self._ports = [Port(open_link(link)) for link in self._frame.links]
+        self._origin_ns = time.monotonic_ns()
+        self._ring = Ring.create(config.ring_path, config.ring_bytes, config.stream_id)
+        pipeline = Pipeline(self._frame, clean_start=config.clean_start, proven=Proven(**config.proven))
+        motion = MotionPort(self._frame) if self._frame.motion is not None else None
+        decoders = [decoder_for(self._frame, number) for number in range(len(self._ports))]
+        self._core = BenchCore(self._frame, pipeline, decoders, motion, origin_ns=self._origin_ns)
+        self._stop_socket = bind(config.stop_socket)
+        self._bench_socket = bind(config.bench_socket)
+        self._life = socket.socket(fileno=config.life_fd)
+        self._stopper = socket.socket(fileno=config.stopper_fd)
+        self._life.setblocking(False)
+        self._stopper.setblocking(False)
+        self._stopper_alive = True
+        self._station_heard_ns = 0
+        self._boot_offset_ns = boot_offset_ns()
+        self._due_ns = self._beat_ns = self._alive_ns = 0
+        self._ring_lost = False
+        self._done = False
+        self._poll = select.poll()
+        self._handlers: dict[int, Any] = {}
+
+    def run(self) -> int:
+        """Serve until the supervisor's life pipe ends. Ends in a stop, whatever ends it."""
+        self._introduce()
+        try:
+            while not self._done:
+                self._turn()
+        finally:
+            self._write(self._core.stop("bench process ends", time.monotonic_ns()))
+            self._record()
+            self._goodbye()
+        return 0
+
+    # --- start and end ------------------------------------------------------------------------------------------
+    def _introduce(self) -> None:
+        granted = hurry(fifo=self._config.fifo)
+        self._core.note(
+            "bench_started",
+            time.monotonic_ns(),
+            fifo=granted.fifo,
+            memory_locked=granted.memory_locked,
+            machine_watchdog=self._frame.motion is not None and self._frame.motion.keep_alive is not None,
+        )
+        for number, port in enumerate(self._ports):
+            self._watch(port.link.fileno(), lambda mask, n=number: self._on_link(n, mask))
+        self._watch(self._stop_socket.fileno(), self._on_stop)
+        self._watch(self._bench_socket.fileno(), self._on_message)
+        self._watch(self._life.fileno(), self._on_life)
+        self._watch(self._stopper.fileno(), self._on_stopper)
+        self._hand_links_to_stopper()
+        quiet_collector()
+        self._life.send(b"ready")
+
+    def _hand_links_to_stopper(self) -> None:
+        motion = self._frame.motion
+        links: list[int] = []
+        stop = ""
+        if motion is not None:
+            number = [link.name for link in self._frame.links].index(motion.link)
+            if not self._ports[number].lost:
+                links = [self._ports[number].link.fileno()]
+            end = motion.line_end.encode("latin-1")
+            # a leading line end closes a half-sent command; the second STOP is whole whatever stood before
+            stop = (end + 2 * MotionPort(self._frame).encode_stop(0.0)).hex()
+        order = json.dumps({"deadline_s": self._config.deadline_s, "stop": stop}).encode()
+        try:
+            socket.send_fds(self._stopper, [order], links)
+        except OSError:
+            self._stopper_gone()
+
+    def _goodbye(self) -> None:
+        if self._stopper_alive:
+            try:
+                self._stopper.send(b"bye")
+            except OSError:
+                pass                            # it has gone already; nothing moves
+        for port in self._ports:
+            port.link.close()
+
+    def _watch(self, descriptor: int, handler: Any) -> None:
+        self._handlers[descriptor] = handler
+        self._poll.register(descriptor, select.POLLIN)
+
+    # --- one turn -----------------------------------------------------------------------------------------------
+    def _turn(self) -> None:
+        wait_ms = max(0, self._due_ns - time.monotonic_ns()) // 1_000_000
+        ready = self._poll.poll(wait_ms)
+        stop_fd = self._stop_socket.fileno()
+        if len(ready) > 1:
+            ready.sort(key=lambda item: item[0] != stop_fd)     # a stop request passes everything
+        for descriptor, mask in ready:
+            handler = self._handlers.get(descriptor)
+            if handler is not None:
+                handler(mask)
+        now_ns = time.monotonic_ns()
+        if now_ns >= self._due_ns:
+            self._due_ns = now_ns + TICK_NS
+            self._tick(now_ns)
+
+    def _on_link(self, number: int, mask: int) -> None:
+        port = self._ports[number]
+        if mask & select.POLLOUT:
+            self._flush(number)
+        try:
+            data = port.link.read()
+        except LinkLost as error:
+            self._lose(number, str(error))
+            return
+        if data is not None:
+            self._write(self._core.received(number, data, time.monotonic_ns()))
+            self._record()
+
+    def _on_stop(self, mask: int) -> None:
+        who, address = receive(self._stop_socket)
+        now_ns = time.monotonic_ns()
+        self._write(self._core.stop(who.decode("utf-8", "replace")[:80] or "stop", now_ns))
+        reply(self._stop_socket, address, {"ok": True, "stopped_ns": time.monotonic_ns(), "took_ns": time.monotonic_ns() - now_ns})
+        self._record()
+
+    def _on_message(self, mask: int) -> None:
+        message, address = receive(self._bench_socket)
+        self._station_heard_ns = now_ns = time.monotonic_ns()
+        number = -1
+        try:
+            number, request = messages.decode(message)
+            if request is None:
+                reply(self._bench_socket, address, {"id": number, "ok": True, "snapshot": self._snapshot()})
+                return
+            self._write(self._core.request(request, now_ns))
+            answer: dict[str, Any] = {"id": number, "ok": True}
+        except Refused as error:
+            answer = {"id": number, "ok": False, "missing": list(error.missing)}
+        except ValueError as error:
+            answer = {"id": number, "ok": False, "missing": [f"message not understood: {error}"]}
+        reply(self._bench_socket, address, answer)
+        self._record()
+
+    def _on_life(self, mask: int) -> None:
+        try:
+            self._done = self._life.recv(64) in (b"", b"end")
+        except BlockingIOError:
+            pass
+        except OSError:
+            self._done = True
+
+    def _on_stopper(self, mask: int) -> None:
+        try:
+            word = self._stopper.recv(64)
+        except BlockingIOError:
+            return
+        except OSError:
+            word = b""
+        if word == b"":
+            self._stopper_gone()
+        else:
+            self._fault("bench_late", "the stopper had to act: the bench process was late")
+
+    def _stopper_gone(self) -> None:
+        if self._stopper_alive:
+            self._stopper_alive = False
+            self._poll_drop(self._stopper.fileno())
+            self._fault("stopper_lost", "the stopper process has gone; nothing may move until a restart")
+
+    # --- periodic -----------------------------------------------------------------------------------------------
+    def _tick(self, now_ns: int) -> None:
+        ring = self._ring
+        silent_s = (now_ns - ring.acked_ns) * 1e-9 if ring.acked_ns else (now_ns - self._origin_ns) * 1e-9
+        health = Health(stopper_alive=self._stopper_alive, recorder_silent_s=silent_s)
+        self._write(self._core.tick(now_ns, health))
+        if now_ns - self._beat_ns >= STOPPER_BEAT_NS and self._stopper_alive:
+            self._beat_ns = now_ns
+            try:
+                self._stopper.send(b".")
+            except BlockingIOError:
+                pass                            # it has beats enough to read; its own deadline judges
+            except OSError:
+                self._stopper_gone()
+        self._judge_neighbours(now_ns, silent_s)
+        for number, port in enumerate(self._ports):
+            if port.lost and now_ns >= port.reopen_ns:
+                self._reopen(number, now_ns)
+            elif not port.lost and any(i.source == "modem" for i in self._frame.inputs):
+                self._write(self._core.modem(dict(port.link.modem()), now_ns))
+        if now_ns - self._alive_ns >= ALIVE_NS:
+            self._alive_ns = now_ns
+            try:
+                self._life.send(b".")
+            except OSError:
+                pass                            # the supervisor's end is seen by its end of file
+        self._record()
+
+    def _judge_neighbours(self, now_ns: int, recorder_silent_s: float) -> None:
+        if self._core.pipeline.run is not None:
+            self._write(self._core.recorder_silence(recorder_silent_s, now_ns))
+            if self._core.pipeline.armed and now_ns - self._station_heard_ns > STATION_SILENT_NS:
+                self._fault("station_silent", "the station has been silent for 1 s")
+        offset_ns = boot_offset_ns()
+        if offset_ns - self._boot_offset_ns > SUSPEND_NS:
+            self._boot_offset_ns = offset_ns
+            self._fault("suspended", "the computer slept; whatever happened meanwhile was not seen")
+
+    def _snapshot(self) -> Mapping[str, Any]:
+        return {
+            **self._core.pipeline.snapshot(),
+            "stopper_alive": self._stopper_alive,
+            "ring_lag_bytes": self._ring.lag_bytes,
+            "discarded_bytes": self._core.discarded_bytes,
+            "rejected_rows": sum(self._core.rejected.values()),
+        }
+
+    # --- links --------------------------------------------------------------------------------------------------
+    def _write(self, writes: list[Write]) -> None:
+        for write in writes:
+            port = self._ports[write.link]
+            if port.lost:
+                continue
+            if write.urgent:
+                port.pending.clear()
+            elif port.pending:
+                port.pending += write.data
+                continue
+            try:
+                taken = port.link.write(write.data)
+            except LinkLost as error:
+                self._lose(write.link, str(error))
+                continue
+            if taken < len(write.data):
+                port.pending += write.data[taken:]
+                self._blocked(write, port)
+
+    def _blocked(self, write: Write, port: Port) -> None:
+        if write.urgent and self._stopper_alive:
+            self._stopper.send(b"stop")
+            self._core.note("stop_handed_over", time.monotonic_ns(), Severity.CAUTION, link=write.link)
+        del port.pending[PENDING_BYTES_MAX:]
+        self._poll.modify(port.link.fileno(), select.POLLIN | select.POLLOUT)
+
+    def _flush(self, number: int) -> None:
+        port = self._ports[number]
+        try:
+            del port.pending[: port.link.write(bytes(port.pending))]
+        except LinkLost as error:
+            self._lose(number, str(error))
+            return
+        if not port.pending:
+            self._poll.modify(port.link.fileno(), select.POLLIN)
+
+    def _lose(self, number: int, detail: str) -> None:
+        port = self._ports[number]
+        if port.lost:
+            return
+        port.lost = True
+        port.reopen_ns = time.monotonic_ns() + REOPEN_NS
+        self._poll_drop(port.link.fileno())
+        port.link.close()
+        port.pending.clear()
+        self._fault("link_lost", detail)
+
+    def _reopen(self, number: int, now_ns: int) -> None:
+        port = self._ports[number]
+        port.reopen_ns = now_ns + REOPEN_NS
+        if self._core.pipeline.armed:
+            return                              # nothing is opened while a bar may still be loaded by a command
+        try:
+            port.link = open_link(self._frame.links[number])
+        except DriverError:
+            return                              # still away; tried again in a second, the state says signal lost
+        port.lost = False
+        self._write(self._core.reopened(number, decoder_for(self._frame, number), now_ns))
+        self._watch(port.link.fileno(), lambda mask, n=number: self._on_link(n, mask))
+        if self._stopper_alive:
+            self._hand_links_to_stopper()
+
+    def _poll_drop(self, descriptor: int) -> None:
+        self._handlers.pop(descriptor, None)
+        self._poll.unregister(descriptor)
+
+    def _fault(self, name: str, detail: str) -> None:
+        self._write(self._core.fault(name, detail, time.monotonic_ns()))
+        self._record()
+
+    def _record(self) -> None:
+        entries = self._core.entries()
+        if entries and not self._ring.append_batch(entries) and not self._ring_lost:
+            self._ring_lost = True
+            self._fault("ring_full", "the ring is full: the recorder does not keep up")
+
+
+def bind(path: str) -> socket.socket:
+    server = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM | socket.SOCK_NONBLOCK)
+    server.bind(path)
+    os.chmod(path, 0o600)
+    return server
+
+
+def receive(server: socket.socket) -> tuple[bytes, Any]:
+    try:
+        return server.recvfrom(messages.MESSAGE_BYTES_MAX)
+    except BlockingIOError:
+        return b"", None
+
+
+def reply(server: socket.socket, address: Any, answer: Mapping[str, Any]) -> None:
+    """Answers are a courtesy: a client that has gone or does not read must not hold the bench."""
+    if address:
+        try:
+            server.sendto(json.dumps(answer, separators=(",", ":")).encode(), socket.MSG_DONTWAIT, address)
+        except OSError:
+            pass
+
+
+def boot_offset_ns() -> int:
+    """Boot-time clock minus monotonic clock: grows only while the computer sleeps."""
+    return time.clock_gettime_ns(time.CLOCK_BOOTTIME) - time.monotonic_ns()
+
+
+def main(config_path: str, words: str) -> int:
+    """Entry of the process: one clear line and exit code 4 where a link or the ring cannot be had."""
+    with open(config_path, encoding="utf-8") as file:
+        config = BenchConfig(**json.load(file), **json.loads(words))
+    try:
+        process = BenchProcess(config)
+    except (DriverError, OSError) as error:
+        life = socket.socket(fileno=config.life_fd)
+        life.send(b"failed " + str(error).encode()[:1000])
+        return 4
+    return process.run()
+
+
+if __name__ == "__main__":
+    sys.exit(main(sys.argv[2], sys.argv[3]))

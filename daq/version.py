@@ -1,0 +1,5 @@
+"""The version that goes into every record."""
+
+from importlib.metadata import version
+
+VERSION = version("midspan")
