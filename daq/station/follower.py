@@ -1,0 +1,162 @@
+"""The follower: ring entries -> what viewers are told. Pure: entries in, (kind, body, columns) out.
+
+Keeps the open run, scales blocks with the card's calibration, runs the online reduction, and holds a thinned trace of
+the run so far for late joiners. Loses nothing silently: entries missed because the ring overtook us are counted.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+
+from daq.cards.derived import channels_of
+from daq.cards.frame import FrameCard
+from daq.cards.method import MethodCard
+from daq.cards.series import Specimen
+from daq.results.online import OnlineReduction
+from daq.stream.block import Block, Floats
+from daq.stream.entry import Entry, Kind
+from daq.stream.payloads import unpack_block, unpack_event
+from daq.stream.thin import thin_minmax
+
+TRACE_SO_FAR_ROWS_MAX = 4_000
+TRACE_ROWS_PER_UPDATE_MAX = 1_000     # 20 updates/s: 20,000 rows/s leave unthinned
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Tell:
+    """One thing viewers are told."""
+
+    kind: str
+    body: Mapping[str, Any] = field(default_factory=dict)
+    columns: Mapping[str, Floats] = field(default_factory=dict)
+
+
+class Follower:
+    """Feed it the entries of a ring in order."""
+
+    def __init__(self, frame: FrameCard) -> None:
+        self._frame = frame
+        self._columns = [self._columns_of(link.name) for link in frame.links]
+        self.run: Mapping[str, Any] | None = None
+        self.state = "unknown - look at the frame"
+        self.reason = ""
+        self.faults: list[Mapping[str, Any]] = []
+        self.latest_s = float("nan")
+        self.sequence = -1
+        self._online: OnlineReduction | None = None
+        self._position_mm = float("nan")
+        self._so_far: list[Floats] = []
+
+    # --- in -----------------------------------------------------------------------------------------------------
+    def feed(self, entries: Iterable[Entry]) -> list[Tell]:
+        """Entries in stream order."""
+        tells: list[Tell] = []
+        rows: list[Floats] = []
+        for entry in entries:
+            self.sequence = entry.sequence
+            if entry.kind is Kind.BLOCK:
+                part = self._on_block(unpack_block(entry.payload))
+                if part is not None:
+                    rows.append(part)
+            elif entry.kind is Kind.EVENT:
+                event = {**unpack_event(entry.payload), "sequence": entry.sequence}
+                if event["event"] in ("run_opened", "run_closed"):
+                    self._flush(rows, tells)
+                tells.extend(self._on_event(event))
+        self._flush(rows, tells)
+        return tells
+
+    def summary(self) -> dict[str, Any]:
+        """The numbers of now, from the online reduction; empty before the first block of a run."""
+        return dict(self._online.summary()) if self._online is not None else {}
+
+    def trace_so_far(self) -> dict[str, Floats]:
+        """The run so far, thinned by extremes in time order."""
+        if not self._so_far or self._online is None:
+            return {}
+        table = np.concatenate(self._so_far)
+        if len(table) > TRACE_SO_FAR_ROWS_MAX:
+            table = thin_minmax(table, 1, TRACE_SO_FAR_ROWS_MAX)
+            self._so_far = [table]
+        return self._named(table)
+
+    # --- blocks -------------------------------------------------------------------------------------------------
+    def _columns_of(self, link: str) -> dict[str, int]:
+        places: dict[str, int] = {}
+        for place, channel in enumerate(channels_of(self._frame, link)):
+            places.setdefault(channel.role, place)
+        return places
+
+    def _on_block(self, block: Block) -> Floats | None:
+        self.latest_s = float(block.time_s[-1]) if block.count else self.latest_s
+        if self._online is None:
+            return None
+        places = self._columns[block.source]
+        if "force" in places:
+            return self._online.feed(block.time_s, self._values(block, "force"), self._along(block))
+        if "position" in places and block.count:
+            self._position_mm = float(self._values(block, "position")[-1])
+        return None
+
+    def _along(self, block: Block) -> Floats:
+        """Displacement beside each force sample: the bar's own sensor first, then the crosshead."""
+        for role in ("deflection", "position"):
+            if role in self._columns[block.source]:
+                return self._values(block, role)
+        return np.full(block.count, self._position_mm)
+
+    def _values(self, block: Block, role: str) -> Floats:
+        link = self._frame.links[block.source]
+        place = self._columns[block.source][role]
+        channel = channels_of(self._frame, link.name)[place]
+        values: Floats = channel.sign * (block.counts[:, place] * channel.scale + channel.offset)
+        return values
+
+    # --- events -------------------------------------------------------------------------------------------------
+    def _on_event(self, event: Mapping[str, Any]) -> list[Tell]:
+        name = event["event"]
+        if name == "run_opened":
+            self._open(event)
+        elif name == "state":
+            self.state, self.reason = str(event["to"]), str(event.get("reason", ""))
+        elif name == "tared" and self._online is not None:
+            self._online.tare(float(event["tare_n"]))
+        elif name == "seated" and self._online is not None:
+            self._online.seated(float(event.get("toe_offset_mm") or 0.0))
+        elif name == "fracture" and self._online is not None:
+            self._online.broken()
+        if event.get("severity") in ("stop", "emergency", "caution"):
+            self.faults = [*self.faults[-7:], event]
+        tells = [Tell("event", event)]
+        if name == "run_closed":
+            self.run = None
+        return tells
+
+    def _open(self, event: Mapping[str, Any]) -> None:
+        self.run = event["run"]
+        self.faults = []
+        self._so_far = []
+        method = MethodCard.model_validate(event["method"], strict=False)
+        specimen = Specimen.model_validate(event["specimen_card"], strict=False)
+        self._online = OnlineReduction(self._frame, method, specimen, str(event["fixture"]))
+
+    # --- traces -------------------------------------------------------------------------------------------------
+    def _flush(self, rows: list[Floats], tells: list[Tell]) -> None:
+        if rows:
+            table = np.concatenate(rows)
+            rows.clear()
+            if self.run is not None:
+                self._so_far.append(table)
+            if len(self._so_far) > 200:
+                self.trace_so_far()
+            if len(table) > TRACE_ROWS_PER_UPDATE_MAX:
+                table = thin_minmax(table, 1, TRACE_ROWS_PER_UPDATE_MAX)
+            tells.append(Tell("trace", {"run_id": (self.run or {}).get("run_id", "")}, self._named(table)))
+
+    def _named(self, table: Floats) -> dict[str, Floats]:
+        assert self._online is not None
+        return {name: table[:, place] for place, name in enumerate(self._online.COLUMNS)}

@@ -1,0 +1,135 @@
+"""Entry of the recorder, archivist and station processes: joins the rooms that may not import each other.
+
+The archivist gets the reduction handed in here, since daq.record knows nothing of daq.results.
+"""
+
+from __future__ import annotations
+
+import json
+import signal
+import socket
+import sys
+import time
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+from daq.station.places import Places
+
+ALIVE_S = 0.5
+
+
+class Life:
+    """Our end of the supervisor's pipe: end of file or "end" means finish; a dot now and then says we are alive."""
+
+    def __init__(self, descriptor: int) -> None:
+        self._pipe = socket.socket(fileno=descriptor)
+        self._pipe.setblocking(False)
+        self._said_s = 0.0
+        self._over = False
+
+    def ready(self) -> None:
+        self._pipe.send(b"ready")
+
+    def over(self) -> bool:
+        """Whether to finish; says that we are alive."""
+        now_s = time.monotonic()
+        if now_s - self._said_s > ALIVE_S:
+            self._said_s = now_s
+            self._say()
+        try:
+            self._over |= self._pipe.recv(64) in (b"", b"end")
+        except BlockingIOError:
+            pass
+        except OSError:
+            self._over = True
+        return self._over
+
+    def _say(self) -> None:
+        try:
+            self._pipe.send(b".")
+        except OSError:
+            pass                                # a supervisor that has gone is seen by its end of file
+
+
+class Reporter:
+    """Datagrams to the station; lost when it is away, since everything true is on disk."""
+
+    def __init__(self, role: str, station_socket: Path) -> None:
+        self._role = role
+        self._path = str(station_socket)
+        self._socket = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM | socket.SOCK_NONBLOCK)
+
+    def __call__(self, report: Mapping[str, Any]) -> None:
+        try:
+            self._socket.sendto(json.dumps({"from": self._role, **report}).encode(), self._path)
+        except OSError:
+            pass                                # no station just now
+
+
+def places_of(config: Mapping[str, Any]) -> Places:
+    stored = config["places"]
+    return Places(stored["frame"], Path(stored["runtime"]), Path(stored["data"]))
+
+
+def await_path(path: Path, life: Life) -> bool:
+    """Wait for a file of the bench process; False when told to end first."""
+    while not path.exists():
+        if life.over():
+            return False
+        time.sleep(0.005)
+    return True
+
+
+def recorder(config: Mapping[str, Any], life: Life) -> int:
+    from daq.record.recorder import run_recorder
+
+    places = places_of(config)
+    ring = Path(config["ring_path"])
+    life.ready()
+    if await_path(ring, life):
+        report = Reporter("recorder", places.station_socket)
+        run_recorder(ring, places.journal(config["stream_id"]), report, life.over)
+    return 0
+
+
+def archivist(config: Mapping[str, Any], life: Life) -> int:
+    from daq.record.archivist import run_archivist
+    from daq.record.recover import recover
+    from daq.results.reduce import reduce
+
+    places = places_of(config)
+    report = Reporter("archivist", places.station_socket)
+    journal = places.journal(config["stream_id"])
+    copy_to = Path(config["copy_to"]) if config.get("copy_to") else None
+
+    def result_of(run: Any) -> Mapping[str, Any]:
+        return reduce(run).as_json()
+
+    life.ready()
+    for leftover in sorted(places.spool.glob("journal-*")):
+        if leftover != journal:
+            recover(leftover, places.data, reduce=result_of, report=report)
+    if await_path(journal, life):
+        run_archivist(journal, places.data, places.spool, result_of, report, life.over, copy_to)
+    return 0
+
+
+def station(config: Mapping[str, Any], life: Life) -> int:
+    from daq.station.station import run_station
+
+    return run_station(config, places_of(config), life)
+
+
+ROLES = {"recorder": recorder, "archivist": archivist, "station": station}
+
+
+def main(role: str, config_path: str, words: str) -> int:
+    """Run one role until the life pipe ends."""
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    config = json.loads(Path(config_path).read_text(encoding="utf-8"))
+    return ROLES[role](config, Life(json.loads(words)["life_fd"]))
+
+
+if __name__ == "__main__":
+    sys.exit(main(*sys.argv[1:4]))

@@ -1,0 +1,378 @@
+"""The station process: the operator's seat, the control endpoint, the feed and the online reduction (asyncio).
+
+It can ask the bench for things, never touch a link. If it hangs or dies the bench stops by itself after 1 s.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import datetime as dt
+import json
+import os
+import secrets
+import socket
+import time
+import uuid
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+import zmq
+import zmq.asyncio
+
+from daq.bench import messages
+from daq.cards.frame import FrameCard
+from daq.cards.load import load_series
+from daq.cards.questions import questions
+from daq.errors import CardError, MidspanError, Refused
+from daq.station.follower import Follower, Tell
+from daq.station.found import found_records, sealed_from_report
+from daq.station.places import Places
+from daq.station.processes import Life
+from daq.station.seat import Seat
+from daq.station.sitting import Sitting
+from daq.stream.ring import RingReader
+from daq.stream.updates import Update, encode
+from daq.version import VERSION
+from daq.watch import requests
+from daq.watch.requests import Request
+
+FOLLOW_S = 0.05                     # 20 updates/s for traces
+BEAT_S = 0.1                        # snapshot request = heartbeat; the bench stops after 1 s without
+SUMMARY_EVERY = 2                   # of the follow turns: 10/s
+HEARTBEAT_S = 1.0                   # a state update at least once a second
+ANSWER_TIMEOUT_S = 1.0
+FEED_QUEUE_UPDATES_MAX = 1_000      # per viewer; ZeroMQ drops beyond, the numbers show it
+REPORT_BYTES_MAX = 65_536
+
+
+class BenchLine:
+    """Requests to the bench process and its answers, over datagrams."""
+
+    def __init__(self, places: Places) -> None:
+        self._address = str(places.bench_socket)
+        self._own = str(places.runtime / f"station-{os.getpid()}")
+        self._socket = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM | socket.SOCK_NONBLOCK)
+        self._socket.bind(self._own)
+        self._number = 0
+        self._waiting: dict[int, asyncio.Future[dict[str, Any]]] = {}
+        asyncio.get_running_loop().add_reader(self._socket.fileno(), self._hear)
+
+    async def ask(self, request: Request) -> None:
+        """Raises Refused with what the bench said."""
+        answer = await self._send(messages.encode_request(self._next(), request))
+        if not answer.get("ok"):
+            raise Refused(type(request).__name__, tuple(answer.get("missing", ())))
+
+    async def snapshot(self) -> dict[str, Any]:
+        """The watch's present values; the bench takes it as our heartbeat."""
+        answer = await self._send(messages.encode_snapshot_request(self._next()))
+        snapshot: dict[str, Any] = answer.get("snapshot", {})
+        return snapshot
+
+    def close(self) -> None:
+        asyncio.get_running_loop().remove_reader(self._socket.fileno())
+        self._socket.close()
+        Path(self._own).unlink(missing_ok=True)
+
+    def _next(self) -> int:
+        self._number += 1
+        return self._number
+
+    async def _send(self, message: bytes) -> dict[str, Any]:
+        number = self._number
+        future: asyncio.Future[dict[str, Any]] = asyncio.get_running_loop().create_future()
+        self._waiting[number] = future
+        try:
+            self._socket.sendto(message, self._address)
+            return await asyncio.wait_for(future, ANSWER_TIMEOUT_S)
+        except (OSError, TimeoutError) as error:
+            raise Refused("bench", ("the bench process does not answer",)) from error
+        finally:
+            self._waiting.pop(number, None)
+
+    def _hear(self) -> None:
+        while True:
+            try:
+                message = self._socket.recv(messages.MESSAGE_BYTES_MAX)
+            except BlockingIOError:
+                return
+            answer = json.loads(message)
+            future = self._waiting.get(answer.get("id", -1))
+            if future is not None and not future.done():
+                future.set_result(answer)
+
+
+class Station:
+    """Joins ring, bench line, control and feed."""
+
+    def __init__(self, config: Mapping[str, Any], places: Places, life: Life) -> None:
+        self._config = config
+        self._places = places
+        self._life = life
+        self._frame = FrameCard.model_validate_json(json.dumps(config["frame"]))
+        self._follower = Follower(self._frame)
+        self._seat = Seat()
+        self._sitting: Sitting | None = None
+        self._snapshot: dict[str, Any] = {}
+        self._archivist_caught_up = False
+        self._copies: dict[str, Any] = {}
+        self._reports: dict[str, Any] = {}
+        self._number = 0
+        self._lost_entries = 0
+        self._context = zmq.asyncio.Context()
+
+    async def run(self) -> None:
+        """Serve until the life pipe ends."""
+        self._bench = BenchLine(self._places)
+        self._feed = self._context.socket(zmq.PUB)
+        self._feed.set(zmq.SNDHWM, FEED_QUEUE_UPDATES_MAX)
+        self._feed.bind(self._places.feed_address)
+        self._control = self._context.socket(zmq.ROUTER)
+        self._control.bind(self._places.control_address)
+        self._reports_socket = self._open_reports()
+        tasks = [asyncio.create_task(body()) for body in (self._follow, self._beat, self._serve, self._end)]
+        self._life.ready()
+        try:
+            done, _ = await asyncio.wait(tasks, return_when=asyncio.FIRST_COMPLETED)
+            for task in done:
+                task.result()
+        finally:
+            for task in tasks:
+                task.cancel()
+            await asyncio.gather(*tasks, return_exceptions=True)
+            self._bench.close()
+            self._context.destroy(linger=0)
+
+    async def _end(self) -> None:
+        while not self._life.over():
+            await asyncio.sleep(0.05)
+
+    # --- ring -> feed -------------------------------------------------------------------------------------------
+    async def _follow(self) -> None:
+        ring = Path(self._config["ring_path"])
+        while not ring.exists():
+            await asyncio.sleep(0.01)
+        reader = RingReader(ring)
+        turn, heard_s = 0, 0.0
+        while True:
+            for tell in self._follower.feed(reader.read_new()):
+                self._notice(tell)
+                await self._publish(tell)
+            turn += 1
+            if turn % SUMMARY_EVERY == 0:
+                await self._publish(Tell("summary", self._summary()))
+            if time.monotonic() - heard_s > HEARTBEAT_S:
+                heard_s = time.monotonic()
+                await self._publish(Tell("state", self._state()))
+            self._lost_entries = reader.lost_entries
+            await asyncio.sleep(FOLLOW_S)
+
+    def _notice(self, tell: Tell) -> None:
+        if tell.kind == "event" and tell.body["event"] == "run_closed" and self._sitting is not None:
+            self._sitting.closed(str(tell.body["run_id"]))
+
+    async def _publish(self, tell: Tell) -> None:
+        self._number += 1
+        update = Update(
+            self._number, tell.kind, self._frame.name, utc_now(), self._frame.simulated, tell.body, tell.columns
+        )
+        await self._feed.send_multipart(encode(update))
+        if tell.kind == "event" and tell.body["event"] in ("state", "run_opened", "run_closed"):
+            await self._publish(Tell("state", self._state()))
+
+    async def _beat(self) -> None:
+        while True:
+            try:
+                self._snapshot = await self._bench.snapshot()
+            except Refused:
+                self._snapshot = {"state": "bench process does not answer"}
+            await asyncio.sleep(BEAT_S)
+
+    # --- what viewers see ---------------------------------------------------------------------------------------
+    def _summary(self) -> dict[str, Any]:
+        age_s = self._snapshot.get("data_age_s")
+        return {**self._follower.summary(), **self._snapshot, "data_age_s": age_s, "sequence": self._follower.sequence}
+
+    def _state(self) -> dict[str, Any]:
+        sitting = self._sitting
+        run = self._follower.run
+        place = sitting.place_of(run["specimen"]) if sitting and run and run["specimen"] in sitting.loaded_numbers else 0
+        return {
+            "state": self._snapshot.get("state", self._follower.state),
+            "reason": self._follower.reason,
+            "operator": self._seat.operator,
+            "run": dict(run) if run else None,
+            "bar": place,
+            "bars": len(sitting.bars) if sitting else 0,
+            "series": sitting.loaded.card.name if sitting else "",
+            "faults": list(self._follower.faults),
+            "lost_entries": self._lost_entries,
+            "reports": self._reports,
+        }
+
+    def _look(self) -> dict[str, Any]:
+        trace = self._follower.trace_so_far()
+        return {
+            "version": VERSION,
+            "frame": self._frame.model_dump(mode="json"),
+            "state": self._state(),
+            "summary": self._summary(),
+            "sitting": self._sitting.as_json() if self._sitting else None,
+            "trace": {name: [finite(value) for value in column] for name, column in trace.items()},
+        }
+
+    # --- reports of recorder and archivist ----------------------------------------------------------------------
+    def _open_reports(self) -> socket.socket:
+        self._places.station_socket.unlink(missing_ok=True)
+        reports = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM | socket.SOCK_NONBLOCK)
+        reports.bind(str(self._places.station_socket))
+        asyncio.get_running_loop().add_reader(reports.fileno(), self._hear_reports)
+        return reports
+
+    def _hear_reports(self) -> None:
+        while True:
+            try:
+                report = json.loads(self._reports_socket.recv(REPORT_BYTES_MAX))
+            except BlockingIOError:
+                return
+            if report.get("from") == "archivist":
+                self._archivist_caught_up |= report.get("report") != "recovering"
+            if report.get("report") == "sealed":
+                asyncio.get_running_loop().create_task(self._on_sealed(report))
+            else:
+                self._reports[str(report.get("from"))] = report
+
+    async def _on_sealed(self, report: Mapping[str, Any]) -> None:
+        sealed = sealed_from_report(report)
+        if self._sitting is not None and report.get("series") == self._sitting.loaded.card.name:
+            self._sitting.sealed(sealed)
+        await self._publish(Tell("result", dict(report)))
+
+    # --- control ------------------------------------------------------------------------------------------------
+    async def _serve(self) -> None:
+        while True:
+            parts = await self._control.recv_multipart()
+            answer = await self._answer(parts[-1])
+            await self._control.send_multipart([*parts[:-1], json.dumps(answer).encode()])
+
+    async def _answer(self, message: bytes) -> dict[str, Any]:
+        try:
+            command = json.loads(message)
+            body = await self._do(str(command["do"]), command)
+            return {"ok": True, **body}
+        except Refused as error:
+            return {"ok": False, "refused": error.command, "missing": list(error.missing)}
+        except CardError as error:
+            return {"ok": False, "refused": "series", "missing": list(error.problems)}
+        except MidspanError as error:
+            return {"ok": False, "refused": "", "missing": [str(error)]}
+        except (ValueError, KeyError, TypeError) as error:
+            return {"ok": False, "refused": "", "missing": [f"command not understood: {error!r}"]}
+
+    async def _do(self, command: str, words: Mapping[str, Any]) -> dict[str, Any]:
+        """One command. Everything but looking, sitting down and stopping needs the seat."""
+        if command == "look":
+            return {"look": self._look()}
+        if command == "stop":
+            await self._bench.ask(requests.StopRequest(str(words.get("who", "control"))))
+            return {}
+        if command == "sit":
+            token = secrets.token_hex(16)
+            self._seat.sit(str(words["operator"]), token, instead=bool(words.get("instead", False)))
+            return {"seat": token}
+        self._seat.check(command, str(words.get("seat", "")))
+        if command == "rise":
+            self._seat.rise(str(words["seat"]))
+            return {}
+        if command == "series":
+            return self._take_series(words)
+        if command == "mount":
+            return await self._mount(words)
+        await self._bench.ask(plain_request(command, words, self._seat.operator))
+        return {}
+
+    def _take_series(self, words: Mapping[str, Any]) -> dict[str, Any]:
+        if self._follower.run is not None:
+            raise Refused("series", ("a run is open; close it first",))
+        loaded = load_series(Path(str(words["path"])))
+        asked = questions(self._frame, loaded.method, loaded.specimens)
+        if asked and not words.get("sure", False):
+            return {"questions": [question.text for question in asked]}
+        found = found_records(self._places.data, loaded.card.name)
+        self._sitting = Sitting(loaded, found)
+        return {"questions": [], "sitting": self._sitting.as_json()}
+
+    async def _mount(self, words: Mapping[str, Any]) -> dict[str, Any]:
+        if self._sitting is None:
+            raise Refused("mount", ("no series is open; load one first",))
+        if not self._archivist_caught_up:
+            raise Refused("mount", ("records of an earlier run are still being recovered; try again in a moment",))
+        sitting = self._sitting
+        number = str(words.get("specimen") or sitting.next_number() or "")
+        if not number:
+            raise Refused("mount", ("every bar of this series is broken",))
+        run_id = str(uuid.uuid4())
+        loading = sitting.open(number, run_id)
+        try:
+            await self._bench.ask(self._open_run(number, loading, run_id, words))
+        except Refused:
+            sitting.refused(number)
+            raise
+        return {"specimen": number, "loading": loading, "run_id": run_id, "bar": sitting.place_of(number)}
+
+    def _open_run(self, number: str, loading: int, run_id: str, words: Mapping[str, Any]) -> requests.OpenRun:
+        assert self._sitting is not None
+        card = self._sitting.loaded.card
+        run = {
+            "run_id": run_id,
+            "series": card.name,
+            "specimen": number,
+            "loading": loading,
+            "operator": self._seat.operator,
+            "material": card.material,
+            "temperature_c": card.temperature_c,
+            "humidity_percent": card.humidity_percent,
+            "utc": utc_now(),
+            "local": dt.datetime.now().astimezone().isoformat(timespec="milliseconds"),
+            "version": VERSION,
+        }
+        return requests.OpenRun(
+            run=run,
+            specimen=self._sitting.bar(number).specimen.model_dump(mode="json"),
+            method=self._sitting.loaded.method.model_dump(mode="json"),
+            fixture=card.fixture,
+            tare_override_reason=str(words.get("tare_override_reason", "")),
+        )
+
+
+def plain_request(command: str, words: Mapping[str, Any], operator: str) -> Request:
+    """Commands that go to the bench as they are."""
+    if command == "start":
+        return requests.StartRun()
+    if command == "close":
+        return requests.CloseRun(str(words.get("reason", "")) or "operator")
+    if command == "jog":
+        return requests.Jog(float(words["distance_mm"]), float(words["speed_mm_min"]))
+    if command == "return":
+        return requests.ReturnCrosshead(float(words["distance_mm"]), float(words["speed_mm_min"]))
+    if command == "reset":
+        return requests.Reset(operator, looked=bool(words.get("looked", False)))
+    if command == "note":
+        return requests.Note(str(words["text"])[:400])
+    if command == "tighten":
+        return requests.TightenLimit(str(words["key"]), float(words["value"]))
+    raise Refused(command, ("no such command",))
+
+
+def utc_now() -> str:
+    return dt.datetime.now(dt.UTC).isoformat(timespec="milliseconds")
+
+
+def finite(value: float) -> float | None:
+    return float(value) if value == value and abs(value) != float("inf") else None
+
+
+def run_station(config: Mapping[str, Any], places: Places, life: Life) -> int:
+    asyncio.run(Station(config, places, life).run())
+    return 0
