@@ -1,0 +1,5 @@
+"""The numbered stream: entries, their payloads, ring and journal that carry them, clock and continuity.
+
+entry.py, payloads.py, clock.py, continuity.py, block.py and rundata.py are pure. ring*.py, journal*.py and
+files.py own bytes in memory and on disk; they read no clock and decide nothing about the test.
+"""
