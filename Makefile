@@ -1,0 +1,40 @@
+# One command each. Everything runs in .venv with the pinned packages of constraints.txt. Linux, Python 3.11 to 3.13.
+PYTHON ?= python3
+VENV := .venv
+BIN := $(VENV)/bin
+SEED ?= 7
+DEMO ?= --out demo-out --bars 3
+
+.PHONY: demo test check bench soak sim setup clean
+
+demo: setup
+	$(BIN)/midspan demo $(DEMO)
+
+test: setup
+	$(BIN)/python -m pytest tests
+
+check: setup
+	$(BIN)/ruff check . && $(BIN)/ruff format --check . && $(BIN)/mypy
+	$(BIN)/python -m pytest tests
+
+bench: setup
+	$(BIN)/python -m benchmarks --out bench-out
+
+soak: setup
+	$(BIN)/python -m tests.soak --out soak-out
+
+sim: setup
+	$(BIN)/python -m tests.scenarios.run --seed $(SEED)
+
+setup: $(VENV)/ready
+
+$(VENV)/ready: pyproject.toml constraints.txt
+	@$(PYTHON) -c 'import sys; sys.exit(None if (3, 11) <= sys.version_info[:2] <= (3, 13) else "midspan needs Python 3.11 to 3.13, this is " + sys.version.split()[0])'
+	@$(PYTHON) -c 'import sys; sys.exit(None if sys.platform == "linux" else "midspan runs on Linux only for now")'
+	$(PYTHON) -m venv $(VENV)
+	$(BIN)/pip install --quiet --upgrade pip
+	$(BIN)/pip install --quiet -c constraints.txt -e '.[dev]'
+	@touch $(VENV)/ready
+
+clean:
+	rm -rf $(VENV) demo-out bench-out soak-out

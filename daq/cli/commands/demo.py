@@ -1,0 +1,186 @@
+"""midspan demo: the whole stack on a virtual frame, several bars, a picture and a table at the end."""
+
+from __future__ import annotations
+
+import csv
+import datetime as dt
+import os
+import socket
+import subprocess
+import sys
+import tempfile
+import time
+from collections.abc import Iterator, Mapping, Sequence
+from contextlib import contextmanager
+from importlib import resources
+from pathlib import Path
+from typing import Any
+
+import click
+import numpy as np
+from rich.console import Console
+from rich.table import Table
+
+from daq.cards.frame import FrameCard
+from daq.cards.load import load_frame
+from daq.cli.session import Session
+from daq.errors import MidspanError
+from daq.station.client import Client
+from daq.station.places import places_for
+from daq.station.supervisor import Outfit, Supervisor
+from daq.stream.updates import Update
+from monitor.presenter import Presenter, words
+from monitor.terminal import TerminalView
+
+BARS_MAX = 100
+WIRE_TIMEOUT_S = 15.0
+BAR_TIMEOUT_S = 120.0
+
+
+@click.command()
+@click.option(
+    "--out",
+    type=click.Path(file_okay=False, path_type=Path),
+    default=Path("demo-out"),
+    show_default=True,
+    help="Folder for records, picture and table.",
+)
+@click.option("--bars", type=click.IntRange(1, BARS_MAX), default=3, show_default=True, help="How many bars to break.")
+@click.option("--seed", type=int, default=7, show_default=True, help="Seed of sizes, flaws and noise.")
+@click.option("--no-window", is_flag=True, help="Stay in the terminal (there is no window yet).")
+def command(out: Path, bars: int, seed: int, no_window: bool) -> None:
+    """Break a few simulated alumina bars at true pace: real processes, a real pty, sealed HDF5 records.
+
+    Example: midspan demo --out demo-out --bars 3
+    """
+    del no_window
+    console = Console()
+    out = out.absolute()
+    series = "demo-" + dt.datetime.now(dt.UTC).strftime("%Y%m%d-%H%M%S")
+    cards = write_cards(out / "cards", series, bars, seed)
+    with tempfile.TemporaryDirectory(prefix="midspan-demo-") as scratch:
+        frame = with_port(load_frame(cards / "kiln-lane-demo.toml"), Path(scratch))
+        with virtual_frame(cards, Path(scratch), seed) as hands:
+            outfit = Outfit(frame, places_for(frame.name, out))
+            with Supervisor(outfit, lambda text: console.print(text, markup=False)) as supervisor:
+                reports = break_bars(console, supervisor, outfit, cards / f"{series}.toml", hands)
+    finish(console, out / series, series, reports)
+
+
+# --- cards and the virtual frame --------------------------------------------------------------------------------
+def write_cards(folder: Path, series: str, bars: int, seed: int) -> Path:
+    """The demo's own copies of the shipped cards, with a bench sheet of as many bars as asked for."""
+    folder.mkdir(parents=True, exist_ok=True)
+    shipped = resources.files("daq.cards") / "examples"
+    for name in ("kiln-lane-demo.toml", "alumina-demo.toml"):
+        (folder / name).write_text((shipped / name).read_text("utf-8"), encoding="utf-8")
+    card = (shipped / "demo-series.toml").read_text("utf-8")
+    card = card.replace('"demo-series"', f'"{series}"').replace('"demo-series.csv"', f'"{series}.csv"')
+    (folder / f"{series}.toml").write_text(card, encoding="utf-8")
+    write_sheet(folder / f"{series}.csv", bars, seed)
+    simulated = resources.files("simulator") / "examples" / "alumina.toml"
+    (folder / "alumina.toml").write_text(simulated.read_text("utf-8"), encoding="utf-8")
+    return folder
+
+
+def write_sheet(path: Path, bars: int, seed: int) -> None:
+    random = np.random.default_rng(seed)
+    with path.open("w", newline="", encoding="utf-8") as file:
+        sheet = csv.writer(file)
+        sizes = [f"{side}_{place}_mm" for side in ("width", "thickness") for place in (1, 2, 3)]
+        sheet.writerow(["number", *sizes, "chamfer_mm"])
+        for number in range(1, bars + 1):
+            width, thickness = random.uniform(3.98, 4.02), random.uniform(2.98, 3.02)
+            readings = [f"{side + random.uniform(-0.002, 0.002):.3f}" for side in [width] * 3 + [thickness] * 3]
+            sheet.writerow([f"DEMO-{number:02d}", *readings, "0.12"])
+
+
+def with_port(frame: FrameCard, folder: Path) -> FrameCard:
+    """The card's pty stands in the demo's scratch folder."""
+    link = frame.links[0].model_copy(update={"port": str(folder / str(frame.links[0].port))})
+    return frame.model_copy(update={"links": (link, *frame.links[1:])})
+
+
+@contextmanager
+def virtual_frame(cards: Path, folder: Path, seed: int) -> Iterator[Path]:
+    """`midspan simulate` as its own process, in the scratch folder; yields the socket of the person's hands."""
+    hands = folder / "hands"
+    words = ["simulate", str(cards / "kiln-lane-demo.toml"), "--bars", str(cards / "alumina.toml")]
+    command = [sys.executable, "-m", "daq.cli.entry", *words, "--seed", str(seed), "--hands", str(hands)]
+    process = subprocess.Popen(command, cwd=folder, stdin=subprocess.DEVNULL, stdout=subprocess.DEVNULL)
+    try:
+        until_s = time.monotonic() + WIRE_TIMEOUT_S
+        while not (hands.exists() and any(folder.glob("*.tty"))):
+            if process.poll() is not None or time.monotonic() > until_s:
+                raise MidspanError("the virtual frame did not start; its message stands above")
+            time.sleep(0.02)
+        yield hands
+    finally:
+        process.terminate()
+        process.wait(5)
+
+
+def lay_bar(hands: Path, specimen: Mapping[str, Any]) -> None:
+    """The simulated person lays the next bar on the rollers."""
+    import json
+
+    with socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM) as line:
+        line.sendto(json.dumps({"mount": dict(specimen)}).encode(), str(hands))
+
+
+# --- the series -------------------------------------------------------------------------------------------------
+def break_bars(
+    console: Console, supervisor: Supervisor, outfit: Outfit, series: Path, hands: Path
+) -> list[Mapping[str, Any]]:
+    from daq.cards.load import load_series
+
+    loaded = load_series(series)
+    presenter = Presenter()
+    reports: list[Mapping[str, Any]] = []
+    with Client(outfit.places) as client, TerminalView(console) as view:
+        presenter.take_look(client.look(), time.monotonic())
+
+        def on_update(update: Update | None) -> None:
+            now_s = time.monotonic()
+            if update is not None:
+                presenter.take(update, now_s)
+            if not supervisor.look():
+                raise MidspanError("the bench process has ended")
+            view.show(presenter.lines(now_s), now_s)
+
+        client.sit(loaded.card.operator)
+        client.do("series", path=str(series))
+        session = Session(client, on_update)
+        for specimen in loaded.specimens:
+            lay_bar(hands, specimen.model_dump(mode="json"))
+            report = session.break_bar(specimen.number, timeout_s=BAR_TIMEOUT_S)
+            reports.append(report)
+            view.say(f"{specimen.number}: sealed in {report.get('seal_s', 0.0):.2f} s: {report['path']}")
+        client.rise()
+    return reports
+
+
+# --- what is left ----------------------------------------------------------------------------------------------
+def finish(console: Console, folder: Path, series: str, reports: Sequence[Mapping[str, Any]]) -> None:
+    """Summary table on screen and as CSV, picture of the series."""
+    from daq.record.read import read_meta, read_run
+    from daq.series.picture import series_picture
+
+    columns = ["number", "peak_n", "strength_mpa", "strength_u_mpa", "stress_rate_mpa_s", "break_class", "verdict"]
+    table = Table(title=f"{series} - SIMULATED DATA")
+    for name in columns:
+        table.add_column(name)
+    with (folder / f"{series}.csv").open("x", newline="", encoding="utf-8") as file:
+        sheet = csv.writer(file)
+        sheet.writerow(columns)
+        for report in reports:
+            result = report["result"]
+            row = [report["specimen"], *(result.get(name) for name in columns[1:])]
+            sheet.writerow(row)
+            table.add_row(*(words(value, 2, "") if isinstance(value, float) else str(value) for value in row))
+    paths = [Path(str(report["path"])) for report in reports]
+    records = [(str(r["specimen"]), read_run(p), read_meta(p)["result"]) for r, p in zip(reports, paths, strict=True)]
+    picture = folder / f"{series}.png"
+    series_picture(records, picture, series)
+    console.print(table)
+    console.print(f"records  {folder}{os.sep}*.h5\npicture  {picture}\ntable    {folder / f'{series}.csv'}", soft_wrap=True)

@@ -1,0 +1,27 @@
+"""midspan recover: rebuild records from journals."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import click
+
+from daq.cli.options import DATA
+
+
+@click.command()
+@click.argument("journals", type=click.Path(exists=True, file_okay=False, path_type=Path), nargs=-1, required=True)
+@DATA
+def command(journals: tuple[Path, ...], data: Path) -> None:
+    """Rebuild every record of the named journal folders. May be called again and again, and be killed at any time.
+
+    `midspan serve` does this by itself at its start. Never overwrites a record.
+
+    Example: midspan recover records/.spool/kiln-lane-a/journal-* --data records
+    """
+    from daq.record.recover import recover
+    from daq.results.reduce import reduce
+
+    for journal in journals:
+        for line in recover(journal, data, reduce=lambda run: reduce(run).as_json(), report=lambda _: None):
+            click.echo(line)
