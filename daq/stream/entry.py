@@ -52,6 +52,10 @@ class EntryDamaged(MidspanError, ValueError):
         self.why = why
 
 
+class PayloadTooLong(MidspanError, ValueError):
+    """More bytes than one entry may hold."""
+
+
 class Kind(IntEnum):
     """What an entry's payload holds."""
 
@@ -100,6 +104,13 @@ class Packed:
         """The same as values."""
         return list(unpack_all(self.data))
 
+    def after(self, sequence: int) -> Packed | None:
+        """The part with higher numbers than that; None where there is nothing."""
+        if self.first_sequence > sequence:
+            return self
+        later = [entry for entry in self.entries() if entry.sequence > sequence]
+        return pack_all(later) if later else None
+
 
 def entry_bytes(payload_bytes: int) -> int:
     """Size of an entry with a payload of that many bytes."""
@@ -110,7 +121,7 @@ def pack_fields(kind: int, stream_id: int, sequence: int, monotonic_ns: int, pay
     """The bytes of one entry, without making an Entry first."""
     length = len(payload)
     if length > PAYLOAD_BYTES_MAX:
-        raise ValueError(f"payload of {length} bytes; an entry holds {PAYLOAD_BYTES_MAX} at most")
+        raise PayloadTooLong(f"payload of {length} bytes; an entry holds {PAYLOAD_BYTES_MAX} at most")
     head = _HEAD.pack(MAGIC, VERSION, kind, 0, length, stream_id, sequence, monotonic_ns)
     return b"".join((head, _CRC.pack(crc32(payload, crc32(head))), payload, _PADDING[length & 7]))
 
