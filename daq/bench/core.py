@@ -10,13 +10,14 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TypeAlias
 
-from daq.cards.derived import silence_s
+from daq.cards.derived import motion_link, silence_s
 from daq.cards.frame import FrameCard
 from daq.stream.entry import Kind
 from daq.stream.payloads import pack_block, pack_event, pack_raw
 from daq.watch.pipeline import Pipeline
 from daq.watch.requests import Request, StopRequest
 from daq.watch.values import Event, Move, Severity, State, Step, Stop
+from drivers.decoded import Decoded, Decoder
 from drivers.motion import (
     Acknowledged,
     InputsKnown,
@@ -25,7 +26,6 @@ from drivers.motion import (
     NotAnswered,
     UnknownReply,
 )
-from drivers.registry import Decoded, Decoder
 
 NewEntry: TypeAlias = tuple[Kind, int, bytes]
 
@@ -80,9 +80,7 @@ class BenchCore:
         self._decoders = list(decoders)
         self._motion = motion
         self._origin_ns = origin_ns
-        self._motion_link = -1
-        if frame.motion is not None:
-            self._motion_link = [link.name for link in frame.links].index(frame.motion.link)
+        self._motion_link = motion_link(frame)
         self._fresh_s = min(silence_s(link) for link in frame.links)
         self._heard_s = float("-inf")
         self._kept_s = float("-inf")
@@ -197,6 +195,7 @@ class BenchCore:
             self._steps.append((now_ns, step))
 
     def _send(self, data: bytes, now_ns: int, *, urgent: bool = False) -> None:
+        assert self._motion_link is not None
         self._writes.append(Write(self._motion_link, data, urgent))
         self._sent.append((now_ns, self._motion_link, data))
 

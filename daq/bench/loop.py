@@ -19,6 +19,7 @@ from typing import Any
 from daq.bench import messages
 from daq.bench.core import BenchCore, Health, Write
 from daq.bench.schedule import hurry, quiet_collector
+from daq.cards.derived import motion_link
 from daq.cards.frame import FrameCard
 from daq.errors import DriverError, LinkLost, Refused
 from daq.stream.ring import Ring
@@ -73,7 +74,7 @@ class BenchProcess:
         self._frame = FrameCard.model_validate_json(json.dumps(config.frame))
         self._ports = [Port(open_link(link)) for link in self._frame.links]
         self._origin_ns = time.monotonic_ns()
-        self._ring = Ring.create(config.ring_path, config.ring_bytes, config.stream_id)
+        self._ring = Ring.create(config.ring_path, config.ring_bytes, config.stream_id, origin_ns=self._origin_ns)
         pipeline = Pipeline(self._frame, clean_start=config.clean_start, proven=Proven(**config.proven))
         motion = MotionPort(self._frame) if self._frame.motion is not None else None
         decoders = [decoder_for(self._frame, number) for number in range(len(self._ports))]
@@ -130,7 +131,8 @@ class BenchProcess:
         links: list[int] = []
         stop = ""
         if motion is not None:
-            number = [link.name for link in self._frame.links].index(motion.link)
+            number = motion_link(self._frame)
+            assert number is not None
             if not self._ports[number].lost:
                 links = [self._ports[number].link.fileno()]
             end = motion.line_end.encode("latin-1")
@@ -150,6 +152,7 @@ class BenchProcess:
                 pass                            # it has gone already; nothing moves
         for port in self._ports:
             port.link.close()
+        self._ring.close()
 
     def _watch(self, descriptor: int, handler: Any) -> None:
         self._handlers[descriptor] = handler

@@ -40,7 +40,7 @@ class Follower:
 
     def __init__(self, frame: FrameCard) -> None:
         self._frame = frame
-        self._columns = [self._columns_of(link.name) for link in frame.links]
+        self._columns = [self._columns_of(number) for number in range(len(frame.links))]
         self.run: Mapping[str, Any] | None = None
         self.state = "unknown - look at the frame"
         self.reason = ""
@@ -85,7 +85,7 @@ class Follower:
         return self._named(table)
 
     # --- blocks -------------------------------------------------------------------------------------------------
-    def _columns_of(self, link: str) -> dict[str, int]:
+    def _columns_of(self, link: int) -> dict[str, int]:
         places: dict[str, int] = {}
         for place, channel in enumerate(channels_of(self._frame, link)):
             places.setdefault(channel.role, place)
@@ -110,9 +110,8 @@ class Follower:
         return np.full(block.count, self._position_mm)
 
     def _values(self, block: Block, role: str) -> Floats:
-        link = self._frame.links[block.source]
         place = self._columns[block.source][role]
-        channel = channels_of(self._frame, link.name)[place]
+        channel = channels_of(self._frame, block.source)[place]
         values: Floats = channel.sign * (block.counts[:, place] * channel.scale + channel.offset)
         return values
 

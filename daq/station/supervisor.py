@@ -21,7 +21,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from daq.cards.derived import ring_bytes_per_s
+from daq.bench.sizing import stream_bytes_per_s
 from daq.cards.frame import FrameCard
 from daq.errors import MidspanError
 from daq.station.places import Places
@@ -119,7 +119,7 @@ class Supervisor:
     def _write_configs(self, clean: bool) -> None:
         outfit, places = self._outfit, self._places
         frame = outfit.frame.model_dump(mode="json")
-        ring = ring_bytes(ring_bytes_per_s(outfit.frame))
+        ring = ring_bytes(stream_bytes_per_s(outfit.frame))
         shared: dict[str, Any] = {
             "frame": frame,
             "stream_id": self._stream_id,
