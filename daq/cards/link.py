@@ -46,6 +46,10 @@ class LinesDialect(Card):
     ] = None
     time_column: Annotated[Column | None, about("", "column of the device's own time")] = None
     time_unit_s: Annotated[Positive | None, about("s", "length of one unit of the device's time")] = None
+    columns: Annotated[
+        Column | None,
+        about("", "fields of a full row, the check not counted; left out: at least the highest column used"),
+    ] = None
     checksum: Annotated[Check, about("", "last field, hexadecimal, over everything before its separator")] = (
         "none"
     )
