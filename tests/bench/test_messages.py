@@ -1,0 +1,42 @@
+"""Messages between station and bench: every request survives the way, nonsense is refused by name."""
+
+from __future__ import annotations
+
+import pytest
+
+from daq.bench.messages import CLASSES, decode, encode_request, encode_snapshot_request
+from daq.watch import requests
+
+EXAMPLES = (
+    requests.StopRequest("Ines"),
+    requests.OpenRun({"run_id": "r"}, {"number": "A"}, {"name": "m"}, "quarter", "because"),
+    requests.StartRun(),
+    requests.CloseRun("wrong bar"),
+    requests.Jog(-1.0, 5.0),
+    requests.ReturnCrosshead(2.0, 20.0),
+    requests.Reset("Ines", looked=True),
+    requests.Note("click"),
+    requests.TightenLimit("force_n_max", 300.0),
+)
+
+
+@pytest.mark.parametrize("request_", EXAMPLES, ids=lambda one: type(one).__name__)
+def test_round_trip(request_: requests.Request) -> None:
+    assert decode(encode_request(7, request_)) == (7, request_)
+
+
+def test_every_request_has_an_example() -> None:
+    assert {type(one).__name__ for one in EXAMPLES} <= set(CLASSES)
+
+
+def test_snapshot() -> None:
+    assert decode(encode_snapshot_request(3)) == (3, None)
+
+
+@pytest.mark.parametrize(
+    "message",
+    [b"", b"[]", b'{"id":"x"}', b'{"id":1,"ask":"Fly"}', b'{"id":1,"ask":"Jog","fields":{"speed":1}}', b"\xff", b"1"],
+)
+def test_nonsense_is_refused(message: bytes) -> None:
+    with pytest.raises(ValueError):
+        decode(message)
