@@ -1,0 +1,181 @@
+"""Delimited text lines: the decoder, and the encoder that is its inverse under the same card. Pure.
+
+Short chunks are read line by line (rowtext.py), long ones by numpy (rowblock.py); both give the same rows,
+replies and counts however the bytes are cut. Without a declared checksum a damaged digit cannot be seen:
+declare one.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+import numpy as np
+
+from daq.cards.frame import FrameCard
+from daq.stream.block import Floats
+from drivers.checks import check_value
+from drivers.decoded import SCALAR_ROWS, STALE_S, Decoded, Reason
+from drivers.framing import LineFramer
+from drivers.numbering import Numbering
+from drivers.plan import link_of, transmission_s
+from drivers.rowblock import RowBlock
+from drivers.rowtext import RowText
+from drivers.sorting import Sorting
+from drivers.timing import timing_for
+
+
+class LinesDecoder:
+    """One link's text lines -> blocks, replies, inputs."""
+
+    def __init__(self, frame: FrameCard, link_number: int, *, scalar_rows: int = SCALAR_ROWS) -> None:
+        link = link_of(frame, link_number)
+        self._grammar = RowText(frame, link_number)
+        dialect = self._grammar.dialect
+        line_end = dialect.line_end.encode("ascii", "replace")
+        self._framer = LineFramer(line_end, dialect.line_bytes_max)
+        self._block = RowBlock(self._grammar, line_end)
+        self._line_end = line_end
+        self._link = link
+        plan = self._grammar.plan
+        self._numbering = Numbering(plan, timing_for(plan, link), source=link_number, rate_hz=link.rate_hz)
+        self._scalar_rows = scalar_rows if self._block.can_read else 1 << 62
+        self._first_line = True
+        self._broken = False
+        self._fresh_from_s: float | None = None
+
+    @property
+    def buffered_bytes(self) -> int:
+        return self._framer.buffered_bytes
+
+    def feed(self, data: bytes, arrival_s: float) -> Decoded:
+        """Decode what arrived at arrival_s; never raises on bytes."""
+        if self._fresh_from_s is None:
+            self._fresh_from_s = arrival_s + STALE_S
+        lines = self._framer.take(data)
+        sorting = Sorting(self._broken)
+        if lines.overlong:
+            sorting.reject(Reason.OVERLONG)
+        sorting.discard(lines.discarded_bytes)
+        if lines.text:
+            if lines.text.count(self._line_end) > self._scalar_rows:
+                self._sort_block(lines.text, sorting)
+            else:
+                self._sort_lines(lines.text, sorting)
+        self._broken = sorting.broken
+        on_wire_s = transmission_s(self._link, sorting.row_bytes)
+        return sorting.decoded(self._numbering, arrival_s, on_wire_s, self._fresh_from_s)
+
+    def _sort_lines(self, text: bytes, sorting: Sorting) -> None:
+        classify = self._grammar.classify
+        ends = len(self._line_end)
+        lines = text.split(self._line_end)
+        lines.pop()
+        for line in lines:
+            if self._first_line:
+                self._first_line = False
+                _add(sorting, self._grammar.first(line), len(line) + ends)
+            else:
+                _add(sorting, classify(line), len(line) + ends)
+
+    def _sort_block(self, text: bytes, sorting: Sorting) -> None:
+        certified = self._block.certify(text)
+        start, stop, plain = certified.start, certified.stop, certified.plain
+        if self._first_line:
+            plain[0] = False
+        done = 0
+        for doubtful in np.flatnonzero(~plain).tolist():
+            sorting.add_block(certified.values[done:doubtful])
+            line = text[start[doubtful] : stop[doubtful]]
+            found = self._grammar.first(line) if self._first_line else self._grammar.classify(line)
+            self._first_line = False
+            _add(sorting, found, len(line) + len(self._line_end))
+            done = doubtful + 1
+        sorting.add_block(certified.values[done:])
+        sorting.row_bytes = int(stop[-1] - start[-1]) + len(self._line_end)
+
+
+def _add(sorting: Sorting, found: tuple[float, ...] | Reason | bytes | None, line_bytes: int) -> None:
+    if isinstance(found, tuple):
+        sorting.add_row(found)
+        sorting.row_bytes = line_bytes
+    elif isinstance(found, bytes):
+        sorting.add_reply(found)
+    else:
+        sorting.discard(line_bytes)
+        if found is not None:
+            sorting.reject(found)
+
+
+class LinesEncoder:
+    """Numbers -> the text lines a machine under this card sends. Columns the card does not use are sent as
+    0."""
+
+    def __init__(self, frame: FrameCard, link_number: int) -> None:
+        grammar = RowText(frame, link_number)
+        self._grammar = grammar
+        self._line_end = grammar.dialect.line_end.encode("ascii", "replace")
+        self._separator = grammar.dialect.separator.encode("ascii", "replace")
+        self._labels = [want.label for want in grammar.wants if want.label is not None]
+        check = 1 if grammar.check_digits else 0
+        self._check = grammar.dialect.checksum if check else None
+        by_column = any(want.column is not None for want in grammar.wants)
+        self._columns = grammar.dialect.columns or (grammar.fields_min if by_column else 0)
+
+    def encode(
+        self,
+        counts: Floats,
+        *,
+        first_counter: int = 0,
+        time_s: Floats | None = None,
+        inputs: Mapping[str, bool] | None = None,
+    ) -> bytes:
+        """counts: (n, k) in channel order. inputs: which status inputs are active (those in columns)."""
+        special = self._special(len(counts), first_counter, time_s, inputs or {})
+        return b"".join(self._line([*row, *more]) for row, more in zip(counts.tolist(), special, strict=True))
+
+    def reply(self, text: bytes) -> bytes:
+        """A reply of the machine as it stands between the rows."""
+        return text + self._line_end
+
+    def _special(
+        self, count: int, first_counter: int, time_s: Floats | None, inputs: Mapping[str, bool]
+    ) -> list[list[float]]:
+        plan = self._grammar.plan
+        rows = []
+        for row in range(count):
+            more = [0.0] * (len(self._grammar.wants) - plan.channels)
+            if plan.counter is not None:
+                counter = first_counter + row
+                more[plan.counter - plan.channels] = counter % plan.modulus if plan.modulus else counter
+            if plan.time is not None and time_s is not None:
+                more[plan.time - plan.channels] = round(float(time_s[row]) / plan.time_unit_s)
+            for rule in plan.inputs:
+                on = inputs.get(rule.name, False) == rule.active_when
+                more[rule.position - plan.channels] += on << (rule.bit or 0)
+            rows.append(more)
+        return rows
+
+    def _line(self, values: list[float]) -> bytes:
+        grammar = self._grammar
+        fields = [b"0"] * (self._columns)
+        labelled = []
+        for want, value in zip(grammar.wants, values, strict=True):
+            text = _number_text(value)
+            if grammar.dialect.decimal_comma:
+                text = text.replace(b".", b",")
+            if want.label is not None:
+                labelled.append(want.label + grammar.label_separator + text)
+            else:
+                assert want.column is not None
+                fields[want.column] = text
+        line = grammar.prefix + self._separator.join(fields + labelled)
+        if self._check is not None:
+            line += self._separator + b"%0*X" % (grammar.check_digits, check_value(self._check, line))
+        return line + self._line_end
+
+
+def _number_text(value: float) -> bytes:
+    """Shortest text that reads back to the same float."""
+    if value == int(value) if abs(value) < 1e15 else False:
+        return b"%d" % int(value)
+    return repr(float(value)).encode("ascii")

@@ -1,0 +1,242 @@
+"""Fixed binary packets with text replies between them: the decoder, and the encoder that is its inverse.
+Pure.
+
+A packet is believed at once where the one before it ended, or where a strong check (16 or 32 bit) proves
+it. After garbage, under a weak check, it is believed only when another packet or a reply begins right
+behind it. So the first packet under a weak check comes out one packet late, once.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Mapping
+from enum import Enum, auto
+
+import numpy as np
+
+from daq.cards.frame import FrameCard
+from daq.errors import CardError
+from daq.stream.block import Floats
+from drivers.checks import WEAK
+from drivers.decoded import SCALAR_ROWS, STALE_S, Decoded, Reason
+from drivers.numbering import Numbering
+from drivers.packetform import PacketForm
+from drivers.plan import link_of, transmission_s
+from drivers.sorting import Sorting
+from drivers.timing import timing_for
+
+REPLY_BYTES_MAX = 256
+RUN_PACKETS = 256
+"""Packets tried at once by numpy; doubled while all are good, so that damage costs no more than it spoils."""
+
+_TEXT = re.compile(rb"[\x20-\x7e\t]*")
+
+
+class _Turn(Enum):
+    """What the bytes at one place ask for."""
+
+    ON = auto()  # something was taken or thrown away: look again
+    WAIT = auto()  # more bytes are needed
+
+
+class PacketsDecoder:
+    """One link's packets -> blocks, replies, inputs."""
+
+    def __init__(self, frame: FrameCard, link_number: int, *, scalar_rows: int = SCALAR_ROWS) -> None:
+        link = link_of(frame, link_number)
+        form = PacketForm(frame, link_number)
+        self._form = form
+        self._sync = form.sync
+        self._reply_sync = bytes.fromhex(form.dialect.reply_sync or "")
+        self._reply_end = form.dialect.reply_line_end.encode("ascii", "replace") or b"\n"
+        if self._reply_sync and (
+            self._reply_sync.startswith(self._sync) or self._sync.startswith(self._reply_sync)
+        ):
+            raise CardError((f"link {link.name}: sync and reply_sync begin alike: choose different ones",))
+        self._needs_follower = form.check in WEAK
+        self._numbering = Numbering(
+            form.plan, timing_for(form.plan, link), source=link_number, rate_hz=link.rate_hz
+        )
+        self._transmission_s = transmission_s(link, form.bytes)
+        self._scalar_rows = scalar_rows
+        self._data = b""
+        self._at = 0
+        self._locked = False
+        self._broken = False
+        self._fresh_from_s: float | None = None
+
+    @property
+    def buffered_bytes(self) -> int:
+        return len(self._data)
+
+    def feed(self, data: bytes, arrival_s: float) -> Decoded:
+        """Decode what arrived at arrival_s; never raises on bytes."""
+        if self._fresh_from_s is None:
+            self._fresh_from_s = arrival_s + STALE_S
+        self._data = self._data + data if self._data else data
+        self._at = 0
+        sorting = Sorting(self._broken)
+        while self._at < len(self._data):
+            if self._locked:
+                self._take_run(sorting)
+            if self._take_one(sorting) is _Turn.WAIT:
+                break
+        self._data = self._data[self._at :]
+        self._broken = sorting.broken
+        return sorting.decoded(self._numbering, arrival_s, self._transmission_s, self._fresh_from_s)
+
+    # -- runs of good packets
+
+    def _take_run(self, sorting: Sorting) -> None:
+        """Every whole good packet from here on."""
+        form, window = self._form, RUN_PACKETS
+        while (whole := (len(self._data) - self._at) // form.bytes) > self._scalar_rows:
+            count = min(whole, window)
+            packets = np.frombuffer(self._data, np.uint8, count * form.bytes, self._at).reshape(
+                count, form.bytes
+            )
+            good = form.good_rows(packets)
+            sorting.add_block(form.rows(packets[:good]))
+            self._at += good * form.bytes
+            if good < count:
+                return
+            window *= 2
+        data, at, last = self._data, self._at, len(self._data) - form.bytes
+        while at <= last and data.startswith(self._sync, at) and form.passes(data, at):
+            sorting.add_row(form.row(data, at))
+            at += form.bytes
+        self._at = at
+
+    # -- anything else, one thing at a time
+
+    def _take_one(self, sorting: Sorting) -> _Turn:
+        data, at = self._data, self._at
+        if data.startswith(self._sync, at):
+            return self._take_packet(sorting)
+        if self._reply_sync and data.startswith(self._reply_sync, at):
+            return self._take_reply(sorting)
+        if self._may_become_sync(at):
+            return _Turn.WAIT
+        self._drop(sorting, self._next_sync(at) - at)
+        return _Turn.ON
+
+    def _take_packet(self, sorting: Sorting) -> _Turn:
+        """A sync stands here: a packet that is incomplete, damaged, or (unlocked) not yet believed."""
+        form, end = self._form, self._at + self._form.bytes
+        if end > len(self._data):
+            return _Turn.WAIT
+        good = form.passes(self._data, self._at)
+        if good and (self._locked or not self._needs_follower):
+            return self._accept(sorting)
+        if not good and not self._locked:
+            self._drop(sorting, 1)
+            return _Turn.ON
+        if self._may_become_sync(end):
+            return _Turn.WAIT
+        followed = self._begins_sync(end)
+        if good and followed:
+            return self._accept(sorting)
+        if not good:
+            sorting.reject(Reason.CHECKSUM)
+            if followed:
+                sorting.discard(form.bytes)
+                self._at = end
+                return _Turn.ON
+        self._drop(sorting, 1)
+        return _Turn.ON
+
+    def _accept(self, sorting: Sorting) -> _Turn:
+        sorting.add_row(self._form.row(self._data, self._at))
+        self._at += self._form.bytes
+        self._locked = True
+        return _Turn.ON
+
+    def _take_reply(self, sorting: Sorting) -> _Turn:
+        begin = self._at + len(self._reply_sync)
+        window = self._data[begin : begin + REPLY_BYTES_MAX + len(self._reply_end)]
+        text, ended, _ = window.partition(self._reply_end)
+        if not ended and len(window) <= REPLY_BYTES_MAX:
+            text = _without_partial(text, self._reply_end)
+        elif not ended:
+            self._drop(sorting, 1)
+            return _Turn.ON
+        if not _TEXT.fullmatch(text):
+            self._drop(sorting, 1)
+            return _Turn.ON
+        if not ended:
+            return _Turn.WAIT
+        sorting.add_reply(text.strip())
+        self._at = begin + len(text) + len(self._reply_end)
+        self._locked = True
+        return _Turn.ON
+
+    # -- finding the next beginning
+
+    def _begins_sync(self, at: int) -> bool:
+        data = self._data
+        return data.startswith(self._sync, at) or (
+            bool(self._reply_sync) and data.startswith(self._reply_sync, at)
+        )
+
+    def _may_become_sync(self, at: int) -> bool:
+        """The data end before it is clear whether a sync stands here."""
+        tail = self._data[at : at + max(len(self._sync), len(self._reply_sync))]
+        if len(tail) < len(self._sync) and self._sync.startswith(tail):
+            return True
+        return len(tail) < len(self._reply_sync) and self._reply_sync.startswith(tail)
+
+    def _next_sync(self, at: int) -> int:
+        """Where after `at` a sync begins, or may begin once more bytes are there."""
+        data = self._data
+        places = [data.find(sync, at + 1) for sync in (self._sync, self._reply_sync) if sync]
+        found = [place for place in places if place >= 0]
+        tail = max(at + 1, len(data) + 1 - max(len(self._sync), len(self._reply_sync)))
+        partial = next((place for place in range(tail, len(data)) if self._may_become_sync(place)), len(data))
+        return min([*found, partial])
+
+    def _drop(self, sorting: Sorting, count: int) -> None:
+        sorting.discard(count)
+        sorting.broken = True
+        self._locked = False
+        self._at += count
+
+
+def _without_partial(text: bytes, end: bytes) -> bytes:
+    """The text without what may be the beginning of its end."""
+    return text[:-1] if len(end) == 2 and text.endswith(end[:1]) else text
+
+
+class PacketsEncoder:
+    """Numbers -> the packets a machine under this card sends. Fields the card does not use are sent as 0."""
+
+    def __init__(self, frame: FrameCard, link_number: int) -> None:
+        self._form = PacketForm(frame, link_number)
+        self._reply_sync = bytes.fromhex(self._form.dialect.reply_sync or "")
+        self._reply_end = self._form.dialect.reply_line_end.encode("ascii", "replace")
+
+    def encode(
+        self,
+        counts: Floats,
+        *,
+        first_counter: int = 0,
+        time_s: Floats | None = None,
+        inputs: Mapping[str, bool] | None = None,
+    ) -> bytes:
+        """counts: (n, k) in channel order. inputs: which status inputs are active (those in the packet)."""
+        form, plan = self._form, self._form.plan
+        values = np.zeros((len(counts), len(form.places)))
+        values[:, : plan.channels] = counts
+        if plan.counter is not None and plan.modulus is not None:
+            counter = [(first_counter + row) % plan.modulus for row in range(len(counts))]
+            values[:, plan.counter] = counter
+        if plan.time is not None and time_s is not None:
+            ticks = time_s / plan.time_unit_s
+            values[:, plan.time] = np.rint(ticks) % plan.time_modulus if plan.time_modulus else ticks
+        for rule in plan.inputs:
+            on = (inputs or {}).get(rule.name, False) == rule.active_when
+            values[:, rule.position] += float(on << (rule.bit or 0))
+        return form.pack(values)
+
+    def reply(self, text: bytes) -> bytes:
+        """A reply of the machine as it stands between the packets."""
+        return self._reply_sync + text + self._reply_end
