@@ -1,0 +1,487 @@
+"""One virtual machine: crosshead, bar, sensors, inputs and misfortunes, stepped exactly from event to event.
+
+Pure: time is an argument, randomness comes from the card's seed, and any cut of the time gives the same rows.
+The wire is elsewhere: here are numbers and understood commands only.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+
+from daq.cards.frame import Fixture, FrameCard, InputName
+from daq.errors import CardError
+from simulator.card import SimulatorCard
+from simulator.commands import Heard, Verb, signed_distance_mm, status_letters
+from simulator.crosshead import NEVER, Crosshead, Halt, Run
+from simulator.faults import (
+    AnyFault,
+    Drift,
+    Fixturing,
+    Glitch,
+    HalvesLeft,
+    MachineFault,
+    NoiseBurst,
+    PopIn,
+    Rows,
+    Schedule,
+    SensorFault,
+    Slip,
+    SpeedSlip,
+    UnitSlip,
+    WireFault,
+)
+from simulator.grip import Grip
+from simulator.sampling import LinkSampler, Moment, SampleRows
+from simulator.sensors import Sensor
+from simulator.specimen import Bar, InHand, make_bar
+
+SWITCHES: tuple[InputName, ...] = ("shield_open", "emergency_stop", "drive_fault")
+INPUTS: tuple[InputName, ...] = (*SWITCHES, "end_up", "end_down", "moving")
+REFUSED = "NO"  # to what cannot be obeyed now; no card lists it, so midspan sees a fault
+NOT_UNDERSTOOD = "??"
+TRUTHS_MAX = 10_000  # facts kept until they are taken
+EVENTS_MAX = 1_000_000  # per call; more is a bug of this file, not a fault of the machine
+CLEAR_MM = 0.05  # the crosshead must be this far off before a bar can be put in
+GAP_MM = 2.0  # where neither card says (a frame without motion)
+TRAVEL_MM = 50.0
+
+Act = Callable[[float], None]
+SensorLevel = Glitch | SensorFault | UnitSlip | Drift | NoiseBurst
+
+
+@dataclass(frozen=True, slots=True)
+class Truth:
+    """What really happened; for a truth file, never on the wire."""
+
+    what: str
+    time_s: float
+    fields: Mapping[str, float | str | None]
+
+
+class Machine:
+    """The machine of one frame card, as the simulator card says it really is."""
+
+    def __init__(self, frame: FrameCard, card: SimulatorCard, first: InHand | None = None) -> None:
+        self._frame, self._card = frame, card
+        self._fixture = _fixture(frame, card)
+        self._contact_mm = card.contact.gap_mm or (frame.motion.gap_mm if frame.motion else GAP_MM)
+        anvil_gap_mm = frame.motion.anvil_gap_mm if frame.motion else TRAVEL_MM
+        self._anvil_mm = self._contact_mm + anvil_gap_mm
+        self._crosshead = _crosshead(frame, card)
+        self._samplers = [LinkSampler(frame, card, number) for number in range(len(frame.links))]
+        self._schedule = Schedule(card.faults)
+        for fault in card.faults:
+            self._check(fault)
+        self._switches: dict[InputName, bool] = dict.fromkeys(SWITCHES, False)
+        self._until: dict[str, float] = {}  # machine faults of the moment and when they end
+        self._ends: list[tuple[float, Act]] = []
+        self._speed_factor = 1 + card.drive.speed_error_percent / 100
+        self._resting_n = 0.0
+        self._force_rate_n_s: float | None = None
+        self._kept_s = NEVER  # last sign of life; NEVER: watchdog not armed
+        self._touched = False
+        self._awaiting: Bar | None = None
+        self._grip = self._empty()
+        self._moment = Moment(self._grip, 0.0, 0)
+        self._planned: tuple[float, Act] | None = None
+        self._truths: list[Truth] = []
+        self.wire_faults: list[tuple[float, Rows | WireFault]] = []
+        self.now_s = 0.0
+        if first is not None:
+            self.mount(first)
+        self._refresh()
+
+    # --- time -------------------------------------------------------------------------------------
+    def run_to(self, to_s: float) -> None:
+        """Let time pass; rows and truths pile up until they are taken."""
+        for _ in range(EVENTS_MAX):
+            if self._planned is None:
+                self._planned = min(self._coming(), key=lambda item: item[0])
+            event_s, act = self._planned
+            if event_s > to_s:
+                break
+            event_s = max(event_s, self.now_s)
+            self._sample(event_s)
+            self.now_s, self._planned = event_s, None
+            act(event_s)
+            self._refresh()
+        else:
+            raise AssertionError(f"no end of events at {self.now_s} s")
+        self._sample(to_s)
+        self.now_s = max(to_s, self.now_s)
+
+    def take_rows(self) -> tuple[SampleRows, ...]:
+        """Rows of all links since the last call."""
+        taken = (sampler.take() for sampler in self._samplers)
+        return tuple(rows for rows in taken if rows is not None)
+
+    def advance(self, to_s: float) -> tuple[SampleRows, ...]:
+        """`run_to` and `take_rows`."""
+        self.run_to(to_s)
+        return self.take_rows()
+
+    def next_sample_s(self, link: int) -> float:
+        """When the next row of a link is due."""
+        return self._samplers[link].next_s()
+
+    def take_truths(self) -> tuple[Truth, ...]:
+        truths, self._truths = tuple(self._truths), []
+        return truths
+
+    # --- what it is -------------------------------------------------------------------------------
+    @property
+    def position_mm(self) -> float:
+        return self._crosshead.position_at(self.now_s)
+
+    @property
+    def speed_mm_s(self) -> float:
+        return self._crosshead.speed_at(self.now_s)
+
+    @property
+    def moving(self) -> bool:
+        return self._crosshead.moving
+
+    @property
+    def way_is_clear(self) -> bool:
+        """Room to put in a bar."""
+        return self.position_mm <= self._contact_mm - CLEAR_MM
+
+    @property
+    def bar(self) -> Bar | None:
+        return self._grip.bar
+
+    @property
+    def broken(self) -> bool:
+        return self._grip.parting is not None
+
+    @property
+    def force_n(self) -> float:
+        """Static force through the bar, N; ringing and weights left out."""
+        law = self._grip.law
+        return 0.0 if law is None or self.broken else law.force_at(self.position_mm)
+
+    def inputs(self) -> dict[InputName, bool]:
+        """What the status word would say now."""
+        up, down = self._crosshead.at_end(self.now_s)
+        return {**self._switches, "end_up": up, "end_down": down, "moving": self._crosshead.moving}
+
+    # --- commands ---------------------------------------------------------------------------------
+    def command(self, heard: Heard, now_s: float) -> str | None:
+        """Obey one command; the answer, or None where the machine says nothing."""
+        self.run_to(now_s)
+        reply: str | None = self._obey(heard, now_s)
+        self._refresh()
+        if self._faulty("mute") or (heard.verb is Verb.STOP and self._faulty("deaf")):
+            return None
+        return reply or None
+
+    def _obey(self, heard: Heard, now_s: float) -> str:
+        if heard.verb is Verb.STATUS:
+            return heard.reply + status_letters(self._frame, self.inputs())
+        if heard.verb is Verb.KEEP_ALIVE:
+            self._kept_s = now_s if self._kept_s != NEVER else NEVER
+            return heard.reply
+        if heard.verb is Verb.STOP:
+            if not self._faulty("deaf") and not self._faulty("stop-ignored"):
+                self._force_rate_n_s = None
+                self._crosshead.order(now_s + self._card.drive.stop_latency_s, Halt())
+            return heard.reply
+        if heard.verb in (Verb.START, Verb.JOG, Verb.RETREAT, Verb.FORCE_RATE):
+            return heard.reply if self._move(heard, now_s) else REFUSED
+        return NOT_UNDERSTOOD if heard.verb is Verb.UNKNOWN else heard.reply
+
+    def _move(self, heard: Heard, now_s: float) -> bool:
+        motion = self._frame.motion
+        speed = heard.numbers.get("speed_mm_min", motion.return_mm_min if motion is not None else 0.0)
+        if motion is None or any(self._switches.values()) or abs(speed) > motion.speed_mm_min_max:
+            return False
+        if heard.verb is Verb.FORCE_RATE:
+            return self._load_by_force(heard.numbers.get("rate_n_s", 0.0), motion.approach_mm_min, now_s)
+        if heard.verb is Verb.START:
+            self._run(speed, None, now_s)
+            return True
+        distance_mm = signed_distance_mm(heard.numbers)
+        if heard.verb is Verb.RETREAT:
+            distance_mm = -abs(distance_mm)
+        goal_mm = self.position_mm + distance_mm if "distance_mm" in heard.numbers else None
+        away = heard.verb is Verb.RETREAT or distance_mm < 0
+        self._run(-abs(speed) if away else abs(speed), goal_mm, now_s)
+        return True
+
+    def _load_by_force(self, rate_n_s: float, approach_mm_min: float, now_s: float) -> bool:
+        """The machine's own loop: at approach speed to the contact, then a constant force rate."""
+        if rate_n_s <= 0:
+            return False
+        if not self._touched:
+            self._run(approach_mm_min, None, now_s)
+        self._force_rate_n_s = rate_n_s
+        if self._touched:
+            self._run(0.0, None, now_s)
+            self._close_loop(now_s)
+        return True
+
+    def _run(self, speed_mm_min: float, goal_mm: float | None, now_s: float) -> None:
+        self._force_rate_n_s = None
+        self._kept_s = now_s
+        effective_s = now_s + self._card.drive.start_latency_s
+        self._crosshead.order(effective_s, Run(speed_mm_min / 60 * self._speed_factor, goal_mm))
+        if speed_mm_min > 0:
+            self._schedule.started(now_s)
+
+    def _close_loop(self, now_s: float) -> None:
+        law = self._grip.law
+        if self._force_rate_n_s is not None and law is not None and self._grip.parting is None:
+            self._crosshead.follow(now_s, law.force_at(self.position_mm), self._force_rate_n_s, law)
+
+    # --- hands ------------------------------------------------------------------------------------
+    def mount(self, hand: InHand) -> Bar:
+        """Clear the fixture, put in a bar; a crosshead in the way is raised from the machine's own panel."""
+        bar = make_bar(hand, self._card.bar, self._card.contact, self._fixture, self._card.seed)
+        self._grip = self._empty()
+        self._awaiting = bar
+        self._fill_or_raise()
+        self._refresh()
+        return bar
+
+    def raise_crosshead(self) -> None:
+        """To the start position, from the machine's own panel: not watched by the keep-alive."""
+        self._force_rate_n_s = None
+        self._crosshead.order(self.now_s, Run(-self._card.drive.hand_mm_min / 60, 0.0))
+        self._kept_s = NEVER
+        self._refresh()
+
+    def switch(self, name: InputName, on: bool) -> None:
+        """Shield, emergency stop or drive fault; hard-wired: the drive stops whatever the software says."""
+        self._switches[name] = on
+        if on:
+            self._crosshead.order(self.now_s, Halt(at_once=name != "shield_open"))
+            self._force_rate_n_s = None
+        self._refresh()
+
+    def strike(self, fault: AnyFault) -> None:
+        """A misfortune, now, whatever its anchors say."""
+        self._check(fault)
+        self._apply(fault, self.now_s)
+        self._refresh()
+
+    def clear(self) -> None:
+        """All misfortunes end; what broke stays broken. Switches go back."""
+        self._schedule.clear()
+        self._until.clear()
+        self._ends.clear()
+        self._resting_n = 0.0
+        self._speed_factor = 1 + self._card.drive.speed_error_percent / 100
+        self._switches = dict.fromkeys(SWITCHES, False)
+        for sampler in self._samplers:
+            for sensor in sampler.sensors:
+                sensor.clear()
+        self._refresh()
+
+    # --- what comes next --------------------------------------------------------------------------
+    def _coming(self) -> list[tuple[float, Act]]:
+        """Everything that will happen by itself, with its time."""
+        coming: list[tuple[float, Act]] = [
+            (self._crosshead.next_change_s(), self._crosshead_changes),
+            (self._lapse_s(), self._lapses),
+            (self._schedule.next_s(), self._fault_due),
+        ]
+        coming.extend(self._ends)
+        law = self._grip.law
+        if law is None or self._grip.parting is not None:
+            return coming
+        force_n = law.force_at(self.position_mm)
+        levels: tuple[tuple[float, Act], ...] = (
+            (self._grip.break_n, self._breaks),
+            (self._schedule.next_force_n(), self._force_due),
+        )
+        for level_n, act in levels:
+            if force_n >= level_n:
+                coming.append((self.now_s, act))
+            elif level_n < math.inf and self._crosshead.moving:
+                coming.append((self._crosshead.reaches_s(law.position_at(level_n)), act))
+        if not self._touched:
+            past = self.position_mm > law.origin_mm
+            coming.append((self.now_s if past else self._crosshead.reaches_s(law.origin_mm), self._touches))
+        return coming
+
+    def _lapse_s(self) -> float:
+        keep = self._frame.motion.keep_alive if self._frame.motion is not None else None
+        if keep is None or not self._card.drive.watchdog or not self._crosshead.moving:
+            return NEVER
+        return self._kept_s + keep.lapse_s if self._kept_s != NEVER else NEVER
+
+    def _lapses(self, now_s: float) -> None:
+        self._kept_s = NEVER
+        if not self._faulty("stop-ignored"):
+            self._crosshead.order(now_s, Halt())
+            self._force_rate_n_s = None
+            self._tell("watchdog", {})
+
+    def _crosshead_changes(self, now_s: float) -> None:
+        self._crosshead.change(now_s)
+        self._fill_or_raise()
+
+    def _fill_or_raise(self) -> None:
+        """The bar in hand goes in when there is room; a crosshead that stands in the way is raised first."""
+        if self._awaiting is None:
+            return
+        if self.way_is_clear:
+            bar, self._awaiting = self._awaiting, None
+            self._fill(bar)
+        elif not self._crosshead.moving and not any(self._switches.values()):
+            self.raise_crosshead()
+
+    def _touches(self, now_s: float) -> None:
+        self._touched = True
+        self._schedule.touched(now_s)
+        self._tell("touched", {})
+        self._close_loop(now_s)
+
+    def _breaks(self, now_s: float) -> None:
+        bar, law = self._grip.bar, self._grip.law
+        assert bar is not None and law is not None
+        force_n = min(law.force_at(self.position_mm), self._grip.break_n)
+        self._crosshead.release(now_s)
+        self._grip.part(now_s, force_n)
+        weakest = bar.weakest
+        self._tell(
+            "broke",
+            {
+                "specimen": bar.number,
+                "force_n": force_n,
+                "stress_mpa": force_n * bar.stress_per_n,
+                "position_mm": self.position_mm,
+                "flaw": weakest.population if weakest else None,
+                "flaw_mpa": weakest.strength_mpa if weakest else None,
+                "at_mm": weakest.x_mm if weakest else None,
+            },
+        )
+
+    def _fault_due(self, now_s: float) -> None:
+        for fault in self._schedule.due(now_s, -math.inf):
+            self._apply(fault, now_s)
+
+    def _force_due(self, now_s: float) -> None:
+        for fault in self._schedule.due(now_s, self._schedule.next_force_n()):
+            self._apply(fault, now_s)
+
+    # --- misfortunes ------------------------------------------------------------------------------
+    def _check(self, fault: AnyFault) -> None:
+        if isinstance(fault, SensorLevel) and not self._sensors(fault.channel):
+            names = ", ".join(channel.name for channel in self._frame.channels)
+            raise CardError((f"fault {fault.kind}: channel = {fault.channel}: one of {names}, or a role",))
+
+    def _sensors(self, channel: str) -> list[Sensor]:
+        """By name, or by role where no channel has that name."""
+        every = [sensor for sampler in self._samplers for sensor in sampler.sensors]
+        named = [sensor for sensor in every if sensor.name == channel]
+        return named or [sensor for sensor in every if sensor.role == channel]
+
+    def _apply(self, fault: AnyFault, now_s: float) -> None:
+        self._tell("fault", {"kind": fault.kind})
+        if isinstance(fault, SensorLevel):
+            for sensor in self._sensors(fault.channel):
+                sensor.begin(fault, now_s)
+        elif isinstance(fault, Rows | WireFault):
+            self.wire_faults.append((now_s, fault))
+        elif isinstance(fault, MachineFault):
+            self._apply_to_machine(fault, now_s)
+        elif isinstance(fault, SpeedSlip):
+            self._speed_factor *= fault.factor
+        elif isinstance(fault, HalvesLeft):
+            self._resting_n = fault.force_n if self._frame.cell.position == "supports" else 0.0
+        else:
+            self._apply_to_bar(fault, now_s)
+
+    def _apply_to_machine(self, fault: MachineFault, now_s: float) -> None:
+        until_s = math.inf if fault.for_s is None else now_s + fault.for_s
+        switches: dict[str, InputName] = {
+            "shield-open": "shield_open",
+            "emergency-stop": "emergency_stop",
+            "drive-fault": "drive_fault",
+        }
+        if fault.kind not in switches:
+            self._until[fault.kind] = until_s
+            return
+        name = switches[fault.kind]
+        self.switch(name, True)
+        if until_s < math.inf:
+            self._ends.append((until_s, lambda _: self._switch_back(name, until_s)))
+
+    def _switch_back(self, name: InputName, until_s: float) -> None:
+        self._ends = [item for item in self._ends if item[0] != until_s]
+        self.switch(name, False)
+
+    def _apply_to_bar(self, fault: Slip | PopIn | Fixturing, now_s: float) -> None:
+        position_mm, following = self.position_mm, self._crosshead.following
+        if isinstance(fault, Slip):
+            self._grip.slip(position_mm, fault.percent)
+        elif isinstance(fault, PopIn):
+            self._grip.crack(position_mm, fault)
+        elif fault.kind == "blocked":
+            self._grip = Grip.blocked(self._card, self._contact_mm, fault.stiffness_n_mm)
+        else:
+            self._grip = self._empty()
+        if following:
+            self._close_loop(now_s)
+
+    def _faulty(self, kind: str) -> bool:
+        return self._until.get(kind, -math.inf) > self.now_s
+
+    # --- inside -----------------------------------------------------------------------------------
+    def _empty(self) -> Grip:
+        return Grip(self._card, None, math.inf, self._anvil_mm)
+
+    def _fill(self, bar: Bar) -> None:
+        self._grip = Grip(self._card, bar, self._contact_mm, self._anvil_mm)
+        self._touched = False
+        self._schedule.mounted()
+        weakest = bar.weakest
+        self._tell(
+            "mounted",
+            {
+                "specimen": bar.number,
+                "break_n": bar.break_n if weakest else None,
+                "strength_mpa": weakest.nominal_mpa if weakest else None,
+                "at_mm": weakest.x_mm if weakest else None,
+            },
+        )
+
+    def _sample(self, until_s: float) -> None:
+        for sampler in self._samplers:
+            times_s = sampler.due(until_s)
+            if times_s.size:
+                sampler.note(times_s, self._crosshead.positions(times_s), self._moment)
+
+    def _refresh(self) -> None:
+        """Something changed: plan anew, and look at the inputs again."""
+        self._planned = None
+        active = self.inputs()
+        bits = sum(1 << number for number, name in enumerate(INPUTS) if active[name])
+        self._moment = Moment(self._grip, self._resting_n, bits)
+
+    def _tell(self, what: str, fields: Mapping[str, float | str | None]) -> None:
+        if len(self._truths) < TRUTHS_MAX:
+            self._truths.append(Truth(what, self.now_s, fields))
+
+
+def _fixture(frame: FrameCard, card: SimulatorCard) -> Fixture:
+    name = card.contact.fixture or frame.fixtures[0].name
+    for fixture in frame.fixtures:
+        if fixture.name == name:
+            return fixture
+    names = ", ".join(fixture.name for fixture in frame.fixtures)
+    raise CardError((f"simulator {card.name}: contact.fixture = {name}: one of {names}",))
+
+
+def _crosshead(frame: FrameCard, card: SimulatorCard) -> Crosshead:
+    motion, drive = frame.motion, card.drive
+    up_mm = motion.travel_mm_min if motion is not None else -TRAVEL_MM
+    down_mm = motion.travel_mm_max if motion is not None else TRAVEL_MM
+    return Crosshead(
+        acceleration_mm_s2=drive.acceleration_mm_s2,
+        end_up_mm=up_mm if drive.end_up_mm is None else drive.end_up_mm,
+        end_down_mm=down_mm if drive.end_down_mm is None else drive.end_down_mm,
+    )
