@@ -1,4 +1,4 @@
-"""What follows from a card: column order, silence, row sizes and baud, fixtures, spans, sections, expectations.
+"""What follows from a card: column order, silence, row sizes, fixtures, spans, sections, expectations.
 
 Free functions on valid cards; nothing here is stored, and nothing here judges a card (rules_*.py do).
 """
