@@ -33,6 +33,19 @@ class LineFramer:
     def buffered_bytes(self) -> int:
         return len(self._rest)
 
+    def take_one(self, data: bytes) -> bytes | None:
+        """The one line, without its end, that these bytes complete exactly; None: use `take`, nothing has
+        changed."""
+        end = self.line_end
+        if self._skipping or not data.endswith(end):
+            return None
+        if self._rest:
+            data = self._rest + data
+        if data.find(end) != len(data) - len(end):
+            return None
+        self._rest = b""
+        return data[: -len(end)]
+
     def take(self, data: bytes) -> Lines:
         """All whole lines so far. A line that outgrows its limit is dropped up to its end and counted
         once."""

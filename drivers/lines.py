@@ -20,7 +20,7 @@ from drivers.numbering import Numbering
 from drivers.plan import link_of, transmission_s
 from drivers.rowblock import RowBlock
 from drivers.rowtext import RowText
-from drivers.sorting import Sorting
+from drivers.sorting import Sorting, decoded_block
 from drivers.timing import timing_for
 
 
@@ -35,7 +35,7 @@ class LinesDecoder:
         self._framer = LineFramer(line_end, dialect.line_bytes_max)
         self._block = RowBlock(self._grammar, line_end)
         self._line_end = line_end
-        self._link = link
+        self._byte_s = transmission_s(link, 1)
         plan = self._grammar.plan
         self._numbering = Numbering(plan, timing_for(plan, link), source=link_number, rate_hz=link.rate_hz)
         self._scalar_rows = scalar_rows if self._block.can_read else 1 << 62
@@ -51,6 +51,15 @@ class LinesDecoder:
         """Decode what arrived at arrival_s; never raises on bytes."""
         if self._fresh_from_s is None:
             self._fresh_from_s = arrival_s + STALE_S
+        line = None if self._first_line or self._broken else self._framer.take_one(data)
+        if line is not None:
+            row = self._grammar.plain(line)
+            if row is not None:
+                on_wire_s = self._byte_s * (len(line) + len(self._line_end))
+                block = self._numbering.one(row, arrival_s - on_wire_s)
+                if block is not None:
+                    return decoded_block(block, arrival_s, self._fresh_from_s)
+            data = line + self._line_end
         lines = self._framer.take(data)
         sorting = Sorting(self._broken)
         if lines.overlong:
@@ -62,7 +71,7 @@ class LinesDecoder:
             else:
                 self._sort_lines(lines.text, sorting)
         self._broken = sorting.broken
-        on_wire_s = transmission_s(self._link, sorting.row_bytes)
+        on_wire_s = self._byte_s * sorting.row_bytes
         return sorting.decoded(self._numbering, arrival_s, on_wire_s, self._fresh_from_s)
 
     def _sort_lines(self, text: bytes, sorting: Sorting) -> None:

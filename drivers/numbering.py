@@ -82,6 +82,28 @@ class Numbering:
                 inputs.append(InputSample(self._plan.inputs[rule].name, active, float(block.time_s[offset])))
         return Numbered(tuple(blocks), tuple(inputs), rejected)
 
+    def one(self, row: tuple[float, ...], arrival_s: float) -> Block | None:
+        """The block of a single row that simply counts on; None: use `number`, nothing has changed."""
+        plan = self._plan
+        if plan.time is not None or self._lost:
+            return None
+        for held, rule in zip(self._status, plan.inputs, strict=True):
+            if row[rule.position] != held:
+                return None
+        if plan.counter is not None:
+            if self._counter is None or self._suspect is not None:
+                return None
+            counter = self._counter + 1
+            if counter == plan.modulus:
+                counter = 0
+            if row[plan.counter] != counter or counter >= COUNTER_MAX:
+                return None
+            self._counter = counter
+        index = self._next_index
+        self._next_index = index + 1
+        time_s = self._timing.feed(index, None, 1, arrival_s)
+        return Block(self._source, index, time_s, np.array((row[: plan.channels],), dtype=np.float64))
+
     def _block(self, rows: Floats, first_index: int, gap: int, arrival_s: float) -> Block:
         plan = self._plan
         device_s = None if plan.time is None else self._device_s(rows[:, plan.time])

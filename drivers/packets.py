@@ -16,13 +16,13 @@ import numpy as np
 
 from daq.cards.frame import FrameCard
 from daq.errors import CardError
-from daq.stream.block import Floats
+from daq.stream.block import Block, Floats
 from drivers.checks import WEAK
 from drivers.decoded import SCALAR_ROWS, STALE_S, Decoded, Reason
 from drivers.numbering import Numbering
 from drivers.packetform import PacketForm
 from drivers.plan import link_of, transmission_s
-from drivers.sorting import Sorting
+from drivers.sorting import Sorting, decoded_block
 from drivers.timing import timing_for
 
 REPLY_BYTES_MAX = 256
@@ -73,8 +73,13 @@ class PacketsDecoder:
         """Decode what arrived at arrival_s; never raises on bytes."""
         if self._fresh_from_s is None:
             self._fresh_from_s = arrival_s + STALE_S
-        self._data = self._data + data if self._data else data
-        self._at = 0
+        if self._data:
+            data = self._data + data
+        block = self._plain_packet(data, arrival_s)
+        if block is not None:
+            self._data = b""
+            return decoded_block(block, arrival_s, self._fresh_from_s)
+        self._data, self._at = data, 0
         sorting = Sorting(self._broken)
         while self._at < len(self._data):
             if self._locked:
@@ -84,6 +89,15 @@ class PacketsDecoder:
         self._data = self._data[self._at :]
         self._broken = sorting.broken
         return sorting.decoded(self._numbering, arrival_s, self._transmission_s, self._fresh_from_s)
+
+    def _plain_packet(self, data: bytes, arrival_s: float) -> Block | None:
+        """Exactly one good packet where one was expected, quickly; None: look closer, nothing has changed."""
+        form = self._form
+        if len(data) != form.bytes or not self._locked or self._broken:
+            return None
+        if not data.startswith(self._sync) or not form.passes(data, 0):
+            return None
+        return self._numbering.one(form.row(data, 0), arrival_s - self._transmission_s)
 
     # -- runs of good packets
 

@@ -5,9 +5,14 @@ from __future__ import annotations
 
 import numpy as np
 
-from daq.stream.block import Floats
+from daq.stream.block import Block, Floats
 from drivers.decoded import NO_REJECTS, Decoded, Reason, add_counts
 from drivers.numbering import Numbering
+
+
+def decoded_block(block: Block, arrival_s: float, fresh_from_s: float) -> Decoded:
+    """One feed that was one plain row."""
+    return Decoded((block,), (), (), 0, NO_REJECTS, block.count if arrival_s < fresh_from_s else 0)
 
 
 class Sorting:
