@@ -37,4 +37,4 @@ class Block:
 
     @property
     def count(self) -> int:
-        return self.time_s.shape[0]
+        return int(self.time_s.shape[0])
