@@ -179,5 +179,5 @@ def _slope(x: Floats, y: Floats) -> float:
 
 
 def _middle(values: Floats) -> float:
-    """The middle value. numpy.median imports numpy.ma at its first call: 20 ms that the bench does not have."""
+    """The middle value. numpy.median imports numpy.ma at its first call: 20 ms too many in a bench."""
     return float(np.sort(values)[len(values) // 2])
