@@ -71,6 +71,11 @@ class JournalReader:
         """The stream's number; None before the first entry was read."""
         return self._walk.segment.stream_id if self._walk.segment is not None else None
 
+    @property
+    def chain(self) -> bytes:
+        """SHA-256 over everything up to the batch read last, in order; what `Journal.chain` was then."""
+        return self._walk.chain
+
     def read_new(self, bytes_max: int = READ_BYTES) -> list[Entry]:
         """Entries not seen before, in order; at least one piece, then more up to about that many bytes."""
         entries: list[Entry] = []

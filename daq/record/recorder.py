@@ -1,0 +1,182 @@
+"""Recorder: the process that takes the stream from the ring to the journal. Standard library and
+daq.stream only.
+
+Reads every 20 ms, syncs every 100 ms, acknowledges to the ring after each sync and never before. After a
+restart it goes on behind the journal's last entry. What the disk refuses stays in the ring, which holds a
+minute, and is told.
+"""
+
+from __future__ import annotations
+
+import os
+import time
+from collections import deque
+from collections.abc import Callable, Mapping
+from pathlib import Path
+from typing import Any, TypeAlias
+
+from daq.errors import RecordingError
+from daq.record.mark import read_mark
+from daq.stream.entry import Packed
+from daq.stream.files import Files
+from daq.stream.journal import SEGMENT_BYTES, Journal
+from daq.stream.ring_reader import RingReader, drain
+
+Report: TypeAlias = Callable[[Mapping[str, Any]], None]
+
+POLL_S = 0.02
+SYNC_S = 0.1
+STATUS_S = 0.5
+TIDY_S = 1.0
+KEEP_S = 60.0
+FINISH_S = 5.0  # at the end: how long the disk may take with what is left; the ring keeps the rest
+PIECES_MAX = 64  # of 256 KiB each: a sync is never further away than that
+
+
+def run_recorder(
+    ring_path: Path,
+    journal_folder: Path,
+    report: Report,
+    should_stop: Callable[[], bool],
+    *,
+    bytes_ahead: int = 0,
+) -> None:
+    """Body of the process. Ends after should_stop with what is in the ring safely in the journal.
+
+    bytes_ahead: room kept filled with zeros for what the planned run will write.
+    """
+    recorder = Recorder(ring_path, journal_folder, report, bytes_ahead=bytes_ahead)
+    try:
+        while not should_stop():
+            recorder.advance(time.monotonic_ns())
+            time.sleep(POLL_S)
+    finally:
+        recorder.finish(time.monotonic_ns)
+
+
+class Recorder:
+    """Advance it again and again; a disk that refuses is told and asked again, it never raises for that."""
+
+    def __init__(
+        self,
+        ring_path: Path,
+        journal_folder: Path,
+        report: Report,
+        *,
+        bytes_ahead: int = 0,
+        files: Files | None = None,
+    ) -> None:
+        self._journal = open_journal(ring_path, journal_folder, files)
+        self._reader = RingReader(ring_path, after_sequence=self._journal.last_sequence)
+        self._folder = journal_folder
+        self._report = report
+        self._bytes_ahead = bytes_ahead
+        self._pending: Packed | None = None
+        self._history: deque[tuple[float, int]] = deque()
+        self._drained_s = self._safe_s = float("-inf")
+        self._synced_s = self._said_s = self._tidied_s = float("-inf")
+        self._trouble = ""
+        self._bytes = 0
+
+    def advance(self, now_ns: int) -> bool:
+        """Take what is in the ring; sync, tidy and report when it is time. Whether the ring was emptied."""
+        now_s = now_ns * 1e-9
+        if self._safe_s == float("-inf"):
+            self._safe_s = now_s
+        try:
+            drained = self._take()
+            if drained:
+                self._drained_s = now_s
+            if now_s - self._synced_s >= SYNC_S:
+                self._sync(now_s, now_ns)
+            if now_s - self._tidied_s >= TIDY_S:
+                self._tidied_s = now_s
+                self._tidy(now_s)
+            self._trouble = ""
+        except RecordingError as error:
+            self._trouble = str(error)
+            drained = False
+        self._say(now_s)
+        return drained
+
+    def _take(self) -> bool:
+        for _ in range(PIECES_MAX):
+            if self._pending is None:
+                self._pending = self._reader.read_packed()
+            if self._pending is None:
+                return True
+            self._journal.append_packed(self._pending)
+            self._bytes += len(self._pending.data)
+            self._pending = None
+        return False
+
+    def _sync(self, now_s: float, now_ns: int) -> None:
+        self._journal.sync()
+        self._synced_s = now_s
+        self._safe_s = max(self._safe_s, self._drained_s)
+        self._reader.acknowledge(self._journal.synced_sequence, now_ns)
+
+    def _tidy(self, now_s: float) -> None:
+        """Let segments go that are older than a minute and of no use to the archivist; fill room ahead."""
+        self._history.append((now_s, self._journal.last_sequence))
+        while len(self._history) > 1 and self._history[1][0] <= now_s - KEEP_S:
+            self._history.popleft()
+        mark = read_mark(self._folder)
+        if mark is not None and self._history[0][0] <= now_s - KEEP_S:
+            self._journal.delete_before(min(mark.needed_from, self._history[0][1]))
+        if self._journal.free_bytes < self._bytes_ahead:
+            self._journal.prepare(min(self._bytes_ahead, self._journal.free_bytes + SEGMENT_BYTES // 2))
+
+    def _say(self, now_s: float) -> None:
+        if now_s - self._said_s < STATUS_S:
+            return
+        self._said_s = now_s
+        self._report(
+            {
+                "report": "status",
+                "sequence": self._journal.last_sequence,
+                "synced_sequence": self._journal.synced_sequence,
+                "lag_s": max(0.0, now_s - self._safe_s),
+                "lag_bytes": self._reader.lag_bytes,
+                "bytes": self._bytes,
+                "room_bytes": self._journal.free_bytes,
+                "lost_entries": self._reader.lost_entries,
+                "overtaken": self._reader.overtaken,
+                "faults": list(self._journal.faults[-3:]),
+                "flagged": bool(self._journal.faults),
+                "trouble": self._trouble,
+            }
+        )
+
+    def finish(self, clock_ns: Callable[[], int]) -> None:
+        """Empty the ring, sync, acknowledge, close; for at most FINISH_S."""
+        until_ns = clock_ns() + round(FINISH_S * 1e9)
+        try:
+            while not self.advance(clock_ns()) and clock_ns() < until_ns:
+                time.sleep(POLL_S)
+            self._sync(clock_ns() * 1e-9, clock_ns())
+            self._journal.close()
+        finally:
+            self._reader.close()
+
+
+def open_journal(ring_path: Path, journal_folder: Path, files: Files | None = None) -> Journal:
+    """The journal of that ring's stream: resumed, or new."""
+    reader = RingReader(ring_path)
+    stream_id = reader.stream_id
+    reader.close()
+    return Journal.open(journal_folder, stream_id, files=files)
+
+
+def drain_ring(ring_path: Path, journal_folder: Path) -> int:
+    """Bring what a dead bench left in its ring into its journal, then remove the ring. How many entries."""
+    journal = open_journal(ring_path, journal_folder)
+    try:
+        count = 0
+        for packed in drain(ring_path, after_sequence=journal.last_sequence):
+            journal.append_packed(packed)
+            count += packed.count
+    finally:
+        journal.close()
+    os.unlink(ring_path)
+    return count
