@@ -7,16 +7,17 @@ same lines. The shell must write `Outcome.writes` before it takes the entries: s
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TypeAlias
 
 from daq.cards.derived import motion_link, silence_s
 from daq.cards.frame import FrameCard
+from daq.errors import Refused
 from daq.stream.entry import Kind
 from daq.stream.payloads import pack_block, pack_event, pack_raw
 from daq.watch.pipeline import Pipeline
 from daq.watch.requests import Request, StopRequest
-from daq.watch.values import Event, Move, Severity, State, Step, Stop
+from daq.watch.values import Event, Json, Move, Severity, State, Step, Stop
 from drivers.decoded import Decoded, Decoder
 from drivers.motion import (
     Acknowledged,
@@ -88,11 +89,12 @@ class BenchCore:
         self._writes: list[Write] = []
         self._entries: list[NewEntry] = []
         self._received: list[tuple[int, int, bytes]] = []
-        self._blocks: list[tuple[int, Decoded]] = []
+        self._decoded: list[tuple[int, int, Decoded]] = []
         self._steps: list[tuple[int, Step]] = []
         self._sent: list[tuple[int, int, bytes]] = []
         self.discarded_bytes = 0
         self.rejected: dict[str, int] = {}
+        self._account = [Account() for _ in frame.links]
 
     def seconds(self, now_ns: int) -> float:
         """Stream time of a monotonic instant, s."""
@@ -108,7 +110,7 @@ class BenchCore:
             self._heard_s = now_s
             self._obey(self.pipeline.advance(block, now_s), now_ns)
         if decoded.blocks or decoded.discarded_bytes or decoded.rejected:
-            self._blocks.append((now_ns, decoded))
+            self._decoded.append((now_ns, link, decoded))
         if decoded.inputs:
             latest = {sample.name: sample.active for sample in decoded.inputs}
             self._obey(self.pipeline.inputs(latest, now_s), now_ns)
@@ -169,14 +171,15 @@ class BenchCore:
         out: list[NewEntry] = []
         for now_ns, link, data in self._received:
             out.append((Kind.RAW, now_ns, pack_raw(link, False, data)))
-        for now_ns, decoded in self._blocks:
-            self._count(decoded, now_ns, out)
+        for now_ns, link, decoded in self._decoded:
+            self._count(decoded, link, now_ns, out)
         for now_ns, step in self._steps:
-            out.extend((Kind.EVENT, now_ns, pack_event(flat(event))) for event in step.events)
+            for event in step.events:
+                self._book(event, now_ns, out)
         for now_ns, link, data in self._sent:
             out.append((Kind.RAW, now_ns, pack_raw(link, True, data)))
         self._received.clear()
-        self._blocks.clear()
+        self._decoded.clear()
         self._steps.clear()
         self._sent.clear()
         return out
@@ -189,10 +192,17 @@ class BenchCore:
             if isinstance(action, Stop):
                 self._send(self._motion.encode_stop(self.seconds(now_ns)), now_ns, urgent=True)
             elif isinstance(action, Move):
-                self._send(self._motion.encode_move(action, self.seconds(now_ns)), now_ns)
-                self._kept_s = self.seconds(now_ns)
+                self._move(action, now_ns)
         if step.events:
             self._steps.append((now_ns, step))
+
+    def _move(self, move: Move, now_ns: int) -> None:
+        assert self._motion is not None
+        try:
+            self._send(self._motion.encode_move(move, self.seconds(now_ns)), now_ns)
+        except Refused as error:                # the drive cannot do it: nothing was sent, the run ends
+            self._obey(self.pipeline.fault("move_refused", str(error), self.seconds(now_ns)), now_ns)
+        self._kept_s = self.seconds(now_ns)
 
     def _send(self, data: bytes, now_ns: int, *, urgent: bool = False) -> None:
         assert self._motion_link is not None
@@ -239,19 +249,41 @@ class BenchCore:
         writes, self._writes = self._writes, []
         return writes
 
-    def _count(self, decoded: Decoded, now_ns: int, out: list[NewEntry]) -> None:
+    # --- the account: received = recorded + rejected ------------------------------------------------------------
+    def _count(self, decoded: Decoded, link: int, now_ns: int, out: list[NewEntry]) -> None:
         out.extend((Kind.BLOCK, now_ns, pack_block(block)) for block in decoded.blocks)
+        account = self._account[link]
+        account.recorded += decoded.rows
         if decoded.discarded_bytes or decoded.rejected:
             self.discarded_bytes += decoded.discarded_bytes
             for reason, rows in decoded.rejected.items():
                 self.rejected[reason] = self.rejected.get(reason, 0) + rows
-            lost = Event(
-                "rejected",
-                self.seconds(now_ns),
-                Severity.REMARK,
-                {"discarded_bytes": decoded.discarded_bytes, **{f"rows_{k}": v for k, v in decoded.rejected.items()}},
-            )
-            out.append((Kind.EVENT, now_ns, pack_event(flat(lost))))
+                account.rejected[reason] = account.rejected.get(reason, 0) + rows
+            told = {"discarded_bytes": decoded.discarded_bytes, "link": link, "rows": dict(decoded.rejected)}
+            out.append((Kind.EVENT, now_ns, pack_event(flat(Event("rejected", self.seconds(now_ns), fields=told)))))
+
+    def _book(self, event: Event, now_ns: int, out: list[NewEntry]) -> None:
+        """Write one event; the account of a run stands directly before its end."""
+        if event.name == "run_closed":
+            links = tuple(account.as_json() for account in self._account)
+            account = Event("accounting", event.time_s, fields={"links": links})
+            out.append((Kind.EVENT, now_ns, pack_event(flat(account))))
+        out.append((Kind.EVENT, now_ns, pack_event(flat(event))))
+        if event.name == "run_opened":
+            self._account = [Account() for _ in self._account]
+
+
+@dataclass(slots=True)
+class Account:
+    """Rows of one link since the run was opened."""
+
+    recorded: int = 0
+    rejected: dict[str, int] = field(default_factory=dict)
+
+    def as_json(self) -> dict[str, Json]:
+        received = self.recorded + sum(self.rejected.values())
+        return {"received": received, "recorded": self.recorded, "rejected": dict(self.rejected)}
+
 
 
 def flat(event: Event) -> dict[str, object]:

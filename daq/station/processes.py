@@ -27,6 +27,7 @@ class Life:
         self._pipe.setblocking(False)
         self._said_s = 0.0
         self._over = False
+        self.orderly = False            # the supervisor said "end"; everybody before us in the order has ended
 
     def ready(self) -> None:
         self._pipe.send(b"ready")
@@ -38,7 +39,9 @@ class Life:
             self._said_s = now_s
             self._say()
         try:
-            self._over |= self._pipe.recv(64) in (b"", b"end")
+            word = self._pipe.recv(64)
+            self.orderly |= word == b"end"
+            self._over |= word in (b"", b"end")
         except BlockingIOError:
             pass
         except OSError:
@@ -95,6 +98,7 @@ def recorder(config: Mapping[str, Any], life: Life) -> int:
 
 def archivist(config: Mapping[str, Any], life: Life) -> int:
     from daq.record.archivist import run_archivist
+    from daq.record.recorder import drain_ring
     from daq.record.recover import recover
     from daq.results.reduce import reduce
 
@@ -107,11 +111,18 @@ def archivist(config: Mapping[str, Any], life: Life) -> int:
         return reduce(run).as_json()
 
     life.ready()
+    own_ring = Path(config["ring_path"])
+    for ring in sorted(places.runtime.glob("ring-*")):
+        if ring != own_ring:
+            drain_ring(ring, places.spool / f"journal-{ring.name.removeprefix('ring-')}")
     for leftover in sorted(places.spool.glob("journal-*")):
         if leftover != journal:
-            recover(leftover, places.data, reduce=result_of, report=report)
+            report({"report": "recovering", "journal": leftover.name})
+            recover(leftover, places.data, reduce=result_of, report=report, pulse=life.over)
     if await_path(journal, life):
         run_archivist(journal, places.data, places.spool, result_of, report, life.over, copy_to)
+        if life.orderly:                        # the recorder has ended before us: everything is sealed, clear up
+            recover(journal, places.data, reduce=result_of, report=report)
     return 0
 
 

@@ -22,7 +22,7 @@ import zmq.asyncio
 
 from daq.bench import messages
 from daq.cards.frame import FrameCard
-from daq.cards.load import load_series
+from daq.cards.load import check_fit, load_series
 from daq.cards.questions import questions
 from daq.errors import CardError, MidspanError, Refused
 from daq.station.follower import Follower, Tell
@@ -296,9 +296,15 @@ class Station:
         if self._follower.run is not None:
             raise Refused("series", ("a run is open; close it first",))
         loaded = load_series(Path(str(words["path"])))
-        asked = questions(self._frame, loaded.method, loaded.specimens)
+        check_fit(self._frame, loaded.method, loaded.card.fixture, f"method of {words['path']}")
+        asked = questions(
+            self._frame, loaded.method, loaded.specimens, fixture=loaded.card.fixture, series=loaded.card
+        )
+        grave = tuple(question.line for question in asked if question.must_correct)
+        if grave:
+            raise Refused("series", grave)
         if asked and not words.get("sure", False):
-            return {"questions": [question.text for question in asked]}
+            return {"questions": [question.line for question in asked]}
         found = found_records(self._places.data, loaded.card.name)
         self._sitting = Sitting(loaded, found)
         return {"questions": [], "sitting": self._sitting.as_json()}

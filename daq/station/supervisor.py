@@ -261,6 +261,7 @@ class Supervisor:
                 clean &= self._end_child(child)
         if clean and "bench" in self._children:
             self._places.running_mark.unlink(missing_ok=True)
+            self._places.ring(self._stream_id).unlink(missing_ok=True)
         self._sweep()
         if self._lock is not None:
             os.close(self._lock)

@@ -10,7 +10,7 @@ from pathlib import Path
 import click
 
 from daq.cards.frame import FrameCard
-from daq.cards.load import load_frame, load_method, load_series
+from daq.cards.load import check_fit, load_frame, load_method, load_series
 from daq.cards.questions import questions
 from daq.cli import drills
 from daq.cli.options import DATA
@@ -43,9 +43,9 @@ def command(
     Example: midspan check frame.toml series.toml --live
     """
     if schema is not None:
-        from daq.cards.schema import schema_of
+        from daq.cards.schema import card_schema
 
-        click.echo(json.dumps(schema_of(schema), indent=1))
+        click.echo(json.dumps(card_schema(schema), indent=1))
         return
     if not cards:
         raise MidspanError("midspan check: name at least one card, or --schema frame|method|series")
@@ -69,8 +69,10 @@ def check_card(path: Path, frame: FrameCard | None) -> FrameCard | None:
         loaded = load_series(path)
         click.echo(f"{path}: series {loaded.card.name}, {len(loaded.specimens)} bars, method {loaded.method.name}")
         if frame is not None:
-            for question in questions(frame, loaded.method, loaded.specimens):
-                click.echo(f"? {question.text}")
+            check_fit(frame, loaded.method, loaded.card.fixture, str(path))
+            asked = questions(frame, loaded.method, loaded.specimens, fixture=loaded.card.fixture, series=loaded.card)
+            for question in asked:
+                click.echo(f"? {question.line}")
         return None
     if kind == "method":
         method = load_method(path)

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from pathlib import Path
+from typing import Any
 
 import click
 
@@ -23,5 +25,13 @@ def command(journals: tuple[Path, ...], data: Path) -> None:
     from daq.results.reduce import reduce
 
     for journal in journals:
-        for line in recover(journal, data, reduce=lambda run: reduce(run).as_json(), report=lambda _: None):
-            click.echo(line)
+        records = recover(journal, data, reduce=lambda run: reduce(run).as_json(), report=say)
+        click.echo(f"{journal}: {len(records)} records")
+
+
+def say(report: Mapping[str, Any]) -> None:
+    """What recovery reports, as lines."""
+    if report["report"] == "sealed":
+        click.echo(str(report["path"]))
+    elif report.get("why"):
+        click.echo(f"{report['report'].replace('_', ' ')}: {report['why']}", err=True)
