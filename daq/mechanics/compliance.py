@@ -44,9 +44,9 @@ def remove_machine_mm(table: ComplianceTable, travel_mm: Floats, force_n: Floats
     return travel_mm - machine_deflection_mm(table, force_n)
 
 
-def machine_share(table: ComplianceTable, force_n_low: float, force_n_high: float, travel_mm: float) -> float:
-    """Machine part of the travel between two forces; NaN outside the table or without travel."""
+def machine_share(table: ComplianceTable, force_n_low: float, force_n_high: float, bar_mm: float) -> float:
+    """Machine part of the whole travel between two forces, where the bar's part is bar_mm; NaN outside the table."""
     ends_mm = machine_deflection_mm(table, np.array([force_n_low, force_n_high]))
-    if not travel_mm > 0:
-        return float("nan")
-    return float((ends_mm[1] - ends_mm[0]) / travel_mm)
+    machine_mm = float(ends_mm[1] - ends_mm[0])
+    whole_mm = machine_mm + bar_mm
+    return machine_mm / whole_mm if whole_mm > 0 else float("nan")

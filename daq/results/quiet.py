@@ -12,7 +12,7 @@ import numpy as np
 from daq.stream.block import Floats
 
 MAINS_HZ = (50.0, 60.0, 100.0, 120.0)
-MAD_TO_SIGMA = 1.4826           # of a normal distribution
+MAD_TO_SIGMA = 1.4826  # of a normal distribution
 SAMPLES_MIN = 8
 
 
@@ -64,7 +64,9 @@ def quiet_record(time_s: Floats, value: Floats) -> QuietRecord:
         drift_per_min=float(slope * 60.0),
         resolution=float(np.diff(levels).min()) if len(levels) > 1 else 0.0,
         distinct_values=len(levels),
-        hum=tuple(line for line in (hum_line(time_s, residual, hz, rate_hz) for hz in MAINS_HZ) if line is not None),
+        hum=tuple(
+            line for line in (hum_line(time_s, residual, hz, rate_hz) for hz in MAINS_HZ) if line is not None
+        ),
     )
 
 
@@ -74,11 +76,13 @@ def alias_hz(true_hz: float, rate_hz: float) -> float:
 
 
 def hum_line(time_s: Floats, residual: Floats, true_hz: float, rate_hz: float) -> HumLine | None:
-    """Least-squares amplitude of one line at the frequency where it shows (the Goertzel sum for uneven samples)."""
+    """Least-squares amplitude of one line at the frequency where it shows (the Goertzel sum for uneven
+    samples).
+    """
     seen_hz = alias_hz(true_hz, rate_hz)
     span_s = float(time_s[-1] - time_s[0])
     if span_s * seen_hz < 2.0:
-        return None                             # fewer than two periods: not to be told from drift
+        return None  # fewer than two periods: not to be told from drift
     phase = 2.0 * np.pi * seen_hz * (time_s - time_s[0])
     table = np.column_stack((np.cos(phase), np.sin(phase)))
     weights, *_ = np.linalg.lstsq(table, residual, rcond=None)

@@ -30,7 +30,9 @@ def test_hum_is_named_with_true_and_seen_frequency(rate_hz: float, seen_hz: floa
     assert line.amplitude == pytest.approx(2.0, rel=0.1)
 
 
-@pytest.mark.parametrize(("true", "rate", "seen"), [(50, 80, 30), (60, 100, 40), (50, 49.5, 0.5), (50, 1000, 50)])
+@pytest.mark.parametrize(
+    ("true", "rate", "seen"), [(50, 80, 30), (60, 100, 40), (50, 49.5, 0.5), (50, 1000, 50)]
+)
 def test_alias(true: float, rate: float, seen: float) -> None:
     """Values of job.md 3.3."""
     assert alias_hz(true, rate) == pytest.approx(seen)
