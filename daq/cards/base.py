@@ -25,7 +25,9 @@ def _safe_name(text: str) -> str:
 
 Positive = Annotated[float, Field(gt=0)]
 NotNegative = Annotated[float, Field(ge=0)]
-Name = Annotated[str, Field(pattern=r"^[a-z][a-z0-9-]{0,31}$"), AfterValidator(_safe_name)]
+# Names inside a card (links, channels, fixtures) reach no file system; FrameName and FileName do.
+Name = Annotated[str, Field(pattern=r"^[a-z][a-z0-9-]{0,31}$")]
+FrameName = Annotated[Name, AfterValidator(_safe_name)]
 FileName = Annotated[str, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9_.-]{0,63}$"), AfterValidator(_safe_name)]
 
 

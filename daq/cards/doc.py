@@ -19,23 +19,24 @@ INTRODUCTION = """# Cards
 This page is made from the code (`python -m daq.cards.doc > docs/cards.md`); a test fails when it is stale.
 
 A card is a small TOML file (UTF-8, at most 256 KiB, at most 8 levels). Units stand in the names of the keys:
-`_n` is newton, `_mm` millimetre, `_mm_min` millimetre per minute. An unknown key is an error, text where a number
-is meant is an error, and nothing is converted. Every fault is told in one line:
+`_n` is newton, `_mm` millimetre, `_mm_min` millimetre per minute. An unknown key is an error, text where a
+number is meant is an error, and nothing is converted. Every fault is told in one line:
 `file: key = value: allowed: what to do`.
 
 Shipped examples (all invented) lie in `daq/cards/examples/`: copy one and change it.
 """
 SHEET = """## Bench sheet
 
-A CSV table beside the series card, one row a bar; the first line names the columns. UTF-8, delimiter comma or
-semicolon; a decimal comma is accepted where the delimiter is a semicolon. For a rectangle with three readings:
+A CSV table beside the series card, one row a bar; the first line names the columns. UTF-8, delimiter comma
+or semicolon; a decimal comma is accepted where the delimiter is a semicolon. For a rectangle, three readings:
 
     number,width_1_mm,width_2_mm,width_3_mm,thickness_1_mm,thickness_2_mm,thickness_3_mm,chamfer_mm,length_mm
     KL-01,4.007,4.003,4.004,3.018,3.013,3.018,0.12,45.2
 
 `chamfer_mm`, `length_mm`, `batch` and `note` may be left out. Circle and tube have `diameter_1_mm` and so on
-instead of width and thickness; a tube also needs `inner_diameter_mm`. Each reading is a number > 0; text, zero,
-a negative number, another unit than mm, an empty reading and a number used twice are refused, cell by cell.
+instead of width and thickness; a tube also needs `inner_diameter_mm`. Each reading is a number > 0; text,
+zero, a negative number, another unit than mm, an empty reading and a number used twice are refused, cell by
+cell.
 """
 
 

@@ -7,7 +7,7 @@ from typing import Annotated, Literal
 
 from pydantic import Field
 
-from daq.cards.base import Card, Name, NotNegative, Positive, about
+from daq.cards.base import Card, FrameName, Name, NotNegative, Positive, about
 from daq.cards.link import (
     Channel,
     Check,
@@ -121,7 +121,7 @@ class FrameCard(Card):
     """One test machine."""
 
     card: Annotated[Literal["frame"], about("", "kind of this card")]
-    name: Annotated[Name, about("", "name of the frame in files and on the network")]
+    name: Annotated[FrameName, about("", "name of the frame in files and on the network")]
     title: Annotated[str, Field(max_length=120), about("", "one line for people")] = ""
     simulated: Annotated[bool, about("", "true: a virtual machine; its data are marked for ever")]
     cell: Annotated[Cell, about("", "table: the load cell")]

@@ -1,4 +1,4 @@
-"""Slips of a frame card: force in kN, mass in g, scale in mN, speed in mm/s, deflection in mm, double sign."""
+"""Slips of a frame card: kN for N, g for kg, mN per count, mm/s for mm/min, mm for um, a sign used twice."""
 
 from __future__ import annotations
 

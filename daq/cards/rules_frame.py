@@ -87,7 +87,7 @@ def whole(items: tuple[Part | None, ...]) -> tuple[Part, ...] | None:
 def frame_faults(parts: FrameParts) -> Iterator[Fault]:
     """Every cross rule of a frame card."""
     links = whole(parts.links)
-    by_name = None if links is None else {link.name: link for link in links}
+    by_name = None if links is None else _by_name(links)
     for number, link in _read(parts.links):
         yield from link_faults(number, link)
     yield from _port_faults(parts.links)
@@ -113,6 +113,12 @@ def frame_faults(parts: FrameParts) -> Iterator[Fault]:
         yield from cell_faults(parts.cell)
     if parts.compliance is not None:
         yield from compliance_faults(parts.compliance, whole(parts.fixtures), parts.cell)
+
+
+def _by_name(links: tuple[Link, ...]) -> dict[str, Link] | None:
+    """Links by name; None when two share one: rules that follow a name must then wait."""
+    found = {link.name: link for link in links}
+    return found if len(found) == len(links) else None
 
 
 def row_faults(card: FrameCard) -> Iterator[Fault]:

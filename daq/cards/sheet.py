@@ -22,7 +22,7 @@ from daq.cards.series import Specimen
 ROWS_MAX = 2000
 DIMENSION_MM_MAX = 10_000.0
 TEXT_COLUMNS = {"batch": 80, "note": 200}
-NUMBER = re.compile(r"[+-]?\d{1,9}(?:[.,]\d{1,9})?")
+NUMBER = re.compile(r"[+-]?[0-9]{1,9}(?:[.,][0-9]{1,9})?")
 UNIT_SUFFIX = re.compile(r"\s*mm$")
 
 
