@@ -75,16 +75,15 @@ class LinesDecoder:
         return sorting.decoded(self._numbering, arrival_s, on_wire_s, self._fresh_from_s)
 
     def _sort_lines(self, text: bytes, sorting: Sorting) -> None:
-        classify = self._grammar.classify
-        ends = len(self._line_end)
+        grammar, ends = self._grammar, len(self._line_end)
         lines = text.split(self._line_end)
         lines.pop()
+        if self._first_line:
+            self._first_line = False
+            line = lines.pop(0)
+            _add(sorting, grammar.first(line), len(line) + ends)
         for line in lines:
-            if self._first_line:
-                self._first_line = False
-                _add(sorting, self._grammar.first(line), len(line) + ends)
-            else:
-                _add(sorting, classify(line), len(line) + ends)
+            _add(sorting, grammar.plain(line) or grammar.classify(line), len(line) + ends)
 
     def _sort_block(self, text: bytes, sorting: Sorting) -> None:
         certified = self._block.certify(text)

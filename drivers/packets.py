@@ -28,6 +28,7 @@ from drivers.timing import timing_for
 REPLY_BYTES_MAX = 256
 RUN_PACKETS = 256
 """Packets tried at once by numpy; doubled while all are good, so that damage costs no more than it spoils."""
+WINDOW_MAX = 16_384
 
 _TEXT = re.compile(rb"[\x20-\x7e\t]*")
 
@@ -59,6 +60,7 @@ class PacketsDecoder:
         )
         self._transmission_s = transmission_s(link, form.bytes)
         self._scalar_rows = scalar_rows
+        self._window = RUN_PACKETS
         self._data = b""
         self._at = 0
         self._locked = False
@@ -103,18 +105,18 @@ class PacketsDecoder:
 
     def _take_run(self, sorting: Sorting) -> None:
         """Every whole good packet from here on."""
-        form, window = self._form, RUN_PACKETS
+        form = self._form
         while (whole := (len(self._data) - self._at) // form.bytes) > self._scalar_rows:
-            count = min(whole, window)
+            count = min(whole, self._window)
             packets = np.frombuffer(self._data, np.uint8, count * form.bytes, self._at).reshape(
                 count, form.bytes
             )
             good = form.good_rows(packets)
             sorting.add_block(form.rows(packets[:good]))
             self._at += good * form.bytes
+            self._window = min(2 * self._window, WINDOW_MAX) if good == count else RUN_PACKETS
             if good < count:
                 return
-            window *= 2
         data, at, last = self._data, self._at, len(self._data) - form.bytes
         while at <= last and data.startswith(self._sync, at) and form.passes(data, at):
             sorting.add_row(form.row(data, at))

@@ -50,11 +50,13 @@ class ArrivalTiming:
         if count == 1:
             self._last_s = arrival_s if arrival_s > last_s else last_s + STEP_S
             return np.array([self._last_s])
-        back = np.arange(count - 1, -1, -1, dtype=np.float64)
-        time_s = arrival_s - self._period_s * back
-        if time_s[0] <= last_s and arrival_s > last_s:
-            time_s = arrival_s - (arrival_s - last_s) / (count + 1) * back
-        time_s = rising(time_s, last_s)
+        time_s = arrival_s - self._period_s * np.arange(count - 1.0, -1.0, -1.0)
+        if not time_s[0] > last_s:
+            step_s = (arrival_s - last_s) / (count + 1)
+            if step_s > STEP_S:
+                time_s = arrival_s - step_s * np.arange(count - 1.0, -1.0, -1.0)
+            else:
+                time_s = rising(time_s, last_s)
         self._last_s = float(time_s[-1])
         return time_s
 
