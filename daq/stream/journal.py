@@ -13,7 +13,7 @@ caller still has the entries in the ring.
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator
-from contextlib import contextmanager, suppress
+from contextlib import ExitStack, contextmanager, suppress
 from pathlib import Path
 
 from daq.errors import RecordingError
@@ -97,31 +97,27 @@ class Journal:
         with _told(folder):
             if stream_id is not None:
                 files.make_folder(folder)
-            lock = _lock(folder, files)
-            try:
-                tail = (
-                    _no_tail(folder, stream_id, files) if stream_id is not None else find_tail(folder, files)
-                )
-                stream_id = stream_id if stream_id is not None else tail.headers[-1].stream_id
-                journal = cls(folder, tail, stream_id, segment_bytes, files)
-            except BaseException:
-                files.close(lock)
-                raise
-            journal._lock = lock
-            journal._settle()
+            with ExitStack() as undo:
+                lock = _lock(folder, files)
+                undo.callback(files.close, lock)
+                tail = find_tail(folder, files) if stream_id is None else _no_tail(folder, stream_id, files)
+                found = tail.headers[-1].stream_id if stream_id is None else stream_id
+                journal = cls(folder, tail, found, segment_bytes, files)
+                undo.pop_all()
+            with ExitStack() as undo:
+                undo.callback(journal._let_go)
+                journal._lock = lock
+                journal._settle()
+                undo.pop_all()
         return journal
 
     def _settle(self) -> None:
         """Make the first segment of this life; everything found behind the acknowledged point is in it."""
-        try:
-            self._spares.clear()
-            door = CheckpointFile.reopen if self._resumed else CheckpointFile.create
-            self._checkpoint = door(self.folder, self._files)
-            self._writer.renew()
-            self._vouch()
-        except BaseException:
-            self._let_go()
-            raise
+        self._spares.clear()
+        door = CheckpointFile.reopen if self._resumed else CheckpointFile.create
+        self._checkpoint = door(self.folder, self._files)
+        self._writer.renew()
+        self._vouch()
 
     # --- facts --------------------------------------------------------------------------------------------
     @property
