@@ -13,6 +13,7 @@ import numpy as np
 
 from daq.cards.frame import FrameCard
 from daq.stream.block import Floats
+from daq.stream.clock import ClockModel
 from drivers.checks import check_value
 from drivers.decoded import SCALAR_ROWS, STALE_S, Decoded, Reason
 from drivers.framing import LineFramer
@@ -46,6 +47,11 @@ class LinesDecoder:
     @property
     def buffered_bytes(self) -> int:
         return self._framer.buffered_bytes
+
+    @property
+    def clock(self) -> ClockModel | None:
+        """Drift and jitter of the device's counter, where it has one."""
+        return self._numbering.clock
 
     def feed(self, data: bytes, arrival_s: float) -> Decoded:
         """Decode what arrived at arrival_s; never raises on bytes."""

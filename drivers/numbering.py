@@ -11,10 +11,11 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from daq.stream.block import GAP_UNKNOWN, Block, Floats
+from daq.stream.clock import ClockModel
 from drivers.counter import WHOLE_MAX, Counter
 from drivers.decoded import NO_REJECTS, InputSample, Reason
 from drivers.plan import RowPlan
-from drivers.timing import Timing
+from drivers.timing import CounterTiming, Timing
 
 SLOW_ROWS = 64
 """Rows judged one by one before a run is tried again."""
@@ -66,6 +67,11 @@ class Numbering:
         self._lost = False  # without a counter: something was thrown away since the last accepted row
         self._segments: list[_Segment] = []
         self._rejected: dict[str, int] = {}
+
+    @property
+    def clock(self) -> ClockModel | None:
+        """Drift and jitter of the device's counter, where it has one."""
+        return self._timing.clock if isinstance(self._timing, CounterTiming) else None
 
     def number(self, values: Floats, breaks: Sequence[int], arrival_s: float) -> Numbered:
         """values: (n, w) rows; breaks: rows before which something was thrown away, 0 <= row < n."""
@@ -174,6 +180,8 @@ class Numbering:
 
     def _block(self, rows: Floats, first_index: int, gap: int, arrival_s: float) -> Block:
         plan = self._plan
+        if gap == GAP_UNKNOWN:
+            self._timing.restart()
         device_s = None if plan.time is None else self._device_s(rows[:, plan.time])
         time_s = self._timing.feed(first_index, device_s, len(rows), arrival_s)
         counts = rows if rows.shape[1] == plan.channels else rows[:, : plan.channels]

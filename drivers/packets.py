@@ -17,6 +17,7 @@ import numpy as np
 from daq.cards.frame import FrameCard
 from daq.errors import CardError
 from daq.stream.block import Block, Floats
+from daq.stream.clock import ClockModel
 from drivers.checks import WEAK
 from drivers.decoded import SCALAR_ROWS, STALE_S, Decoded, Reason
 from drivers.numbering import Numbering
@@ -70,6 +71,11 @@ class PacketsDecoder:
     @property
     def buffered_bytes(self) -> int:
         return len(self._data)
+
+    @property
+    def clock(self) -> ClockModel | None:
+        """Drift and jitter of the device's counter, where it has one."""
+        return self._numbering.clock
 
     def feed(self, data: bytes, arrival_s: float) -> Decoded:
         """Decode what arrived at arrival_s; never raises on bytes."""

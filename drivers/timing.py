@@ -16,6 +16,7 @@ import numpy as np
 
 from daq.cards.frame import Link
 from daq.stream.block import Floats
+from daq.stream.clock import ClockModel
 from drivers.plan import RowPlan
 
 STEP_S = 1e-9
@@ -36,6 +37,29 @@ class Timing(Protocol):
         """Times of `count` consecutive samples, of which the last arrived at arrival_s (transmission taken
         off)."""
         ...
+
+    def restart(self) -> None:
+        """The sample numbers no longer follow the ones before."""
+        ...
+
+
+class CounterTiming:
+    """A device counter, tied to the arrivals by the stream's clock model."""
+
+    def __init__(self, period_s: float) -> None:
+        self.clock = ClockModel()
+        self._period_s = period_s
+        self._last_s = -np.inf
+
+    def feed(self, first_index: int, device_s: Floats | None, count: int, arrival_s: float) -> Floats:
+        time_s = self.clock.feed(first_index, count, arrival_s, self._period_s)
+        if not time_s[0] > self._last_s:
+            time_s = rising(time_s, self._last_s)
+        self._last_s = float(time_s[-1])
+        return time_s
+
+    def restart(self) -> None:
+        self.clock = ClockModel()
 
 
 class ArrivalTiming:
@@ -60,6 +84,9 @@ class ArrivalTiming:
         self._last_s = float(time_s[-1])
         return time_s
 
+    def restart(self) -> None:
+        return  # an arrival stands for itself
+
 
 class DeviceTiming:
     """A device time column. A step back of the device time, or a leap ahead of all arrivals (a restart, a
@@ -81,6 +108,9 @@ class DeviceTiming:
         time_s = rising(np.minimum(device_s + self._offset_s(), arrival_s), self._last_s)
         self._last_s = float(time_s[-1])
         return time_s
+
+    def restart(self) -> None:
+        return  # the device time itself shows it
 
     def _offset_s(self) -> float:
         return min(delay_s for _, delay_s in self._delays)
@@ -111,4 +141,5 @@ def timing_for(plan: RowPlan, link: Link) -> Timing:
     """The best timing the card allows: counter, else device time, else arrival."""
     if plan.counter is None and plan.time is not None:
         return DeviceTiming()
-    return ArrivalTiming(1.0 / link.rate_hz)
+    period_s = 1.0 / link.rate_hz
+    return ArrivalTiming(period_s) if plan.counter is None else CounterTiming(period_s)
