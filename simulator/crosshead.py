@@ -111,8 +111,9 @@ class Crosshead:
         self._pending.sort(key=lambda item: item[0])
 
     def follow(self, now_s: float, force_n: float, rate_n_s: float, law: Law) -> None:
-        """The force loop takes over."""
+        """The force loop takes over; a Run that has not begun is dropped."""
         self._rebase(now_s)
+        self._pending = [(t, o) for t, o in self._pending if isinstance(o, Halt)]
         self._follow = _Follow(force_n, rate_n_s, law)
 
     def release(self, now_s: float) -> None:

@@ -15,7 +15,7 @@ import json
 from collections.abc import Mapping
 from typing import TypeAlias
 
-from pydantic import BaseModel, TypeAdapter, ValidationError
+from pydantic import TypeAdapter, ValidationError
 
 from daq.cards.frame import InputName
 from simulator.faults import AnyFault
@@ -53,17 +53,18 @@ class Hands:
         if not isinstance(asked, dict) or len(asked) != 1:
             return {"refused": "one object with one key a line"}
         [(key, value)] = asked.items()
+        self._wire.settle(self._wire.now_s)
         try:
             return self._do(key, value)
         except ValidationError as error:
-            return {"refused": "; ".join(_where(fault) for fault in error.errors())}
+            return {"refused": "; ".join(_where(dict(fault)) for fault in error.errors())}
         except ValueError as error:
             return {"refused": str(error)}
 
     def _do(self, key: str, value: object) -> Answer:
         machine = self._wire.machine
         if key == "mount":
-            bar = machine.mount(_strict(InHand, value))
+            bar = machine.mount(InHand.model_validate_json(json.dumps(value)))
             return {"mounted": bar.number}
         if key == "fault":
             fault = FAULT.validate_json(json.dumps(value))
@@ -97,10 +98,7 @@ class Hands:
         }
 
 
-def _strict(model: type[InHand], value: object) -> InHand:
-    return model.model_validate_json(json.dumps(value))
-
-
-def _where(fault: Mapping[str, object] | BaseModel | object) -> str:
-    assert isinstance(fault, dict)
-    return f"{'.'.join(str(part) for part in fault['loc'])}: {fault['msg']}"
+def _where(fault: Mapping[str, object]) -> str:
+    place = fault["loc"]
+    assert isinstance(place, tuple)
+    return f"{'.'.join(str(part) for part in place)}: {fault['msg']}"

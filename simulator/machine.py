@@ -1,4 +1,4 @@
-"""One virtual machine: crosshead, bar, sensors, inputs and misfortunes, stepped exactly from event to event.
+"""One virtual machine: controller, bar, sensors and misfortunes, stepped exactly from event to event.
 
 Pure: time is an argument, randomness comes from the card's seed, and any cut of the time gives the same rows.
 The wire is elsewhere: here are numbers and understood commands only.
@@ -13,8 +13,8 @@ from dataclasses import dataclass
 from daq.cards.frame import Fixture, FrameCard, InputName
 from daq.errors import CardError
 from simulator.card import SimulatorCard
-from simulator.commands import Heard, Verb, signed_distance_mm, status_letters
-from simulator.crosshead import NEVER, Crosshead, Halt, Run
+from simulator.commands import Heard
+from simulator.controller import INPUTS, TRAVEL_MM, Controller
 from simulator.faults import (
     AnyFault,
     Drift,
@@ -37,15 +37,10 @@ from simulator.sampling import LinkSampler, Moment, SampleRows
 from simulator.sensors import Sensor
 from simulator.specimen import Bar, InHand, make_bar
 
-SWITCHES: tuple[InputName, ...] = ("shield_open", "emergency_stop", "drive_fault")
-INPUTS: tuple[InputName, ...] = (*SWITCHES, "end_up", "end_down", "moving")
-REFUSED = "NO"  # to what cannot be obeyed now; no card lists it, so midspan sees a fault
-NOT_UNDERSTOOD = "??"
 TRUTHS_MAX = 10_000  # facts kept until they are taken
 EVENTS_MAX = 1_000_000  # per call; more is a bug of this file, not a fault of the machine
 CLEAR_MM = 0.05  # the crosshead must be this far off before a bar can be put in
 GAP_MM = 2.0  # where neither card says (a frame without motion)
-TRAVEL_MM = 50.0
 
 Act = Callable[[float], None]
 SensorLevel = Glitch | SensorFault | UnitSlip | Drift | NoiseBurst
@@ -67,20 +62,14 @@ class Machine:
         self._frame, self._card = frame, card
         self._fixture = _fixture(frame, card)
         self._contact_mm = card.contact.gap_mm or (frame.motion.gap_mm if frame.motion else GAP_MM)
-        anvil_gap_mm = frame.motion.anvil_gap_mm if frame.motion else TRAVEL_MM
-        self._anvil_mm = self._contact_mm + anvil_gap_mm
-        self._crosshead = _crosshead(frame, card)
+        self._anvil_mm = self._contact_mm + (frame.motion.anvil_gap_mm if frame.motion else TRAVEL_MM)
+        self._controller = Controller(frame, card)
+        self._crosshead = self._controller.crosshead
         self._samplers = [LinkSampler(frame, card, number) for number in range(len(frame.links))]
         self._schedule = Schedule(card.faults)
         for fault in card.faults:
             self._check(fault)
-        self._switches: dict[InputName, bool] = dict.fromkeys(SWITCHES, False)
-        self._until: dict[str, float] = {}  # machine faults of the moment and when they end
-        self._ends: list[tuple[float, Act]] = []
-        self._speed_factor = 1 + card.drive.speed_error_percent / 100
         self._resting_n = 0.0
-        self._force_rate_n_s: float | None = None
-        self._kept_s = NEVER  # last sign of life; NEVER: watchdog not armed
         self._touched = False
         self._awaiting: Bar | None = None
         self._grip = self._empty()
@@ -93,13 +82,11 @@ class Machine:
             self.mount(first)
         self._refresh()
 
-    # --- time -------------------------------------------------------------------------------------
+    # --- time ---------------------------------------------------------------------------------------
     def run_to(self, to_s: float) -> None:
         """Let time pass; rows and truths pile up until they are taken."""
         for _ in range(EVENTS_MAX):
-            if self._planned is None:
-                self._planned = min(self._coming(), key=lambda item: item[0])
-            event_s, act = self._planned
+            event_s, act = self._next_event()
             if event_s > to_s:
                 break
             event_s = max(event_s, self.now_s)
@@ -122,6 +109,18 @@ class Machine:
         self.run_to(to_s)
         return self.take_rows()
 
+    def quiet_until_s(self) -> float:
+        """Until then nothing happens by itself and rows may be made ahead; now, where a fault is at work."""
+        if not all(sampler.steady for sampler in self._samplers):
+            return self.now_s
+        return self._next_event()[0]
+
+    def rewind(self, to_s: float) -> tuple[int, ...]:
+        """Go back within a quiet stretch; the number of rows of each link that were never asked for."""
+        assert to_s <= self.now_s < self._next_event()[0]
+        self.now_s = to_s
+        return tuple(sampler.rewind(to_s) for sampler in self._samplers)
+
     def next_sample_s(self, link: int) -> float:
         """When the next row of a link is due."""
         return self._samplers[link].next_s()
@@ -130,7 +129,7 @@ class Machine:
         truths, self._truths = tuple(self._truths), []
         return truths
 
-    # --- what it is -------------------------------------------------------------------------------
+    # --- what it is ---------------------------------------------------------------------------------
     @property
     def position_mm(self) -> float:
         return self._crosshead.position_at(self.now_s)
@@ -164,78 +163,21 @@ class Machine:
 
     def inputs(self) -> dict[InputName, bool]:
         """What the status word would say now."""
-        up, down = self._crosshead.at_end(self.now_s)
-        return {**self._switches, "end_up": up, "end_down": down, "moving": self._crosshead.moving}
+        return self._controller.inputs(self.now_s)
 
-    # --- commands ---------------------------------------------------------------------------------
+    # --- what is done to it -------------------------------------------------------------------------
     def command(self, heard: Heard, now_s: float) -> str | None:
         """Obey one command; the answer, or None where the machine says nothing."""
         self.run_to(now_s)
-        reply: str | None = self._obey(heard, now_s)
-        self._refresh()
-        if self._faulty("mute") or (heard.verb is Verb.STOP and self._faulty("deaf")):
-            return None
-        return reply or None
-
-    def _obey(self, heard: Heard, now_s: float) -> str:
-        if heard.verb is Verb.STATUS:
-            return heard.reply + status_letters(self._frame, self.inputs())
-        if heard.verb is Verb.KEEP_ALIVE:
-            self._kept_s = now_s if self._kept_s != NEVER else NEVER
-            return heard.reply
-        if heard.verb is Verb.STOP:
-            if not self._faulty("deaf") and not self._faulty("stop-ignored"):
-                self._force_rate_n_s = None
-                self._crosshead.order(now_s + self._card.drive.stop_latency_s, Halt())
-            return heard.reply
-        if heard.verb in (Verb.START, Verb.JOG, Verb.RETREAT, Verb.FORCE_RATE):
-            return heard.reply if self._move(heard, now_s) else REFUSED
-        return NOT_UNDERSTOOD if heard.verb is Verb.UNKNOWN else heard.reply
-
-    def _move(self, heard: Heard, now_s: float) -> bool:
-        motion = self._frame.motion
-        speed = heard.numbers.get("speed_mm_min", motion.return_mm_min if motion is not None else 0.0)
-        if motion is None or any(self._switches.values()) or abs(speed) > motion.speed_mm_min_max:
-            return False
-        if heard.verb is Verb.FORCE_RATE:
-            return self._load_by_force(heard.numbers.get("rate_n_s", 0.0), motion.approach_mm_min, now_s)
-        if heard.verb is Verb.START:
-            self._run(speed, None, now_s)
-            return True
-        distance_mm = signed_distance_mm(heard.numbers)
-        if heard.verb is Verb.RETREAT:
-            distance_mm = -abs(distance_mm)
-        goal_mm = self.position_mm + distance_mm if "distance_mm" in heard.numbers else None
-        away = heard.verb is Verb.RETREAT or distance_mm < 0
-        self._run(-abs(speed) if away else abs(speed), goal_mm, now_s)
-        return True
-
-    def _load_by_force(self, rate_n_s: float, approach_mm_min: float, now_s: float) -> bool:
-        """The machine's own loop: at approach speed to the contact, then a constant force rate."""
-        if rate_n_s <= 0:
-            return False
-        if not self._touched:
-            self._run(approach_mm_min, None, now_s)
-        self._force_rate_n_s = rate_n_s
-        if self._touched:
-            self._run(0.0, None, now_s)
-            self._close_loop(now_s)
-        return True
-
-    def _run(self, speed_mm_min: float, goal_mm: float | None, now_s: float) -> None:
-        self._force_rate_n_s = None
-        self._kept_s = now_s
-        effective_s = now_s + self._card.drive.start_latency_s
-        self._crosshead.order(effective_s, Run(speed_mm_min / 60 * self._speed_factor, goal_mm))
-        if speed_mm_min > 0:
+        answer = self._controller.obey(heard, now_s)
+        if answer.loads:
             self._schedule.started(now_s)
+            self._touched = self._touched and self.force_n > 0
+        if answer.loads and self._touched:
+            self._close_loop(now_s)
+        self._refresh()
+        return answer.reply
 
-    def _close_loop(self, now_s: float) -> None:
-        law = self._grip.law
-        if self._force_rate_n_s is not None and law is not None and self._grip.parting is None:
-            self._crosshead.follow(now_s, law.force_at(self.position_mm), self._force_rate_n_s, law)
-
-    # --- hands ------------------------------------------------------------------------------------
     def mount(self, hand: InHand) -> Bar:
         """Clear the fixture, put in a bar; a crosshead in the way is raised from the machine's own panel."""
         bar = make_bar(hand, self._card.bar, self._card.contact, self._fixture, self._card.seed)
@@ -246,18 +188,14 @@ class Machine:
         return bar
 
     def raise_crosshead(self) -> None:
-        """To the start position, from the machine's own panel: not watched by the keep-alive."""
-        self._force_rate_n_s = None
-        self._crosshead.order(self.now_s, Run(-self._card.drive.hand_mm_min / 60, 0.0))
-        self._kept_s = NEVER
+        """To the start position, from the machine's own panel."""
+        if not self._controller.switched_off:
+            self._controller.raise_by_hand(self.now_s)
         self._refresh()
 
     def switch(self, name: InputName, on: bool) -> None:
         """Shield, emergency stop or drive fault; hard-wired: the drive stops whatever the software says."""
-        self._switches[name] = on
-        if on:
-            self._crosshead.order(self.now_s, Halt(at_once=name != "shield_open"))
-            self._force_rate_n_s = None
+        self._controller.switch(name, on, self.now_s)
         self._refresh()
 
     def strike(self, fault: AnyFault) -> None:
@@ -267,35 +205,35 @@ class Machine:
         self._refresh()
 
     def clear(self) -> None:
-        """All misfortunes end; what broke stays broken. Switches go back."""
+        """All misfortunes end, switches go back; what broke stays broken."""
         self._schedule.clear()
-        self._until.clear()
-        self._ends.clear()
+        self._controller.clear()
         self._resting_n = 0.0
-        self._speed_factor = 1 + self._card.drive.speed_error_percent / 100
-        self._switches = dict.fromkeys(SWITCHES, False)
         for sampler in self._samplers:
             for sensor in sampler.sensors:
                 sensor.clear()
         self._refresh()
 
-    # --- what comes next --------------------------------------------------------------------------
+    # --- what comes next ----------------------------------------------------------------------------
+    def _next_event(self) -> tuple[float, Act]:
+        if self._planned is None:
+            self._planned = min(self._coming(), key=lambda item: item[0])
+        return self._planned
+
     def _coming(self) -> list[tuple[float, Act]]:
         """Everything that will happen by itself, with its time."""
         coming: list[tuple[float, Act]] = [
-            (self._crosshead.next_change_s(), self._crosshead_changes),
-            (self._lapse_s(), self._lapses),
+            (self._controller.next_s(), self._controller_acts),
             (self._schedule.next_s(), self._fault_due),
         ]
-        coming.extend(self._ends)
         law = self._grip.law
         if law is None or self._grip.parting is not None:
             return coming
-        force_n = law.force_at(self.position_mm)
         levels: tuple[tuple[float, Act], ...] = (
             (self._grip.break_n, self._breaks),
             (self._schedule.next_force_n(), self._force_due),
         )
+        force_n = law.force_at(self.position_mm)
         for level_n, act in levels:
             if force_n >= level_n:
                 coming.append((self.now_s, act))
@@ -306,21 +244,9 @@ class Machine:
             coming.append((self.now_s if past else self._crosshead.reaches_s(law.origin_mm), self._touches))
         return coming
 
-    def _lapse_s(self) -> float:
-        keep = self._frame.motion.keep_alive if self._frame.motion is not None else None
-        if keep is None or not self._card.drive.watchdog or not self._crosshead.moving:
-            return NEVER
-        return self._kept_s + keep.lapse_s if self._kept_s != NEVER else NEVER
-
-    def _lapses(self, now_s: float) -> None:
-        self._kept_s = NEVER
-        if not self._faulty("stop-ignored"):
-            self._crosshead.order(now_s, Halt())
-            self._force_rate_n_s = None
+    def _controller_acts(self, now_s: float) -> None:
+        if self._controller.act(now_s):
             self._tell("watchdog", {})
-
-    def _crosshead_changes(self, now_s: float) -> None:
-        self._crosshead.change(now_s)
         self._fill_or_raise()
 
     def _fill_or_raise(self) -> None:
@@ -330,7 +256,7 @@ class Machine:
         if self.way_is_clear:
             bar, self._awaiting = self._awaiting, None
             self._fill(bar)
-        elif not self._crosshead.moving and not any(self._switches.values()):
+        elif not self._crosshead.moving:
             self.raise_crosshead()
 
     def _touches(self, now_s: float) -> None:
@@ -338,6 +264,12 @@ class Machine:
         self._schedule.touched(now_s)
         self._tell("touched", {})
         self._close_loop(now_s)
+
+    def _close_loop(self, now_s: float) -> None:
+        """The machine's own force loop takes over where it is wanted and there is something to press on."""
+        rate_n_s, law = self._controller.force_rate_n_s, self._grip.law
+        if rate_n_s is not None and law is not None and self._grip.parting is None:
+            self._crosshead.follow(now_s, law.force_at(self.position_mm), rate_n_s, law)
 
     def _breaks(self, now_s: float) -> None:
         bar, law = self._grip.bar, self._grip.law
@@ -364,10 +296,10 @@ class Machine:
             self._apply(fault, now_s)
 
     def _force_due(self, now_s: float) -> None:
-        for fault in self._schedule.due(now_s, self._schedule.next_force_n()):
+        for fault in self._schedule.due(-math.inf, self._schedule.next_force_n()):
             self._apply(fault, now_s)
 
-    # --- misfortunes ------------------------------------------------------------------------------
+    # --- misfortunes --------------------------------------------------------------------------------
     def _check(self, fault: AnyFault) -> None:
         if isinstance(fault, SensorLevel) and not self._sensors(fault.channel):
             names = ", ".join(channel.name for channel in self._frame.channels)
@@ -386,33 +318,12 @@ class Machine:
                 sensor.begin(fault, now_s)
         elif isinstance(fault, Rows | WireFault):
             self.wire_faults.append((now_s, fault))
-        elif isinstance(fault, MachineFault):
-            self._apply_to_machine(fault, now_s)
-        elif isinstance(fault, SpeedSlip):
-            self._speed_factor *= fault.factor
+        elif isinstance(fault, MachineFault | SpeedSlip):
+            self._controller.strike(fault, now_s)
         elif isinstance(fault, HalvesLeft):
             self._resting_n = fault.force_n if self._frame.cell.position == "supports" else 0.0
         else:
             self._apply_to_bar(fault, now_s)
-
-    def _apply_to_machine(self, fault: MachineFault, now_s: float) -> None:
-        until_s = math.inf if fault.for_s is None else now_s + fault.for_s
-        switches: dict[str, InputName] = {
-            "shield-open": "shield_open",
-            "emergency-stop": "emergency_stop",
-            "drive-fault": "drive_fault",
-        }
-        if fault.kind not in switches:
-            self._until[fault.kind] = until_s
-            return
-        name = switches[fault.kind]
-        self.switch(name, True)
-        if until_s < math.inf:
-            self._ends.append((until_s, lambda _: self._switch_back(name, until_s)))
-
-    def _switch_back(self, name: InputName, until_s: float) -> None:
-        self._ends = [item for item in self._ends if item[0] != until_s]
-        self.switch(name, False)
 
     def _apply_to_bar(self, fault: Slip | PopIn | Fixturing, now_s: float) -> None:
         position_mm, following = self.position_mm, self._crosshead.following
@@ -427,10 +338,7 @@ class Machine:
         if following:
             self._close_loop(now_s)
 
-    def _faulty(self, kind: str) -> bool:
-        return self._until.get(kind, -math.inf) > self.now_s
-
-    # --- inside -----------------------------------------------------------------------------------
+    # --- inside -------------------------------------------------------------------------------------
     def _empty(self) -> Grip:
         return Grip(self._card, None, math.inf, self._anvil_mm)
 
@@ -474,14 +382,3 @@ def _fixture(frame: FrameCard, card: SimulatorCard) -> Fixture:
             return fixture
     names = ", ".join(fixture.name for fixture in frame.fixtures)
     raise CardError((f"simulator {card.name}: contact.fixture = {name}: one of {names}",))
-
-
-def _crosshead(frame: FrameCard, card: SimulatorCard) -> Crosshead:
-    motion, drive = frame.motion, card.drive
-    up_mm = motion.travel_mm_min if motion is not None else -TRAVEL_MM
-    down_mm = motion.travel_mm_max if motion is not None else TRAVEL_MM
-    return Crosshead(
-        acceleration_mm_s2=drive.acceleration_mm_s2,
-        end_up_mm=up_mm if drive.end_up_mm is None else drive.end_up_mm,
-        end_down_mm=down_mm if drive.end_down_mm is None else drive.end_down_mm,
-    )

@@ -67,6 +67,22 @@ class LinkSampler:
         self._next = max(self._next, end)
         return times_s
 
+    @property
+    def steady(self) -> bool:
+        """No sensor fault at work."""
+        return all(sensor.steady for sensor in self.sensors)
+
+    def rewind(self, to_s: float) -> int:
+        """Samples of the last block after this moment were never asked for; their number."""
+        assert not self._times
+        kept = math.floor(to_s / self._period_s + SAMPLE_EDGE) + 1
+        dropped = max(self._next - kept, 0)
+        if dropped:
+            for sensor in self.sensors:
+                sensor.rewind(dropped)
+            self._next = kept
+        return dropped
+
     def next_s(self) -> float:
         """Time of the next sample."""
         return self._next * self._period_s
@@ -84,10 +100,12 @@ class LinkSampler:
             return None
         times_s = np.concatenate(self._times)
         counts = np.empty((times_s.size, len(self.sensors)))
+        first = self._next - times_s.size
         for column, sensor in enumerate(self.sensors):
-            counts[:, column] = sensor.counts(times_s, np.concatenate([true[column] for true in self._true]))
-        first = self._counter_start + self._next - times_s.size
-        rows = SampleRows(self.link_number, first, times_s, counts, np.concatenate(self._inputs))
+            true = np.concatenate([piece[column] for piece in self._true])
+            counts[:, column] = sensor.counts(first, times_s, true)
+        inputs = np.concatenate(self._inputs)
+        rows = SampleRows(self.link_number, self._counter_start + first, times_s, counts, inputs)
         self._times, self._true, self._inputs = [], [], []
         return rows
 
@@ -119,9 +137,7 @@ def _sensor(
     }
     part = parts.get(channel.role, OtherSensor())
     zero = part.zero if part.zero is not None else frame.cell.zero_balance_n
-    return Sensor(
-        channel, part, zero, period_s, whole=_is_whole(frame, channel), rng=np.random.default_rng(seed)
-    )
+    return Sensor(channel, part, zero, period_s, whole=_is_whole(frame, channel), seed=seed)
 
 
 def _is_whole(frame: FrameCard, channel: Channel) -> bool:

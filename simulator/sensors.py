@@ -1,6 +1,7 @@
 """One sensor and its converter: lag, noise, hum, drift, faults, rounding, rails. True values in, counts out.
 
-Stateful only in its lag, its generator and its counted glitches; any cut of a stream gives the same counts.
+Noise is a function of the sample's number; the rest of the state is the lag and the faults at work. Any cut
+of a stream gives the same counts, and the last block may be taken back in part (`rewind`).
 """
 
 from __future__ import annotations
@@ -16,12 +17,35 @@ from daq.mechanics.quantity import Floats
 from simulator.card import ForceSensor, OtherSensor
 from simulator.faults import AnyFault, Drift, Glitch, NoiseBurst, SensorFault, UnitSlip
 
+NOISE_CHUNK = 4096  # samples drawn at once
+
 
 @dataclass(frozen=True, slots=True)
 class _Active:
     fault: AnyFault
     from_s: float
     until_s: float
+
+
+class Noise:
+    """Standard normal numbers, a fixed one for every sample number."""
+
+    def __init__(self, seed: tuple[int, ...]) -> None:
+        self._seed = seed
+        self._chunk = -1
+        self._values = np.empty(0)
+
+    def of(self, first: int, count: int) -> Floats:
+        """Numbers of consecutive samples."""
+        parts = []
+        while count > 0:
+            chunk, at = divmod(first, NOISE_CHUNK)
+            if chunk != self._chunk:
+                self._values = np.random.default_rng((*self._seed, chunk)).standard_normal(NOISE_CHUNK)
+                self._chunk = chunk
+            parts.append(self._values[at : at + count])
+            first, count = first + parts[-1].size, count - parts[-1].size
+        return parts[0] if len(parts) == 1 else np.concatenate(parts)
 
 
 class Sensor:
@@ -35,7 +59,7 @@ class Sensor:
         period_s: float,
         *,
         whole: bool,
-        rng: np.random.Generator,
+        seed: tuple[int, ...],
     ) -> None:
         self.name, self.role = channel.name, channel.role
         self._channel = channel
@@ -43,13 +67,23 @@ class Sensor:
         self._zero = zero
         self._period_s = period_s
         self._whole = whole
-        self._rng = rng
-        self._burst_rng = rng.spawn(1)[0]  # a burst must not shift the rest of the noise
+        self._noise = Noise((*seed, 0))
+        self._burst = Noise((*seed, 1))  # a burst must not shift the rest of the noise
         self._lagged: tuple[float, float] | None = None  # last true value, last lagged value
         self._active: list[_Active] = []
         self._glitches: list[tuple[float, float, int]] = []  # from_s, size, samples left
         self._held: float | None = None
         self._last = 0.0
+        self._before: tuple[tuple[float, float] | None, float] = (
+            None,
+            0.0,
+        )  # lag and count before the last block
+        self._block: tuple[Floats, Floats, Floats] = (np.empty(0), np.empty(0), np.empty(0))
+
+    @property
+    def steady(self) -> bool:
+        """No fault at work: the last block may be taken back."""
+        return not self._active and not self._glitches
 
     def begin(self, fault: AnyFault, now_s: float) -> None:
         """A fault of this channel begins with the first sample after now."""
@@ -64,24 +98,36 @@ class Sensor:
         self._active.clear()
         self._glitches.clear()
 
-    def counts(self, times_s: Floats, true: Floats) -> Floats:
-        """Counts of consecutive samples."""
+    def counts(self, first: int, times_s: Floats, true: Floats) -> Floats:
+        """Counts of consecutive samples, the first one's number given."""
         card = self._card
-        value = self._lag(true) + self._zero
+        self._before = (self._lagged, self._last)
+        lagged = self._lag(true)
+        value = lagged + self._zero
         if card.drift_per_s:
             value = value + card.drift_per_s * times_s
         if card.hum:
             value = value + card.hum * np.sin(2 * math.pi * card.hum_hz * times_s)
         if card.noise:
-            value = value + card.noise * self._rng.standard_normal(times_s.size)
+            value = value + card.noise * self._noise.of(first, times_s.size)
         if self._active or self._glitches:
-            value = self._before_converter(times_s, value)
+            value = self._before_converter(first, times_s, value)
         counts = self._convert(value)
         if self._active:
             counts = self._after_converter(times_s, counts)
+        self._block = (true, lagged, counts)
         if counts.size:
             self._last = float(counts[-1])
         return counts
+
+    def rewind(self, dropped: int) -> None:
+        """The newest samples of the last block were never asked for."""
+        true, lagged, counts = (part[: part.size - dropped] for part in self._block)
+        self._lagged, self._last = self._before
+        if counts.size:
+            self._lagged = (float(true[-1]), float(lagged[-1])) if self._card.time_constant_s else None
+            self._last = float(counts[-1])
+        self._block = (true, lagged, counts)
 
     def _lag(self, true: Floats) -> Floats:
         """First-order lag, exact for a signal that is straight between samples."""
@@ -98,7 +144,7 @@ class Sensor:
         self._lagged = (float(true[-1]), out[-1])
         return np.array(out[1:])
 
-    def _before_converter(self, times_s: Floats, value: Floats) -> Floats:
+    def _before_converter(self, first: int, times_s: Floats, value: Floats) -> Floats:
         value = value.copy()
         for active in self._active:
             inside = (times_s > active.from_s) & (times_s <= active.until_s)
@@ -108,7 +154,7 @@ class Sensor:
             elif isinstance(fault, Drift):
                 value[inside] += fault.per_s * (times_s[inside] - active.from_s)
             elif isinstance(fault, NoiseBurst):
-                value[inside] += fault.sigma * self._burst_rng.standard_normal(int(inside.sum()))
+                value[inside] += fault.sigma * self._burst.of(first, times_s.size)[inside]
             elif isinstance(fault, SensorFault) and fault.kind == "wrong-polarity":
                 value[inside] *= -1
         return self._glitched(times_s, value)

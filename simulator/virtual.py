@@ -15,14 +15,17 @@ from itertools import pairwise
 import numpy as np
 
 from daq.cards.frame import FrameCard, Link
+from drivers.plan import transmission_s
 from drivers.registry import encoder_for
 from simulator.card import SimulatorCard
 from simulator.commands import Ear, Verb
+from simulator.controller import INPUTS
 from simulator.faults import Rows, WireFault
-from simulator.machine import INPUTS, Machine
+from simulator.machine import Machine
 from simulator.sampling import SampleRows
 from simulator.specimen import InHand
 
+AHEAD_S = 0.05  # rows are made this far ahead while nothing happens; a command takes them back
 BACKLOG_BYTES_MAX = 4096  # what a device keeps when its line is too slow; more is lost as in a real one
 HEARD_MAX = 10_000  # bytes on their way to the machine, in pieces; a host that floods loses them
 
@@ -46,49 +49,66 @@ class _Line:
         self.encoder = encoder_for(frame, number)
         self.streaming = not self.link.start_command
         self.waiting: deque[tuple[float, bytes]] = deque()
+        self._ahead: deque[tuple[float, bytes]] = (
+            deque()
+        )  # rows made ahead of time, by the time of their sample
         self.troubles: list[_Trouble] = []
-        self.row_s = 0.0  # time of the last row on the line
+        self._row_s = 0.0  # time of the last row on the line
+        self._byte_s = transmission_s(self.link, 1)
         self.rows_made = self.rows_sent = self.rows_overrun = 0
         self._end = (self.link.lines.line_end if self.link.lines else "").encode("latin-1")
         self._free_s = 0.0
         self._batch_s = card.port.batch_s
         self._garble = np.random.default_rng((card.seed, number, 99))
 
-    def byte_s(self) -> float:
-        """Time of one byte on the line; a TCP link has none of its own."""
-        if self.link.kind != "serial":
-            return 0.0
-        bits = 1 + self.link.data_bits + self.link.stop_bits + (self.link.parity != "none")
-        return bits / self.link.speed_baud
+    def through_s(self, now_s: float, data: bytes) -> float:
+        """When bytes that the host sends now are through."""
+        return now_s + len(data) * self._byte_s
 
     def connected(self, now_s: float) -> bool:
         return not any(t.kind == "reconnect" and t.from_s < now_s <= t.until_s for t in self.troubles)
 
     def put(self, ready_s: float, data: bytes) -> bool:
         """Queue bytes; False when the line is too far behind."""
-        if not self.connected(ready_s):
+        if self.troubles and not self.connected(ready_s):
             return False
         if self._batch_s:
             ready_s = math.ceil(ready_s / self._batch_s) * self._batch_s
         begin_s = max(ready_s, self._free_s)
-        if self.byte_s() and (begin_s - ready_s) / self.byte_s() > BACKLOG_BYTES_MAX:
+        if begin_s - ready_s > BACKLOG_BYTES_MAX * self._byte_s:
             return False
-        self._free_s = begin_s + len(data) * self.byte_s()
+        self._free_s = begin_s + len(data) * self._byte_s
         self.waiting.append((self._free_s, data))
         return True
 
-    def put_rows(self, rows: SampleRows) -> None:
-        self.rows_made += rows.count
-        if not self.streaming:
-            return
-        data = b""
-        for time_s, data in zip(rows.time_s.tolist(), self._encoded(rows), strict=True):
+    def make(self, rows: SampleRows) -> None:
+        """Encode rows; they leave when their time has come."""
+        self._ahead.extend(zip(rows.time_s.tolist(), self._encoded(rows), strict=True))
+
+    def take_back(self, rows: int) -> None:
+        """The newest rows were made for a time that comes otherwise."""
+        for _ in range(rows):
+            self._ahead.pop()
+
+    def pass_time(self, until_s: float) -> None:
+        """Rows of samples up to this moment leave."""
+        while self._ahead and self._ahead[0][0] <= until_s:
+            time_s, data = self._ahead.popleft()
+            self.rows_made += 1
+            self._row_s = len(data) * self._byte_s
+            if not self.streaming:
+                continue
             for piece in self._troubled(time_s, data) if self.troubles else (data,):
                 if self.put(time_s, piece):
                     self.rows_sent += 1
                 else:
                     self.rows_overrun += 1
-        self.row_s = len(data) * self.byte_s()
+
+    def next_s(self, next_sample_s: float) -> float:
+        """When the next bytes will have arrived at the host."""
+        if self.waiting:
+            return self.waiting[0][0]
+        return (self._ahead[0][0] if self._ahead else next_sample_s) + self._row_s
 
     def take(self, until_s: float) -> list[tuple[float, bytes]]:
         out = []
@@ -138,6 +158,7 @@ class VirtualWire:
         self._motion_link = names.index(frame.motion.link) if frame.motion is not None else 0
         self._heard: deque[tuple[float, int, bytes]] = deque()
         self.bytes_lost = 0
+        self.now_s = 0.0
 
     def write(self, data: bytes, now_s: float, link: int | None = None) -> None:
         """The host sends; the machine hears it when the last byte is through. link None: the motion link."""
@@ -146,16 +167,29 @@ class VirtualWire:
         if not line.connected(now_s) or len(self._heard) >= HEARD_MAX:
             self.bytes_lost += len(data)
             return
-        heard_s = max(now_s + len(data) * line.byte_s(), self._heard[-1][0] if self._heard else 0.0)
+        heard_s = max(line.through_s(now_s, data), self._heard[-1][0] if self._heard else 0.0)
         self._heard.append((heard_s, number, data))
 
     def run_to(self, until_s: float) -> None:
         """Let time pass."""
         while self._heard and self._heard[0][0] <= until_s:
             heard_s, number, data = self._heard.popleft()
-            self._hear(max(heard_s, self.machine.now_s), number, data)
-        self.machine.run_to(until_s)
+            self._hear(max(heard_s, self.now_s), number, data)
+        if until_s > self.machine.now_s:
+            self.machine.run_to(until_s)
+            quiet_s = math.nextafter(self.machine.quiet_until_s(), 0.0)
+            self.machine.run_to(max(min(until_s + AHEAD_S, quiet_s), until_s))
+            self._collect()
+        self._pass_time(until_s)
+
+    def settle(self, now_s: float) -> None:
+        """Bring the machine to exactly this moment, so that something may be done to it."""
+        if now_s < self.machine.now_s:
+            for line, rows in zip(self._lines, self.machine.rewind(now_s), strict=True):
+                line.take_back(rows)
+        self.machine.run_to(now_s)
         self._collect()
+        self._pass_time(now_s)
 
     def read(self, until_s: float, link: int = 0) -> list[tuple[float, bytes]]:
         """What arrived at the host up to this moment: (arrival_s, bytes), a row or a reply each."""
@@ -164,17 +198,14 @@ class VirtualWire:
 
     def next_s(self) -> float:
         """The next moment worth looking: a row, a reply, or a command coming through."""
-        moments = [
-            line.waiting[0][0] if line.waiting else self.machine.next_sample_s(number) + line.row_s
-            for number, line in enumerate(self._lines)
-        ]
+        moments = [line.next_s(self.machine.next_sample_s(number)) for number, line in enumerate(self._lines)]
         if self._heard:
             moments.append(self._heard[0][0])
         return min(moments)
 
     def connected(self, link: int = 0) -> bool:
         """False while the port of this link does not exist."""
-        return self._lines[link].connected(self.machine.now_s)
+        return self._lines[link].connected(self.now_s)
 
     def clear(self) -> None:
         """All misfortunes end."""
@@ -191,9 +222,9 @@ class VirtualWire:
 
     def _hear(self, now_s: float, number: int, data: bytes) -> None:
         line = self._lines[number]
+        self.settle(now_s)
         for heard in line.ear.feed(data):
             reply = self.machine.command(heard, now_s)
-            self._collect()
             if heard.verb is Verb.STREAM:
                 line.streaming = True
             if reply is not None:
@@ -206,7 +237,12 @@ class VirtualWire:
                 if fault.link in (None, line.link.name):
                     line.troubles.append(_trouble(fault, from_s))
         for rows in self.machine.take_rows():
-            self._lines[rows.link].put_rows(rows)
+            self._lines[rows.link].make(rows)
+
+    def _pass_time(self, now_s: float) -> None:
+        self.now_s = max(self.now_s, now_s)
+        for line in self._lines:
+            line.pass_time(now_s)
 
 
 def _trouble(fault: Rows | WireFault, from_s: float) -> _Trouble:

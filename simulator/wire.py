@@ -145,7 +145,7 @@ class WireLoop:
                 if data:
                     self._wire.write(data, now_s, number)
         if hands is not None and hands.fileno() in ready:
-            self._wire.run_to(now_s)
+            self._wire.settle(now_s)
             hands.serve()
 
 
