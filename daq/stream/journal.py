@@ -30,7 +30,7 @@ from daq.stream.spares import Spares
 __all__ = ["SEGMENT_BYTES", "UNSYNCED_BYTES_MAX", "Journal", "JournalReader"]
 
 SEGMENT_BYTES = 16 << 20  # 2 min at 1 kHz, 10 s at 50 kHz
-SEGMENT_BYTES_MIN = 2 * BODY_OFFSET
+SEGMENT_BYTES_MIN = BODY_OFFSET + 1024
 UNSYNCED_BYTES_MAX = 64 << 20  # half a minute at 50 kHz without one good sync: then the run must stop
 _MIB = 1 << 20
 
