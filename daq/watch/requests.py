@@ -58,7 +58,9 @@ class ReturnCrosshead:
 
 @dataclass(frozen=True, slots=True)
 class Reset:
-    """Clear a latched stop. Never starts anything. looked: the operator has looked at the frame (state unknown)."""
+    """Clear a latched stop. Never starts anything. looked: the operator has looked at the frame (state
+    unknown).
+    """
 
     who: str
     looked: bool = False
@@ -79,6 +81,15 @@ class TightenLimit:
     value: float
 
 
+@dataclass(frozen=True, slots=True)
+class Prove:
+    """The wizard's word: polarity pushed by hand, stop drill done. Lifts the lock that a wrong sign has set."""
+
+    who: str
+    polarity: bool
+    stop_drill: bool
+
+
 Request: TypeAlias = (
-    StopRequest | OpenRun | StartRun | CloseRun | Jog | ReturnCrosshead | Reset | Note | TightenLimit
+    StopRequest | OpenRun | StartRun | CloseRun | Jog | ReturnCrosshead | Reset | Note | TightenLimit | Prove
 )

@@ -48,7 +48,7 @@ class Verdict(Enum):
     UNCLEAR = "unclear - look"
 
 
-Json: TypeAlias = str | int | float | bool | None | tuple["Json", ...] | Mapping[str, "Json"]
+Json: TypeAlias = str | int | float | bool | tuple["Json", ...] | Mapping[str, "Json"] | None
 
 
 @dataclass(frozen=True, slots=True)
@@ -78,7 +78,9 @@ class MoveKind(Enum):
 
 @dataclass(frozen=True, slots=True)
 class Move:
-    """Set the crosshead moving. Positive speed = towards the specimen. rate_n_s: the machine's own force loop."""
+    """Set the crosshead moving. Positive speed = towards the specimen. rate_n_s: the machine's own force
+    loop.
+    """
 
     kind: MoveKind
     speed_mm_min: float

@@ -1,0 +1,145 @@
+"""Seating: when the stiffness has become steady, and how long the toe was. Tells; stops nothing.
+
+Reference: job.md 3.1. Slopes over windows of max(0.2 s, 20 samples, 2 % of the time to the median break load,
+and as long as the noise needs for a slope good to 5 % at two sigma): in noise a shorter window would never
+look steady.
+"""
+
+from __future__ import annotations
+
+from collections import deque
+from dataclasses import dataclass
+from math import cbrt
+
+WINDOW_S = 0.2
+WINDOW_SAMPLES = 20
+WINDOW_SHARE = 0.02
+STEADY = 0.05
+STEADY_WINDOWS = 3
+OF_HIGHEST = 0.7
+FORCE_SIGMA = 10.0
+FORCE_SHARE = 0.01
+TOE_SHARE = 0.25
+LATE_RISE = 0.10
+LATE_FROM, LATE_TO = 0.5, 0.8
+
+
+@dataclass(frozen=True, slots=True)
+class Seated:
+    """toe_offset_mm: travel from first contact to where the straight line would have begun; None: no
+    position.
+    """
+
+    force_net_n: float
+    slope_n_s: float
+    toe_offset_mm: float | None
+
+
+def seating_window_s(rate_hz: float, sigma_n: float, rate_n_s: float, time_to_break_s: float) -> float:
+    by_noise_s = cbrt(48.0 * sigma_n**2 / (rate_hz * (STEADY * rate_n_s) ** 2))
+    return max(WINDOW_S, WINDOW_SAMPLES / rate_hz, WINDOW_SHARE * time_to_break_s, by_noise_s)
+
+
+class Seating:
+    """Slope of the force, window by window, while seating and loading."""
+
+    __slots__ = (
+        "_begun_s",
+        "_contact_mm",
+        "_highest",
+        "_late_from",
+        "_n",
+        "_slopes",
+        "_speed_mm_s",
+        "_st",
+        "_stt",
+        "_stx",
+        "_sx",
+        "_told_late",
+        "_window_s",
+        "force_min_n",
+        "load_p50_n",
+        "seated",
+    )
+
+    def __init__(
+        self,
+        *,
+        window_s: float,
+        sigma_n: float,
+        load_p50_n: float,
+        speed_mm_s: float,
+        contact_mm: float | None,
+    ) -> None:
+        self._window_s, self._contact_mm, self._speed_mm_s = window_s, contact_mm, speed_mm_s
+        self.load_p50_n = load_p50_n
+        self.force_min_n = max(FORCE_SIGMA * sigma_n, FORCE_SHARE * load_p50_n)
+        self._slopes: deque[float] = deque(maxlen=STEADY_WINDOWS)
+        self._highest = 0.0
+        self._late_from: float | None = None
+        self._told_late = False
+        self.seated: Seated | None = None
+        self._begun_s = float("-inf")
+        self._n, self._st, self._stt, self._sx, self._stx = 0, 0.0, 0.0, 0.0, 0.0
+
+    def feed(self, time_s: float, net_n: float, at_mm: float | None) -> Seated | str | None:
+        """One bin mean. Returns the note once seated, or the words of a caution."""
+        if self._begun_s == float("-inf"):
+            self._begun_s = time_s
+        off_s = time_s - self._begun_s
+        self._n += 1
+        self._st += off_s
+        self._stt += off_s * off_s
+        self._sx += net_n
+        self._stx += off_s * net_n
+        if off_s < self._window_s or self._n < 3:
+            return None
+        spread = self._stt - self._st * self._st / self._n
+        slope = (self._stx - self._st * self._sx / self._n) / spread
+        self._begin(time_s)
+        return self._window_done(slope, net_n, at_mm, time_s)
+
+    def restart(self) -> None:
+        """After a partial drop: a window across it would show nothing true."""
+        self._begin(float("-inf"))
+        self._slopes.clear()
+
+    def _begin(self, time_s: float) -> None:
+        self._begun_s = time_s
+        self._n, self._st, self._stt, self._sx, self._stx = 0, 0.0, 0.0, 0.0, 0.0
+
+    def _window_done(
+        self, slope: float, net_n: float, at_mm: float | None, time_s: float
+    ) -> Seated | str | None:
+        self._slopes.append(slope)
+        self._highest = max(self._highest, slope)
+        if self.seated is None:
+            if self._steady(slope) and net_n > self.force_min_n:
+                self.seated = Seated(net_n, slope, self._toe_mm(slope, net_n, at_mm))
+                return self.seated
+            if net_n > TOE_SHARE * self.load_p50_n and not self._told_late:
+                self._told_late = True
+                return "toe longer than a quarter of the expected break load"
+        return self._late(slope, net_n)
+
+    def _steady(self, slope: float) -> bool:
+        if len(self._slopes) < STEADY_WINDOWS or slope <= 0 or slope < OF_HIGHEST * self._highest:
+            return False
+        pairs = zip(self._slopes, list(self._slopes)[1:], strict=False)
+        return all(abs(after - before) < STEADY * slope for before, after in pairs)
+
+    def _late(self, slope: float, net_n: float) -> str | None:
+        """Twist that settles late shows as a stiffness that still rises between half and four fifths."""
+        if net_n < LATE_FROM * self.load_p50_n or net_n > LATE_TO * self.load_p50_n:
+            return None
+        if self._late_from is None:
+            self._late_from = slope
+        if self._told_late or not slope > (1.0 + LATE_RISE) * self._late_from:
+            return None
+        self._told_late = True
+        return "stiffness still rises late"
+
+    def _toe_mm(self, slope: float, net_n: float, at_mm: float | None) -> float | None:
+        if at_mm is None or self._contact_mm is None:
+            return None
+        return at_mm - net_n * self._speed_mm_s / slope - self._contact_mm

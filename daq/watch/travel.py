@@ -1,0 +1,72 @@
+"""Travel: where the crosshead is and how fast it goes, from the position channel. Judges nothing.
+
+Positions are counted along the direction towards the specimen. Samples are thinned to about 200 per second:
+speeds are asked over a tenth of a second and more.
+"""
+
+from __future__ import annotations
+
+import itertools
+from collections import deque
+from math import sqrt
+
+KEPT_S = 2.5
+SPACING_S = 0.005
+POINTS_MIN = 4
+
+
+class Travel:
+    """The last seconds of crosshead positions, mm, growing towards the specimen."""
+
+    __slots__ = ("_points", "at_mm", "resolution_mm", "spacing_s", "step_mm", "time_s")
+
+    def __init__(self, rate_hz: float, step_mm: float) -> None:
+        self.spacing_s = max(SPACING_S, 1.0 / rate_hz)
+        self._points: deque[tuple[float, float]] = deque(maxlen=int(KEPT_S / self.spacing_s) + 2)
+        self.step_mm = self.resolution_mm = step_mm
+        self.at_mm: float | None = None
+        self.time_s = float("-inf")
+
+    def feed(self, time_s: float, at_mm: float) -> None:
+        """A valid position; kept in the history only where the last kept one is old enough."""
+        self.at_mm, self.time_s = at_mm, time_s
+        if not self._points or time_s - self._points[-1][0] >= 0.99 * self.spacing_s:
+            self._points.append((time_s, at_mm))
+
+    def forget(self) -> None:
+        """The position is not known any more."""
+        self.at_mm = None
+        self._points.clear()
+
+    def learn_at_rest(self, since_s: float) -> None:
+        """What the channel can show: its smallest change and its noise, from positions known to be at rest."""
+        rest = [x for t, x in self._points if t >= since_s]
+        if len(rest) < POINTS_MIN:
+            return
+        steps = [abs(b - a) for a, b in itertools.pairwise(rest) if a != b]
+        mid = sum(rest) / len(rest)
+        sigma = sqrt(sum((x - mid) ** 2 for x in rest) / (len(rest) - 1))
+        self.resolution_mm = max(self.step_mm, min(steps, default=0.0), 2.0 * sigma)
+
+    def speed_mm_s(self, window_s: float) -> float | None:
+        """Least-squares speed over the last window; None where it is not covered by enough points."""
+        if not self._points:
+            return None
+        first_s = self._points[-1][0] - window_s
+        points = []
+        for point in reversed(self._points):
+            if point[0] < first_s:
+                break
+            points.append(point)
+        if len(points) < POINTS_MIN or points[0][0] - points[-1][0] < 0.7 * window_s:
+            return None
+        mid_s = sum(t for t, _ in points) / len(points)
+        spread = sum((t - mid_s) ** 2 for t, _ in points)
+        return sum((t - mid_s) * x for t, x in points) / spread
+
+    def back_from_top_mm(self, since_s: float) -> float:
+        """How far the crosshead has gone back from the furthest point it reached since then."""
+        seen = [x for t, x in self._points if t >= since_s]
+        if not seen or self.at_mm is None:
+            return 0.0
+        return max(seen) - self.at_mm
