@@ -40,7 +40,7 @@ def course_of(loading: Loading, peak: Peak | None, bending: Bending | None) -> C
     return Course(
         seated_s=story.seated_s,
         toe_n=loading.net_n(story.seated_load_n if story.toe_n is None else story.toe_n),
-        toe_offset_mm=_toe_offset_mm(story.toe_offset_mm, bending),
+        toe_offset_mm=_toe_offset_mm(loading, bending),
         time_to_break_s=peak.onset_s - loading.contact_s if peak is not None and lasts else None,
         strain_at_break=_at_break(loading, strains, peak),
         deflection_at_break_mm=_at_break(loading, travels, peak),
@@ -55,13 +55,17 @@ def course_of(loading: Loading, peak: Peak | None, bending: Bending | None) -> C
     )
 
 
-def _toe_offset_mm(told_mm: float | None, bending: Bending | None) -> float | None:
-    """Refined at the end through 20 to 80 % of the peak; what the watch said while loading stands only
+def _toe_offset_mm(loading: Loading, bending: Bending | None) -> float | None:
+    """Travel from contact to where the line through 20 to 80 % of the peak begins; the watch's own only
     without it.
+
+    The toe is already off `values`, so at contact they read minus the toe.
     """
-    if bending is None or bending.role == "strain" or not math.isfinite(bending.toe_offset):
-        return told_mm
-    return bending.toe_offset
+    if bending is not None and bending.role != "strain" and math.isfinite(bending.toe_offset):
+        known = np.flatnonzero(np.isfinite(bending.values) & (loading.samples.time_s >= loading.contact_s))
+        if known.size:
+            return -float(bending.values[known[0]])
+    return loading.story.toe_offset_mm
 
 
 def _words(bending: Bending | None) -> str:

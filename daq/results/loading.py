@@ -14,7 +14,8 @@ from daq.results.samples import Samples, noise_guess_n, running_median, screened
 from daq.results.setup import Setup
 from daq.results.story import GRADUAL, Story
 
-CONTACT_SHARE = 0.01  # of the peak: the load history begins here
+CONTACT_SHARE = 0.001  # of the peak, and at least 3 sigma: the load history begins here
+CONTACT_SIGMAS = 3.0
 SEATED_SHARE = 0.05  # of the peak: taken as seated where no event says it
 FALL_SHARES = (0.9, 0.2)  # of the peak: where the fall is looked at for the filter's lag
 FALL_SAMPLES = 3
@@ -70,7 +71,7 @@ def loading_of(setup: Setup, story: Story, samples: Samples) -> Loading:
     seated_s = story.seated_s
     if seated_s is None:
         seated_s = _last_below_s(samples, SEATED_SHARE * highest_n, end_s)
-    contact_s = _last_below_s(samples, CONTACT_SHARE * highest_n, end_s)
+    contact_s = _last_below_s(samples, max(CONTACT_SHARE * highest_n, CONTACT_SIGMAS * sigma_n), end_s)
     return Loading(setup, story, samples, clean, sigma_n, onset, highest_n, contact_s, seated_s)
 
 
@@ -119,7 +120,7 @@ def _last_below_s(samples: Samples, level_n: float, end_s: float) -> float:
     """Time of the last sample below a level before end_s; the first sample's where there is none."""
     if samples.count == 0:
         return math.nan
-    below = np.flatnonzero((samples.load_n < level_n) & (samples.time_s <= end_s))
+    below = np.flatnonzero((running_median(samples.load_n) < level_n) & (samples.time_s <= end_s))
     return float(samples.time_s[int(below[-1]) if below.size else 0])
 
 

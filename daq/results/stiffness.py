@@ -43,7 +43,8 @@ class Bending:
     """What the bar did beside each force sample. values: mm at the place the role says, or strain; toe taken
     off.
 
-    role: deflection (mid-span), position (load rollers, machine part removed) or strain.
+    role: deflection (mid-span), position (load rollers, machine part removed) or strain. toe_offset: reading
+    of the channel that was taken off, so that the straight part runs through zero.
     """
 
     role: str

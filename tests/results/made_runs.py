@@ -107,7 +107,10 @@ def made_run(bar: Bar, rng: np.random.Generator) -> RunData:
     frame_n_mm = 10e3
     section_mm4 = 4.0 * 3.0**3 / 12.0
     bar_n_mm = 12e3 * bar.modulus_gpa * section_mm4 / (10.0**2 * (3 * 40.0 - 4 * 10.0))
-    travel_mm = bar.true_n(np.clip(time_s, None, bar.time_to_break_s)) * (1 / bar_n_mm + 1 / frame_n_mm)
+    speed_mm_s = bar.slope_n_s * (1 / bar_n_mm + 1 / frame_n_mm)
+    travel_mm = speed_mm_s * np.clip(
+        time_s, None, bar.time_to_break_s
+    )  # the gap is approached at the same speed
     index = np.arange(5000, 5000 + time_s.size)
     clock = time_s + REST_S
     channels = {
@@ -133,6 +136,7 @@ def _events(bar: Bar, time_s: np.ndarray, value: np.ndarray, index: np.ndarray) 
     """In the order and with the fields of the watch; the fracture is seen where a sample is first 2 %
     (6 sigma) low.
     """
+    seated_s = bar.toe_s + min(1.0, 0.05 * bar.time_to_break_s)
     rows: list[tuple[float, str, dict[str, Any]]] = [
         (
             1.1,
@@ -141,7 +145,7 @@ def _events(bar: Bar, time_s: np.ndarray, value: np.ndarray, index: np.ndarray) 
         ),
         (1.5, "started", {}),
         (REST_S + 0.05, "approach_touch", {"force_n": bar.tare_n + 3.0}),
-        (REST_S + 1.2 * bar.toe_s, "seated", {"force_n": bar.tare_n + bar.slope_n_s * 0.7 * bar.toe_s}),
+        (REST_S + seated_s, "seated", {"force_n": bar.tare_n + float(bar.true_n(np.array(seated_s)))}),
     ]
     if bar.broken:
         forecast_n = bar.load_n(np.clip(time_s, None, bar.time_to_break_s)) + bar.tare_n

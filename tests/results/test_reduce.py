@@ -44,7 +44,11 @@ def test_clean_bar_gives_every_number(alumina):
     assert found["verdict"] == "provisional" and found["break_class"] == "sudden break"
     assert found["remarks"] == [] and found["missing"] == []
     assert found["peak_used"] == "recovered" and found["peak_n"] == found["peak_recovered_n"]
-    assert abs(found["toe_offset_mm"] - 7.0) < 1e-3
+    assert found["time_to_break_s"] == pytest.approx(16.0, abs=0.3)
+    speed_mm_s = 460.0 / 15.5 * (1 / 5130.0 + 1 / 10e3)
+    assert found["toe_offset_mm"] == pytest.approx(
+        0.5 * speed_mm_s, rel=0.5
+    )  # half of a quadratic toe of 1 s
 
 
 def test_uncertainty_of_the_job_map_example(alumina):
