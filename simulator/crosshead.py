@@ -104,9 +104,11 @@ class Crosshead:
 
     # --- what it is told --------------------------------------------------------------------------
     def order(self, effective_s: float, order: Order) -> None:
-        """A Halt drops every Run that has not begun."""
+        """A Halt drops every Run that has not begun; a Run takes effect after every Halt given before it."""
         if isinstance(order, Halt):
             self._pending = [(t, o) for t, o in self._pending if isinstance(o, Halt)]
+        elif self._pending:
+            effective_s = max(effective_s, self._pending[-1][0])
         self._pending.append((effective_s, order))
         self._pending.sort(key=lambda item: item[0])
 

@@ -10,11 +10,12 @@ import signal
 import socket
 import sys
 import time
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any
 
 from daq.station.places import Places
+from daq.stream.ring import RingAbsent, RingReader
 
 ALIVE_S = 0.5
 
@@ -75,12 +76,21 @@ def places_of(config: Mapping[str, Any]) -> Places:
     return Places(stored["frame"], Path(stored["runtime"]), Path(stored["data"]))
 
 
-def await_path(path: Path, life: Life) -> bool:
-    """Wait for a file of the bench process; False when told to end first."""
-    while not path.exists():
+def await_until(test: Callable[[], bool], life: Life) -> bool:
+    """Wait for what another process makes; False when told to end first."""
+    while not test():
         if life.over():
             return False
         time.sleep(0.005)
+    return True
+
+
+def ring_is_ready(path: Path) -> bool:
+    """The bench has made the ring and filled in its header."""
+    try:
+        RingReader(path).close()
+    except RingAbsent:
+        return False
     return True
 
 
@@ -90,7 +100,7 @@ def recorder(config: Mapping[str, Any], life: Life) -> int:
     places = places_of(config)
     ring = Path(config["ring_path"])
     life.ready()
-    if await_path(ring, life):
+    if await_until(lambda: ring_is_ready(ring), life):
         report = Reporter("recorder", places.station_socket)
         run_recorder(ring, places.journal(config["stream_id"]), report, life.over)
     return 0
@@ -119,7 +129,7 @@ def archivist(config: Mapping[str, Any], life: Life) -> int:
         if leftover != journal:
             report({"report": "recovering", "journal": leftover.name})
             recover(leftover, places.data, reduce=result_of, report=report, pulse=life.over)
-    if await_path(journal, life):
+    if await_until(journal.is_dir, life):
         run_archivist(journal, places.data, places.spool, result_of, report, life.over, copy_to)
         if life.orderly:                        # the recorder has ended before us: everything is sealed, clear up
             recover(journal, places.data, reduce=result_of, report=report)

@@ -28,7 +28,7 @@ from daq.errors import CardError, MidspanError, Refused
 from daq.station.follower import Follower, Tell
 from daq.station.found import found_records, sealed_from_report
 from daq.station.places import Places
-from daq.station.processes import Life
+from daq.station.processes import Life, ring_is_ready
 from daq.station.seat import Seat
 from daq.station.sitting import Sitting
 from daq.stream.ring import RingReader
@@ -42,6 +42,8 @@ BEAT_S = 0.1                        # snapshot request = heartbeat; the bench st
 SUMMARY_EVERY = 2                   # of the follow turns: 10/s
 HEARTBEAT_S = 1.0                   # a state update at least once a second
 ANSWER_TIMEOUT_S = 1.0
+ANSWERING_MAX = 64                  # commands in work at a time
+RECOVERY_WAIT_S = 4.0               # a client waits 5 s for its answer
 FEED_QUEUE_UPDATES_MAX = 1_000      # per viewer; ZeroMQ drops beyond, the numbers show it
 REPORT_BYTES_MAX = 65_536
 
@@ -115,8 +117,8 @@ class Station:
         self._seat = Seat()
         self._sitting: Sitting | None = None
         self._snapshot: dict[str, Any] = {}
-        self._archivist_caught_up = False
-        self._copies: dict[str, Any] = {}
+        self._caught_up = asyncio.Event()
+        self._answering: set[asyncio.Task[None]] = set()
         self._reports: dict[str, Any] = {}
         self._number = 0
         self._lost_entries = 0
@@ -151,7 +153,7 @@ class Station:
     # --- ring -> feed -------------------------------------------------------------------------------------------
     async def _follow(self) -> None:
         ring = Path(self._config["ring_path"])
-        while not ring.exists():
+        while not ring_is_ready(ring):
             await asyncio.sleep(0.01)
         reader = RingReader(ring)
         turn, heard_s = 0, 0.0
@@ -237,11 +239,15 @@ class Station:
             except BlockingIOError:
                 return
             if report.get("from") == "archivist":
-                self._archivist_caught_up |= report.get("report") != "recovering"
+                self._note_archivist(report)
             if report.get("report") == "sealed":
                 asyncio.get_running_loop().create_task(self._on_sealed(report))
             else:
                 self._reports[str(report.get("from"))] = report
+
+    def _note_archivist(self, report: Mapping[str, Any]) -> None:
+        if report.get("report") not in ("recovering", "sealed"):
+            self._caught_up.set()
 
     async def _on_sealed(self, report: Mapping[str, Any]) -> None:
         sealed = sealed_from_report(report)
@@ -253,8 +259,15 @@ class Station:
     async def _serve(self) -> None:
         while True:
             parts = await self._control.recv_multipart()
-            answer = await self._answer(parts[-1])
-            await self._control.send_multipart([*parts[:-1], json.dumps(answer).encode()])
+            if len(self._answering) >= ANSWERING_MAX:
+                continue                        # a flood gets no answer; the stop line does not pass here
+            task = asyncio.create_task(self._respond(parts))
+            self._answering.add(task)
+            task.add_done_callback(self._answering.discard)
+
+    async def _respond(self, parts: list[bytes]) -> None:
+        answer = await self._answer(parts[-1])
+        await self._control.send_multipart([*parts[:-1], json.dumps(answer).encode()])
 
     async def _answer(self, message: bytes) -> dict[str, Any]:
         try:
@@ -312,8 +325,10 @@ class Station:
     async def _mount(self, words: Mapping[str, Any]) -> dict[str, Any]:
         if self._sitting is None:
             raise Refused("mount", ("no series is open; load one first",))
-        if not self._archivist_caught_up:
-            raise Refused("mount", ("records of an earlier run are still being recovered; try again in a moment",))
+        try:
+            await asyncio.wait_for(self._caught_up.wait(), RECOVERY_WAIT_S)
+        except TimeoutError as error:
+            raise Refused("mount", ("records of an earlier run are still being recovered; try again",)) from error
         sitting = self._sitting
         number = str(words.get("specimen") or sitting.next_number() or "")
         if not number:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import datetime as dt
+import json
 import os
 import socket
 import subprocess
@@ -122,8 +123,6 @@ def virtual_frame(cards: Path, folder: Path, seed: int) -> Iterator[Path]:
 
 def lay_bar(hands: Path, specimen: Mapping[str, Any]) -> None:
     """The simulated person lays the next bar on the rollers."""
-    import json
-
     with socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM) as line:
         line.sendto(json.dumps({"mount": dict(specimen)}).encode(), str(hands))
 
