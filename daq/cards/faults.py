@@ -49,7 +49,14 @@ def raise_faults(lines: Iterable[str]) -> None:
 
 def faults_of(error: ValidationError, model: type[Card], at: Path = ()) -> tuple[Fault, ...]:
     """Every field fault that pydantic found, in our words."""
-    return tuple(_fault(detail, model, at) for detail in error.errors(include_url=False))
+    details = error.errors(include_url=False)
+    return tuple(_fault(detail, model, at) for detail in details if not _only_follows(detail))
+
+
+def _only_follows(detail: ErrorDetails) -> bool:
+    """A list that is called too short only because its items are faulty."""
+    value = detail["input"]
+    return detail["type"] == "too_short" and len(value) >= detail["ctx"]["min_length"]
 
 
 def _fault(detail: ErrorDetails, model: type[Card], at: Path) -> Fault:

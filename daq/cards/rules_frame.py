@@ -204,7 +204,8 @@ def fixture_faults(number: int, fixture: Fixture) -> Iterator[Fault]:
     if 0.0 < room <= fixture.roller_diameter_mm / 2.0:
         allowed = f"less than {2.0 * room:g} mm, or the rollers would touch"
         yield Fault((*at, "roller_diameter_mm"), allowed, "correct the diameter or the spans")
-    for key in ("support_span_u_mm", "load_span_u_mm"):
+    uncertain = ("support_span_u_mm", "load_span_u_mm")[: 2 if fixture.geometry == "4-point" else 1]
+    for key in uncertain:
         if getattr(fixture, key) >= support / 2.0:
             allowed = f"less than {support / 2.0:g} mm, half the support span"
             yield Fault(
