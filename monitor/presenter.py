@@ -12,7 +12,7 @@ from typing import Any
 
 from daq.stream.updates import Update
 
-STALE_S = 3.0           # job.md J3: older data are grey and said to be not current
+STALE_S = 3.0  # job.md J3: older data are grey and said to be not current
 NO_CONTACT_S = 10.0
 
 INSTRUCTIONS: Mapping[str, str] = {
@@ -73,7 +73,9 @@ class Presenter:
         self.frame = str(look["frame"]["name"])
         self.simulated = bool(look["frame"]["simulated"])
         sitting = look.get("sitting") or {"bars": []}
-        self.results = [bar["result"] | {"specimen": bar["number"]} for bar in sitting["bars"] if bar["result"]]
+        self.results = [
+            bar["result"] | {"specimen": bar["number"]} for bar in sitting["bars"] if bar["result"]
+        ]
         self._heard_s = now_s
 
     def take(self, update: Update, now_s: float) -> None:
@@ -85,7 +87,9 @@ class Presenter:
         elif update.kind == "summary":
             self._summary = update.body
         elif update.kind == "result":
-            self.results.append({**update.body.get("result", {}), "specimen": update.body.get("specimen", "")})
+            self.results.append(
+                {**update.body.get("result", {}), "specimen": update.body.get("specimen", "")}
+            )
 
     def lines(self, now_s: float) -> list[Line]:
         """The view in the order of job.md 5: state, load, percent, bar, instruction or fault."""
@@ -111,7 +115,9 @@ class Presenter:
         band = f"{percent:3.0f} % of the expected break load" if percent is not None else "-"
         rate = words(value("stress_rate_mpa_s"), 1, "MPa/s")
         return [
-            Line("load", f"{words(value('net_n'), 1, 'N')} net   {words(value('gross_n'), 1, 'N')} gross", tone),
+            Line(
+                "load", f"{words(value('net_n'), 1, 'N')} net   {words(value('gross_n'), 1, 'N')} gross", tone
+            ),
             Line("stress", f"{stress}   {rate}", tone),
             Line("expected", band, tone),
             Line("crosshead", words(value("position_mm"), 3, "mm"), tone),
@@ -140,7 +146,14 @@ class Presenter:
 
 
 def state_tone(state: str) -> Tone:
-    if state in ("stopped", "signal lost", "overload", "shield open", "emergency stop", "broken? - still loaded"):
+    if state in (
+        "stopped",
+        "signal lost",
+        "overload",
+        "shield open",
+        "emergency stop",
+        "broken? - still loaded",
+    ):
         return Tone.STOP
     if state.startswith(("unknown", "bench process")):
         return Tone.STOP

@@ -49,7 +49,9 @@ class TerminalView:
         if state == self._said and now_s - self._said_s < PIPE_EVERY_S:
             return
         self._said, self._said_s = state, now_s
-        chosen = [line.text for line in lines if line.label in ("state", "load", "stress", "expected", "fault")]
+        chosen = [
+            line.text for line in lines if line.label in ("state", "load", "stress", "expected", "fault")
+        ]
         self._console.print("   ".join(chosen), markup=False, highlight=False, soft_wrap=True)
 
     def say(self, text: str) -> None:
@@ -62,5 +64,7 @@ def drawn(lines: Sequence[Line]) -> Group:
     table = Table.grid(padding=(0, 2))
     for line in lines:
         style = STYLES[line.tone]
-        table.add_row(Text(MARKS[line.tone], style=style), Text(line.label, style="dim"), Text(line.text, style=style))
+        table.add_row(
+            Text(MARKS[line.tone], style=style), Text(line.label, style="dim"), Text(line.text, style=style)
+        )
     return Group(table)

@@ -59,7 +59,7 @@ class VirtualBench:
         self.core = BenchCore(self.frame, pipeline, decoders, motion, origin_ns=0)
         self._links_up = [True] * len(self.frame.links)
 
-    # --- time ---------------------------------------------------------------------------------------------------
+    # --- time
     def run_to(self, until_s: float) -> None:
         """Let time pass, from byte to byte and tick to tick."""
         while self.now_s < until_s:
@@ -85,13 +85,15 @@ class VirtualBench:
     def now_ns(self) -> int:
         return round(self.now_s * NS)
 
-    # --- what people do -----------------------------------------------------------------------------------------
+    # --- what people do
     def request(self, request: Request) -> None:
         """Raises Refused."""
         self._send(self.core.request(request, self.now_ns))
         self._keep()
 
-    def open_run(self, method: MethodCard, specimen: Specimen, fixture: str, *, loading: int = 1, **run: Any) -> None:
+    def open_run(
+        self, method: MethodCard, specimen: Specimen, fixture: str, *, loading: int = 1, **run: Any
+    ) -> None:
         """Call the bar; tare follows by itself."""
         named = {
             "run_id": f"run-{specimen.number}-{loading}",
@@ -102,9 +104,13 @@ class VirtualBench:
             "utc": "2026-01-01T00:00:00.000+00:00",
             **run,
         }
-        self.request(OpenRun(named, specimen.model_dump(mode="json"), method.model_dump(mode="json"), fixture))
+        self.request(
+            OpenRun(named, specimen.model_dump(mode="json"), method.model_dump(mode="json"), fixture)
+        )
 
-    def break_bar(self, method: MethodCard, specimen: Specimen, fixture: str, *, timeout_s: float = 300.0) -> bool:
+    def break_bar(
+        self, method: MethodCard, specimen: Specimen, fixture: str, *, timeout_s: float = 300.0
+    ) -> bool:
         """Open, tare, start, wait for the end. False when the run was not closed in time."""
         self.open_run(method, specimen, fixture)
         if not self.run_until(lambda: self.state is State.READY or self.closed, 20.0) or self.closed:
@@ -126,7 +132,7 @@ class VirtualBench:
         """All events of that name, in order."""
         return [event for event in self.events if event["event"] == name]
 
-    # --- the shell's part ---------------------------------------------------------------------------------------
+    # --- the shell's part
     def _hear(self, number: int) -> None:
         up = self.wire.connected(number)
         if up != self._links_up[number]:

@@ -24,7 +24,15 @@ MAY_IMPORT: dict[str, tuple[str, ...]] = {
     "daq.series": ("daq.stream", "daq.mechanics", "daq.cards", "daq.results"),
     "daq.record": ("daq.stream", "daq.cards"),
     "daq.bench": ("daq.stream", "daq.watch", "daq.cards", "drivers"),
-    "daq.recompute": ("daq.record.read", "daq.watch", "daq.results", "daq.stream", "daq.cards", "daq.bench.core", "drivers"),
+    "daq.recompute": (
+        "daq.record.read",
+        "daq.watch",
+        "daq.results",
+        "daq.stream",
+        "daq.cards",
+        "daq.bench.core",
+        "drivers",
+    ),
     "daq.station": ("daq", "drivers.registry"),
     "daq.cli": ("daq", "drivers", "monitor", "simulator"),
     "drivers": ("daq.stream", "daq.cards", "daq.record.read", "daq.watch.values"),
@@ -34,7 +42,14 @@ MAY_IMPORT: dict[str, tuple[str, ...]] = {
 }
 LEAVES = ("daq.errors", "daq.version")
 
-PURE = ("daq.watch", "daq.mechanics", "daq.results", "daq.bench.core", "daq.bench.messages", "monitor.presenter")
+PURE = (
+    "daq.watch",
+    "daq.mechanics",
+    "daq.results",
+    "daq.bench.core",
+    "daq.bench.messages",
+    "monitor.presenter",
+)
 PURE_FILES = (
     "daq.stream.entry",
     "daq.stream.payloads",
@@ -51,11 +66,22 @@ PURE_FILES = (
     "drivers.motion",
     "drivers.checks",
 )
-IMPURE_MODULES = {"socket", "threading", "asyncio", "time", "os", "random", "logging", "h5py", "serial", "subprocess"}
+IMPURE_MODULES = {
+    "socket",
+    "threading",
+    "asyncio",
+    "time",
+    "os",
+    "random",
+    "logging",
+    "h5py",
+    "serial",
+    "subprocess",
+}
 
 FILE_LINES_MAX = 500
 FUNCTION_LINES_MAX = 60
-TOP_LOOPS: set[str] = set()         # where `except Exception` may stand
+TOP_LOOPS: set[str] = set()  # where `except Exception` may stand
 
 
 def module_name(path: Path) -> str:
@@ -89,7 +115,9 @@ def test_imports_follow_the_rule(path: Path) -> None:
         assert within(imported, (room, *MAY_IMPORT[room])), f"{name}:{line} may not import {imported}"
 
 
-@pytest.mark.parametrize("path", [p for p in FILES if within(module_name(p), PURE + PURE_FILES)], ids=module_name)
+@pytest.mark.parametrize(
+    "path", [p for p in FILES if within(module_name(p), PURE + PURE_FILES)], ids=module_name
+)
 def test_the_core_is_pure(path: Path) -> None:
     for imported, line in imports(path):
         assert imported.split(".")[0] not in IMPURE_MODULES, f"{module_name(path)}:{line} imports {imported}"
@@ -119,10 +147,14 @@ def test_no_wall_clock_no_print_no_bare_queue_no_broad_except(path: Path) -> Non
         if isinstance(node, ast.Call):
             called = ast.unparse(node.func)
             assert called not in ("time.time", "print"), f"{path}:{node.lineno}: {called}"
-            assert not (called.endswith("queue.Queue") and not node.args), f"{path}:{node.lineno}: unbounded queue"
+            assert not (called.endswith("queue.Queue") and not node.args), (
+                f"{path}:{node.lineno}: unbounded queue"
+            )
         if isinstance(node, ast.ExceptHandler) and node.type is not None:
             broad = ast.unparse(node.type) in ("Exception", "BaseException")
-            assert not broad or module_name(path) in TOP_LOOPS, f"{path}:{node.lineno}: except {ast.unparse(node.type)}"
+            assert not broad or module_name(path) in TOP_LOOPS, (
+                f"{path}:{node.lineno}: except {ast.unparse(node.type)}"
+            )
 
 
 def test_the_project_speaks_of_itself_alone() -> None:

@@ -31,8 +31,8 @@ from drivers.motion import (
 NewEntry: TypeAlias = tuple[Kind, int, bytes]
 
 NS = 1_000_000_000
-RECORDER_CAUTION_S = 10.0   # job.md 4, row 27
-RECORDER_STOP_S = 45.0      # job.md 4, row 27; the ring holds 60 s
+RECORDER_CAUTION_S = 10.0  # job.md 4, row 27
+RECORDER_STOP_S = 45.0  # job.md 4, row 27; the ring holds 60 s
 MOVING = frozenset(
     {
         State.APPROACHING,
@@ -100,7 +100,7 @@ class BenchCore:
         """Stream time of a monotonic instant, s."""
         return (now_ns - self._origin_ns) * 1e-9
 
-    # --- what happens -------------------------------------------------------------------------------------------
+    # --- what happens
     def received(self, link: int, data: bytes, now_ns: int) -> list[Write]:
         """Bytes arrived on a link. Returns what must be written now."""
         now_s = self.seconds(now_ns)
@@ -184,7 +184,7 @@ class BenchCore:
         self._sent.clear()
         return out
 
-    # --- obeying ------------------------------------------------------------------------------------------------
+    # --- obeying
     def _obey(self, step: Step, now_ns: int) -> None:
         for action in step.actions:
             if self._motion is None:
@@ -200,7 +200,7 @@ class BenchCore:
         assert self._motion is not None
         try:
             self._send(self._motion.encode_move(move, self.seconds(now_ns)), now_ns)
-        except Refused as error:                # the drive cannot do it: nothing was sent, the run ends
+        except Refused as error:  # the drive cannot do it: nothing was sent, the run ends
             self._obey(self.pipeline.fault("move_refused", str(error), self.seconds(now_ns)), now_ns)
         self._kept_s = self.seconds(now_ns)
 
@@ -211,7 +211,10 @@ class BenchCore:
 
     def _hear(self, reply: bytes, now_ns: int) -> None:
         if self._motion is None:
-            self._obey(self.pipeline.fault("unknown_reply", reply[:40].decode("latin-1"), self.seconds(now_ns)), now_ns)
+            self._obey(
+                self.pipeline.fault("unknown_reply", reply[:40].decode("latin-1"), self.seconds(now_ns)),
+                now_ns,
+            )
             return
         for fact in self._motion.reply(reply, self.seconds(now_ns)):
             self._heed(fact, now_ns)
@@ -227,7 +230,7 @@ class BenchCore:
         else:
             assert isinstance(fact, Acknowledged)
 
-    # --- what is sent unasked -----------------------------------------------------------------------------------
+    # --- what is sent unasked
     def _ask(self, now_s: float, now_ns: int) -> None:
         assert self._motion is not None and self._frame.motion is not None
         status = self._frame.motion.status
@@ -249,7 +252,7 @@ class BenchCore:
         writes, self._writes = self._writes, []
         return writes
 
-    # --- the account: received = recorded + rejected ------------------------------------------------------------
+    # --- the account: received = recorded + rejected
     def _count(self, decoded: Decoded, link: int, now_ns: int, out: list[NewEntry]) -> None:
         out.extend((Kind.BLOCK, now_ns, pack_block(block)) for block in decoded.blocks)
         account = self._account[link]
@@ -260,7 +263,9 @@ class BenchCore:
                 self.rejected[reason] = self.rejected.get(reason, 0) + rows
                 account.rejected[reason] = account.rejected.get(reason, 0) + rows
             told = {"discarded_bytes": decoded.discarded_bytes, "link": link, "rows": dict(decoded.rejected)}
-            out.append((Kind.EVENT, now_ns, pack_event(flat(Event("rejected", self.seconds(now_ns), fields=told)))))
+            out.append(
+                (Kind.EVENT, now_ns, pack_event(flat(Event("rejected", self.seconds(now_ns), fields=told))))
+            )
 
     def _book(self, event: Event, now_ns: int, out: list[NewEntry]) -> None:
         """Write one event; the account of a run stands directly before its end."""
@@ -283,7 +288,6 @@ class Account:
     def as_json(self) -> dict[str, Json]:
         received = self.recorded + sum(self.rejected.values())
         return {"received": received, "recorded": self.recorded, "rejected": dict(self.rejected)}
-
 
 
 def flat(event: Event) -> dict[str, object]:

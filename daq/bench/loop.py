@@ -29,13 +29,13 @@ from drivers.links import Link, open_link
 from drivers.motion import MotionPort
 from drivers.registry import decoder_for
 
-TICK_NS = 10_000_000                # silence, keep-alive and status are judged at least every 10 ms
+TICK_NS = 10_000_000  # silence, keep-alive and status are judged at least every 10 ms
 STOPPER_BEAT_NS = 20_000_000
 ALIVE_NS = 500_000_000
 REOPEN_NS = 1_000_000_000
-STATION_SILENT_NS = 1_000_000_000   # design.md 2: a station silent for 1 s means a controlled stop
-SUSPEND_NS = 500_000_000            # boot-time clock ahead of the monotonic clock: the computer slept
-PENDING_BYTES_MAX = 4096            # commands waiting for a full output; more means the link is dead
+STATION_SILENT_NS = 1_000_000_000  # design.md 2: a station silent for 1 s means a controlled stop
+SUSPEND_NS = 500_000_000  # boot-time clock ahead of the monotonic clock: the computer slept
+PENDING_BYTES_MAX = 4096  # commands waiting for a full output; more means the link is dead
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,7 +74,9 @@ class BenchProcess:
         self._frame = FrameCard.model_validate_json(json.dumps(config.frame))
         self._ports = [Port(open_link(link)) for link in self._frame.links]
         self._origin_ns = time.monotonic_ns()
-        self._ring = Ring.create(config.ring_path, config.ring_bytes, config.stream_id, origin_ns=self._origin_ns)
+        self._ring = Ring.create(
+            config.ring_path, config.ring_bytes, config.stream_id, origin_ns=self._origin_ns
+        )
         pipeline = Pipeline(self._frame, clean_start=config.clean_start, proven=Proven(**config.proven))
         motion = MotionPort(self._frame) if self._frame.motion is not None else None
         decoders = [decoder_for(self._frame, number) for number in range(len(self._ports))]
@@ -106,7 +108,7 @@ class BenchProcess:
             self._goodbye()
         return 0
 
-    # --- start and end ------------------------------------------------------------------------------------------
+    # --- start and end
     def _introduce(self) -> None:
         granted = hurry(fifo=self._config.fifo)
         self._core.note(
@@ -149,7 +151,7 @@ class BenchProcess:
             try:
                 self._stopper.send(b"bye")
             except OSError:
-                pass                            # it has gone already; nothing moves
+                pass  # it has gone already; nothing moves
         for port in self._ports:
             port.link.close()
         self._ring.close()
@@ -158,13 +160,13 @@ class BenchProcess:
         self._handlers[descriptor] = handler
         self._poll.register(descriptor, select.POLLIN)
 
-    # --- one turn -----------------------------------------------------------------------------------------------
+    # --- one turn
     def _turn(self) -> None:
         wait_ms = max(0, self._due_ns - time.monotonic_ns()) // 1_000_000
         ready = self._poll.poll(wait_ms)
         stop_fd = self._stop_socket.fileno()
         if len(ready) > 1:
-            ready.sort(key=lambda item: item[0] != stop_fd)     # a stop request passes everything
+            ready.sort(key=lambda item: item[0] != stop_fd)  # a stop request passes everything
         for descriptor, mask in ready:
             handler = self._handlers.get(descriptor)
             if handler is not None:
@@ -191,7 +193,11 @@ class BenchProcess:
         who, address = receive(self._stop_socket)
         now_ns = time.monotonic_ns()
         self._write(self._core.stop(who.decode("utf-8", "replace")[:80] or "stop", now_ns))
-        reply(self._stop_socket, address, {"ok": True, "stopped_ns": time.monotonic_ns(), "took_ns": time.monotonic_ns() - now_ns})
+        reply(
+            self._stop_socket,
+            address,
+            {"ok": True, "stopped_ns": time.monotonic_ns(), "took_ns": time.monotonic_ns() - now_ns},
+        )
         self._record()
 
     def _on_message(self, mask: int) -> None:
@@ -238,7 +244,7 @@ class BenchProcess:
             self._poll_drop(self._stopper.fileno())
             self._fault("stopper_lost", "the stopper process has gone; nothing may move until a restart")
 
-    # --- periodic -----------------------------------------------------------------------------------------------
+    # --- periodic
     def _tick(self, now_ns: int) -> None:
         ring = self._ring
         silent_s = (now_ns - ring.acked_ns) * 1e-9 if ring.acked_ns else (now_ns - self._origin_ns) * 1e-9
@@ -249,7 +255,7 @@ class BenchProcess:
             try:
                 self._stopper.send(b".")
             except BlockingIOError:
-                pass                            # it has beats enough to read; its own deadline judges
+                pass  # it has beats enough to read; its own deadline judges
             except OSError:
                 self._stopper_gone()
         self._judge_neighbours(now_ns, silent_s)
@@ -263,7 +269,7 @@ class BenchProcess:
             try:
                 self._life.send(b".")
             except OSError:
-                pass                            # the supervisor's end is seen by its end of file
+                pass  # the supervisor's end is seen by its end of file
         self._record()
 
     def _judge_neighbours(self, now_ns: int, recorder_silent_s: float) -> None:
@@ -285,7 +291,7 @@ class BenchProcess:
             "rejected_rows": sum(self._core.rejected.values()),
         }
 
-    # --- links --------------------------------------------------------------------------------------------------
+    # --- links
     def _write(self, writes: list[Write]) -> None:
         for write in writes:
             port = self._ports[write.link]
@@ -337,11 +343,11 @@ class BenchProcess:
         port = self._ports[number]
         port.reopen_ns = now_ns + REOPEN_NS
         if self._core.pipeline.armed:
-            return                              # nothing is opened while a bar may still be loaded by a command
+            return  # nothing is opened while a bar may still be loaded by a command
         try:
             port.link = open_link(self._frame.links[number])
         except DriverError:
-            return                              # still away; tried again in a second, the state says signal lost
+            return  # still away; tried again in a second, the state says signal lost
         port.lost = False
         self._write(self._core.reopened(number, decoder_for(self._frame, number), now_ns))
         self._watch(port.link.fileno(), lambda mask, n=number: self._on_link(n, mask))

@@ -35,7 +35,7 @@ def hurry(*, fifo: bool = True) -> Granted:
         with open("/proc/self/oom_score_adj", "w", encoding="ascii") as score:
             score.write("-900")
     except OSError:
-        pass                                    # needs a privilege; the stopper covers a killed bench all the same
+        pass  # needs a privilege; the stopper covers a killed bench all the same
     return Granted(fifo=fifo, memory_locked=locked)
 
 

@@ -5,9 +5,9 @@ from __future__ import annotations
 from daq.cards.derived import channels_of, link_bytes_per_row
 from daq.cards.frame import FrameCard
 
-WAKEUPS_PER_S_MAX = 10_000      # above this reads coalesce by themselves: more rows to an entry
-PAIR_OVERHEAD_BYTES = 2 * 48 + 40 + 8   # two entry headers with padding, block header, raw header
-EVENTS_BYTES_PER_S = 20_000     # queries, keep-alives, replies and events of a lively second
+WAKEUPS_PER_S_MAX = 10_000  # above this reads coalesce by themselves: more rows to an entry
+PAIR_OVERHEAD_BYTES = 2 * 48 + 40 + 8  # two entry headers with padding, block header, raw header
+EVENTS_BYTES_PER_S = 20_000  # queries, keep-alives, replies and events of a lively second
 
 
 def stream_bytes_per_s(frame: FrameCard) -> float:

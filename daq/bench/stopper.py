@@ -17,7 +17,7 @@ import sys
 import termios
 import time
 
-REPEATS = 20            # STOP at 10 Hz for 2 s: a line that lost one gets another
+REPEATS = 20  # STOP at 10 Hz for 2 s: a line that lost one gets another
 REPEAT_S = 0.1
 DESCRIPTORS_MAX = 8
 
@@ -29,7 +29,7 @@ class Stopper:
         self._bench = bench
         self._links: list[int] = []
         self._stop = b""
-        self._deadline_s = 3600.0               # until the bench has said what its deadline is
+        self._deadline_s = 3600.0  # until the bench has said what its deadline is
         self._told = False
 
     def serve(self) -> int:
@@ -89,7 +89,7 @@ class Stopper:
             try:
                 fcntl.ioctl(link, termios.TIOCMBIC, struct.pack("I", termios.TIOCM_DTR))
             except OSError:
-                continue                        # a pty or a socket has no modem lines
+                continue  # a pty or a socket has no modem lines
 
     def _repeat(self) -> None:
         for _ in range(REPEATS):
@@ -102,14 +102,14 @@ class Stopper:
             try:
                 self._bench.send(b"late", socket.MSG_DONTWAIT)
             except OSError:
-                return                          # a frozen bench cannot listen; end of file will say more
+                return  # a frozen bench cannot listen; end of file will say more
 
 
 def flush_output(link: int) -> None:
     try:
         termios.tcflush(link, termios.TCOFLUSH)
     except (OSError, termios.error):
-        return                                  # not a terminal
+        return  # not a terminal
 
 
 def hurry() -> None:

@@ -19,13 +19,13 @@ from daq.station.places import places_for
 from daq.station.proofs import write_proof
 from daq.station.stopline import send_stop
 
-PUSH_PERCENT = 0.5          # of capacity: a hand's push that is clearly not noise
+PUSH_PERCENT = 0.5  # of capacity: a hand's push that is clearly not noise
 JOG_MM = 0.5
 JOG_MM_MIN = 5.0
 STEADY_S = 0.5
 WAIT_S = 30.0
 DRILL_S = 1.5
-RUN_ON_S_MAX = 0.3          # job.md A6
+RUN_ON_S_MAX = 0.3  # job.md A6
 
 
 def polarity(frame: FrameCard, data: Path) -> None:
@@ -34,11 +34,15 @@ def polarity(frame: FrameCard, data: Path) -> None:
         client.sit(click.prompt("Your name"))
         rest_n = steady(client, "gross_n")
         push_n = frame.cell.capacity_n * PUSH_PERCENT / 100.0
-        click.echo(f"At rest: {rest_n:.2f} N. Now push the loading roller as the bar would (about {push_n:.1f} N), by hand.")
+        click.echo(
+            f"At rest: {rest_n:.2f} N. Now push the loading roller as the bar would (about {push_n:.1f} N), by hand."
+        )
         pushed_n = extreme(client, "gross_n", rest_n, push_n) - rest_n
         click.echo(f"Seen: {pushed_n:+.2f} N")
         if pushed_n < push_n:
-            raise MidspanError("force sign is wrong or nothing was felt: check `sign` of the force channel, then again")
+            raise MidspanError(
+                "force sign is wrong or nothing was felt: check `sign` of the force channel, then again"
+            )
         confirm(f"Hands away. Jog {JOG_MM} mm towards the specimen (no bar mounted)?")
         before_mm = steady(client, "position_mm")
         client.do("jog", distance_mm=JOG_MM, speed_mm_min=JOG_MM_MIN)
@@ -47,7 +51,9 @@ def polarity(frame: FrameCard, data: Path) -> None:
         sign = frame.motion.position_sign if frame.motion is not None else 1
         click.echo(f"Moved: {moved_mm:+.3f} mm")
         if abs(moved_mm * sign - JOG_MM) > 0.1 * JOG_MM:
-            raise MidspanError("displacement does not follow: check sign, scale and unit of the position channel, then again")
+            raise MidspanError(
+                "displacement does not follow: check sign, scale and unit of the position channel, then again"
+            )
         client.rise()
     record(frame, data, "polarity", {"pushed_n": pushed_n, "moved_mm": moved_mm})
 
@@ -64,9 +70,13 @@ def stop_drill(frame: FrameCard, data: Path) -> None:
         found = wait_stopped(client, frame.name)
         click.echo(f"Stood still after {found['after_s']:.3f} s, run-on {found['run_on_mm'] * 1e3:.1f} um")
         if not found["verified"]:
-            raise MidspanError("no displacement sensor saw the standstill: the stop cannot be proven on this frame")
+            raise MidspanError(
+                "no displacement sensor saw the standstill: the stop cannot be proven on this frame"
+            )
         if found["after_s"] > RUN_ON_S_MAX:
-            raise MidspanError(f"stop took {found['after_s']:.2f} s, at most {RUN_ON_S_MAX} s is allowed: see to the drive")
+            raise MidspanError(
+                f"stop took {found['after_s']:.2f} s, at most {RUN_ON_S_MAX} s is allowed: see to the drive"
+            )
         client.do("reset")
         client.rise()
     record(frame, data, "stop_drill", found)
@@ -92,7 +102,11 @@ def steady(client: Client, key: str) -> float:
     values: list[float] = []
     until_s = time.monotonic() + STEADY_S
     while time.monotonic() < until_s or not values:
-        values += [float(u.body[key]) for u in client.updates(0.1) if u.kind == "summary" and u.body.get(key) is not None]
+        values += [
+            float(u.body[key])
+            for u in client.updates(0.1)
+            if u.kind == "summary" and u.body.get(key) is not None
+        ]
         if time.monotonic() > until_s + WAIT_S:
             raise MidspanError(f"the frame sends no {key}")
     return sum(values) / len(values)
@@ -118,4 +132,6 @@ def confirm(question: str) -> None:
 def record(frame: FrameCard, data: Path, kind: str, found: dict[str, Any]) -> None:
     at = dt.datetime.now(dt.UTC).isoformat(timespec="seconds")
     write_proof(places_for(frame.name, data).proofs, frame, kind, {**found, "utc": at})
-    click.echo(f"{kind.replace('_', ' ')} recorded for this card and version; start `midspan serve` again to use it")
+    click.echo(
+        f"{kind.replace('_', ' ')} recorded for this card and version; start `midspan serve` again to use it"
+    )

@@ -39,7 +39,9 @@ def stop(words: list[str]) -> int:
 
     frames = words or running_frames()
     if not frames:
-        sys.stderr.write("midspan stop: no frame is served by this user; use the emergency stop at the machine\n")
+        sys.stderr.write(
+            "midspan stop: no frame is served by this user; use the emergency stop at the machine\n"
+        )
         return 1
     code = 0
     for frame in frames:

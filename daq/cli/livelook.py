@@ -16,7 +16,7 @@ from daq.stream.block import Block
 from drivers.links import open_link
 from drivers.registry import decoder_for
 
-HUM_SHARE = 3.0         # a line is named when it stands this far above the noise
+HUM_SHARE = 3.0  # a line is named when it stands this far above the noise
 
 
 def look_at_links(frame: FrameCard, seconds: float) -> list[str]:
@@ -85,7 +85,9 @@ def channel_line(name: str, unit: str, quiet: QuietRecord) -> str:
 
 def rate_line(link: LinkCard, quiet: QuietRecord) -> str:
     off = abs(quiet.rate_hz / link.rate_hz - 1.0)
-    return f"link {link.name}: {quiet.rate_hz:.1f} rows/s, card says {link.rate_hz:g}" + (" - NOT THE SAME" if off > 0.05 else "")
+    return f"link {link.name}: {quiet.rate_hz:.1f} rows/s, card says {link.rate_hz:g}" + (
+        " - NOT THE SAME" if off > 0.05 else ""
+    )
 
 
 def hum_lines(quiet: QuietRecord) -> list[str]:
@@ -108,4 +110,3 @@ def latency_timer_ms(link: LinkCard) -> int | None:
         return int(setting.read_text())
     except (OSError, ValueError):
         return None
-

@@ -34,7 +34,7 @@ class LazyGroup(click.Group):
         if cmd_name not in COMMANDS:
             return None
         if cmd_name == "stop":
-            return click.Command("stop", help=COMMANDS["stop"])     # served in daq.cli.entry before click
+            return click.Command("stop", help=COMMANDS["stop"])  # served in daq.cli.entry before click
         command: click.Command = importlib.import_module(f"daq.cli.commands.{cmd_name}").command
         return command
 
@@ -52,7 +52,9 @@ class LazyGroup(click.Group):
             sys.exit(1)
 
 
-@click.group(cls=LazyGroup, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.group(
+    cls=LazyGroup, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100}
+)
 @click.version_option(package_name="midspan")
 def midspan() -> None:
     """Data acquisition and live monitoring for three- and four-point flexure tests of brittle bars.

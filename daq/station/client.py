@@ -50,7 +50,9 @@ class Client:
         message = {"do": command, "seat": self._seat, **words}
         self._control.send(json.dumps(message).encode())
         if not self._control.poll(ANSWER_TIMEOUT_MS):
-            raise MidspanError(f"the station of frame {self._places.frame} does not answer; is `midspan serve` running?")
+            raise MidspanError(
+                f"the station of frame {self._places.frame} does not answer; is `midspan serve` running?"
+            )
         answer: dict[str, Any] = json.loads(self._control.recv())
         if not answer["ok"]:
             raise Refused(answer["refused"] or command, tuple(answer["missing"]))

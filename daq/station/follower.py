@@ -23,7 +23,7 @@ from daq.stream.payloads import unpack_block, unpack_event
 from daq.stream.thin import thin_minmax
 
 TRACE_SO_FAR_ROWS_MAX = 4_000
-TRACE_ROWS_PER_UPDATE_MAX = 1_000     # 20 updates/s: 20,000 rows/s leave unthinned
+TRACE_ROWS_PER_UPDATE_MAX = 1_000  # 20 updates/s: 20,000 rows/s leave unthinned
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -51,7 +51,7 @@ class Follower:
         self._position_mm = float("nan")
         self._so_far: list[Floats] = []
 
-    # --- in -----------------------------------------------------------------------------------------------------
+    # --- in
     def feed(self, entries: Iterable[Entry]) -> list[Tell]:
         """Entries in stream order."""
         tells: list[Tell] = []
@@ -84,7 +84,7 @@ class Follower:
             self._so_far = [table]
         return self._named(table)
 
-    # --- blocks -------------------------------------------------------------------------------------------------
+    # --- blocks
     def _columns_of(self, link: int) -> dict[str, int]:
         places: dict[str, int] = {}
         for place, channel in enumerate(channels_of(self._frame, link)):
@@ -115,7 +115,7 @@ class Follower:
         values: Floats = channel.sign * (block.counts[:, place] * channel.scale + channel.offset)
         return values
 
-    # --- events -------------------------------------------------------------------------------------------------
+    # --- events
     def _on_event(self, event: Mapping[str, Any]) -> list[Tell]:
         name = event["event"]
         if name == "run_opened":
@@ -143,7 +143,7 @@ class Follower:
         specimen = Specimen.model_validate(event["specimen_card"], strict=False)
         self._online = OnlineReduction(self._frame, method, specimen, str(event["fixture"]))
 
-    # --- traces -------------------------------------------------------------------------------------------------
+    # --- traces
     def _flush(self, rows: list[Floats], tells: list[Tell]) -> None:
         if rows:
             table = np.concatenate(rows)

@@ -25,9 +25,16 @@ def sealed_on_disk(path: Path, specimen: str, loading: int) -> Sealed:
     try:
         meta: Mapping[str, Any] = read_meta(path)
     except MidspanError:
-        return Sealed(specimen, loading, "", False, str(path), {"problem": "record does not read; see midspan verify"})
+        return Sealed(
+            specimen, loading, "", False, str(path), {"problem": "record does not read; see midspan verify"}
+        )
     return Sealed(
-        specimen, loading, str(meta["run_id"]), bool(meta["interrupted"]), str(path), dict(meta.get("result") or {})
+        specimen,
+        loading,
+        str(meta["run_id"]),
+        bool(meta["interrupted"]),
+        str(path),
+        dict(meta.get("result") or {}),
     )
 
 

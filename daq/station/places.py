@@ -9,7 +9,7 @@ from pathlib import Path
 
 from daq.errors import MidspanError
 
-SOCKET_PATH_BYTES_MAX = 107         # sun_path of Linux less its closing zero
+SOCKET_PATH_BYTES_MAX = 107  # sun_path of Linux less its closing zero
 
 
 @dataclass(frozen=True, slots=True)
@@ -91,6 +91,8 @@ def private_folder(folder: Path) -> None:
     folder.mkdir(mode=0o700, parents=True, exist_ok=True)
     facts = os.lstat(folder)
     if not stat.S_ISDIR(facts.st_mode) or facts.st_uid != os.getuid():
-        raise MidspanError(f"runtime folder {folder} is not a folder of this user; remove it or set XDG_RUNTIME_DIR")
+        raise MidspanError(
+            f"runtime folder {folder} is not a folder of this user; remove it or set XDG_RUNTIME_DIR"
+        )
     if facts.st_mode & 0o077:
         os.chmod(folder, 0o700)

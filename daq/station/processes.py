@@ -28,7 +28,7 @@ class Life:
         self._pipe.setblocking(False)
         self._said_s = 0.0
         self._over = False
-        self.orderly = False            # the supervisor said "end"; everybody before us in the order has ended
+        self.orderly = False  # the supervisor said "end"; everybody before us in the order has ended
 
     def ready(self) -> None:
         self._pipe.send(b"ready")
@@ -53,7 +53,7 @@ class Life:
         try:
             self._pipe.send(b".")
         except OSError:
-            pass                                # a supervisor that has gone is seen by its end of file
+            pass  # a supervisor that has gone is seen by its end of file
 
 
 class Reporter:
@@ -68,7 +68,7 @@ class Reporter:
         try:
             self._socket.sendto(json.dumps({"from": self._role, **report}).encode(), self._path)
         except OSError:
-            pass                                # no station just now
+            pass  # no station just now
 
 
 def places_of(config: Mapping[str, Any]) -> Places:
@@ -131,7 +131,7 @@ def archivist(config: Mapping[str, Any], life: Life) -> int:
             recover(leftover, places.data, reduce=result_of, report=report, pulse=life.over)
     if await_until(journal.is_dir, life):
         run_archivist(journal, places.data, places.spool, result_of, report, life.over, copy_to)
-        if life.orderly:                        # the recorder has ended before us: everything is sealed, clear up
+        if life.orderly:  # the recorder has ended before us: everything is sealed, clear up
             recover(journal, places.data, reduce=result_of, report=report)
     return 0
 

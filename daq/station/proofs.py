@@ -30,7 +30,11 @@ def read_proofs(path: Path, frame: FrameCard) -> dict[str, bool]:
 
 
 def is_valid(proof: object, frame: FrameCard) -> bool:
-    return isinstance(proof, dict) and proof.get("card") == card_digest(frame) and proof.get("version") == VERSION
+    return (
+        isinstance(proof, dict)
+        and proof.get("card") == card_digest(frame)
+        and proof.get("version") == VERSION
+    )
 
 
 def write_proof(path: Path, frame: FrameCard, kind: str, found: dict[str, Any]) -> None:

@@ -29,7 +29,9 @@ class Seat:
         if not name or len(name) > NAME_LENGTH_MAX or not name.isprintable():
             raise Refused("sit", (f"operator's name must be 1 to {NAME_LENGTH_MAX} printable characters",))
         if self.taken and not instead:
-            raise Refused("sit", (f"the seat is taken by {self.operator}; ask them to rise, or sit with --instead",))
+            raise Refused(
+                "sit", (f"the seat is taken by {self.operator}; ask them to rise, or sit with --instead",)
+            )
         self.operator, self._token = name, token
 
     def rise(self, token: str) -> None:

@@ -110,7 +110,7 @@ class Sitting:
             return
         state = BarState.INTERRUPTED if sealed.interrupted else BarState.BROKEN
         if bar.state is BarState.BROKEN:
-            state = BarState.BROKEN             # once broken, always broken
+            state = BarState.BROKEN  # once broken, always broken
         self._bars[sealed.specimen] = replace(
             bar,
             state=state,

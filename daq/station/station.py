@@ -37,14 +37,14 @@ from daq.version import VERSION
 from daq.watch import requests
 from daq.watch.requests import Request
 
-FOLLOW_S = 0.05                     # 20 updates/s for traces
-BEAT_S = 0.1                        # snapshot request = heartbeat; the bench stops after 1 s without
-SUMMARY_EVERY = 2                   # of the follow turns: 10/s
-HEARTBEAT_S = 1.0                   # a state update at least once a second
+FOLLOW_S = 0.05  # 20 updates/s for traces
+BEAT_S = 0.1  # snapshot request = heartbeat; the bench stops after 1 s without
+SUMMARY_EVERY = 2  # of the follow turns: 10/s
+HEARTBEAT_S = 1.0  # a state update at least once a second
 ANSWER_TIMEOUT_S = 1.0
-ANSWERING_MAX = 64                  # commands in work at a time
-RECOVERY_WAIT_S = 4.0               # a client waits 5 s for its answer
-FEED_QUEUE_UPDATES_MAX = 1_000      # per viewer; ZeroMQ drops beyond, the numbers show it
+ANSWERING_MAX = 64  # commands in work at a time
+RECOVERY_WAIT_S = 4.0  # a client waits 5 s for its answer
+FEED_QUEUE_UPDATES_MAX = 1_000  # per viewer; ZeroMQ drops beyond, the numbers show it
 REPORT_BYTES_MAX = 65_536
 
 
@@ -150,7 +150,7 @@ class Station:
         while not self._life.over():
             await asyncio.sleep(0.05)
 
-    # --- ring -> feed -------------------------------------------------------------------------------------------
+    # --- ring -> feed
     async def _follow(self) -> None:
         ring = Path(self._config["ring_path"])
         while not ring_is_ready(ring):
@@ -177,7 +177,13 @@ class Station:
     async def _publish(self, tell: Tell) -> None:
         self._number += 1
         update = Update(
-            self._number, tell.kind, self._frame.name, utc_now(), self._frame.simulated, tell.body, tell.columns
+            self._number,
+            tell.kind,
+            self._frame.name,
+            utc_now(),
+            self._frame.simulated,
+            tell.body,
+            tell.columns,
         )
         await self._feed.send_multipart(encode(update))
         if tell.kind == "event" and tell.body["event"] in ("state", "run_opened", "run_closed"):
@@ -191,15 +197,24 @@ class Station:
                 self._snapshot = {"state": "bench process does not answer"}
             await asyncio.sleep(BEAT_S)
 
-    # --- what viewers see ---------------------------------------------------------------------------------------
+    # --- what viewers see
     def _summary(self) -> dict[str, Any]:
         age_s = self._snapshot.get("data_age_s")
-        return {**self._follower.summary(), **self._snapshot, "data_age_s": age_s, "sequence": self._follower.sequence}
+        return {
+            **self._follower.summary(),
+            **self._snapshot,
+            "data_age_s": age_s,
+            "sequence": self._follower.sequence,
+        }
 
     def _state(self) -> dict[str, Any]:
         sitting = self._sitting
         run = self._follower.run
-        place = sitting.place_of(run["specimen"]) if sitting and run and run["specimen"] in sitting.loaded_numbers else 0
+        place = (
+            sitting.place_of(run["specimen"])
+            if sitting and run and run["specimen"] in sitting.loaded_numbers
+            else 0
+        )
         return {
             "state": self._snapshot.get("state", self._follower.state),
             "reason": self._follower.reason,
@@ -224,7 +239,7 @@ class Station:
             "trace": {name: [finite(value) for value in column] for name, column in trace.items()},
         }
 
-    # --- reports of recorder and archivist ----------------------------------------------------------------------
+    # --- reports of recorder and archivist
     def _open_reports(self) -> socket.socket:
         self._places.station_socket.unlink(missing_ok=True)
         reports = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM | socket.SOCK_NONBLOCK)
@@ -255,12 +270,12 @@ class Station:
             self._sitting.sealed(sealed)
         await self._publish(Tell("result", dict(report)))
 
-    # --- control ------------------------------------------------------------------------------------------------
+    # --- control
     async def _serve(self) -> None:
         while True:
             parts = await self._control.recv_multipart()
             if len(self._answering) >= ANSWERING_MAX:
-                continue                        # a flood gets no answer; the stop line does not pass here
+                continue  # a flood gets no answer; the stop line does not pass here
             task = asyncio.create_task(self._respond(parts))
             self._answering.add(task)
             task.add_done_callback(self._answering.discard)
@@ -328,7 +343,9 @@ class Station:
         try:
             await asyncio.wait_for(self._caught_up.wait(), RECOVERY_WAIT_S)
         except TimeoutError as error:
-            raise Refused("mount", ("records of an earlier run are still being recovered; try again",)) from error
+            raise Refused(
+                "mount", ("records of an earlier run are still being recovered; try again",)
+            ) from error
         sitting = self._sitting
         number = str(words.get("specimen") or sitting.next_number() or "")
         if not number:

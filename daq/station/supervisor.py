@@ -27,13 +27,13 @@ from daq.errors import MidspanError
 from daq.station.places import Places
 from daq.stream.ring import ring_bytes
 
-DEADLINE_FIFO_S = 0.25              # reliability.md 2.1: shorter false-trips on a virtual machine
+DEADLINE_FIFO_S = 0.25  # reliability.md 2.1: shorter false-trips on a virtual machine
 DEADLINE_PLAIN_S = 0.5
-RESTARTS_MAX = 5                    # in RESTART_WINDOW_S; more means a fault that a restart does not cure
+RESTARTS_MAX = 5  # in RESTART_WINDOW_S; more means a fault that a restart does not cure
 RESTART_WINDOW_S = 60.0
 READY_TIMEOUT_S = 20.0
 END_TIMEOUT_S = {"bench": 5.0, "stopper": 5.0, "recorder": 30.0, "archivist": 60.0, "station": 5.0}
-HANG_S = {"recorder": 20.0, "archivist": 120.0, "station": 10.0}    # a disc may stall for 10 s
+HANG_S = {"recorder": 20.0, "archivist": 120.0, "station": 10.0}  # a disc may stall for 10 s
 RESTARTABLE = ("recorder", "archivist", "station")
 
 Say = Callable[[str], None]
@@ -87,7 +87,7 @@ class Supervisor:
         """Process ids by role."""
         return {role: child.process.pid for role, child in self._children.items()}
 
-    # --- start --------------------------------------------------------------------------------------------------
+    # --- start
     def _take_lock(self) -> None:
         self._lock = os.open(self._places.lock, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o600)
         try:
@@ -148,7 +148,9 @@ class Supervisor:
 
     def _spawn_stopper(self, end: socket.socket) -> None:
         command = [sys.executable, "-E", "-s", "-m", "daq.bench.stopper", str(end.fileno())]
-        process = subprocess.Popen(command, pass_fds=(end.fileno(),), stdin=subprocess.DEVNULL, start_new_session=True)
+        process = subprocess.Popen(
+            command, pass_fds=(end.fileno(),), stdin=subprocess.DEVNULL, start_new_session=True
+        )
         self._children["stopper"] = Child("stopper", process, None, time.monotonic())
 
     def _spawn(self, role: str, extra: dict[str, Any], pass_fds: tuple[int, ...] = ()) -> None:
@@ -160,7 +162,7 @@ class Supervisor:
             command,
             pass_fds=(theirs.fileno(), *pass_fds),
             stdin=subprocess.DEVNULL,
-            start_new_session=True,             # Ctrl-C reaches the supervisor, which ends the others in order
+            start_new_session=True,  # Ctrl-C reaches the supervisor, which ends the others in order
             env={**os.environ, "OPENBLAS_NUM_THREADS": "1", "OMP_NUM_THREADS": "1"},
         )
         theirs.close()
@@ -186,7 +188,7 @@ class Supervisor:
                 raise MidspanError(f"not ready after {READY_TIMEOUT_S:.0f} s: {', '.join(sorted(waiting))}")
             time.sleep(0.005)
 
-    # --- while it runs ------------------------------------------------------------------------------------------
+    # --- while it runs
     def wait(self, until: Callable[[], bool] = lambda: False) -> int:
         """Serve until `until()` or a signal. Returns 0, or 5 when the bench process died."""
         while not until():
@@ -220,11 +222,15 @@ class Supervisor:
             return False
         if child.role == "stopper":
             self._children.pop("stopper")
-            self._say(f"stopper process ended with code {code}; nothing may move until midspan is started again.")
+            self._say(
+                f"stopper process ended with code {code}; nothing may move until midspan is started again."
+            )
             return True
         self._restarts = [at for at in self._restarts if now_s - at < RESTART_WINDOW_S] + [now_s]
         if len(self._restarts) > RESTARTS_MAX:
-            self._say(f"{child.role} keeps ending (code {code}): giving up after {RESTARTS_MAX} restarts in a minute")
+            self._say(
+                f"{child.role} keeps ending (code {code}): giving up after {RESTARTS_MAX} restarts in a minute"
+            )
             return False
         self._say(f"{child.role} ended with code {code}: started again")
         if child.life is not None:
@@ -248,7 +254,7 @@ class Supervisor:
         except OSError:
             return b""
 
-    # --- end ----------------------------------------------------------------------------------------------------
+    # --- end
     def end(self) -> None:
         """Bench first (it stops the crosshead), then recorder, archivist, station: nothing in the ring is lost."""
         if self._ending:
@@ -271,7 +277,7 @@ class Supervisor:
             try:
                 child.life.send(b"end")
             except OSError:
-                pass                            # it has ended already
+                pass  # it has ended already
             child.life.close()
         try:
             return child.process.wait(END_TIMEOUT_S[child.role]) == 0

@@ -61,5 +61,11 @@ def decode(parts: list[bytes]) -> Update:
     table = np.frombuffer(parts[2], dtype="<f8").reshape(len(names), rows)
     columns = {name: table[place] for place, name in enumerate(names)}
     return Update(
-        header["update"], header["kind"], header["frame"], header["utc"], header["simulated"], header["body"], columns
+        header["update"],
+        header["kind"],
+        header["frame"],
+        header["utc"],
+        header["simulated"],
+        header["body"],
+        columns,
     )

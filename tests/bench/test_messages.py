@@ -35,7 +35,15 @@ def test_snapshot() -> None:
 
 @pytest.mark.parametrize(
     "message",
-    [b"", b"[]", b'{"id":"x"}', b'{"id":1,"ask":"Fly"}', b'{"id":1,"ask":"Jog","fields":{"speed":1}}', b"\xff", b"1"],
+    [
+        b"",
+        b"[]",
+        b'{"id":"x"}',
+        b'{"id":1,"ask":"Fly"}',
+        b'{"id":1,"ask":"Jog","fields":{"speed":1}}',
+        b"\xff",
+        b"1",
+    ],
 )
 def test_nonsense_is_refused(message: bytes) -> None:
     with pytest.raises(ValueError):

@@ -41,7 +41,14 @@ def test_simulated_data_are_marked() -> None:
 def test_the_first_grave_fault_is_shown_not_its_followers() -> None:
     faults = [
         {"event": "glitch", "severity": "caution"},
-        {"event": "limit", "severity": "stop", "what": "cell working", "value": 951.0, "limit": 900.0, "unit": "N"},
+        {
+            "event": "limit",
+            "severity": "stop",
+            "what": "cell working",
+            "value": 951.0,
+            "limit": 900.0,
+            "unit": "N",
+        },
         {"event": "stop_failed", "severity": "emergency", "what": "second"},
     ]
     presenter = Presenter()

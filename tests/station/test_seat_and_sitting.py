@@ -86,7 +86,9 @@ def test_a_refused_opening_uses_its_number_up() -> None:
 
 def test_records_found_on_disk_count() -> None:
     first = demo_sitting().bars[0].specimen.number
-    sitting = demo_sitting((sealed(first, 2, run_id="r9"), sealed(first, 1, interrupted=True), sealed("FOREIGN")))
+    sitting = demo_sitting(
+        (sealed(first, 2, run_id="r9"), sealed(first, 1, interrupted=True), sealed("FOREIGN"))
+    )
     assert sitting.bar(first).state is BarState.BROKEN
     assert sitting.bar(first).loadings == 2
     with pytest.raises(Refused, match="not on the bench sheet"):

@@ -23,10 +23,18 @@ DISK_FREE_GIB_MIN = 10.0
 @click.argument("cards", nargs=-1, type=click.Path(dir_okay=False, path_type=Path), metavar="CARD...")
 @DATA
 @click.option("--live", is_flag=True, help="Open the port and look at the signal. Never moves the frame.")
-@click.option("--seconds", type=click.FloatRange(1, 600), default=5.0, show_default=True, help="How long to look, s.")
-@click.option("--polarity", is_flag=True, help="Guided: push by hand, then a jog of 0.5 mm; recorded for this card.")
-@click.option("--stop-drill", is_flag=True, help="Guided: move without a bar, stop, measure the run-on; recorded.")
-@click.option("--schema", type=click.Choice(["frame", "method", "series"]), help="Print the card's JSON Schema.")
+@click.option(
+    "--seconds", type=click.FloatRange(1, 600), default=5.0, show_default=True, help="How long to look, s."
+)
+@click.option(
+    "--polarity", is_flag=True, help="Guided: push by hand, then a jog of 0.5 mm; recorded for this card."
+)
+@click.option(
+    "--stop-drill", is_flag=True, help="Guided: move without a bar, stop, measure the run-on; recorded."
+)
+@click.option(
+    "--schema", type=click.Choice(["frame", "method", "series"]), help="Print the card's JSON Schema."
+)
 def command(
     cards: tuple[Path, ...],
     data: Path,
@@ -55,11 +63,11 @@ def command(
     if (live or polarity or stop_drill) and frame is None:
         raise MidspanError("midspan check: --live, --polarity and --stop-drill need a frame card")
     if live:
-        check_live(frame, data, seconds)        # type: ignore[arg-type]
+        check_live(frame, data, seconds)  # type: ignore[arg-type]
     if polarity:
-        drills.polarity(frame, data)            # type: ignore[arg-type]
+        drills.polarity(frame, data)  # type: ignore[arg-type]
     if stop_drill:
-        drills.stop_drill(frame, data)          # type: ignore[arg-type]
+        drills.stop_drill(frame, data)  # type: ignore[arg-type]
 
 
 def check_card(path: Path, frame: FrameCard | None) -> FrameCard | None:
@@ -67,16 +75,22 @@ def check_card(path: Path, frame: FrameCard | None) -> FrameCard | None:
     kind = kind_of(path)
     if kind == "series":
         loaded = load_series(path)
-        click.echo(f"{path}: series {loaded.card.name}, {len(loaded.specimens)} bars, method {loaded.method.name}")
+        click.echo(
+            f"{path}: series {loaded.card.name}, {len(loaded.specimens)} bars, method {loaded.method.name}"
+        )
         if frame is not None:
             check_fit(frame, loaded.method, loaded.card.fixture, str(path))
-            asked = questions(frame, loaded.method, loaded.specimens, fixture=loaded.card.fixture, series=loaded.card)
+            asked = questions(
+                frame, loaded.method, loaded.specimens, fixture=loaded.card.fixture, series=loaded.card
+            )
             for question in asked:
                 click.echo(f"? {question.line}")
         return None
     if kind == "method":
         method = load_method(path)
-        click.echo(f"{path}: method {method.name}, {method.geometry}, support span {method.support_span_mm:g} mm")
+        click.echo(
+            f"{path}: method {method.name}, {method.geometry}, support span {method.support_span_mm:g} mm"
+        )
         return None
     loaded_frame = load_frame(path)
     click.echo(f"{path}: frame {loaded_frame.name}, {'SIMULATED' if loaded_frame.simulated else 'real'}")
@@ -110,6 +124,9 @@ def check_live(frame: FrameCard, data: Path, seconds: float) -> None:
             click.echo(f"  link {link.name}: latency timer {timer_ms} ms{wish}")
     data.mkdir(parents=True, exist_ok=True)
     free_gib = shutil.disk_usage(data).free / 2**30
-    click.echo(f"  disk: {free_gib:.1f} GiB free at {data}" + ("" if free_gib > DISK_FREE_GIB_MIN else "  -> below 10"))
+    click.echo(
+        f"  disk: {free_gib:.1f} GiB free at {data}"
+        + ("" if free_gib > DISK_FREE_GIB_MIN else "  -> below 10")
+    )
     resolution_ns = time.get_clock_info("monotonic").resolution * 1e9
     click.echo(f"  clock: monotonic, resolution {resolution_ns:.0f} ns; wall time is a label only")

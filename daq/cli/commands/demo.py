@@ -46,7 +46,9 @@ BAR_TIMEOUT_S = 120.0
     show_default=True,
     help="Folder for records, picture and table.",
 )
-@click.option("--bars", type=click.IntRange(1, BARS_MAX), default=3, show_default=True, help="How many bars to break.")
+@click.option(
+    "--bars", type=click.IntRange(1, BARS_MAX), default=3, show_default=True, help="How many bars to break."
+)
 @click.option("--seed", type=int, default=7, show_default=True, help="Seed of sizes, flaws and noise.")
 @click.option("--no-window", is_flag=True, help="Stay in the terminal (there is no window yet).")
 def command(out: Path, bars: int, seed: int, no_window: bool) -> None:
@@ -68,7 +70,7 @@ def command(out: Path, bars: int, seed: int, no_window: bool) -> None:
     finish(console, out / series, series, reports)
 
 
-# --- cards and the virtual frame --------------------------------------------------------------------------------
+# --- cards and the virtual frame
 def write_cards(folder: Path, series: str, bars: int, seed: int) -> Path:
     """The demo's own copies of the shipped cards, with a bench sheet of as many bars as asked for."""
     folder.mkdir(parents=True, exist_ok=True)
@@ -92,7 +94,9 @@ def write_sheet(path: Path, bars: int, seed: int) -> None:
         sheet.writerow(["number", *sizes, "chamfer_mm"])
         for number in range(1, bars + 1):
             width, thickness = random.uniform(3.98, 4.02), random.uniform(2.98, 3.02)
-            readings = [f"{side + random.uniform(-0.002, 0.002):.3f}" for side in [width] * 3 + [thickness] * 3]
+            readings = [
+                f"{side + random.uniform(-0.002, 0.002):.3f}" for side in [width] * 3 + [thickness] * 3
+            ]
             sheet.writerow([f"DEMO-{number:02d}", *readings, "0.12"])
 
 
@@ -127,7 +131,7 @@ def lay_bar(hands: Path, specimen: Mapping[str, Any]) -> None:
         line.sendto(json.dumps({"mount": dict(specimen)}).encode(), str(hands))
 
 
-# --- the series -------------------------------------------------------------------------------------------------
+# --- the series
 def break_bars(
     console: Console, supervisor: Supervisor, outfit: Outfit, series: Path, hands: Path
 ) -> list[Mapping[str, Any]]:
@@ -159,13 +163,21 @@ def break_bars(
     return reports
 
 
-# --- what is left ----------------------------------------------------------------------------------------------
+# --- what is left
 def finish(console: Console, folder: Path, series: str, reports: Sequence[Mapping[str, Any]]) -> None:
     """Summary table on screen and as CSV, picture of the series."""
     from daq.record.read import read_meta, read_run
     from daq.series.picture import series_picture
 
-    columns = ["number", "peak_n", "strength_mpa", "strength_u_mpa", "stress_rate_mpa_s", "break_class", "verdict"]
+    columns = [
+        "number",
+        "peak_n",
+        "strength_mpa",
+        "strength_u_mpa",
+        "stress_rate_mpa_s",
+        "break_class",
+        "verdict",
+    ]
     table = Table(title=f"{series} - SIMULATED DATA")
     for name in columns:
         table.add_column(name)
@@ -178,8 +190,13 @@ def finish(console: Console, folder: Path, series: str, reports: Sequence[Mappin
             sheet.writerow(row)
             table.add_row(*(words(value, 2, "") if isinstance(value, float) else str(value) for value in row))
     paths = [Path(str(report["path"])) for report in reports]
-    records = [(str(r["specimen"]), read_run(p), read_meta(p)["result"]) for r, p in zip(reports, paths, strict=True)]
+    records = [
+        (str(r["specimen"]), read_run(p), read_meta(p)["result"]) for r, p in zip(reports, paths, strict=True)
+    ]
     picture = folder / f"{series}.png"
     series_picture(records, picture, series)
     console.print(table)
-    console.print(f"records  {folder}{os.sep}*.h5\npicture  {picture}\ntable    {folder / f'{series}.csv'}", soft_wrap=True)
+    console.print(
+        f"records  {folder}{os.sep}*.h5\npicture  {picture}\ntable    {folder / f'{series}.csv'}",
+        soft_wrap=True,
+    )

@@ -8,8 +8,12 @@ import click
 
 
 @click.command()
-@click.argument("records", type=click.Path(exists=True, dir_okay=False, path_type=Path), nargs=-1, required=True)
-@click.option("--out", type=click.Path(file_okay=False, path_type=Path), default=Path("."), help="Target folder.")
+@click.argument(
+    "records", type=click.Path(exists=True, dir_okay=False, path_type=Path), nargs=-1, required=True
+)
+@click.option(
+    "--out", type=click.Path(file_okay=False, path_type=Path), default=Path("."), help="Target folder."
+)
 @click.option("--force", is_flag=True, help="Overwrite files of an earlier export.")
 def command(records: tuple[Path, ...], out: Path, force: bool) -> None:
     """Write channels, events and result of sealed records as CSV and JSON; units stand in the column names.

@@ -12,7 +12,9 @@ from daq.cli.options import DATA
 
 
 @click.command()
-@click.argument("journals", type=click.Path(exists=True, file_okay=False, path_type=Path), nargs=-1, required=True)
+@click.argument(
+    "journals", type=click.Path(exists=True, file_okay=False, path_type=Path), nargs=-1, required=True
+)
 @DATA
 def command(journals: tuple[Path, ...], data: Path) -> None:
     """Rebuild every record of the named journal folders. May be called again and again, and be killed at any time.

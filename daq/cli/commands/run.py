@@ -26,8 +26,8 @@ from daq.stream.updates import Update
 from monitor.presenter import Presenter, result_text
 from monitor.terminal import TerminalView
 
-BURST_S = 0.030         # faster than a person: a gauge or scanner (job.md D1); may stop, never start
-START_WINDOW_S = 2.0    # the second G must follow within this
+BURST_S = 0.030  # faster than a person: a gauge or scanner (job.md D1); may stop, never start
+START_WINDOW_S = 2.0  # the second G must follow within this
 
 KEYS = """keys: m call the next bar (tare)   G G start (capital, twice within 2 s)   Space/Esc STOP at any time
       r reset   L reset: I have looked at the frame   c close this run   n note   b back off   q leave"""

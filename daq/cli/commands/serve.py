@@ -36,7 +36,9 @@ def command(frame_card: Path, data: Path, copy_to: Path | None, no_fifo: bool) -
         signal.signal(number, lambda got, _: ended.append(got))
     if frame.motion is not None and frame.motion.keep_alive is None:
         say("THIS FRAME DOES NOT STOP IF THE COMPUTER DIES: its card declares no keep-alive")
-    outfit = Outfit(frame, places_for(frame.name, data), fifo=not no_fifo, copy_to=str(copy_to) if copy_to else None)
+    outfit = Outfit(
+        frame, places_for(frame.name, data), fifo=not no_fifo, copy_to=str(copy_to) if copy_to else None
+    )
     with Supervisor(outfit, say) as supervisor:
         say(f"{frame.name}: ready; records go to {data}")
         code = supervisor.wait(lambda: bool(ended))

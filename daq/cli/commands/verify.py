@@ -24,7 +24,11 @@ def command(paths: tuple[Path, ...]) -> None:
         for problem in report.problems:
             click.echo(problem)
         if report.ok:
-            account = "received = recorded + rejected" if report.accounted else "no account of the bench in it"
-            click.echo(f"{path}: whole: {report.entries} entries, {report.rows} rows, {report.gaps} gaps; {account}")
+            account = (
+                "received = recorded + rejected" if report.accounted else "no account of the bench in it"
+            )
+            click.echo(
+                f"{path}: whole: {report.entries} entries, {report.rows} rows, {report.gaps} gaps; {account}"
+            )
         bad += not report.ok
     raise SystemExit(1 if bad else 0)

@@ -22,7 +22,7 @@ def command(terminal: bool, frame: str | None, seconds: float | None) -> None:
 
     Example: midspan watch --terminal --frame kiln-lane-a
     """
-    del terminal                                # the window is another view of the same presenter
+    del terminal  # the window is another view of the same presenter
     until_s = time.monotonic() + seconds if seconds else float("inf")
     presenter = Presenter()
     console = Console()
