@@ -111,7 +111,7 @@ class RingWriter:
 
     # --- writing ------------------------------------------------------------------------------------------
     def append_batch(self, entries: Sequence[NewEntry]) -> bool:
-        """Number and write; False where something was lost (counted, and told by a ring_loss entry)."""
+        """Number and write; False where any of these was lost (counted, and told by a ring_loss entry)."""
         if not entries:
             return True
         if self._hole_entries == 0 and self._admit(entries, self._free() - self._event_room):
@@ -131,14 +131,19 @@ class RingWriter:
         """The rare path: there is a hole to tell, or not enough room."""
         if self._admit(entries, self._free() - self._event_room):
             return True
+        whole = True
         for entry in entries:
             if entry[0] is not Kind.EVENT or not self._admit([entry], self._free()):
-                self._sequence += 1
-                self._words[W_SEQUENCE] = self._sequence
-                self._words[W_LOST] += 1
-                self._hole_entries += 1
-                self._hole_bytes += entry_bytes(len(entry[2]))
-        return False
+                self._lose(entry)
+                whole = False
+        return whole
+
+    def _lose(self, entry: NewEntry) -> None:
+        self._sequence += 1
+        self._hole_entries += 1
+        self._hole_bytes += entry_bytes(len(entry[2]))
+        self._words[W_SEQUENCE] = self._sequence
+        self._words[W_LOST] += 1
 
     def _admit(self, entries: Sequence[NewEntry], room: int) -> bool:
         """Write these, after the untold hole's entry, if all of it fits."""

@@ -1,7 +1,8 @@
 """A disk in memory that forgets as real ones do, behind the same Files layer as the real one.
 
-What was written and not synced may, after a power loss, be there, be missing, be torn, be zero, be flipped, each
-write for itself; names that were made, changed or removed without a folder sync likewise. What was synced stays.
+What was written and not synced may, after a power loss, be there, be missing, be torn, be zero, be flipped,
+each write for itself; names that were made, changed or removed without a folder sync likewise. What was
+synced stays.
 """
 
 from __future__ import annotations
@@ -204,7 +205,7 @@ def _remains(data: bytes, rng: Random) -> list[tuple[int, bytes]]:
 class Faults:
     """Any Files layer with errors at chosen calls. Counts the calls that could fail.
 
-    `fails(number, method)` decides. A write that fails leaves half of its bytes, a sync that fails loses them all.
+    `fails(number, method)` decides. A failing write leaves half of its bytes, a failing sync loses them all.
     """
 
     METHODS = (
