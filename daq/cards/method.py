@@ -25,7 +25,7 @@ class Clause(Card):
         about("", "how sure the value is; 'checked' needs checked_by and checked_on"),
     ] = "unchecked"
     checked_by: Annotated[str, Field(max_length=80), about("", "who compared it with the standard")] = ""
-    checked_on: Annotated[IsoDay, about("", "when, as YYYY-MM-DD")] = ""
+    checked_on: Annotated[IsoDay, about("date", "when, as YYYY-MM-DD")] = ""
 
 
 class Rate(Card):

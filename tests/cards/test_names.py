@@ -42,6 +42,7 @@ def test_bad_names_say_why(name, part):
     assert part in fault
 
 
+@pytest.mark.slow
 @settings(max_examples=200, deadline=None)
 @given(st.text(max_size=NAME_CHARACTERS_MAX + 5))
 def test_an_accepted_name_stays_in_its_folder(text):
