@@ -77,6 +77,7 @@ class Archivist:
         copy_to: Path | None = None,
         pulse: Callable[[], object] = bool,
         stream_is_dead: bool = False,
+        afresh: bool = False,
     ) -> None:
         self._journal = journal_folder
         self._out = out_folder
@@ -86,6 +87,8 @@ class Archivist:
         self._sealing = Sealing(out_folder, reduce, pulse)
         self._lock = _lock(journal_folder)
         self._mark = read_mark(journal_folder) or Mark(0, 0)
+        if afresh:
+            self._mark = replace(self._mark, needed_from=0)
         if copy_to is not None:
             self._mark = replace(self._mark, copy_to=str(copy_to))
         to = self._mark.copy_to
@@ -276,7 +279,8 @@ class Archivist:
     # --- trouble --------------------------------------------------------------------------------------------
     def _start_over(self, why: str, now_s: float) -> None:
         """The disk refused: wait, then take up the run again from the journal. An owed run stays owed."""
-        self.trouble = why
+        where = f"sealing in {self._out}" if self._owed is not None else f"following in {self._spool}"
+        self.trouble = why = f"{where}: {why}"
         self._retry_s = now_s + RETRY_S
         self._report({"report": "waits", "why": why})
         if self._owed is None:

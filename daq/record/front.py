@@ -22,21 +22,21 @@ def front_block(digest: str, size_bytes: int) -> bytes:
         f"bytes after this block: {size_bytes}\n"
         f"sha256 of them: {digest}\n"
     )
-    return text.encode("ascii").ljust(FRONT_BYTES - 1) + b"\n"
+    return text.encode("latin-1").ljust(FRONT_BYTES - 1) + b"\n"
 
 
 def parse_front(block: bytes, path: Path) -> tuple[str, int]:
     """Digest and size the first block promises; RecordDamaged with one line for everything else."""
-    first_line = block.split(b"\n", 1)[0].decode("ascii", "replace")
+    first_line = block.split(b"\n", 1)[0].decode("latin-1")
     if not first_line.startswith(FORMAT + " "):
         raise RecordDamaged(f"{path} is not a sealed midspan record ({_what(block)})", first_bad="front")
     number = first_line[len(FORMAT) + 1 :]
-    if number.isdigit() and int(number) > FORMAT_VERSION:
+    if number.isdecimal() and int(number) > FORMAT_VERSION:
         raise RecordDamaged(
             f"{path} has format version {number}, this midspan reads up to {FORMAT_VERSION}: use a newer one",
             first_bad="format version",
         )
-    lines = block.decode("ascii", "replace").split("\n")
+    lines = block.decode("latin-1").split("\n")
     try:
         size_bytes, digest = int(lines[2].rpartition(" ")[2]), lines[3].rpartition(" ")[2]
     except (IndexError, ValueError):

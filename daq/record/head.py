@@ -105,8 +105,8 @@ def head_of_entry(entry: Entry) -> Head:
 
 
 def _sources(frame: Mapping[str, Any]) -> tuple[SourcePlan, ...]:
-    channels = [_mapping(channel) for channel in frame.get("channels") or ()]
-    links = [str(_mapping(link).get("name", place)) for place, link in enumerate(frame.get("links") or ())]
+    channels = [_mapping(channel) for channel in _list(frame.get("channels"))]
+    links = [str(_mapping(link).get("name", place)) for place, link in enumerate(_list(frame.get("links")))]
     plans = [_channel(card, place) for place, card in enumerate(channels)]
     if len({plan.name for plan in plans}) < len(plans):
         plans = [replace(plan, name=f"{plan.name}-{place}") for place, plan in enumerate(plans)]
@@ -144,6 +144,10 @@ def _number(number: object, otherwise: float) -> float:
     if isinstance(number, bool) or not isinstance(number, int | float) or abs(number) > sys.float_info.max:
         return otherwise
     return float(number)
+
+
+def _list(found: object) -> list[Any]:
+    return found if isinstance(found, list) else []
 
 
 def _mapping(found: object) -> Mapping[str, Any]:

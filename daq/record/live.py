@@ -7,8 +7,11 @@ it is given up, never repaired and never re-opened (a killed SWMR file can be re
 from __future__ import annotations
 
 import atexit
+import io
 import os
+import sys
 from collections.abc import Sequence
+from contextlib import suppress
 from pathlib import Path
 
 import h5py
@@ -38,34 +41,16 @@ class LiveFile:
     def __init__(self, path: Path, head: Head) -> None:
         self.path = path
         self.trouble = ""
-        self._head = head
         self._columns: dict[str, H5] = {}
         self._file: H5 = None
         try:
-            self._file = h5py.File(path, "w-", libver=LIBVER, locking="best-effort")
-            self._create()
+            image, names = _empty_file(head)
+            path.write_bytes(image)
+            self._file = h5py.File(path, "r+", libver=LIBVER, locking="best-effort")
+            self._columns = {scratch: self._file[name] for scratch, name in names.items()}
             self._file.swmr_mode = True
         except H5_ERRORS as error:
             self._give_up(f"not created: {error}")
-
-    def _create(self) -> None:
-        write_root(self._file, self._head)
-        set_text(
-            self._file, "live", "This file grows while the run goes on and is replaced by the sealed record."
-        )
-        add_channels(self._file, self._head, self._make)
-        trace = self._file.create_group(TRACE)
-        set_text(trace, "NX_class", "NXdata")
-        cards = self._file.create_group("cards")
-        for name, card in self._head.cards.items():
-            cards.create_dataset(name, data=fixed_text(json_text(card)))
-
-    def _make(self, path: str, dtype: str, scratch: str) -> H5:
-        made = self._file.create_dataset(
-            path, shape=(0,), maxshape=(None,), chunks=(CHUNK_ROWS,), dtype=dtype, **FILTERS
-        )
-        self._columns[scratch] = made
-        return made
 
     def show(self, taken: Sequence[Rows]) -> None:
         """Append the rows and let readers see them; the file gives itself up when that fails."""
@@ -114,12 +99,42 @@ class LiveFile:
 
     def _give_up(self, why: str) -> None:
         """Keep every HDF5 object and leave past HDF5: releasing one may end the process by SIGSEGV."""
-        self.trouble = why
+        self.trouble = why.split("\n", 1)[0]
+        with suppress(OSError):
+            os.truncate(self.path, 0)  # it stays open to the end: at least the disk gets its room back
         if not _given_up:
             atexit.register(_leave)
         _given_up.append(self)
 
 
+def _empty_file(head: Head) -> tuple[bytes, dict[str, str]]:
+    """The file before its first row, and the path of each column by its scratch name.
+
+    Built in memory: a disk that refuses during the building would end the process, as in sink.py.
+    """
+    names: dict[str, str] = {}
+    memory = io.BytesIO()
+
+    with h5py.File(memory, "w", libver=LIBVER) as file:
+
+        def make(path: str, dtype: str, scratch: str) -> H5:
+            names[scratch] = path
+            return file.create_dataset(
+                path, shape=(0,), maxshape=(None,), chunks=(CHUNK_ROWS,), dtype=dtype, **FILTERS
+            )
+
+        write_root(file, head)
+        set_text(file, "live", "This file grows while the run goes on and is replaced by the sealed record.")
+        add_channels(file, head, make)
+        set_text(file.create_group(TRACE), "NX_class", "NXdata")
+        file.create_group("cards")
+        for name, card in head.cards.items():
+            file["cards"].create_dataset(name, data=fixed_text(json_text(card)))
+    return memory.getvalue(), names
+
+
 def _leave() -> None:
     """Runs before h5py's own farewell, which was registered earlier."""
-    os._exit(0)
+    sys.stdout.flush()
+    sys.stderr.flush()
+    os._exit(1 if hasattr(sys, "last_value") else 0)

@@ -78,18 +78,34 @@ def open_unchecked(path: Path) -> Iterator[H5]:
 def read_meta(path: Path) -> dict[str, Any]:
     """What a record says of itself, and its result; no columns are read."""
     with open_sealed(path) as file:
-        attrs = file.attrs
-        texts = {"run_id": "uuid", "series": "series", "specimen": "specimen", "created_utc": "created"}
-        return {
-            **{name: plain_text(attrs[stored]) for name, stored in texts.items()},
-            "loading": int(attrs["loading"]),
-            "midspan_version": plain_text(attrs["midspan_version"]),
-            "simulated": bool(attrs["simulated"]),
-            "interrupted": bool(attrs["interrupted"]),
-            "result": result_of(file),
-            "path": str(path),
-            "sha256": sha256_of(path),
-        }
+        return {**meta_of(file), "path": str(path), "sha256": sha256_of(path)}
+
+
+def meta_of(file: H5) -> dict[str, Any]:
+    texts = {"run_id": "uuid", "series": "series", "specimen": "specimen", "created_utc": "created"}
+    return {
+        **{name: plain_text(file.attrs[stored]) for name, stored in texts.items()},
+        "loading": int(file.attrs["loading"]),
+        "midspan_version": plain_text(file.attrs["midspan_version"]),
+        "simulated": bool(file.attrs["simulated"]),
+        "interrupted": bool(file.attrs["interrupted"]),
+        "result": result_of(file),
+    }
+
+
+def gaps_of(file: H5) -> list[dict[str, Any]]:
+    """The rows of /gaps."""
+    group = file["gaps"]
+    columns = {name: group[name][:].tolist() for name in group}
+    for name in ("kind", "source"):
+        columns[name] = [plain_text(text) for text in columns[name]]
+    return [dict(zip(columns, row, strict=True)) for row in zip(*columns.values(), strict=True)]
+
+
+def read_gaps(path: Path) -> list[dict[str, Any]]:
+    """What is missing: kind, source, before_sequence, before_index, missing (-1: unknown), time_s."""
+    with open_sealed(path) as file:
+        return gaps_of(file)
 
 
 def read_run(path: Path) -> RunData:

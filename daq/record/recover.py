@@ -33,9 +33,11 @@ def recover(
     report: Report = lambda _: None,
     pulse: Callable[[], object] = bool,
     keep: bool = False,
+    afresh: bool = False,
 ) -> tuple[Path, ...]:
     """The records of that journal, sealed now or before. RecordingError where the disk takes none now.
 
+    afresh: also runs that were sealed before, where their records are gone from the out folder.
     The journal is removed, unless `keep`, a damage of it or a copy that is still owed speaks against it.
     """
     records: list[Path] = []
@@ -56,6 +58,7 @@ def recover(
             note,
             pulse=pulse,
             stream_is_dead=True,
+            afresh=afresh,
         ) as archivist:
             _finish(archivist, pulse)
             damage, owed = archivist.damage, archivist.copies_owed

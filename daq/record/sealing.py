@@ -72,7 +72,7 @@ class Sealing:
         self._pulse = pulse
 
     def find(self, head: Head) -> Sealed | None:
-        """The record of that run, if it is sealed already; its line in SHA256SUMS is made good."""
+        """The record of that run, if it is sealed already; what a kill directly after cut off is made good."""
         for path in self._names(head):
             if not path.exists():
                 return None
@@ -81,6 +81,7 @@ class Sealing:
             except RecordDamaged:
                 continue  # not ours to judge here: the name is taken, verify tells why
             if meta["run_id"] == head.run_id:
+                self._temp(head).unlink(missing_ok=True)
                 add_sum(path.parent, meta["sha256"], path.name)
                 result = meta["result"]
                 return Sealed(
@@ -95,7 +96,7 @@ class Sealing:
         make_folder(folder)
         _demand_room(folder, columns.size_bytes() + TEXT_ROOM_BYTES + 16 * _rows(columns))
         outcome = self._outcome(columns)
-        temp = folder / f".{head.stem}.{head.run_id[:8]}.part"
+        temp = self._temp(head)
         temp.unlink(missing_ok=True)
         write_record(temp, columns, outcome, self._before(folder, journal_chain), pulse=self._pulse)
         path = self._publish(temp, head)
@@ -130,6 +131,9 @@ class Sealing:
         raise RecordingError(
             f"{NAMES_MAX} files of the name {head.stem} stand in {temp.parent}: move them away"
         )
+
+    def _temp(self, head: Head) -> Path:
+        return self._out / head.series / f".{head.stem}.{head.run_id[:8]}.part"
 
     def _names(self, head: Head) -> Iterator[Path]:
         folder = self._out / head.series
