@@ -70,6 +70,7 @@ class LinesDecoder:
         sorting = Sorting(self._broken)
         if lines.overlong:
             sorting.reject(Reason.OVERLONG)
+            self._first_line = False
         sorting.discard(lines.discarded_bytes)
         if lines.text:
             if lines.text.count(self._line_end) > self._scalar_rows:

@@ -62,7 +62,7 @@ class RowText:
             raise CardError(
                 (f"link {link.name}: decimal_comma with separator ',': choose another separator",)
             )
-        number = _NUMBER.replace(rb"\.", point)
+        number = _NUMBER.replace(rb"\.", re.escape(point))
         self._number = re.compile(rb"\s*(" + number + rb")\s*")
         self._number_and_unit = re.compile(rb"\s*(" + number + rb")\s*([^\d\s].*)")
         self._groups: tuple[int, ...] = ()
@@ -120,18 +120,17 @@ class RowText:
         found = self.classify(line)
         if isinstance(found, tuple) and (self.prefix or self.check_digits):
             return found
-        if found is None or (isinstance(found, bytes) and found.startswith(self.known)):
+        if found is None or found is Reason.OVERLONG:
             return found
-        return Reason.PARTIAL
+        return found if isinstance(found, bytes) and found.startswith(self.known) else Reason.PARTIAL
 
     def _begins_like_row(self, line: bytes) -> bool:
         if self.prefix:
             return line.startswith(self.prefix)
         if self.label_separator:
             return self.label_separator in line and not (self.known and line.startswith(self.known))
-        return (
-            not line[:1].isalpha() and bool(line.strip()) and not (self.known and line.startswith(self.known))
-        )
+        word = line[:1].isalpha() and line[:3].lower() != b"nan"
+        return not word and bool(line.strip()) and not (self.known and line.startswith(self.known))
 
     def _checked(self, line: bytes) -> bytes | None:
         """What stands before the check field, when the check matches."""
