@@ -10,11 +10,15 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
+from typing import TypeAlias
 
 import numpy as np
 
 from daq.mechanics.sections import Circle, Rectangle, Section, Spans
 from simulator.card import Flaws, Reference, Where
+
+Corners: TypeAlias = tuple[tuple[float, float], ...]
 
 FLAWS_MAX = 100_000  # a population that needs more than this per bar is a card error in disguise
 
@@ -37,7 +41,7 @@ class MomentShape:
     load_offset_mm: float = 0.0
 
     @property
-    def corners(self) -> tuple[tuple[float, float], ...]:
+    def corners(self) -> Corners:
         """(x from the middle, share) at supports and load rollers; straight lines between (statics)."""
         half, e, inner = self.spans.support_mm / 2, self.load_offset_mm, self.spans.load_mm / 2
         full = self.spans.support_mm * self.spans.arm_mm
@@ -46,12 +50,7 @@ class MomentShape:
         return ((-half, 0.0), (e - inner, left), (e + inner, right), (half, 0.0))
 
     def share(self, x_mm: float) -> float:
-        corners = self.corners
-        return float(np.interp(x_mm, [x for x, _ in corners], [share for _, share in corners]))
-
-    @property
-    def share_max(self) -> float:
-        return max(share for _, share in self.corners)
+        return _between(self.corners, x_mm)
 
 
 def effective_size(where: Where, section: Section, spans: Spans, modulus: float) -> float:
@@ -95,17 +94,28 @@ def _weaker(
     m = flaws.weibull_modulus
     reference = effective_size(flaws.where, *_reference(flaws.reference, section), m)
     ratio = reference / tensile_size(flaws.where, section, shape.spans)
+    corners = shape.corners
+    share_max = max(share for _, share in corners)
     hazard = 0.0
     for _ in range(FLAWS_MAX):
         hazard += rng.exponential()
         strength_mpa = flaws.strength_mpa * (hazard * ratio) ** (1 / m)
-        if best is not None and strength_mpa >= best.nominal_mpa * shape.share_max:
+        if best is not None and strength_mpa >= best.nominal_mpa * share_max:
             break
         x_mm = shape.spans.support_mm * (rng.random() - 0.5)
-        share = shape.share(x_mm) * _depth_share(flaws.where, section, rng)
+        share = _between(corners, x_mm) * _depth_share(flaws.where, section, rng)
         if share > 0 and (best is None or strength_mpa / share < best.nominal_mpa):
             best = Weakest(flaws.name, strength_mpa / share, strength_mpa, x_mm)
     return best
+
+
+def _between(corners: Corners, x_mm: float) -> float:
+    """Straight lines between corners; plain, because it is asked thousands of times for one place."""
+    for (left_mm, left), (right_mm, right) in pairwise(corners):
+        if x_mm <= right_mm:
+            width_mm = right_mm - left_mm
+            return left + (right - left) * (x_mm - left_mm) / width_mm if width_mm > 0 else right
+    return corners[-1][1]
 
 
 def _reference(reference: Reference, like: Section) -> tuple[Section, Spans]:

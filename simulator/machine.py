@@ -175,7 +175,7 @@ class Machine:
             self._touched = self._touched and self.force_n > 0
         if answer.loads and self._touched:
             self._close_loop(now_s)
-        self._refresh()
+        self._settle()
         return answer.reply
 
     def mount(self, hand: InHand) -> Bar:
@@ -184,25 +184,25 @@ class Machine:
         self._grip = self._empty()
         self._awaiting = bar
         self._fill_or_raise()
-        self._refresh()
+        self._settle()
         return bar
 
     def raise_crosshead(self) -> None:
         """To the start position, from the machine's own panel."""
         if not self._controller.switched_off:
             self._controller.raise_by_hand(self.now_s)
-        self._refresh()
+        self._settle()
 
     def switch(self, name: InputName, on: bool) -> None:
         """Shield, emergency stop or drive fault; hard-wired: the drive stops whatever the software says."""
         self._controller.switch(name, on, self.now_s)
-        self._refresh()
+        self._settle()
 
     def strike(self, fault: AnyFault) -> None:
         """A misfortune, now, whatever its anchors say."""
         self._check(fault)
         self._apply(fault, self.now_s)
-        self._refresh()
+        self._settle()
 
     def clear(self) -> None:
         """All misfortunes end, switches go back; what broke stays broken."""
@@ -212,7 +212,7 @@ class Machine:
         for sampler in self._samplers:
             for sensor in sampler.sensors:
                 sensor.clear()
-        self._refresh()
+        self._settle()
 
     # --- what comes next ----------------------------------------------------------------------------
     def _next_event(self) -> tuple[float, Act]:
@@ -256,8 +256,8 @@ class Machine:
         if self.way_is_clear:
             bar, self._awaiting = self._awaiting, None
             self._fill(bar)
-        elif not self._crosshead.moving:
-            self.raise_crosshead()
+        elif not self._crosshead.moving and not self._controller.switched_off:
+            self._controller.raise_by_hand(self.now_s)
 
     def _touches(self, now_s: float) -> None:
         self._touched = True
@@ -362,6 +362,11 @@ class Machine:
             times_s = sampler.due(until_s)
             if times_s.size:
                 sampler.note(times_s, self._crosshead.positions(times_s), self._moment)
+
+    def _settle(self) -> None:
+        """Something was done: do at once what follows from it at once."""
+        self._refresh()
+        self.run_to(self.now_s)
 
     def _refresh(self) -> None:
         """Something changed: plan anew, and look at the inputs again."""
