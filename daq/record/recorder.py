@@ -24,12 +24,13 @@ from daq.stream.ring_reader import RingReader, drain
 
 Report: TypeAlias = Callable[[Mapping[str, Any]], None]
 
+SECOND_NS = 1_000_000_000
 POLL_S = 0.02
-SYNC_S = 0.1
-STATUS_S = 0.5
-TIDY_S = 1.0
-KEEP_S = 60.0
-FINISH_S = 5.0  # at the end: how long the disk may take with what is left; the ring keeps the rest
+SYNC_NS = SECOND_NS // 10
+STATUS_NS = SECOND_NS // 2
+TIDY_NS = SECOND_NS
+KEEP_NS = 60 * SECOND_NS
+FINISH_NS = 5 * SECOND_NS  # at the end: how long the disk may take with what is left; the ring keeps the rest
 PIECES_MAX = 64  # of 256 KiB each: a sync is never further away than that
 
 
@@ -72,31 +73,29 @@ class Recorder:
         self._report = report
         self._bytes_ahead = bytes_ahead
         self._pending: Packed | None = None
-        self._history: deque[tuple[float, int]] = deque()
-        self._drained_s = self._safe_s = float("-inf")
-        self._synced_s = self._said_s = self._tidied_s = float("-inf")
+        self._history: deque[tuple[int, int]] = deque()
+        self._drained_ns = self._safe_ns = 0
+        self._synced_ns = self._said_ns = self._tidied_ns = 0
         self._trouble = ""
         self._bytes = 0
 
     def advance(self, now_ns: int) -> bool:
         """Take what is in the ring; sync, tidy and report when it is time. Whether the ring was emptied."""
-        now_s = now_ns * 1e-9
-        if self._safe_s == float("-inf"):
-            self._safe_s = now_s
+        self._safe_ns = self._safe_ns or now_ns
         try:
             drained = self._take()
             if drained:
-                self._drained_s = now_s
-            if now_s - self._synced_s >= SYNC_S:
-                self._sync(now_s, now_ns)
-            if now_s - self._tidied_s >= TIDY_S:
-                self._tidied_s = now_s
-                self._tidy(now_s)
+                self._drained_ns = now_ns
+            if now_ns - self._synced_ns >= SYNC_NS:
+                self._sync(now_ns)
+            if now_ns - self._tidied_ns >= TIDY_NS:
+                self._tidied_ns = now_ns
+                self._tidy(now_ns)
             self._trouble = ""
         except RecordingError as error:
             self._trouble = str(error)
             drained = False
-        self._say(now_s)
+        self._say(now_ns)
         return drained
 
     def _take(self) -> bool:
@@ -110,33 +109,33 @@ class Recorder:
             self._pending = None
         return False
 
-    def _sync(self, now_s: float, now_ns: int) -> None:
+    def _sync(self, now_ns: int) -> None:
         self._journal.sync()
-        self._synced_s = now_s
-        self._safe_s = max(self._safe_s, self._drained_s)
+        self._synced_ns = now_ns
+        self._safe_ns = max(self._safe_ns, self._drained_ns)
         self._reader.acknowledge(self._journal.synced_sequence, now_ns)
 
-    def _tidy(self, now_s: float) -> None:
+    def _tidy(self, now_ns: int) -> None:
         """Let segments go that are older than a minute and of no use to the archivist; fill room ahead."""
-        self._history.append((now_s, self._journal.last_sequence))
-        while len(self._history) > 1 and self._history[1][0] <= now_s - KEEP_S:
+        self._history.append((now_ns, self._journal.last_sequence))
+        while len(self._history) > 1 and self._history[1][0] <= now_ns - KEEP_NS:
             self._history.popleft()
         mark = read_mark(self._folder)
-        if mark is not None and self._history[0][0] <= now_s - KEEP_S:
+        if mark is not None and self._history[0][0] <= now_ns - KEEP_NS:
             self._journal.delete_before(min(mark.needed_from, self._history[0][1]))
         if self._journal.free_bytes < self._bytes_ahead:
             self._journal.prepare(min(self._bytes_ahead, self._journal.free_bytes + SEGMENT_BYTES // 2))
 
-    def _say(self, now_s: float) -> None:
-        if now_s - self._said_s < STATUS_S:
+    def _say(self, now_ns: int) -> None:
+        if now_ns - self._said_ns < STATUS_NS:
             return
-        self._said_s = now_s
+        self._said_ns = now_ns
         self._report(
             {
                 "report": "status",
                 "sequence": self._journal.last_sequence,
                 "synced_sequence": self._journal.synced_sequence,
-                "lag_s": max(0.0, now_s - self._safe_s),
+                "lag_s": (now_ns - self._safe_ns) / SECOND_NS,
                 "lag_bytes": self._reader.lag_bytes,
                 "bytes": self._bytes,
                 "room_bytes": self._journal.free_bytes,
@@ -149,15 +148,18 @@ class Recorder:
         )
 
     def finish(self, clock_ns: Callable[[], int]) -> None:
-        """Empty the ring, sync, acknowledge, close; for at most FINISH_S."""
-        until_ns = clock_ns() + round(FINISH_S * 1e9)
+        """Empty the ring, sync, acknowledge, close; for at most FINISH_NS. A disk that refuses to the end is told."""
+        until_ns = clock_ns() + FINISH_NS
+        while not self.advance(clock_ns()) and clock_ns() < until_ns:
+            time.sleep(POLL_S)
         try:
-            while not self.advance(clock_ns()) and clock_ns() < until_ns:
-                time.sleep(POLL_S)
-            self._sync(clock_ns() * 1e-9, clock_ns())
             self._journal.close()
-        finally:
-            self._reader.close()
+        except RecordingError as error:
+            self._trouble = str(error)
+        self._reader.acknowledge(self._journal.synced_sequence, clock_ns())
+        self._said_ns = 0
+        self._say(clock_ns())
+        self._reader.close()
 
 
 def open_journal(ring_path: Path, journal_folder: Path, files: Files | None = None) -> Journal:

@@ -1,4 +1,4 @@
-"""The sealed record as somebody else sees it: read in another process with h5py alone, compared with the entries."""
+"""The sealed record as somebody else sees it: read in another process by h5py alone, checked with the entries."""
 
 from __future__ import annotations
 
