@@ -10,8 +10,12 @@ from __future__ import annotations
 import errno
 import fcntl
 import os
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Protocol
+
+from daq.errors import RecordingError
 
 _ZEROS = bytes(1 << 20)
 
@@ -60,6 +64,16 @@ class Files(Protocol):
 
     def lock(self, path: Path) -> int:
         """Sole owner of that name until closed or the process ends; BlockingIOError if taken."""
+
+
+@contextmanager
+def told(folder: Path, last_sequence: int | None = None) -> Iterator[None]:
+    """The border: what the file system says becomes a RecordingError with its cause."""
+    try:
+        yield
+    except OSError as error:
+        message = f"journal {folder}: {error.strerror or error}"
+        raise RecordingError(message, last_sequence=last_sequence) from error
 
 
 class OsFiles:

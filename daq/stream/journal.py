@@ -12,15 +12,15 @@ caller still has the entries in the ring.
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator
-from contextlib import ExitStack, contextmanager, suppress
+from collections.abc import Iterable
+from contextlib import ExitStack, suppress
 from pathlib import Path
 
 from daq.errors import RecordingError
 from daq.stream.checkpoint import Checkpoint
 from daq.stream.checkpoint_file import CheckpointFile
 from daq.stream.entry import Entry, Packed, pack_all
-from daq.stream.files import Files, OsFiles
+from daq.stream.files import Files, OsFiles, told
 from daq.stream.journal_reader import JournalReader
 from daq.stream.journal_tail import Head, Tail, find_tail
 from daq.stream.segment_writer import SegmentWriter
@@ -83,7 +83,8 @@ class Journal:
     ) -> Journal:
         """Resume this stream's journal, or create it where there is none."""
         files = files if files is not None else OsFiles()
-        there = bool(segment_numbers(files.names(Path(folder))))
+        with told(Path(folder)):
+            there = bool(segment_numbers(files.names(Path(folder))))
         journal = cls._begin(Path(folder), None if there else stream_id, segment_bytes, files)
         if journal.stream_id != stream_id:
             journal._let_go()
@@ -94,7 +95,7 @@ class Journal:
     def _begin(cls, folder: Path, stream_id: int | None, segment_bytes: int, files: Files) -> Journal:
         """A stream id: create. None: resume."""
         assert segment_bytes >= SEGMENT_BYTES_MIN
-        with _told(folder):
+        with told(folder):
             if stream_id is not None:
                 files.make_folder(folder)
             with ExitStack() as undo:
@@ -159,12 +160,12 @@ class Journal:
         waiting = self._writer.unsynced_bytes
         if waiting + len(packed.data) > UNSYNCED_BYTES_MAX:
             raise self._refusal(f"{waiting / _MIB:.0f} MiB wait for a sync that succeeds")
-        with _told(self.folder, self.synced_sequence):
+        with told(self.folder, self.synced_sequence):
             self._writer.append(packed)
 
     def sync(self) -> int:
         """Make everything appended outlive a power loss; the last acknowledged sequence."""
-        with _told(self.folder, self.synced_sequence):
+        with told(self.folder, self.synced_sequence):
             self._writer.sync()
         self._vouch()
         self._keep_spare()
@@ -184,8 +185,14 @@ class Journal:
 
     def delete_before(self, sequence: int) -> int:
         """Remove whole segments whose entries are all below `sequence`; how many went. The newest stays."""
-        with _told(self.folder, self.synced_sequence):
+        with told(self.folder, self.synced_sequence):
             return self._writer.delete_before(sequence)
+
+    def __enter__(self) -> Journal:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
 
     def close(self) -> None:
         """Sync, mark the journal as ended, let go of it. The handles go whatever happens; twice is once."""
@@ -194,7 +201,7 @@ class Journal:
         try:
             self.sync()
             self._vouch(closed=True)
-            with _told(self.folder, self.synced_sequence):
+            with told(self.folder, self.synced_sequence):
                 self._spares.clear()
         finally:
             self._let_go()
@@ -243,16 +250,6 @@ class Journal:
         with suppress(OSError):
             self._files.close(self._lock)
         self._lock = -1
-
-
-@contextmanager
-def _told(folder: Path, last_sequence: int | None = None) -> Iterator[None]:
-    """The border: what the file system says becomes a RecordingError with its cause."""
-    try:
-        yield
-    except OSError as error:
-        message = f"journal {folder}: {error.strerror or error}"
-        raise RecordingError(message, last_sequence=last_sequence) from error
 
 
 def _lock(folder: Path, files: Files) -> int:

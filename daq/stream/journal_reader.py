@@ -15,7 +15,7 @@ from daq.errors import RecordDamaged
 from daq.stream.checkpoint import Checkpoint
 from daq.stream.checkpoint_file import read_checkpoint
 from daq.stream.entry import Entry, EntryDamaged, Kind, Packed, gather
-from daq.stream.files import Files, OsFiles
+from daq.stream.files import Files, OsFiles, told
 from daq.stream.journal_walk import Batch, Walk
 from daq.stream.segments import (
     CHECKPOINT_NAME,
@@ -89,7 +89,8 @@ class JournalReader:
         """The next piece not seen before, as bytes."""
         packed, self._held_back = self._held_back, None
         while packed is None:
-            batch = self._walk.next_batch()
+            with told(self._folder, self.last_sequence):
+                batch = self._walk.next_batch()
             if batch is None:
                 return None
             packed = batch.packed().after(self.last_sequence)
@@ -117,7 +118,8 @@ class JournalReader:
 
     def checkpoint(self) -> Checkpoint | None:
         """The recorder's last sound word on how far it got."""
-        return read_checkpoint(self._folder, self._files)
+        with told(self._folder):
+            return read_checkpoint(self._folder, self._files)
 
     def synced_sequence(self) -> int:
         """Last entry the checkpoint vouches for; 0 = none."""
@@ -154,7 +156,11 @@ class JournalReader:
 
     def _batches(self, walk: Walk) -> Iterator[Batch]:
         try:
-            while (batch := walk.next_batch()) is not None:
+            while True:
+                with told(self._folder, walk.last_sequence):
+                    batch = walk.next_batch()
+                if batch is None:
+                    return
                 yield batch
         finally:
             walk.close()

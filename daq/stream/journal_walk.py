@@ -7,6 +7,7 @@ on; behind the last good batch of the last segment there is only the end.
 
 from __future__ import annotations
 
+from contextlib import ExitStack
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -130,13 +131,12 @@ class Walk:
             handle = self._files.open(path, writable=False)
         except FileNotFoundError:  # removed since the folder was listed: look again
             return False
-        try:
+        with ExitStack() as undo:
+            undo.callback(self._files.close, handle)
             header = read_segment_header(self._files, handle, path)
             if self.segment is not None and self._boundaries.get(header.chain) != header.after_sequence:
                 raise RecordDamaged("the chain breaks inside a segment", first_bad=self.place)
-        except RecordDamaged:
-            self._files.close(handle)
-            raise
+            undo.pop_all()
         self.close()
         self._handle, self.segment = handle, header
         self.offset, self.chain, self.last_sequence = BODY_OFFSET, header.chain, header.after_sequence
