@@ -12,8 +12,6 @@ import re
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 
-from pydantic import ValidationError
-
 from daq.cards.faults import Fault, one_line, show
 from daq.cards.method import MethodCard
 from daq.cards.names import has_control, name_fault
@@ -183,21 +181,15 @@ class _Row:
         self._judge_sizes(method, (*width_mm, *thickness_mm), chamfer_mm, length_mm, inner_mm)
         if self.faults:
             return None
-        try:
-            return Specimen(
-                number=self.cells["number"],
-                width_mm=width_mm,
-                thickness_mm=thickness_mm,
-                inner_diameter_mm=inner_mm,
-                chamfer_mm=chamfer_mm,
-                length_mm=length_mm,
-                **texts,
-            )
-        except ValidationError as error:
-            self.faults.append(
-                Fault((f"line {self.line}",), one_line(str(error)), "correct the row", "a row")
-            )
-            return None
+        return Specimen(
+            number=self.cells["number"],
+            width_mm=width_mm,
+            thickness_mm=thickness_mm,
+            inner_diameter_mm=inner_mm,
+            chamfer_mm=chamfer_mm,
+            length_mm=length_mm,
+            **texts,
+        )
 
     def fault(self, column: str, allowed: str, do: str) -> Fault:
         """A fault of one cell of this row."""

@@ -56,6 +56,8 @@ class BenchLine:
         self._own = str(places.runtime / f"station-{os.getpid()}")
         self._socket = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM | socket.SOCK_NONBLOCK)
         self._socket.bind(self._own)
+        self.snapshot: dict[str, Any] = {}
+        self._heard_s = time.monotonic()
         self._number = 0
         self._waiting: dict[int, asyncio.Future[dict[str, Any]]] = {}
         asyncio.get_running_loop().add_reader(self._socket.fileno(), self._hear)
@@ -66,11 +68,17 @@ class BenchLine:
         if not answer.get("ok"):
             raise Refused(type(request).__name__, tuple(answer.get("missing", ())))
 
-    async def snapshot(self) -> dict[str, Any]:
-        """The watch's present values; the bench takes it as our heartbeat."""
-        answer = await self._send(messages.encode_snapshot_request(self._next()))
-        snapshot: dict[str, Any] = answer.get("snapshot", {})
-        return snapshot
+    def beat(self) -> None:
+        """Our heartbeat, and a question for the watch's present values; waits for nothing."""
+        try:
+            self._socket.sendto(messages.encode_snapshot_request(self._next()), self._address)
+        except OSError:
+            return                              # no bench, or its queue is full; the age of `snapshot` tells
+
+    @property
+    def silent_s(self) -> float:
+        """Since the bench last answered."""
+        return time.monotonic() - self._heard_s
 
     def close(self) -> None:
         asyncio.get_running_loop().remove_reader(self._socket.fileno())
@@ -100,6 +108,8 @@ class BenchLine:
             except BlockingIOError:
                 return
             answer = json.loads(message)
+            self._heard_s = time.monotonic()
+            self.snapshot = answer.get("snapshot", self.snapshot)
             future = self._waiting.get(answer.get("id", -1))
             if future is not None and not future.done():
                 future.set_result(answer)
@@ -191,19 +201,19 @@ class Station:
 
     async def _beat(self) -> None:
         while True:
-            try:
-                self._snapshot = await self._bench.snapshot()
-            except Refused:
-                self._snapshot = {"state": "bench process does not answer"}
+            self._bench.beat()
+            silent = self._bench.silent_s > ANSWER_TIMEOUT_S
+            self._snapshot = {"state": "bench process does not answer"} if silent else self._bench.snapshot
             await asyncio.sleep(BEAT_S)
 
     # --- what viewers see
     def _summary(self) -> dict[str, Any]:
-        age_s = self._snapshot.get("data_age_s")
+        at_s = self._snapshot.get("time_s")
+        age_s = max(0.0, at_s - self._follower.latest_s) if at_s is not None else None
         return {
             **self._follower.summary(),
             **self._snapshot,
-            "data_age_s": age_s,
+            "data_age_s": finite(age_s) if age_s is not None else None,
             "sequence": self._follower.sequence,
         }
 

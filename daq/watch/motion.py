@@ -23,6 +23,7 @@ TOUCH_SIGMA, TOUCH_SHARE, TOUCH_N_MIN = 10.0, 0.003, 0.5
 CONTACT_SLACK_MM = 1.0
 RECKONED_TIMES = 2.0
 FLAT_TRAVEL_SHARE, FLAT_SLOPE_SHARE, FLAT_SIGMA = 0.05, 0.10, 8.0
+FLAT_TOE_TIMES = 4.0  # a padded fixture's toe begins at about a tenth of the final slope
 CEILING_TIMES, CEILING_MM_MIN = 2.5, 0.2
 SOFT_END_MM = 2.0
 SPEED_SHARE, SPEED_S = 0.2, 0.5
@@ -93,12 +94,13 @@ class Runaway:
 class Flat:
     """Row 10: moving in contact without a rise of the force."""
 
-    __slots__ = ("_from_mm", "_from_n", "_gain_n_min", "_stiffness_n_mm", "_travel_mm")
+    __slots__ = ("_from_mm", "_from_n", "_stiffness_n_mm", "_toe_n", "_travel_mm")
 
     def __init__(self, stiffness_n_mm: float, deflection_mm: float, level: Level) -> None:
         samples = max(8.0, 0.1 / level.period_s)
         sigma_gain = sqrt(2.0) * level.sigma_rest_n * 2.0 / sqrt(samples)
         self._stiffness_n_mm = stiffness_n_mm
+        self._toe_n = RUNAWAY_FROM_SHARE * stiffness_n_mm * deflection_mm
         self._travel_mm = max(FLAT_TRAVEL_SHARE * deflection_mm, FLAT_SIGMA * sigma_gain / stiffness_n_mm)
         self._from_mm, self._from_n = INFINITE, 0.0
 
@@ -110,7 +112,7 @@ class Flat:
         if self._from_mm == INFINITE:
             self._from_mm, self._from_n = at_mm, net_n
         travel_mm, gain_n = at_mm - self._from_mm, net_n - self._from_n
-        if travel_mm < self._travel_mm:
+        if travel_mm < self._travel_mm * (FLAT_TOE_TIMES if net_n < self._toe_n else 1.0):
             return None
         needed_n = FLAT_SLOPE_SHARE * self._stiffness_n_mm * travel_mm
         self._from_mm, self._from_n = at_mm, net_n

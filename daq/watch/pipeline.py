@@ -22,7 +22,7 @@ from daq.watch.drops import Drop, slope_between
 from daq.watch.drops import window_s as drop_window_s
 from daq.watch.faults import FAULTS, UNLISTED
 from daq.watch.fracture import Finding, Kind
-from daq.watch.limits import Reaction, Trip
+from daq.watch.limits import CAUTION_SHARE, Reaction, Trip
 from daq.watch.requests import Request
 from daq.watch.setup import Proven, WatchSetup, setup_from_card
 from daq.watch.states import ARMED, BROKEN, LATCHED, MOVING, WATCHED, Cause
@@ -237,6 +237,8 @@ class Pipeline:
         judge = core.judge
         if not judge.low_n <= gross_n <= judge.high_n:
             if not self._outside(time_s, gross_n):
+                core.gross_n = float("nan")
+                self._count_beat(time_s)
                 return
         elif judge.inside():
             core.emit("limit_outlier", outliers=judge.outliers)
@@ -260,6 +262,9 @@ class Pipeline:
         finding = core.watch.feed(index, time_s, net_n)
         if finding is not None:
             self._found(finding)
+        self._count_beat(time_s)
+
+    def _count_beat(self, time_s: float) -> None:
         self._beat_left -= 1
         if self._beat_left == 0:
             self._beat(time_s)
@@ -274,17 +279,27 @@ class Pipeline:
         core = self._core
         finite = isfinite(gross_n)
         blank = core.state in BROKEN and time_s < core.blank_until_s
-        if finite and blank:
+        swings = core.watch.candidate is not None and gross_n < core.judge.low_n    # a released load train rings
+        if finite and (blank or swings):
             return True
         trip = core.judge.judge(gross_n)
-        if trip is not None and (core.state not in LATCHED or trip.reaction is Reaction.OVERLOAD):
+        graver = trip is not None and trip.reaction is Reaction.OVERLOAD and core.state is not State.SIGNAL_LOST
+        if trip is not None and (core.state not in LATCHED or graver):
             if trip.reaction is Reaction.SIGNAL_LOST:
                 self._signal_lost(trip.what)
+            elif self._jumped_to_rail(gross_n):
+                self._signal_lost("the converter is at its rail")
             else:
                 core.trip(trip)
         if not finite:
             self._count = float("nan")
         return finite
+
+    def _jumped_to_rail(self, gross_n: float) -> bool:
+        """A rail reached from the middle of the range is a broken wire; from near the top it is an overload."""
+        low_n, high_n = self.setup.rails_n
+        before_n = self._core.gross_n
+        return not low_n <= gross_n <= high_n and not abs(before_n) >= CAUTION_SHARE * self.setup.capacity_n
 
     def _frozen(self, time_s: float) -> None:
         """Identical raw values for longer than this signal shows by chance."""

@@ -136,11 +136,15 @@ def _judge_tare(core: Core, run: Run, collector: Collector) -> None:
         run_s=plan.expected.time_to_break_s,
     )
     times_s, gross_n = collector.cut()
-    note, reasons, may_override = take(times_s, gross_n, rules)
-    if reasons and not (may_override and plan.tare_override_reason):
-        _refuse_tare(core, collector, reasons, note.tare_n)
+    taken = take(times_s, gross_n, rules)
+    override = plan.tare_override_reason if not taken.final else ""
+    if taken.drifting and not taken.final and not override and collector.look_longer():
         return
-    _accept_tare(core, run, note, rules, plan.tare_override_reason if reasons else "", times_s[0])
+    if taken.reasons and not override:
+        _refuse_tare(core, collector, taken.reasons, taken.note.tare_n)
+        return
+    note = taken.note
+    _accept_tare(core, run, note, rules, override if taken.reasons else "", times_s[0])
     newest = slice(-core.watch.level.bin_samples * 8, None)
     core.watch.level.begin_anew(times_s[newest].tolist(), (gross_n[newest] - note.tare_n).tolist(), 0.0)
 

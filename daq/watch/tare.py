@@ -17,9 +17,11 @@ from daq.stream.block import Floats
 
 BLOCKS = 10
 SECONDS_MIN = 1.0
+SECONDS_MORE = 4.0  # a drift that one second cannot tell from noise is looked at for longer before it is refused
 SAMPLES_MIN = 32
 NOISE_TIMES = 3.0
 DRIFT_SHARE_PER_MIN = 0.001
+DRIFT_SIGMA = 3.5
 WINDOW_SHARE = 0.01
 CAUTION_SHARE = 0.002
 FROZEN_PROBABILITY = 1e-6
@@ -58,10 +60,11 @@ class TareRules:
 class Collector:
     """Samples at rest until there are enough for a zero."""
 
-    __slots__ = ("at_mm", "gross_n", "seconds", "times_s", "told")
+    __slots__ = ("at_mm", "gross_n", "seconds", "seconds_max", "seconds_min", "times_s", "told")
 
     def __init__(self, rate_hz: float) -> None:
-        self.seconds = tare_seconds(rate_hz)
+        self.seconds_min = self.seconds = tare_seconds(rate_hz)
+        self.seconds_max = self.seconds_min + SECONDS_MORE
         self.times_s: list[float] = []
         self.gross_n: list[float] = []
         self.at_mm: float | None = None
@@ -71,6 +74,12 @@ class Collector:
         self.times_s.clear()
         self.gross_n.clear()
         self.at_mm = None
+        self.seconds = self.seconds_min
+
+    def look_longer(self) -> bool:
+        """One more second, if there is one left."""
+        self.seconds += 1.0
+        return self.seconds <= self.seconds_max
 
     @property
     def full(self) -> bool:
@@ -88,14 +97,27 @@ def tare_seconds(rate_hz: float) -> float:
     return max(SECONDS_MIN, float(ceil(SAMPLES_MIN / rate_hz)))
 
 
-def take(times_s: Floats, gross_n: Floats, rules: TareRules) -> tuple[TareNote, tuple[str, ...], bool]:
-    """The note, the reasons to refuse it, and whether a named override may pass them (a dead signal: never)."""
+@dataclass(frozen=True, slots=True)
+class Taken:
+    """reasons: against it. final: no override helps (a dead signal). drifting: the drift may be noise still."""
+
+    note: TareNote
+    reasons: tuple[str, ...] = ()
+    final: bool = False
+    drifting: bool = False
+
+
+def take(times_s: Floats, gross_n: Floats, rules: TareRules) -> Taken:
+    """A zero from samples at rest, and what stands against it."""
     if not bool(np.isfinite(gross_n).all()):
-        return _empty(len(gross_n)), ("the force is not a number",), False
+        return Taken(_empty(len(gross_n)), ("the force is not a number",), final=True)
     note = _note(times_s, gross_n, rules)
     if note.low_n == note.high_n and not _may_be_constant(rules):
-        return note, ("the force does not move by a single count: frozen, or too coarse to be judged",), False
-    return note, tuple(_refusals(note, gross_n, times_s, rules)), True
+        why = "the force does not move by a single count: frozen, or too coarse to be judged"
+        return Taken(note, (why,), final=True)
+    allowed = DRIFT_SHARE_PER_MIN * rules.capacity_n
+    drifting = not abs(note.drift_n_min) <= allowed
+    return Taken(note, tuple(_refusals(note, gross_n, times_s, rules)), drifting=drifting)
 
 
 def _note(times_s: Floats, gross_n: Floats, rules: TareRules) -> TareNote:
@@ -129,8 +151,7 @@ def _refusals(note: TareNote, gross_n: Floats, times_s: Floats, rules: TareRules
     sigma = _white_sigma(times_s, gross_n, note)
     if rules.quiet_n is not None and not sigma <= NOISE_TIMES * max(rules.quiet_n, note.step_n):
         found.append(f"noise {sigma:.3g} N, quiet record {rules.quiet_n:.3g} N")
-    _, error = _slope(*_blocks(times_s, gross_n))
-    drift_max = max(DRIFT_SHARE_PER_MIN * rules.capacity_n, 3.0 * error * 60.0)
+    drift_max = max(DRIFT_SHARE_PER_MIN * rules.capacity_n, DRIFT_SIGMA * _drift_error_n_min(times_s, gross_n, note))
     if not abs(note.drift_n_min) <= drift_max:
         found.append(f"drift {note.drift_n_min:.3g} N/min, allowed {drift_max:.3g} N/min")
     off = note.tare_n - rules.zero_n
@@ -153,6 +174,13 @@ def _white_sigma(times_s: Floats, gross_n: Floats, note: TareNote) -> float:
     rest = means_n - means_n.mean() - slope * (centres_s - centres_s.mean())
     of_means = sqrt(float(np.sum(rest**2)) / max(1, len(means_n) - 2))
     return min(note.sigma_n, of_means * sqrt(len(gross_n) / len(means_n)))
+
+
+def _drift_error_n_min(times_s: Floats, gross_n: Floats, note: TareNote) -> float:
+    """Standard error of the drift: from the scatter of the blocks, and not below what the samples' noise gives."""
+    _, of_blocks = _slope(*_blocks(times_s, gross_n))
+    span_s = float(times_s[-1] - times_s[0])
+    return 60.0 * max(of_blocks, note.sigma_n * sqrt(12.0 / len(times_s)) / span_s)
 
 
 def _blocks(times_s: Floats, gross_n: Floats) -> tuple[Floats, Floats]:

@@ -95,6 +95,8 @@ def test_text_that_is_not_toml(tmp_path, text, part):
 def test_the_deepest_card_that_is_read(tmp_path):
     (line,) = faults(load_frame, written(tmp_path, 'card = "frame"\na' + ".a" * 8 + " = 1"))
     assert "at most 8 tables or lists inside each other" in line
+    (line,) = faults(load_frame, written(tmp_path, "a" + ".a" * 40 + " = 1"))
+    assert "nested too deeply" in line
     lines = faults(load_frame, written(tmp_path, 'card = "frame"\na' + ".a" * 7 + " = 1"))
     assert any(line.startswith("a = (a table): not a key") for line in lines)
 
@@ -238,6 +240,22 @@ def test_field_and_cross_faults_of_a_method_together(problems):
     assert [line.partition(" = ")[0] for line in lines] == [
         "load_span_mm",
         "rate.mode",
+        "expected.strength_mpa",
+    ]
+
+
+def test_cross_faults_of_a_method_whose_body_cannot_be_read(problems):
+    """geometry is needed for every rule of the body; those of rate and strength still speak."""
+    lines = problems(
+        "glass-bars.toml",
+        ('geometry = "4-point-quarter"', 'geometry = "5-point"'),
+        ("load_span_mm = 20.0", "load_span_mm = 13.0"),
+        ("rate_mpa_s = 2.0", ""),
+        ("strength_mpa = 90.0", 'strength_mpa = "90"'),
+    )
+    assert [line.partition(" = ")[0] for line in lines] == [
+        "geometry",
+        "rate.rate_mpa_s",
         "expected.strength_mpa",
     ]
 

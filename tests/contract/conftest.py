@@ -1,11 +1,13 @@
-"""Makes the module wire_frames importable by the tests of this folder."""
+"""Makes the helper modules of the driver tests importable by the tests of this folder."""
 
 import importlib.util
 import sys
 from pathlib import Path
 
-_SPEC = importlib.util.spec_from_file_location("wire_frames", Path(__file__).parents[1] / "drivers" / "wire_frames.py")
-if "wire_frames" not in sys.modules:
-    _MODULE = importlib.util.module_from_spec(_SPEC)
-    sys.modules["wire_frames"] = _MODULE
-    _SPEC.loader.exec_module(_MODULE)
+_TESTS = Path(__file__).resolve().parents[1]
+for _name, _folder in (("wire_frames", "drivers"), ("little_machine", "contract")):
+    if _name not in sys.modules:
+        _spec = importlib.util.spec_from_file_location(_name, _TESTS / _folder / f"{_name}.py")
+        _module = importlib.util.module_from_spec(_spec)
+        sys.modules[_name] = _module
+        _spec.loader.exec_module(_module)

@@ -20,8 +20,8 @@ def command(records: tuple[Path, ...], out: Path, force: bool) -> None:
 
     Example: midspan export records/demo-series/demo-series_DEMO-01_01.h5 --out csv
     """
-    from daq.record.export import export
+    from daq.record.export import export_csv
 
     for record in records:
-        for path in export(record, out, force=force):
+        for path in export_csv(record, out, force=force):
             click.echo(str(path))
