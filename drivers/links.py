@@ -133,7 +133,7 @@ class SerialLink(_DescriptorLink):
         except (OSError, termios.error) as error:  # SerialException is an OSError
             self._port.close()
             number = error.args[0] if isinstance(error, termios.error) else error.errno
-            why = open_trouble(number if isinstance(number, int) else None, device, str(error))
+            why = open_trouble(number if isinstance(number, int) else None, str(error))
             raise DriverOpenError(why, driver=card.name, device=device) from error
         super().__init__(card, device, descriptor)
         self.low_latency = _low_latency(self._port)
@@ -160,7 +160,7 @@ class TcpLink(_DescriptorLink):
         try:
             self._socket = socket.create_connection((card.host, card.tcp_port), timeout=CONNECT_S)
         except OSError as error:
-            why = open_trouble(error.errno, device, str(error), tcp=True)
+            why = open_trouble(error.errno, str(error), tcp=True)
             raise DriverOpenError(why, driver=card.name, device=device) from error
         self._socket.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
         self._socket.setsockopt(socket.SOL_SOCKET, socket.SO_KEEPALIVE, 1)

@@ -7,7 +7,7 @@ import errno
 BUSY = (errno.EBUSY, errno.EAGAIN, errno.EWOULDBLOCK)
 
 
-def open_trouble(number: int | None, device: str, detail: str, *, tcp: bool = False) -> str:
+def open_trouble(number: int | None, detail: str, *, tcp: bool = False) -> str:
     """number: errno where the system gave one; detail: its own text, kept for what is not foreseen."""
     if tcp:
         return _tcp_trouble(number, detail)

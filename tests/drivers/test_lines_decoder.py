@@ -153,7 +153,7 @@ DIALECTS = {
     ),
 }
 NUMBERS = st.one_of(
-    st.integers(-10**7, 10**7).map(float),
+    st.integers(-(10**7), 10**7).map(float),
     st.decimals(-10000, 10000, places=3).map(float),
     st.floats(allow_nan=True, allow_infinity=False),
 )
@@ -194,7 +194,8 @@ def streams(draw, name):
 @given(data=st.data())
 @settings(max_examples=20, deadline=None)
 def test_any_cut_and_both_ways_of_reading_give_the_same(name, data):
-    """Whole by numpy, whole line by line, byte by byte, in random pieces: rows, gaps, replies, counts agree."""
+    """Whole by numpy, whole line by line, byte by byte, in random pieces: rows, gaps, replies, counts
+    agree."""
     stream = data.draw(streams(name))
     frame = DIALECTS[name]
     whole = decode(LinesDecoder(frame, 0, scalar_rows=0), [stream]).same()
@@ -307,7 +308,9 @@ def test_the_first_line_after_opening_may_be_a_fragment():
 
 
 def test_without_a_counter_a_lost_row_is_a_gap_of_unknown_length():
-    result = decode(LinesDecoder(lines_frame({"prefix": "D"}, BARE), 0), [b"D1,2\r\nD1,x\r\nD2,3\r\nD3,4\r\n"])
+    result = decode(
+        LinesDecoder(lines_frame({"prefix": "D"}, BARE), 0), [b"D1,2\r\nD1,x\r\nD2,3\r\nD3,4\r\n"]
+    )
     assert result.gaps == [(1, GAP_UNKNOWN)]
     assert [index for index, _ in result.rows] == [0, 1, 2]
 
@@ -339,7 +342,14 @@ def test_rows_that_may_be_old_are_marked():
 
 
 def test_transmission_time_is_taken_off_on_a_serial_line():
-    serial = {"kind": "serial", "host": None, "tcp_port": None, "port": "x", "speed_baud": 1000, "parity": "even"}
+    serial = {
+        "kind": "serial",
+        "host": None,
+        "tcp_port": None,
+        "port": "x",
+        "speed_baud": 1000,
+        "parity": "even",
+    }
     frame = lines_frame({"prefix": "D"}, BARE, link=serial)
     decoder = LinesDecoder(frame, 0)
     row = b"D1,2\r\n"

@@ -1,4 +1,7 @@
-"""The device's counter unwrapped: gaps, repeats, order, restarts, against a plain account of what was sent."""
+"""The device's counter unwrapped: gaps, repeats, order, restarts, against a plain account of what was
+sent."""
+
+import itertools
 
 import numpy as np
 import pytest
@@ -84,7 +87,7 @@ def test_indices_are_those_of_the_sender(data, modulus, begin):
     edges = [0, *sorted(data.draw(st.lists(st.integers(0, len(rows)), max_size=4))), len(rows)]
     expected = begin
     rejected = 0
-    for start, stop in zip(edges, edges[1:], strict=False):
+    for start, stop in itertools.pairwise(edges):
         found = device.number(rows[start:stop], (), 1.0 + stop)
         rejected += found.rejected.get("duplicate", 0)
         for block in found.blocks:

@@ -37,7 +37,8 @@ CARDS = {
     "crc16": card("crc16"),
     "crc32": card("crc32", endian="big", sync="a5"),
     "no counter": packets_frame(
-        {"sync": "0d0a55", "fields": [{"name": "f", "number": "uint8"}, {"name": "p", "number": "int8"}]}, FORCE
+        {"sync": "0d0a55", "fields": [{"name": "f", "number": "uint8"}, {"name": "p", "number": "int8"}]},
+        FORCE,
     ),
 }
 
@@ -60,14 +61,17 @@ CARDS = {
 )
 def test_numbers_are_those_of_struct(endian, number, letter, values):
     frame = packets_frame(
-        {"sync": "fa", "endian": endian, "checksum": "crc32", "fields": [{"name": "f", "number": number}]}, FORCE[:1]
+        {"sync": "fa", "endian": endian, "checksum": "crc32", "fields": [{"name": "f", "number": number}]},
+        FORCE[:1],
     )
     stream = b""
     for value in values:
         body = b"\xfa" + struct.pack(("<" if endian == "little" else ">") + letter, value)
         stream += body + check_value("crc32", body).to_bytes(4, endian)
     for scalar_rows in (0, 10**9):
-        found = [row[0] for _, row in decode(PacketsDecoder(frame, 0, scalar_rows=scalar_rows), [stream]).rows]
+        found = [
+            row[0] for _, row in decode(PacketsDecoder(frame, 0, scalar_rows=scalar_rows), [stream]).rows
+        ]
         assert np.array_equal(found, values, equal_nan=True)
 
 
@@ -75,7 +79,8 @@ def test_numbers_are_those_of_struct(endian, number, letter, values):
 @pytest.mark.parametrize("number", ["int24", "uint24"])
 def test_24_bit_numbers_have_the_sign_in_bit_23(endian, number):
     frame = packets_frame(
-        {"sync": "fa", "endian": endian, "checksum": "crc16", "fields": [{"name": "f", "number": number}]}, FORCE[:1]
+        {"sync": "fa", "endian": endian, "checksum": "crc16", "fields": [{"name": "f", "number": number}]},
+        FORCE[:1],
     )
     values = (0, 1, 0x7FFFFF, 0x800000, 0xFFFFFF, 0xFFFFFE)
     stream = b""
@@ -94,9 +99,9 @@ def test_channels_may_stand_in_any_order_and_share_nothing_with_skipped_fields()
     body = b"\xfa" + struct.pack("<hhh", 1, 2, 3)
     stream = (body + struct.pack("<H", check_value("crc16", body))) * 3
     for scalar_rows in (0, 10**9):
-        assert [row for _, row in decode(PacketsDecoder(frame, 0, scalar_rows=scalar_rows), [stream]).rows] == [
-            (3.0, 1.0)
-        ] * 3
+        assert [
+            row for _, row in decode(PacketsDecoder(frame, 0, scalar_rows=scalar_rows), [stream]).rows
+        ] == [(3.0, 1.0)] * 3
 
 
 def test_cards_that_cannot_be_decoded_are_refused():
@@ -118,7 +123,8 @@ SMALL = st.tuples(st.integers(0, 255), st.integers(-128, 127))
 
 @st.composite
 def streams(draw, name):
-    """Packets of a machine under this card, with gaps, repeats, damage, lost bytes, replies and junk between."""
+    """Packets of a machine under this card, with gaps, repeats, damage, lost bytes, replies and junk
+    between."""
     encoder, counter, out = PacketsEncoder(CARDS[name], 0), draw(st.integers(65500, 65600)), []
     for _ in range(draw(st.integers(0, 25))):
         values = np.array([draw(SMALL if name == "no counter" else COUNTS)], dtype=np.float64)
@@ -137,7 +143,9 @@ def streams(draw, name):
         elif kind == "p":
             out.append(encoder.reply(draw(st.sampled_from((b"ok go", b"ST=R", b"", b"\xff", b"x" * 300)))))
         elif kind == "j":
-            out.append(draw(st.one_of(st.binary(max_size=20), st.sampled_from((b"\xa5", b"\xa5Z", b"\xb6k", b"\r")))))
+            out.append(
+                draw(st.one_of(st.binary(max_size=20), st.sampled_from((b"\xa5", b"\xa5Z", b"\xb6k", b"\r"))))
+            )
         out.append(packet)
         counter += 1
     return b"".join(out)
@@ -178,7 +186,8 @@ def test_no_bytes_raise_and_the_buffer_stays_small(name, junk):
 @given(data=st.data())
 @settings(max_examples=30, deadline=None)
 def test_under_a_strong_check_no_number_appears_that_was_not_sent(name, data):
-    """Whatever happens to the bytes, a decoded row is one of the rows sent, and resynchronisation needs no row."""
+    """Whatever happens to the bytes, a decoded row is one of the rows sent, and resynchronisation needs no
+    row."""
     encoder = PacketsEncoder(CARDS[name], 0)
     values = np.array([[100.0 * row, row + 0.5] for row in range(30)])
     packets = [encoder.encode(values[row : row + 1], first_counter=row) for row in range(30)]
@@ -224,9 +233,11 @@ def test_a_damaged_packet_is_rejected_and_the_next_is_read(name):
 
 
 def test_under_a_weak_check_a_false_sync_in_the_middle_is_not_believed():
-    """Opened in the middle of a packet whose payload holds the sync: without a check only the follower tells."""
+    """Opened in the middle of a packet whose payload holds the sync: without a check only the follower
+    tells."""
     frame = packets_frame(
-        {"sync": "fa", "fields": [{"name": "f", "number": "uint16"}, {"name": "p", "number": "uint16"}]}, FORCE
+        {"sync": "fa", "fields": [{"name": "f", "number": "uint16"}, {"name": "p", "number": "uint16"}]},
+        FORCE,
     )
     sent = [(0x0102, 0xFA03), (0x0102, 0x0403), (0x0102, 0x0503), (0x0102, 0x0603)]
     packets = [b"\xfa" + struct.pack("<HH", *numbers) for numbers in sent]
@@ -239,12 +250,15 @@ def test_once_in_step_a_packet_comes_out_with_its_last_byte():
     """Under any check: from the second packet on, none waits for the next."""
     for frame in CARDS.values():
         encoder, decoder = PacketsEncoder(frame, 0), PacketsDecoder(frame, 0)
-        rows = [decoder.feed(encoder.encode(np.ones((1, 2)), first_counter=n), float(n)).rows for n in range(5)]
+        rows = [
+            decoder.feed(encoder.encode(np.ones((1, 2)), first_counter=n), float(n)).rows for n in range(5)
+        ]
         assert rows in ([1, 1, 1, 1, 1], [0, 2, 1, 1, 1])
 
 
 def test_sync_after_sync_is_read_in_reasonable_time():
-    """64 KiB of nothing but sync bytes: thrown away piece by piece, not in quadratic time (a minute, once)."""
+    """64 KiB of nothing but sync bytes: thrown away piece by piece, not in quadratic time (a minute,
+    once)."""
     decoder = PacketsDecoder(CARDS["crc16"], 0)
     decoder.feed(b"\xa5\x5a" * 16384, 1.0)
     assert decoder.buffered_bytes < 20
@@ -280,4 +294,7 @@ def test_what_the_encoder_sends_the_decoder_reads(name):
 def test_the_encoder_holds_counts_inside_the_converter():
     values = np.array([[1e9, 0.0], [-1e9, 0.0]])
     stream = PacketsEncoder(CARDS["crc16"], 0).encode(values)
-    assert [row[0] for _, row in decode(PacketsDecoder(CARDS["crc16"], 0), [stream]).rows] == [8388607.0, -8388608.0]
+    assert [row[0] for _, row in decode(PacketsDecoder(CARDS["crc16"], 0), [stream]).rows] == [
+        8388607.0,
+        -8388608.0,
+    ]

@@ -1,7 +1,9 @@
-"""Small frame cards for the wire tests, and what a decoder made of a stream, in a form that can be compared."""
+"""Small frame cards for the wire tests, and what a decoder made of a stream, in a form that can be
+compared."""
 
 from __future__ import annotations
 
+import itertools
 import json
 from collections.abc import Iterable
 from dataclasses import dataclass, field
@@ -39,9 +41,13 @@ def frame_of(link: dict, channels: list[dict], **more: object) -> FrameCard:
             "verified_max_n": 1000.0,
             "position": "supports",
         },
-        "links": [{"name": "main", "kind": "tcp", "host": "127.0.0.1", "tcp_port": 1, "rate_hz": 1000.0, **link}],
+        "links": [
+            {"name": "main", "kind": "tcp", "host": "127.0.0.1", "tcp_port": 1, "rate_hz": 1000.0, **link}
+        ],
         "channels": table,
-        "fixtures": [{"name": "three-40", "geometry": "3-point", "support_span_mm": 40.0, "rating_n": 2000.0}],
+        "fixtures": [
+            {"name": "three-40", "geometry": "3-point", "support_span_mm": 40.0, "rating_n": 2000.0}
+        ],
         **more,
     }
     return FrameCard.model_validate_json(json.dumps(card))
@@ -51,7 +57,9 @@ def lines_frame(lines: dict, channels: list[dict], *, link: dict | None = None, 
     return frame_of({"dialect": "lines", "lines": lines, **(link or {})}, channels, **more)
 
 
-def packets_frame(packets: dict, channels: list[dict], *, link: dict | None = None, **more: object) -> FrameCard:
+def packets_frame(
+    packets: dict, channels: list[dict], *, link: dict | None = None, **more: object
+) -> FrameCard:
     return frame_of({"dialect": "packets", "packets": packets, **(link or {})}, channels, **more)
 
 
@@ -60,7 +68,9 @@ class Yield:
     """Everything a decoder handed out, the cutting of the bytes taken away."""
 
     rows: list[tuple[int, tuple[float, ...]]] = field(default_factory=list)  # running index, counts
-    gaps: list[tuple[int, int]] = field(default_factory=list)  # running index of the first row after, samples missing
+    gaps: list[tuple[int, int]] = field(
+        default_factory=list
+    )  # running index of the first row after, samples missing
     times: list[float] = field(default_factory=list)
     replies: list[bytes] = field(default_factory=list)
     inputs: list[tuple[str, bool]] = field(default_factory=list)
@@ -111,4 +121,4 @@ def decode(decoder, pieces: Iterable[bytes], *, start_s: float = 10.0, step_s: f
 def cut(data: bytes, places: Iterable[int]) -> list[bytes]:
     """data cut at these places."""
     edges = [0, *sorted(place % (len(data) + 1) for place in places), len(data)]
-    return [data[start:stop] for start, stop in zip(edges, edges[1:], strict=False)]
+    return [data[start:stop] for start, stop in itertools.pairwise(edges)]
