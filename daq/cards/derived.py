@@ -117,6 +117,7 @@ def link_bytes_per_row(link: Link, frame: FrameCard) -> int:
     if lines.time_column is not None:
         fields.append(FIELD_CHARACTERS_GUESS)
     fields.extend(1 for status in column_inputs(frame, link))
+    fields.extend(FIELD_CHARACTERS_GUESS for unused in range((lines.columns or 0) - len(fields)))
     if lines.checksum != "none":
         fields.append(2 * CHECK_BYTES[lines.checksum])
     between = len(lines.separator) * max(0, len(fields) - 1)

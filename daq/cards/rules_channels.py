@@ -60,6 +60,9 @@ def _lines_place_faults(at: Path, column: int | None, label: str | None, link: L
     if label is not None and not link.lines.label_separator:
         do = "add label_separator to [links.lines], or use column"
         yield Fault((*at, "label"), f"no label, because link '{link.name}' has no label_separator", do)
+    if column is not None and link.lines.columns is not None and column > link.lines.columns:
+        allowed = f"at most {link.lines.columns}, the columns of a row of link '{link.name}'"
+        yield Fault((*at, "column"), allowed, "correct the column, or columns in [links.lines]")
     for key in ("counter_column", "time_column"):
         if column is not None and column == getattr(link.lines, key):
             yield Fault(

@@ -89,6 +89,11 @@ def lines_faults(at: Path, lines: LinesDialect) -> Iterator[Fault]:
     yield from _needs(at, lines, "counter_modulus", "counter_column")
     yield from _needs(at, lines, "time_column", "time_unit_s")
     yield from _needs(at, lines, "time_unit_s", "time_column")
+    for key in ("counter_column", "time_column"):
+        column = getattr(lines, key)
+        if column is not None and lines.columns is not None and column > lines.columns:
+            allowed = f"at most {lines.columns}, the columns of a row"
+            yield Fault((*at, key), allowed, "correct one of the two")
     if lines.counter_column is not None and lines.counter_column == lines.time_column:
         yield Fault((*at, "time_column"), "another column than counter_column", "correct one of the two")
 

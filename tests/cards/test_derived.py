@@ -65,6 +65,19 @@ def test_the_row_of_lane_a_is_what_its_comment_says(frames):
     assert derived.row_duration_s(link, frame) == pytest.approx(260 / 460_800, rel=1e-12)
 
 
+def test_unused_columns_are_counted_with_a_guess(frames):
+    frame = frames["a"]
+    link = frame.links[0]
+    wide = link.model_copy(update={"lines": link.lines.model_copy(update={"columns": 4})})
+    assert derived.link_bytes_per_row(wide, frame) == 26 + len(",12345678")
+    assert (
+        derived.link_bytes_per_row(
+            link.model_copy(update={"lines": wide.lines.model_copy(update={"columns": 3})}), frame
+        )
+        == 26
+    )
+
+
 def test_the_packet_of_lane_b_is_what_its_comment_says(frames):
     import struct
 

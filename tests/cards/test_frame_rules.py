@@ -131,7 +131,31 @@ RULES = [
         [('prefix = "D"', 'prefix = "Ü"')],
         ["links[main].lines.prefix = 'Ü'|plain ASCII"],
     ),
+    (
+        "umlaut in the start command",
+        A,
+        [("rate_hz = 1000.0", 'rate_hz = 1000.0\nstart_command = "Ü"')],
+        ["links[main].start_command = 'Ü'|plain ASCII"],
+    ),
+    (
+        "column beyond the row",
+        A,
+        [('prefix = "D"', 'prefix = "D"\ncolumns = 2')],
+        ["channels[crosshead].column = 3|at most 2, the columns of a row of link 'main'"],
+    ),
+    (
+        "counter beyond the row",
+        A,
+        [('prefix = "D"', 'prefix = "D"\ncolumns = 3'), ("counter_column = 1", "counter_column = 4")],
+        ["links[main].lines.counter_column = 4|at most 3"],
+    ),
     # --- links: packets ---
+    (
+        "umlaut at the end of a reply",
+        B,
+        [('reply_line_end = "\\r\\n"', 'reply_line_end = "Ü"')],
+        ["links[main].packets.reply_line_end = 'Ü'|plain ASCII"],
+    ),
     (
         "two packet fields of one name",
         B,
@@ -694,6 +718,7 @@ def test_the_examples_have_no_fault(problems, card):
 
 # Changes at the edge of a rule that must not be refused.
 ALLOWED = [
+    (A, [('prefix = "D"', 'prefix = "D"\ncolumns = 3')]),
     (A, [("every_s = 0.1\nlapse_s", "every_s = 0.25\nlapse_s")]),
     (C, [('dialect = "lines"', 'dialect = "lines"\nsilence_s = 0.2')]),
     (A, [("verified_min_n = 10.0", "verified_min_n = 0.0")]),
