@@ -23,6 +23,8 @@ from daq.stream.payloads import unpack_block, unpack_event
 from daq.stream.thin import thin_minmax
 
 TRACE_SO_FAR_ROWS_MAX = 4_000
+TURNS = frozenset({"run_opened", "tared", "seated", "fracture", "run_closed"})  # what changes the reduction
+SO_FAR_PIECES_MAX = 200
 TRACE_ROWS_PER_UPDATE_MAX = 1_000  # 20 updates/s: 20,000 rows/s leave unthinned
 
 
@@ -53,21 +55,19 @@ class Follower:
 
     # --- in
     def feed(self, entries: Iterable[Entry]) -> list[Tell]:
-        """Entries in stream order."""
+        """Entries in stream order. Blocks between two events are reduced together: one call, not thousands."""
         tells: list[Tell] = []
-        rows: list[Floats] = []
+        blocks: list[Block] = []
         for entry in entries:
             self.sequence = entry.sequence
             if entry.kind is Kind.BLOCK:
-                part = self._on_block(unpack_block(entry.payload))
-                if part is not None:
-                    rows.append(part)
+                self._on_block(unpack_block(entry.payload), blocks)
             elif entry.kind is Kind.EVENT:
                 event = {**unpack_event(entry.payload), "sequence": entry.sequence}
-                if event["event"] in ("run_opened", "run_closed"):
-                    self._flush(rows, tells)
-                tells.extend(self._on_event(event))
-        self._flush(rows, tells)
+                if event["event"] in TURNS:
+                    self._reduce(blocks, tells)
+                tells.append(self._on_event(event))
+        self._reduce(blocks, tells)
         return tells
 
     def summary(self) -> dict[str, Any]:
@@ -91,32 +91,53 @@ class Follower:
             places.setdefault(channel.role, place)
         return places
 
-    def _on_block(self, block: Block) -> Floats | None:
-        self.latest_s = float(block.time_s[-1]) if block.count else self.latest_s
-        if self._online is None:
-            return None
+    def _on_block(self, block: Block, blocks: list[Block]) -> None:
+        if not block.count:
+            return
+        self.latest_s = float(block.time_s[-1])
         places = self._columns[block.source]
         if "force" in places:
-            return self._online.feed(block.time_s, self._values(block, "force"), self._along(block))
-        if "position" in places and block.count:
-            self._position_mm = float(self._values(block, "position")[-1])
-        return None
+            blocks.append(block)
+        elif "position" in places:
+            self._position_mm = float(self._values(block.source, block.counts[-1:], "position")[0])
 
-    def _along(self, block: Block) -> Floats:
+    def _reduce(self, blocks: list[Block], tells: list[Tell]) -> None:
+        """Stress, displacement and strain of the blocks so far; only the force link's blocks come here."""
+        if not blocks or self._online is None:
+            blocks.clear()
+            return
+        source = blocks[0].source
+        time_s = np.concatenate([block.time_s for block in blocks])
+        counts = np.concatenate([block.counts for block in blocks])
+        blocks.clear()
+        table = self._online.feed(time_s, self._values(source, counts, "force"), self._along(source, counts))
+        if self.run is not None:
+            self._so_far.append(table)
+            if len(self._so_far) > SO_FAR_PIECES_MAX:
+                self.trace_so_far()
+        if len(table) > TRACE_ROWS_PER_UPDATE_MAX:
+            table = thin_minmax(table, 1, TRACE_ROWS_PER_UPDATE_MAX)
+        tells.append(Tell("trace", {"run_id": (self.run or {}).get("run_id", "")}, self._named(table)))
+
+    def _along(self, source: int, counts: Floats) -> Floats:
         """Displacement beside each force sample: the bar's own sensor first, then the crosshead."""
         for role in ("deflection", "position"):
-            if role in self._columns[block.source]:
-                return self._values(block, role)
-        return np.full(block.count, self._position_mm)
+            if role in self._columns[source]:
+                return self._values(source, counts, role)
+        return np.full(len(counts), self._position_mm)
 
-    def _values(self, block: Block, role: str) -> Floats:
-        place = self._columns[block.source][role]
-        channel = channels_of(self._frame, block.source)[place]
-        values: Floats = channel.sign * (block.counts[:, place] * channel.scale + channel.offset)
+    def _values(self, source: int, counts: Floats, role: str) -> Floats:
+        place = self._columns[source][role]
+        channel = channels_of(self._frame, source)[place]
+        values: Floats = channel.sign * (counts[:, place] * channel.scale + channel.offset)
         return values
 
+    def _named(self, table: Floats) -> dict[str, Floats]:
+        assert self._online is not None
+        return {name: table[:, place] for place, name in enumerate(self._online.COLUMNS)}
+
     # --- events
-    def _on_event(self, event: Mapping[str, Any]) -> list[Tell]:
+    def _on_event(self, event: Mapping[str, Any]) -> Tell:
         name = event["event"]
         if name == "run_opened":
             self._open(event)
@@ -130,10 +151,9 @@ class Follower:
             self._online.broken()
         if event.get("severity") in ("stop", "emergency", "caution"):
             self.faults = [*self.faults[-7:], event]
-        tells = [Tell("event", event)]
         if name == "run_closed":
             self.run = None
-        return tells
+        return Tell("event", event)
 
     def _open(self, event: Mapping[str, Any]) -> None:
         self.run = event["run"]
@@ -142,20 +162,3 @@ class Follower:
         method = MethodCard.model_validate(event["method"], strict=False)
         specimen = Specimen.model_validate(event["specimen_card"], strict=False)
         self._online = OnlineReduction(self._frame, method, specimen, str(event["fixture"]))
-
-    # --- traces
-    def _flush(self, rows: list[Floats], tells: list[Tell]) -> None:
-        if rows:
-            table = np.concatenate(rows)
-            rows.clear()
-            if self.run is not None:
-                self._so_far.append(table)
-            if len(self._so_far) > 200:
-                self.trace_so_far()
-            if len(table) > TRACE_ROWS_PER_UPDATE_MAX:
-                table = thin_minmax(table, 1, TRACE_ROWS_PER_UPDATE_MAX)
-            tells.append(Tell("trace", {"run_id": (self.run or {}).get("run_id", "")}, self._named(table)))
-
-    def _named(self, table: Floats) -> dict[str, Floats]:
-        assert self._online is not None
-        return {name: table[:, place] for place, name in enumerate(self._online.COLUMNS)}

@@ -73,7 +73,7 @@ class BenchLine:
         try:
             self._socket.sendto(messages.encode_snapshot_request(self._next()), self._address)
         except OSError:
-            return                              # no bench, or its queue is full; the age of `snapshot` tells
+            return  # no bench, or its queue is full; the age of `snapshot` tells
 
     @property
     def silent_s(self) -> float:
@@ -168,9 +168,11 @@ class Station:
         reader = RingReader(ring)
         turn, heard_s = 0, 0.0
         while True:
-            for tell in self._follower.feed(reader.read_new()):
-                self._notice(tell)
-                await self._publish(tell)
+            while entries := reader.read_new():
+                for tell in self._follower.feed(entries):
+                    self._notice(tell)
+                    await self._publish(tell)
+                await asyncio.sleep(0)  # a backlog must not hold the heartbeat back
             turn += 1
             if turn % SUMMARY_EVERY == 0:
                 await self._publish(Tell("summary", self._summary()))

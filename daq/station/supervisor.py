@@ -57,6 +57,7 @@ class Outfit:
     places: Places
     fifo: bool = True
     copy_to: str | None = None
+    restarts_max: int = RESTARTS_MAX
 
 
 class Supervisor:
@@ -227,7 +228,7 @@ class Supervisor:
             )
             return True
         self._restarts = [at for at in self._restarts if now_s - at < RESTART_WINDOW_S] + [now_s]
-        if len(self._restarts) > RESTARTS_MAX:
+        if len(self._restarts) > self._outfit.restarts_max:
             self._say(
                 f"{child.role} keeps ending (code {code}): giving up after {RESTARTS_MAX} restarts in a minute"
             )

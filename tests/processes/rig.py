@@ -1,0 +1,182 @@
+"""A rig of real processes for tests: virtual frame on a pty or TCP port, supervisor, client. No mock anywhere."""
+
+from __future__ import annotations
+
+import json
+import os
+import shutil
+import signal
+import socket
+import subprocess
+import sys
+import tempfile
+import time
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import ExitStack, contextmanager
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+import pytest
+
+from daq.cards.frame import FrameCard
+from daq.cards.load import example_path, load_frame, load_series
+from daq.cli.session import Session
+from daq.station.client import Client
+from daq.station.places import places_for
+from daq.station.supervisor import Outfit, Supervisor
+from daq.stream.updates import Update
+
+GAP_MM = 0.15                       # short approach: a bar takes about six seconds
+
+
+@dataclass
+class Rig:
+    """Everything a test touches."""
+
+    frame: FrameCard
+    outfit: Outfit
+    supervisor: Supervisor
+    client: Client
+    hands_path: Path
+    simulator: subprocess.Popen[bytes]
+    folder: Path
+    said: list[str]
+    updates: list[Update] = field(default_factory=list)
+    session: Session = field(init=False)
+    bench_alive: bool = True
+
+    def __post_init__(self) -> None:
+        self.session = Session(self.client, self._on_update)
+
+    def _on_update(self, update: Update | None) -> None:
+        if update is not None:
+            self.updates.append(update)
+        self.bench_alive &= self.supervisor.look()
+
+    def hands(self, **words: Any) -> dict[str, Any]:
+        """The simulated person does something; returns the answer."""
+        own = self.folder / f"own-{time.monotonic_ns()}"
+        with socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM) as line:
+            line.bind(str(own))
+            line.settimeout(5.0)
+            line.sendto(json.dumps(words).encode(), str(self.hands_path))
+            answer: dict[str, Any] = json.loads(line.recv(65536))
+        own.unlink()
+        return answer
+
+    def begin(self, *, bars: str = "demo-series.toml") -> None:
+        """Sit down, open the series, lay the first bar."""
+        series = load_series(example_path(bars))
+        self.client.sit("Rig")
+        self.client.do("series", path=str(example_path(bars)), sure=True)
+        self.lay(series.specimens[0].model_dump(mode="json"))
+
+    def lay(self, specimen: Mapping[str, Any]) -> None:
+        assert "mounted" in self.hands(mount=dict(specimen))
+
+    def start_bar(self) -> str:
+        """Mount, tare, start; returns the run id once the frame is moving."""
+        run_id = str(self.session.mount()["run_id"])
+        self.wait("ready", lambda: self.session.state == "ready")
+        self.client.do("start")
+        return run_id
+
+    def wait(self, what: str, test: Callable[[], bool], timeout_s: float = 40.0) -> None:
+        self.session.wait_for(what, test, timeout_s)
+
+    def pump(self, seconds: float) -> None:
+        until_s = time.monotonic() + seconds
+        while time.monotonic() < until_s:
+            self.session.pump(0.02)
+
+    def net_n(self) -> float:
+        """The newest net force the feed has told."""
+        for update in reversed(self.updates):
+            if update.kind == "summary" and update.body.get("net_n") is not None:
+                return float(update.body["net_n"])
+        return float("nan")
+
+    def events(self, name: str) -> list[Mapping[str, Any]]:
+        return [u.body for u in self.updates if u.kind == "event" and u.body["event"] == name]
+
+    def kill(self, role: str, how: int = signal.SIGKILL) -> None:
+        os.kill(self.supervisor.pids[role], how)
+
+
+@contextmanager
+def rig_of(
+    frame_card: str = "kiln-lane-demo.toml",
+    *,
+    bars_card: str = "alumina.toml",
+    data: Path,
+    gap_mm: float = GAP_MM,
+    restarts_max: int = 100,
+) -> Iterator[Rig]:
+    """Start everything; end it in order whatever the test did."""
+    with ExitStack() as stack:
+        folder = Path(tempfile.mkdtemp(prefix="msr-", dir="/dev/shm"))
+        stack.callback(shutil.rmtree, folder, ignore_errors=True)
+        patch = stack.enter_context(pytest.MonkeyPatch.context())
+        patch.setenv("MIDSPAN_RUNTIME", str(folder))
+        card = write_card(frame_card, folder, gap_mm)
+        hands = folder / "hands"
+        simulator = stack.enter_context(virtual_frame(card, bars_card, hands, folder))
+        frame = with_port(load_frame(card), folder)
+        said: list[str] = []
+        outfit = Outfit(frame, places_for(frame.name, data), restarts_max=restarts_max)
+        supervisor = stack.enter_context(Supervisor(outfit, said.append))
+        client = stack.enter_context(Client(outfit.places))
+        yield Rig(frame, outfit, supervisor, client, hands, simulator, folder, said)
+
+
+def write_card(name: str, folder: Path, gap_mm: float) -> Path:
+    """A shipped frame card with a shorter approach, and for TCP a port that is free now."""
+    text = example_path(name).read_text("utf-8")
+    lines = []
+    for line in text.splitlines():
+        if line.startswith("gap_mm"):
+            line = f"gap_mm = {gap_mm}"
+        elif line.startswith("tcp_port"):
+            line = f"tcp_port = {free_port()}"
+        lines.append(line)
+    path = folder / name
+    path.write_text("\n".join(lines) + "\n", encoding="utf-8")
+    return path
+
+
+def free_port() -> int:
+    with socket.socket() as probe:
+        probe.bind(("127.0.0.1", 0))
+        return int(probe.getsockname()[1])
+
+
+def with_port(frame: FrameCard, folder: Path) -> FrameCard:
+    links = tuple(
+        link.model_copy(update={"port": str(folder / link.port)}) if link.port else link for link in frame.links
+    )
+    return frame.model_copy(update={"links": links})
+
+
+@contextmanager
+def virtual_frame(card: Path, bars_card: str, hands: Path, folder: Path) -> Iterator[subprocess.Popen[bytes]]:
+    import simulator
+
+    bars = Path(simulator.__file__).parent / "examples" / bars_card
+    command = [sys.executable, "-m", "simulator.wire", str(card), str(bars), "--hands", str(hands)]
+    command += ["--truth", str(folder / "truth.jsonl")]
+    process = subprocess.Popen(command, cwd=folder, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL)
+    try:
+        until_s = time.monotonic() + 20.0
+        while not hands.exists():
+            assert process.poll() is None and time.monotonic() < until_s, "the virtual frame did not start"
+            time.sleep(0.02)
+        yield process
+    finally:
+        process.terminate()
+        process.wait(10)
+
+
+def truths(folder: Path) -> list[dict[str, Any]]:
+    """What really happened, as the virtual frame wrote it."""
+    return [json.loads(line) for line in (folder / "truth.jsonl").read_text("utf-8").splitlines()]
