@@ -38,13 +38,15 @@ class World:
     """The other side of the driver. None: cannot be observed or done here.
 
     heard: all bytes the machine has received so far. stop_bytes: what one STOP looks like on the wire.
-    opening_bytes: what may be sent at opening. hush: the machine falls silent. lose: the cable is pulled.
+    opening_bytes: what may be sent at opening. hush: the machine falls silent. wake: undoes it. lose: the
+    cable is pulled.
     """
 
     heard: Callable[[], bytes] | None = None
     stop_bytes: bytes | None = None
     opening_bytes: bytes = b""
     hush: Callable[[], None] | None = None
+    wake: Callable[[], None] | None = None
     lose: Callable[[], None] | None = None
     rows: int = 50
     patience_s: float = 5.0
@@ -142,6 +144,8 @@ def _check_timeout(make: Callable[[], Driver], world: World) -> None:
             _must(found is None, "nothing there is None, not an empty answer")
             _must(took_s >= 0.9 * timeout_s, f"a time-out of {timeout_s} s is waited for: {took_s:.3f} s")
             _must(took_s <= timeout_s + GRACE_S, f"a time-out of {timeout_s} s is kept: {took_s:.3f} s")
+    if world.wake is not None:
+        world.wake()
 
 
 def _check_lost(make: Callable[[], Driver], world: World) -> None:

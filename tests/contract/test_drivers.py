@@ -57,14 +57,10 @@ def test_a_pseudo_terminal_keeps_the_contract(pty_machine):
         stop_bytes=b"HALT\r\n",
         opening_bytes=b"RUN\r\n",
         hush=lambda: setattr(pty_machine, "quiet", True),
+        wake=lambda: setattr(pty_machine, "quiet", False),
+        lose=pty_machine.lose,
     )
-    assert check_driver(lambda: WireDriver(frame), world) == ["a lost link is said, not waited for"]
-
-
-@pytest.mark.slow
-def test_a_pulled_pseudo_terminal_is_a_lost_link(pty_machine):
-    world = World(lose=pty_machine.lose)
-    check_driver(lambda: WireDriver(pty_frame(pty_machine.port)), world)
+    assert check_driver(lambda: WireDriver(frame), world) == []
 
 
 @pytest.mark.slow
@@ -73,16 +69,10 @@ def test_tcp_keeps_the_contract(tcp_machine):
         heard=lambda: tcp_machine.heard,
         stop_bytes=b"HALT\r\n",
         hush=lambda: setattr(tcp_machine, "quiet", True),
+        wake=lambda: setattr(tcp_machine, "quiet", False),
+        lose=tcp_machine.lose,
     )
-    assert check_driver(lambda: WireDriver(tcp_frame(tcp_machine.port)), world) == [
-        "a lost link is said, not waited for"
-    ]
-
-
-@pytest.mark.slow
-def test_a_closed_tcp_peer_is_a_lost_link(tcp_machine):
-    world = World(lose=tcp_machine.lose)
-    check_driver(lambda: WireDriver(tcp_frame(tcp_machine.port)), world)
+    assert check_driver(lambda: WireDriver(tcp_frame(tcp_machine.port)), world) == []
 
 
 def recording() -> RunData:
