@@ -48,7 +48,7 @@ class Hands:
             return {"refused": f"a line has at most {LINE_BYTES_MAX} bytes"}
         try:
             asked = json.loads(line)
-        except ValueError as error:
+        except (ValueError, RecursionError) as error:
             return {"refused": f"not JSON: {error}"}
         if not isinstance(asked, dict) or len(asked) != 1:
             return {"refused": "one object with one key a line"}

@@ -144,8 +144,8 @@ class Machine:
 
     @property
     def way_is_clear(self) -> bool:
-        """Room to put in a bar."""
-        return self.position_mm <= self._contact_mm - CLEAR_MM
+        """Room to put in a bar; at the start position there always is."""
+        return self.position_mm <= max(self._contact_mm - CLEAR_MM, 0.0)
 
     @property
     def bar(self) -> Bar | None:

@@ -37,7 +37,7 @@ class Noise:
 
     def of(self, first: int, count: int) -> Floats:
         """Numbers of consecutive samples."""
-        parts = []
+        parts = [self._values[:0]]
         while count > 0:
             chunk, at = divmod(first, NOISE_CHUNK)
             if chunk != self._chunk:
@@ -45,7 +45,7 @@ class Noise:
                 self._chunk = chunk
             parts.append(self._values[at : at + count])
             first, count = first + parts[-1].size, count - parts[-1].size
-        return parts[0] if len(parts) == 1 else np.concatenate(parts)
+        return parts[-1] if len(parts) == 2 else np.concatenate(parts)
 
 
 class Sensor:

@@ -18,7 +18,9 @@ PERIOD_S = 0.001
 
 
 def sensor(card: ForceSensor | None = None, *, whole: bool = False, **channel) -> Sensor:
-    wiring = Channel(name="force", link="main", role="force", unit="N", column=2, **{"scale": 0.016, **channel})
+    wiring = Channel(
+        name="force", link="main", role="force", unit="N", column=2, **{"scale": 0.016, **channel}
+    )
     return Sensor(wiring, card or ForceSensor(zero=0.0), 0.0, PERIOD_S, whole=whole, seed=(1, 2, 3))
 
 

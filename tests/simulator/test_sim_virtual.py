@@ -182,7 +182,7 @@ def test_an_end_of_the_stream_is_silence(make, kind):
     arrivals += [at_s for at_s, _ in wire.read(1.0)]
     assert wire.connected()
     assert wire.bytes_lost == (3 if kind == "reconnect" else 0)
-    gaps = np.diff([at_s for at_s in arrivals])
+    gaps = np.diff(list(arrivals))
     assert gaps.max() == pytest.approx(0.1 if kind == "stream-end" else 0.3, abs=0.21)
     assert arrivals[-1] > 0.99
 
@@ -195,7 +195,9 @@ def fault(**fields):
 
 
 def test_a_schedule_waits_for_its_anchor():
-    schedule = Schedule([fault(at_s=1.0), fault(after_start_s=2.0), fault(after_contact_s=0.5), fault(at_force_n=9.0)])
+    schedule = Schedule(
+        [fault(at_s=1.0), fault(after_start_s=2.0), fault(after_contact_s=0.5), fault(at_force_n=9.0)]
+    )
     schedule.mounted()
     assert (schedule.next_s(), schedule.next_force_n()) == (1.0, 9.0)
     assert len(schedule.due(1.0, 0.0)) == 1
