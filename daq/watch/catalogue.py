@@ -14,6 +14,7 @@ EVENTS: Mapping[str, str] = {
     "tare_refused": "Zero not taken: reasons, and the measured gross_n.",
     "zero_moved": "The zero differs from the commissioned or the previous one by shift_n.",
     "envelope": "What the present noise, rate and lag let the fracture watch see: detects, reasons, budget.",
+    "limits": "The force limits as frozen for this run, gross N.",
     "ready": "Everything needed for the start of this run is there.",
     "started": "The deliberate start was given.",
     "run_closed": "End of the loading: run_id, verdict, reason, interrupted.",

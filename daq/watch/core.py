@@ -17,9 +17,10 @@ from daq.watch.expected import SECONDS_PER_MINUTE
 from daq.watch.fracture import Finding, FractureWatch
 from daq.watch.limits import ROWS, ForceJudge, ForceLimits, Reaction, Trip, frame_limits, run_limits
 from daq.watch.motion import Flat, PositionJudge, Runaway, SpeedWatch, soft_ends, touch_n
+from daq.watch.pace import Pace
 from daq.watch.seating import Seating
 from daq.watch.setup import Proven, RunSetup, WatchSetup
-from daq.watch.states import ARMED, BROKEN, LATCHED, MOVING, Cause, next_state
+from daq.watch.states import ARMED, BROKEN, LATCHED, MOVING, WATCHED, Cause, next_state
 from daq.watch.stopping import StopCheck
 from daq.watch.tare import Collector, TareNote
 from daq.watch.travel import Travel
@@ -35,6 +36,8 @@ from daq.watch.values import (
     Stop,
     Verdict,
 )
+
+ANVIL_CLEAR_MM = 0.5
 
 
 class Aftermath:
@@ -66,6 +69,7 @@ class Run:
     __slots__ = (
         "aftermath",
         "contact_mm",
+        "contact_s",
         "drop",
         "ended_reason",
         "ended_s",
@@ -73,14 +77,15 @@ class Run:
         "flat",
         "held_since_s",
         "note",
+        "pace",
         "peak_n",
         "pieces",
         "plan",
-        "reached_test_speed",
-        "runaway",
         "seating",
+        "smooth_since_s",
         "start_mm",
         "started_s",
+        "tight",
         "told",
         "travel_mm_max",
         "verdict",
@@ -89,14 +94,16 @@ class Run:
     def __init__(self, plan: RunSetup) -> None:
         self.plan = plan
         self.note: TareNote | None = None
+        self.smooth_since_s = float("-inf")
+        self.tight: dict[str, float] = {}
+        self.pace: Pace | None = None
         self.aftermath: Aftermath | None = None
         self.started_s: float | None = None
         self.start_mm: float | None = None
         self.contact_mm: float | None = None
+        self.contact_s: float | None = None
         self.held_since_s: float | None = None
-        self.reached_test_speed = False
         self.seating: Seating | None = None
-        self.runaway: Runaway | None = None
         self.flat: Flat | None = None
         self.drop: Drop | None = None
         self.finding: Finding | None = None
@@ -111,6 +118,10 @@ class Run:
     @property
     def ended(self) -> bool:
         return self.ended_s is not None
+
+    def restart_tail(self, verdict: Verdict, now_s: float) -> None:
+        """The bar broke while the stop was under way: what is left to look at begins now."""
+        self.verdict, self.ended_s, self.aftermath = verdict, now_s, None
 
 
 class Core:
@@ -149,6 +160,9 @@ class Core:
         self.first_cause = ""
         self.tripped_rows: set[int] = set()
         self.blank_until_s = float("-inf")
+        self.watched = False
+        self.lost_at_rest = False
+        self.runaway: Runaway | None = None
         self.frozen_samples: int | None = None
         self.overloaded = False
 
@@ -174,6 +188,7 @@ class Core:
             return
         self.emit("state", **{"from": self.state.value, "to": after.value, "reason": reason or cause.value})
         self.state = after
+        self.watched = after in WATCHED
 
     # --- stopping and moving
 
@@ -193,7 +208,7 @@ class Core:
             )
         else:
             before.attempt = attempt
-        self.move_now, self.speed_watch = None, None
+        self.move_now, self.speed_watch, self.runaway = None, None, None
         if cause is not None:
             self.go(cause, reason)
         self.set_bands()
@@ -244,9 +259,10 @@ class Core:
         infinite = float("inf")
         if self.state is State.APPROACHING and run is not None and run.start_mm is not None:
             rows.append((9, -infinite, run.start_mm + motion.gap_mm + 1.0))
-        watched = self.state in (State.IN_CONTACT, State.SEATING, State.LOADING, State.HOLDING)
-        if watched and run is not None and run.contact_mm is not None:
-            rows.append((11, -infinite, run.contact_mm + run.travel_mm_max))
+        if run is not None and run.contact_mm is not None:
+            if self.watched or self.state is State.IN_CONTACT:
+                rows.append((11, -infinite, run.contact_mm + run.travel_mm_max))
+            rows.append((12, -infinite, run.contact_mm + motion.anvil_gap_mm - ANVIL_CLEAR_MM))
         self.bands.take(tuple(rows))
 
     # --- limits
@@ -256,11 +272,16 @@ class Core:
         self.judge.take(limits)
 
     def limits_for_run(self) -> None:
+        """Derive anew, at rest only; what a person has tightened stays tightened."""
         run = self.run
         if run is None:
             self.use_limits(frame_limits(self.setup, self.sigma_n))
-        else:
-            self.use_limits(run_limits(self.setup, run.plan, self.sigma_n))
+            return
+        limits = run_limits(self.setup, run.plan, self.sigma_n)
+        tight_n = run.tight.get("force_n_max")
+        if tight_n is not None and tight_n < limits.ceiling_n:
+            limits = limits.tightened(tight_n)
+        self.use_limits(limits)
 
     def trip(self, trip: Trip) -> None:
         """Obey a limit: stop first, then say which. Each row once until the reset."""
@@ -309,6 +330,12 @@ class Core:
         if run is None or run.ended:
             return
         run.verdict, run.ended_reason, run.ended_s = verdict, reason, self.clock_s
+
+    @property
+    def raw_position_mm(self) -> float | None:
+        """As the channel counts it."""
+        at_mm = self.travel.at_mm if self.travel is not None else None
+        return at_mm * self.setup.towards if at_mm is not None else None
 
     @property
     def armed(self) -> bool:

@@ -241,6 +241,7 @@ def _tighten(core: Core, request: TightenLimit) -> None:
         raise Refused(
             "tighten limit", (f"{request.key} = {request.value:g}: must be above 0 and at most {before:g}",)
         )
+    run.tight[request.key] = request.value
     if request.key == "force_n_max":
         core.use_limits(core.limits.tightened(request.value))
     else:

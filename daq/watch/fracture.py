@@ -28,6 +28,7 @@ PARTIAL_SIGMA, PARTIAL_SHARE = 6.0, 0.01
 SAG_SHARE, SAG_SIGMA, SAG_S, SAG_RATE_SHARE = 0.95, 3.0, 0.5, 0.1
 BACKSTOP_SAMPLES, BACKSTOP_CONFIRMS = 3, 2.0
 SUDDEN_S, SUDDEN_PERIODS, SUDDEN_LAGS = 0.02, 3.5, 3.0
+NEGATIVE_SHARE, NEGATIVE_SIGMA = 0.2, 20.0
 TWIN_S = 0.5  # partial drops closer than this count together towards the lasting drop
 DULL_SAMPLES, DULL_SIGMA = 8, 0.05
 
@@ -196,16 +197,22 @@ class FractureWatch:
         self._confirm_s = max(settings.confirm_s, CONFIRM_SAMPLES * period_s, 3.0 * lag_s)
         self._undecided_s = max(UNDECIDED_S, UNDECIDED_SAMPLES * period_s, UNDECIDED_LAGS * lag_s)
         self.sudden_s = max(SUDDEN_S, SUDDEN_PERIODS * period_s) + SUDDEN_LAGS * lag_s
-        self.arm_n = INFINITE
         self._good_s, self._good_index = 0.0, -1
-        self.watch(False)
+        self.watching = self.gradual = False
+        self._clear(INFINITE)
 
     def watch(self, on: bool, *, arm_n: float = INFINITE, gradual: bool = False) -> None:
         """Begin or end watching. gradual: the slow-failure rule is on (loading, not holding)."""
         self.gradual = gradual
-        if on and self.watching_already:
+        if on and self.watching:
             return
-        self.watching, self.armed, self.arm_n = on, False, arm_n
+        self.watching = on
+        self._clear(arm_n)
+        if on:
+            self._arm()
+
+    def _clear(self, arm_n: float) -> None:
+        self.armed, self.arm_n = False, arm_n
         self.candidate: Candidate | None = None
         self._bound, self._half = INFINITE, -INFINITE
         self.envelope = self.highest = self.peak_raw = -INFINITE
@@ -214,12 +221,6 @@ class FractureWatch:
         self._sag_since_s: float | None = None
         self._sag_level = 0.0
         self._last_partial: tuple[float, float] | None = None
-        if on:
-            self._arm()
-
-    @property
-    def watching_already(self) -> bool:
-        return getattr(self, "watching", False)
 
     # --- the scalar definition
 
@@ -356,7 +357,7 @@ class FractureWatch:
         if self._low_count < BACKSTOP_SAMPLES or lasted_s < BACKSTOP_CONFIRMS * self._confirm_s:
             return None
         if self.candidate is not None:
-            if self._dull(self.candidate):
+            if self._dull(self.candidate) or self._negative(self.candidate, self.highest):
                 return None
             return self._broken(self.candidate, "backstop", time_s)
         return self._slow(Kind.GRADUAL, "backstop", time_s, value)
@@ -369,7 +370,7 @@ class FractureWatch:
         window = count - c.head
         if count >= CONFIRM_SAMPLES and c.times_s[0] <= time_s - self._confirm_s + 1.5 * period_s:
             is_low = c.lows[-1] and c.low >= LOW_SHARE * window and c.sum < share * forecast * window
-            if is_low and not self._dull(c):
+            if is_low and not self._negative(c, forecast) and not self._dull(c):
                 return self._broken(c, "confirmed", time_s)
             if c.nears[-1] and 2 * c.near >= window:
                 return self._glitch(c, time_s)
@@ -381,7 +382,10 @@ class FractureWatch:
         """Neither break nor glitch after the undecided time."""
         if self._dull(c):
             return self._decided(c, Kind.LOST, "constant", time_s)
+        if self._negative(c, forecast):
+            return self._decided(c, Kind.LOST, "of the wrong sign", time_s)
         level_now = c.sum / (len(c.values) - c.head)
+        forecast = c.forecast(0.5 * (c.times_s[c.head] + time_s))  # where the window's mean stands
         drop, reference = forecast - level_now, forecast
         if self._last_partial is not None and time_s - self._last_partial[0] < TWIN_S:
             reference = max(forecast, self._last_partial[1])
@@ -447,6 +451,13 @@ class FractureWatch:
         rest = self.rest
         return not (rest.dull and rest.low - rest.step <= low and high <= rest.high + rest.step)
 
+    def _negative(self, c: Candidate, forecast: float) -> bool:
+        """A ring-down swings about what is left on the bar; a level well below zero is a signal of the wrong
+        sign.
+        """
+        level = c.sum / (len(c.values) - c.head)
+        return level < -max(NEGATIVE_SHARE * forecast, NEGATIVE_SIGMA * c.sigma_n)
+
     def _decided(self, c: Candidate, kind: Kind, by: str, time_s: float) -> Finding:
         first = c.first_dropped()
         good_s = c.times_s[first - 1] if first else c.last_good_s
@@ -466,7 +477,9 @@ class FractureWatch:
             forecast=c.forecast(onset_s),
             slope_n_s=c.slope_n_s,
             level=level_now,
-            drop=c.forecast(time_s) - level_now if kind is not Kind.GLITCH else max(off, key=abs),
+            drop=c.forecast(0.5 * (c.times_s[c.head] + time_s)) - level_now
+            if kind is not Kind.GLITCH
+            else max(off, key=abs),
             sigma_n=c.sigma_n,
             fall_s=half_s - good_s,
             samples=sum(not -c.limit <= o <= c.limit for o in off),

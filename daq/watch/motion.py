@@ -23,10 +23,12 @@ TOUCH_SIGMA, TOUCH_SHARE, TOUCH_N_MIN = 10.0, 0.003, 0.5
 CONTACT_SLACK_MM = 1.0
 RECKONED_TIMES = 2.0
 FLAT_TRAVEL_SHARE, FLAT_SLOPE_SHARE, FLAT_SIGMA = 0.05, 0.10, 8.0
+FLAT_WINDOWS = 2
 FLAT_TOE_TIMES = 4.0  # a padded fixture's toe begins at about a tenth of the final slope
 CEILING_TIMES, CEILING_MM_MIN = 2.5, 0.2
 SOFT_END_MM = 2.0
 SPEED_SHARE, SPEED_S = 0.2, 0.5
+STANDS_SHARE = 0.05
 BACK_MM_MIN = 0.005
 
 
@@ -92,9 +94,11 @@ class Runaway:
 
 
 class Flat:
-    """Row 10: moving in contact without a rise of the force."""
+    """Row 10: moving in contact without a rise of the force, over two windows of travel in a row: the slip
+    that hides in the noise, or a glitch at the edge of a window, makes one window flat and not the next.
+    """
 
-    __slots__ = ("_from_mm", "_from_n", "_stiffness_n_mm", "_toe_n", "_travel_mm")
+    __slots__ = ("_flat_windows", "_from_mm", "_from_n", "_stiffness_n_mm", "_toe_n", "_travel_mm")
 
     def __init__(self, stiffness_n_mm: float, deflection_mm: float, level: Level) -> None:
         samples = max(8.0, 0.1 / level.period_s)
@@ -103,10 +107,12 @@ class Flat:
         self._toe_n = RUNAWAY_FROM_SHARE * stiffness_n_mm * deflection_mm
         self._travel_mm = max(FLAT_TRAVEL_SHARE * deflection_mm, FLAT_SIGMA * sigma_gain / stiffness_n_mm)
         self._from_mm, self._from_n = INFINITE, 0.0
+        self._flat_windows = 0
 
     def restart(self) -> None:
         """After a drop or a kink: what came before says nothing about what comes now."""
         self._from_mm = INFINITE
+        self._flat_windows = 0
 
     def judge(self, at_mm: float, net_n: float) -> Trip | None:
         if self._from_mm == INFINITE:
@@ -116,7 +122,10 @@ class Flat:
             return None
         needed_n = FLAT_SLOPE_SHARE * self._stiffness_n_mm * travel_mm
         self._from_mm, self._from_n = at_mm, net_n
-        return None if gain_n >= needed_n else Trip(10, gain_n, needed_n, "N", Reaction.STOP)
+        self._flat_windows = 0 if gain_n >= needed_n else self._flat_windows + 1
+        if self._flat_windows < FLAT_WINDOWS:
+            return None
+        return Trip(10, gain_n, needed_n, "N", Reaction.STOP)
 
 
 class PositionJudge:
@@ -135,9 +144,12 @@ class PositionJudge:
         self.low_mm = max((low for _, low, _ in rows), default=-INFINITE)
         self.high_mm = min((high for _, _, high in rows), default=INFINITE)
 
+    @property
+    def pending(self) -> bool:
+        return bool(self._outside)
+
     def inside(self) -> None:
-        if self._outside:
-            self._outside.clear()
+        self._outside.clear()
 
     def judge(self, at_mm: float) -> Trip | None:
         passed = None
@@ -163,10 +175,10 @@ def soft_ends(motion: Motion, speed_mm_s: float, towards: int) -> tuple[int, flo
 class SpeedWatch:
     """Row 14: off by a fifth of the set speed for half a second: caution. The other way at once: stop."""
 
-    __slots__ = ("_begun_s", "_off_since_s", "_set_mm_s", "_told", "_window_s")
+    __slots__ = ("_begun_s", "_off_since_s", "_set_mm_s", "_told", "_window_s", "stands")
 
     def __init__(self, set_mm_s: float, begun_s: float, latency_s: float, travel: Travel) -> None:
-        self._set_mm_s, self._told = set_mm_s, False
+        self._set_mm_s, self._told, self.stands = set_mm_s, False, False
         needed_s = 10.0 * travel.resolution_mm / abs(set_mm_s)
         self._window_s = min(max(SPEED_S, needed_s, 5.0 * travel.spacing_s), 2.0)
         self._begun_s = begun_s + 2.0 * latency_s + self._window_s
@@ -189,6 +201,7 @@ class SpeedWatch:
         if now_s - self._off_since_s < SPEED_S:
             return None
         self._told = True
+        self.stands = abs(speed) < STANDS_SHARE * abs(self._set_mm_s)
         minutes = SECONDS_PER_MINUTE
         return Trip(14, speed * minutes, self._set_mm_s * minutes, "mm/min", Reaction.CAUTION)
 

@@ -33,6 +33,7 @@ class Seated:
     force_net_n: float
     slope_n_s: float
     toe_offset_mm: float | None
+    late_known: bool = False
 
 
 def seating_window_s(rate_hz: float, sigma_n: float, rate_n_s: float, time_to_break_s: float) -> float:
@@ -115,7 +116,7 @@ class Seating:
         self._highest = max(self._highest, slope)
         if self.seated is None:
             if self._steady(slope) and net_n > self.force_min_n:
-                self.seated = Seated(net_n, slope, self._toe_mm(slope, net_n, at_mm))
+                self.seated = Seated(net_n, slope, self._toe_mm(slope, net_n, at_mm), self._told_late)
                 return self.seated
             if net_n > TOE_SHARE * self.load_p50_n and not self._told_late:
                 self._told_late = True

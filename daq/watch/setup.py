@@ -104,6 +104,7 @@ class RunSetup:
     specimen: Specimen
     fixture: Fixture
     expected: Expected
+    compliance_known: bool
     tare_override_reason: str
 
 
@@ -183,11 +184,20 @@ def run_setup(setup: WatchSetup, request: OpenRun) -> RunSetup | tuple[str, ...]
     missing += open_problems(setup, method, specimen, fixture)
     if missing:
         return tuple(missing)
-    plan = expect(method, specimen, fixture, _compliance_of(setup, fixture), _frame_stiffness(setup))
+    compliance = _compliance_of(setup, fixture)
+    plan = expect(method, specimen, fixture, compliance, _frame_stiffness(setup))
     missing += capacity_problems(setup, method, fixture, plan)
     if missing:
         return tuple(missing)
-    return RunSetup(dict(request.run), method, specimen, fixture, plan, request.tare_override_reason.strip())
+    return RunSetup(
+        run=dict(request.run),
+        method=method,
+        specimen=specimen,
+        fixture=fixture,
+        expected=plan,
+        compliance_known=compliance is not None,
+        tare_override_reason=request.tare_override_reason.strip(),
+    )
 
 
 def open_problems(setup: WatchSetup, method: MethodCard, specimen: Specimen, fixture: Fixture) -> list[str]:

@@ -22,6 +22,7 @@ RESOLUTIONS = 4.0
 RUN_ON_TIMES = 10.0
 SPEED_MM_S_MIN = 0.5 / 60.0
 BLIND_S = 1.0
+RUN_ON = "run-on of ten times the expected"
 
 
 class Outcome(Enum):
@@ -37,6 +38,7 @@ class Look:
     repeat: bool
     outcome: Outcome | None
     why: str = ""
+    row: int = 26
 
 
 class StopCheck:
@@ -91,7 +93,8 @@ class StopCheck:
             if self.failed:
                 outcome = None
             self.failed = True
-        return Look(repeat and outcome not in (Outcome.STANDS, Outcome.BLIND), outcome, why)
+        again = repeat and outcome not in (Outcome.STANDS, Outcome.BLIND)
+        return Look(again, outcome, why, 12 if why == RUN_ON else 26)
 
     def run_on_mm(self, travel: Travel | None) -> float | None:
         if travel is None or travel.at_mm is None or self.from_mm is None:
@@ -109,7 +112,7 @@ class StopCheck:
             return self._blind(after_s, moving)
         expected_mm = self._speed_mm_s * self._latency_s
         if abs(run_on) > max(RUN_ON_TIMES * expected_mm, RESOLUTIONS * travel.resolution_mm):
-            return Outcome.FAILED, "run-on of ten times the expected"
+            return Outcome.FAILED, RUN_ON
         speed = travel.speed_mm_s(self._window_s)
         if speed is None or after_s < min(self._window_s, self._latency_s):
             return None, ""

@@ -17,7 +17,9 @@ from daq.stream.block import Floats
 
 BLOCKS = 10
 SECONDS_MIN = 1.0
-SECONDS_MORE = 4.0  # a drift that one second cannot tell from noise is looked at for longer before it is refused
+SECONDS_MORE = (
+    4.0  # a drift that one second cannot tell from noise is looked at for longer before it is refused
+)
 SAMPLES_MIN = 32
 NOISE_TIMES = 3.0
 DRIFT_SHARE_PER_MIN = 0.001
@@ -151,7 +153,9 @@ def _refusals(note: TareNote, gross_n: Floats, times_s: Floats, rules: TareRules
     sigma = _white_sigma(times_s, gross_n, note)
     if rules.quiet_n is not None and not sigma <= NOISE_TIMES * max(rules.quiet_n, note.step_n):
         found.append(f"noise {sigma:.3g} N, quiet record {rules.quiet_n:.3g} N")
-    drift_max = max(DRIFT_SHARE_PER_MIN * rules.capacity_n, DRIFT_SIGMA * _drift_error_n_min(times_s, gross_n, note))
+    drift_max = max(
+        DRIFT_SHARE_PER_MIN * rules.capacity_n, DRIFT_SIGMA * _drift_error_n_min(times_s, gross_n, note)
+    )
     if not abs(note.drift_n_min) <= drift_max:
         found.append(f"drift {note.drift_n_min:.3g} N/min, allowed {drift_max:.3g} N/min")
     off = note.tare_n - rules.zero_n
@@ -177,7 +181,9 @@ def _white_sigma(times_s: Floats, gross_n: Floats, note: TareNote) -> float:
 
 
 def _drift_error_n_min(times_s: Floats, gross_n: Floats, note: TareNote) -> float:
-    """Standard error of the drift: from the scatter of the blocks, and not below what the samples' noise gives."""
+    """Standard error of the drift: from the scatter of the blocks, and not below what the samples' noise
+    gives.
+    """
     _, of_blocks = _slope(*_blocks(times_s, gross_n))
     span_s = float(times_s[-1] - times_s[0])
     return 60.0 * max(of_blocks, note.sigma_n * sqrt(12.0 / len(times_s)) / span_s)

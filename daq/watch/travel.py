@@ -10,6 +10,10 @@ import itertools
 from collections import deque
 from math import sqrt
 
+import numpy as np
+
+from daq.stream.block import Floats
+
 KEPT_S = 2.5
 SPACING_S = 0.005
 POINTS_MIN = 4
@@ -30,8 +34,20 @@ class Travel:
     def feed(self, time_s: float, at_mm: float) -> None:
         """A valid position; kept in the history only where the last kept one is old enough."""
         self.at_mm, self.time_s = at_mm, time_s
-        if not self._points or time_s - self._points[-1][0] >= 0.99 * self.spacing_s:
+        if not self._points or time_s >= self._points[-1][0] + 0.99 * self.spacing_s:
             self._points.append((time_s, at_mm))
+
+    def feed_many(self, times_s: Floats, at_mm: Floats) -> None:
+        """The same as feeding every one of them."""
+        self.at_mm, self.time_s = float(at_mm[-1]), float(times_s[-1])
+        place = 0
+        while place < len(times_s):
+            if self._points:
+                due_s = self._points[-1][0] + 0.99 * self.spacing_s
+                place = int(np.searchsorted(times_s, due_s, "left"))
+                if place == len(times_s):
+                    return
+            self._points.append((float(times_s[place]), float(at_mm[place])))
 
     def forget(self) -> None:
         """The position is not known any more."""

@@ -236,7 +236,10 @@ def _disturb(kind: str, rng: np.random.Generator, case: dict[str, object]) -> di
     if kind == "gradual":
         return {"fall_tau_s": float(10 ** rng.uniform(-1.7, 0.3)), "softening": float(rng.uniform(0.0, 0.8))}
     if kind == "hum":
-        return {"hum_hz": float(rng.choice([50.0, 60.0])), "hum_n": float(rng.uniform(0.5, 4.0)) * peak / 480.0}
+        return {
+            "hum_hz": float(rng.choice([50.0, 60.0])),
+            "hum_n": float(rng.uniform(0.5, 4.0)) * peak / 480.0,
+        }
     if kind == "slow filter":
         lag = float(10 ** rng.uniform(-2.5, -1.1)) * min(1.0, float(case["ramp_s"]) / 5.0)  # type: ignore[arg-type]
         return {"lag_s": lag, "lag_declared": bool(rng.random() < 0.5)}

@@ -44,7 +44,9 @@ def pipeline_for(case: Case) -> Pipeline:
         position=False,
         inputs=("moving",),
         cell__noise_quiet_n=case.sigma_n,
-        cell__time_constant_s=case.lag_s if case.lag_declared and case.lag_s else (0.0 if case.lag_declared else None),
+        cell__time_constant_s=case.lag_s
+        if case.lag_declared and case.lag_s
+        else (0.0 if case.lag_declared else None),
         channels__0__scale=case.step_n,
         motion__travel_mm_max=500.0,
         motion__gap_mm=50.0,
@@ -73,7 +75,9 @@ def run(case: Case) -> Outcome:
         count = int(rng.integers(1, largest + 1))
         part = slice(place, min(place + count, len(record.times_s)))
         rows = record.counts[part].reshape(-1, 1).copy()
-        step = pipe.advance(Block(0, place, record.times_s[part].copy(), rows), float(record.times_s[part][-1]))
+        step = pipe.advance(
+            Block(0, place, record.times_s[part].copy(), rows), float(record.times_s[part][-1])
+        )
         if place == 0:
             pipe.request(opening, float(record.times_s[part][-1]))
         place = part.stop
@@ -136,7 +140,7 @@ def report(outcomes: list[Outcome], seconds: float) -> int:
         by[f"{outcome.case.rate_hz:g} S/s"].append(outcome)
     failed = [o for o in outcomes if o.failure]
     for outcome in failed[:50]:
-        print(outcome.failure, '|', outcome.case.stratum, f'{outcome.case.rate_hz:g}', outcome.seed)  # noqa: T201
+        print(outcome.failure, "|", outcome.case.stratum, f"{outcome.case.rate_hz:g}", outcome.seed)  # noqa: T201
     for name, group in by.items():
         bad = sum(bool(o.failure) for o in group)
         delays = [o.delay_s for o in group if not o.failure]
