@@ -26,6 +26,7 @@ from drivers.decoded import Decoded
 from drivers.driver import ChannelUnit
 
 ROWS_AT_ONCE = 1000
+CLOCK_S = 1e-9
 CSV_BYTES_MAX = 2_000_000_000
 
 
@@ -114,7 +115,8 @@ class ReplayDriver:
         self._recorded = recorded
         self._frame = frame
         self._number = link_number
-        self._pace = pace
+        time_s = recorded.time_s
+        self._due_s = (time_s - time_s[0]) / pace if len(time_s) else time_s
         self._now_s = now_s
         self._wait_s = wait_s
         self._at = 0
@@ -142,10 +144,13 @@ class ReplayDriver:
             raise LinkClosed("used while closed", driver="replay", device=self._frame.name)
         now_s = self._now_s()
         until_s = now_s + max(timeout_s, 0.0)
-        due_s = until_s if self.ended else min(self._due_s(self._at), until_s)
+        due_s = until_s if self.ended else min(self._started_s + float(self._due_s[self._at]), until_s)
         if due_s > now_s:
             self._wait_s(due_s - now_s)
-        stop = int(np.searchsorted(self._recorded.time_s, self._play_s(), side="right"))
+        played_s = (
+            self._now_s() - self._started_s + CLOCK_S
+        )  # a sum and its difference may differ in the last bit
+        stop = int(np.searchsorted(self._due_s, played_s, side="right"))
         stop = min(max(stop, self._at), self._at + ROWS_AT_ONCE)
         if stop <= self._at:
             return None
@@ -170,12 +175,3 @@ class ReplayDriver:
     def _gap_before(self, at: int) -> int:
         index = self._recorded.index
         return 0 if at == 0 else max(int(index[at] - index[at - 1]) - 1, 0)
-
-    def _play_s(self) -> float:
-        """Recorded time that has been reached."""
-        first_s = float(self._recorded.time_s[0]) if len(self._recorded.time_s) else 0.0
-        return first_s + (self._now_s() - self._started_s) * self._pace
-
-    def _due_s(self, at: int) -> float:
-        time_s = self._recorded.time_s
-        return self._started_s + float(time_s[at] - time_s[0]) / self._pace
