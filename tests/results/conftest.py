@@ -6,13 +6,12 @@ from pathlib import Path
 
 import pytest
 
-_SPEC = importlib.util.spec_from_file_location("made_runs", Path(__file__).with_name("made_runs.py"))
-_MODULE = importlib.util.module_from_spec(_SPEC)
-sys.modules["made_runs"] = _MODULE
-_SPEC.loader.exec_module(_MODULE)
-
 
 @pytest.fixture(scope="session")
 def made():
-    """The module tests/results/made_runs.py."""
-    return _MODULE
+    """The module made_runs.py beside this file."""
+    if "made_runs" not in sys.modules:
+        spec = importlib.util.spec_from_file_location("made_runs", Path(__file__).with_name("made_runs.py"))
+        sys.modules["made_runs"] = importlib.util.module_from_spec(spec)
+        spec.loader.exec_module(sys.modules["made_runs"])
+    return sys.modules["made_runs"]
