@@ -14,6 +14,7 @@ from daq.cards.derived import (
     median_load_n,
     nominal_section,
     position_channel,
+    silence_s,
     spans_of,
 )
 from daq.cards.frame import FrameCard, Motion
@@ -72,6 +73,13 @@ def _frame_cautions(frame: FrameCard, today: dt.date) -> Iterator[str]:
         yield f"cell {cell.serial}: no quiet record, so noise is judged without a reference"
     if position_channel(frame) is None:
         yield f"frame {frame.name}: no position channel, so a stop cannot be verified"
+    for link in frame.links:
+        usual_s = silence_s(link.model_copy(update={"silence_s": None}))
+        if not frame.simulated and silence_s(link) > usual_s:
+            yield (
+                f"link {link.name}: a lost signal stops the machine only after {silence_s(link):g} s "
+                f"(usual: {usual_s:g} s); leave silence_s out on a real frame"
+            )
     names = {status.name for status in frame.inputs}
     for name, words in (("shield_open", "shield"), ("emergency_stop", "emergency stop")):
         if name not in names:

@@ -26,6 +26,9 @@ Tree: TypeAlias = Mapping[str, object]
 
 def read_text(path: FilePath) -> str:
     """The text of a small file; CardError with one line when it cannot be had."""
+    # A named pipe or a device would be waited for, or read without end.
+    if path.exists() and not (path.is_file() or path.is_dir()):
+        raise _refused(path, "not a regular file", "a readable file", "correct the path")
     try:
         with path.open("rb") as file:
             data = file.read(FILE_BYTES_MAX + 1)

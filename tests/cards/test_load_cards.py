@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import re
 from pathlib import Path
 
@@ -46,6 +47,12 @@ def test_a_missing_file(tmp_path):
 def test_a_folder(tmp_path):
     (line,) = faults(load_frame, tmp_path)
     assert "Is a directory" in line
+
+
+def test_a_pipe_is_not_waited_for(tmp_path):
+    os.mkfifo(tmp_path / "pipe")
+    (line,) = faults(load_frame, tmp_path / "pipe")
+    assert line.startswith("file = not a regular file")
 
 
 def test_a_name_that_no_system_takes():

@@ -494,6 +494,7 @@ CAUTIONS = [
     ("position", [('role = "position"', 'role = "deflection"')], "a stop cannot be verified"),
     ("shield", [(INPUT.format("shield_open", "S"), "")], "the shield is not wired"),
     ("emergency stop", [(INPUT.format("emergency_stop", "E"), "")], "the emergency stop is not wired"),
+    ("silence", [("simulated = true", "simulated = false")], "only after 0.5 s (usual: 0.05 s)"),
     ("approach", [("approach_mm_min = 5.0", "approach_mm_min = 10.0")], "clamped to 9.94 mm/min"),
 ]
 
