@@ -93,13 +93,15 @@ class SegmentWriter:
             self.renew()
 
     def delete_before(self, sequence: int) -> int:
-        """Remove whole segments whose entries are all below `sequence`; never the newest."""
+        """Remove whole segments whose entries are all below `sequence`, the oldest first; never the newest."""
         gone = 0
-        followers = [*self._older[1:], self._segment.header] if self._segment is not None else self._older[1:]
-        for follower in followers:
-            if follower.after_sequence >= sequence:
+        while self._older:
+            later = [*self._older[1:2], *([self._segment.header] if self._segment is not None else [])]
+            if not later or later[0].after_sequence >= sequence:
                 break
-            self._files.remove(self._folder / segment_name(self._older[0].number))
+            with suppress(FileNotFoundError):  # gone in an attempt that failed behind the removal
+                self._files.remove(self._folder / segment_name(self._older[0].number))
+            self._files.sync_folder(self._folder)  # else a power loss may bring back older ones only
             del self._older[0]
             gone += 1
         return gone

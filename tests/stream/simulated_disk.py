@@ -147,6 +147,13 @@ class Disk:
         image.names_durable = dict(image.names_seen)
         return image
 
+    @property
+    def undecided(self) -> bool:
+        """True while there is anything in a segment that a power loss might take."""
+        return bool(self.unsynced_names) or any(
+            inode.pending for name, inode in self.names_seen.items() if name.startswith("segment")
+        )
+
     def after_kill(self) -> Disk:
         """The process is gone, the host is not: everything written is there, locks are free."""
         self.handles.clear()
