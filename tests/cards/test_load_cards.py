@@ -375,3 +375,21 @@ def test_a_card_survives_json_and_its_rules_are_checked_without_a_file():
     broken = card.model_copy(update={"cell": card.cell.model_copy(update={"verified_max_n": 1100.0})})
     with pytest.raises(CardError, match=r"^frame card: cell.verified_max_n = 1100.0: at most the capacity"):
         check_frame(broken)
+
+
+def test_the_demo_lane_is_lane_a_with_a_short_approach():
+    lane_a, demo = load_frame(example_path(A)), load_frame(example_path("kiln-lane-demo.toml"))
+    assert demo.motion is not None
+    assert (demo.motion.gap_mm, demo.motion.backoff_mm) == (0.4, 0.4)
+    motion = demo.motion.model_copy(update={"gap_mm": 2.0, "backoff_mm": 2.0})
+    link = demo.links[0].model_copy(update={"port": lane_a.links[0].port})
+    same = {"name": lane_a.name, "title": lane_a.title, "links": (link,), "motion": motion}
+    assert demo.model_copy(update=same) == lane_a
+
+
+def test_the_alumina_series_is_thirty_bars_of_four_by_three():
+    bars = load_series(example_path("alumina-series.toml")).specimens
+    assert len(bars) == 30
+    for bar in bars:
+        assert all(3.975 <= width <= 4.025 for width in bar.width_mm)
+        assert all(2.975 <= thickness <= 3.025 for thickness in bar.thickness_mm)
