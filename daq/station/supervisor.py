@@ -256,6 +256,14 @@ class Supervisor:
             return b""
 
     # --- end
+    def abandon(self) -> None:
+        """Close every life pipe without a word, as the death of this process would."""
+        self._ending = True
+        for child in self._children.values():
+            if child.life is not None:
+                child.life.close()
+            child.process.returncode = 0        # nobody waits for them from here
+
     def end(self) -> None:
         """Bench first (it stops the crosshead), then recorder, archivist, station: nothing in the ring is lost."""
         if self._ending:
