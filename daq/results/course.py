@@ -39,7 +39,7 @@ def course_of(loading: Loading, peak: Peak | None, bending: Bending | None) -> C
     lasts = peak is not None and math.isfinite(loading.contact_s)
     return Course(
         seated_s=story.seated_s,
-        toe_n=loading.net_n(story.seated_load_n if story.toe_n is None else story.toe_n),
+        toe_n=loading.net_n(story.seated_load_n),
         toe_offset_mm=_toe_offset_mm(loading, bending),
         time_to_break_s=peak.onset_s - loading.contact_s if peak is not None and lasts else None,
         strain_at_break=_at_break(loading, strains, peak),

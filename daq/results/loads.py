@@ -13,6 +13,8 @@ from daq.results.peak import Peak, recover_break, smooth_top
 from daq.results.result import Loads
 
 SETTLE_TIME_CONSTANTS = 3.0  # after a partial drop
+SETTLE_SAMPLES = 3.0
+SETTLE_S = 0.01
 
 
 def peak_of(loading: Loading, fall_s: float | None) -> Peak | None:
@@ -44,7 +46,8 @@ def peak_of(loading: Loading, fall_s: float | None) -> Peak | None:
 
 def _after_drops_s(loading: Loading) -> float:
     """No sample before the last partial drop tells the load at the break."""
-    settle_s = SETTLE_TIME_CONSTANTS * (loading.setup.time_constant_s or 0.0)
+    lag_s, period_s = loading.setup.time_constant_s or 0.0, loading.samples.period_s
+    settle_s = max(SETTLE_S, SETTLE_TIME_CONSTANTS * lag_s, SETTLE_SAMPLES * period_s)
     drops_s = [drop.time_s + settle_s for drop in loading.story.drops if drop.time_s <= loading.end_s]
     return max([loading.seated_s, *drops_s])
 

@@ -86,6 +86,11 @@ def _reduce(run: RunData) -> Result:
     )
 
 
+def result_mapping(run: RunData) -> dict[str, Any]:
+    """What the archivist seals: the result as plain JSON values, and under "trace" the columns to draw."""
+    return {**reduce(run).as_json(), "trace": trace_columns(run)}
+
+
 def trace_columns(run: RunData) -> dict[str, Floats]:
     """The run to draw: stress over strain (or deflection, or time) with net load and time, a row a force
     sample.

@@ -117,7 +117,7 @@ class Result:
             **_stresses(self.stresses, self.uncertainty),
             **_loads(self.loads),
             **_course(self.course, self.stresses.per_newton_mpa),
-            **_modulus(self.modulus),
+            **_modulus(self.modulus, self.stresses.chamfer_factor),
             "tare_n": _plain(self.tare_n),
             **_after_zero(self.after_zero),
             "residual_n": _plain(self.residual_n),
@@ -198,11 +198,13 @@ def _course(course: Course, per_newton_mpa: float | None) -> dict[str, Any]:
     return found
 
 
-def _modulus(modulus: Modulus | str) -> dict[str, Any]:
+def _modulus(modulus: Modulus | str, chamfer_factor: float | None) -> dict[str, Any]:
+    """corrected: for shear and for the second moment that the chamfers take away."""
     found = None if isinstance(modulus, str) else modulus
     return {
         "modulus_gpa": None if found is None else _plain(found.nominal_gpa),
         "modulus_shear_gpa": None if found is None else _plain(found.shear_gpa),
+        "modulus_corrected_gpa": None if found is None else _times(found.shear_gpa, chamfer_factor or 1.0),
         "modulus_u_slope_gpa": None if found is None else _times(found.nominal_gpa, found.u_slope_share),
         "modulus_source": "" if found is None else found.source,
         "modulus_refused": modulus if isinstance(modulus, str) else "",

@@ -61,7 +61,6 @@ class Story:
     touched_s: float | None
     seated_s: float | None
     seated_load_n: float | None
-    toe_n: float | None
     toe_offset_mm: float | None
     fracture: FractureSeen | None
     drops: tuple[Drop, ...]
@@ -113,7 +112,6 @@ def story_of(events: Sequence[Mapping[str, Any]]) -> Story:
         touched_s=number(first.get("approach_touch"), "time_s"),
         seated_s=number(seated, "time_s"),
         seated_load_n=number(seated, "force_n"),
-        toe_n=number(seated, "toe_n"),
         toe_offset_mm=number(seated, "toe_offset_mm"),
         fracture=_fracture(first.get("fracture")),
         drops=tuple(_drop(event) for event in events if event.get("event") in DROPS),

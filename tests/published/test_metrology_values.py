@@ -2,11 +2,16 @@
 
 import math
 from decimal import Decimal
+from pathlib import Path
 
 import numpy as np
 import pytest
 
+from daq.cards.load import load_frame, load_method
+from daq.cards.series import Specimen
 from daq.results.fits import fit_curve
+from daq.results.setup import setup_of
+from daq.results.uncertainty import uncertainty_of
 from daq.series.growth import (
     damage_constant_mpa2_s,
     fit_crack_growth,
@@ -15,6 +20,7 @@ from daq.series.growth import (
 )
 from daq.series.rounding import round_to_step
 
+EXAMPLES = Path(__file__).resolve().parents[2] / "daq" / "cards" / "examples"
 RATES = [0.01, 0.1, 1.0, 10.0, 100.0]
 STRENGTHS = [178.7514, 189.0775, 200.0, 211.5535, 223.7744]
 
@@ -96,6 +102,46 @@ def test_calibration_line_of_the_guide():
         )
     )
     assert correlation == pytest.approx(-0.930, abs=6e-4)
+
+
+def budget(fixture: str, load_n: float):
+    """F +-1 %, spans +-0.1, b 4 and h 3 +-0.01, all rectangular; nothing else."""
+    frame = load_frame(EXAMPLES / "kiln-lane-a.toml")
+    cell = frame.cell.model_copy(update={"uncertainty_percent": 2.0 / math.sqrt(3.0)})
+    frame = frame.model_copy(update={"cell": cell})
+    method = load_method(EXAMPLES / "alumina-bars.toml").model_copy(update={"dimension_u_mm": 0.01})
+    bar = Specimen(number="A", width_mm=(4.0,), thickness_mm=(3.0,))
+    setup = setup_of(frame, method, bar, fixture)
+    found = uncertainty_of(setup, load_n=load_n, u_peak_n=0.0, u_tare_n=0.0, lag_known=True)
+    return load_n * setup.stress_per_newton_mpa, found
+
+
+def test_budget_of_the_guide_three_point():
+    """F = 450, L = 40: sigma 750, contributions 4.3301, 1.0825, 1.0825, 2.8868, u 5.4247 (0.7233 %),
+    U 10.849 (K).
+    """
+    sigma, found = budget("three-40", 450.0)
+    assert sigma == pytest.approx(750.0, rel=1e-12)
+    parts = {part.name: part.share * sigma for part in found.contributors if part.share}
+    expected = {"force reading": 4.3301, "support span": 1.0825, "width": 1.0825, "thickness": 2.8868}
+    assert parts == pytest.approx(expected, abs=6e-5)
+    assert (found.share * sigma, 2.0 * found.share * sigma) == (
+        pytest.approx(5.4247, abs=6e-5),
+        pytest.approx(10.849, abs=6e-4),
+    )
+    rng = np.random.default_rng(4)
+
+    def even(middle: float, half: float):
+        return middle + half * (2.0 * rng.random(200_000) - 1.0)
+
+    drawn = 3.0 * even(450, 4.5) * even(40, 0.1) / (2.0 * even(4, 0.01) * even(3, 0.01) ** 2)
+    assert (drawn.mean(), drawn.std()) == (pytest.approx(750.011, abs=0.05), pytest.approx(5.4244, abs=0.03))
+
+
+def test_budget_of_the_guide_four_point():
+    """40/20, F = 1000: 833.3333 MPa, 0.81791 %; span terms over (L - Li) (K)."""
+    sigma, found = budget("quarter-40-20", 1000.0)
+    assert (sigma, found.share) == (pytest.approx(833.3333, abs=6e-5), pytest.approx(0.0081791, abs=6e-8))
 
 
 @pytest.mark.parametrize(

@@ -10,9 +10,15 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from daq.mechanics.deflection import load_point_deflection_mm, shear_share_load_point
+from daq.mechanics.deflection import (
+    load_point_deflection_mm,
+    mid_deflection_mm,
+    shear_share_load_point,
+    shear_share_mid,
+)
 from daq.mechanics.sections import Rectangle, Spans
-from daq.results.reduce import reduce, trace_columns
+from daq.mechanics.stress import beam_stress_mpa
+from daq.results.reduce import reduce, result_mapping, trace_columns
 from daq.stream.rundata import ChannelData, RunData
 
 BAR, SPANS = Rectangle(4.0, 3.0), Spans(40.0, 20.0)
@@ -39,6 +45,7 @@ def test_clean_bar_gives_every_number(alumina):
     assert found["modulus_gpa"] == pytest.approx(380.0, rel=1e-3)
     shear = shear_share_load_point(BAR, SPANS, 0.22, 5.0 / 6.0)
     assert found["modulus_shear_gpa"] == pytest.approx(found["modulus_gpa"] * (1.0 + shear), rel=1e-9)
+    assert found["modulus_corrected_gpa"] == pytest.approx(found["modulus_shear_gpa"] * 1.006871, rel=1e-6)
     assert found["stress_rate_mean_mpa_s"] == pytest.approx(460.0 / 15.5 / 1.2, rel=2e-3)
     assert found["stress_rate_min_mpa_s"] < found["stress_rate_mean_mpa_s"] < found["stress_rate_max_mpa_s"]
     assert found["verdict"] == "provisional" and found["break_class"] == "sudden break"
@@ -157,6 +164,25 @@ def test_crosshead_counted_the_other_way_round(made):
     assert reduce(RunData(turned.channels, turned.events, cards)).modulus.nominal_gpa == pytest.approx(
         380, rel=1e-3
     )
+
+
+@pytest.mark.parametrize("kind", ["deflection", "strain"])
+def test_sensor_at_the_bar_is_read_at_its_own_place(made, kind):
+    """A mid-span sensor read with the load-roller formula would be 1.375 off; a gauge needs no
+    formula at all.
+    """
+    run = made.made_run(made.Bar(method_changes={"modulus": kind}), np.random.default_rng(1))
+    force = run.channels["force"]
+    net_n = np.clip(force.value - 2.4, 0.0, None)
+    mid_mm = mid_deflection_mm(net_n, 380e3, BAR, SPANS)
+    value = mid_mm + 0.5 if kind == "deflection" else beam_stress_mpa(net_n, BAR, SPANS) / 380e3
+    sensor = ChannelData("sensor", kind, "", force.index, force.time_s, value, value)
+    result = reduce(RunData({**run.channels, "sensor": sensor}, run.events, run.cards))
+    assert result.modulus.nominal_gpa == pytest.approx(380.0, rel=1e-3)
+    assert result.course.strain_at_break == pytest.approx(460.0 / 1.2 / 380e3, rel=2e-3)
+    shear = shear_share_mid(BAR, SPANS, 0.22, 5.0 / 6.0) if kind == "deflection" else 0.0
+    assert result.modulus.shear_gpa == pytest.approx(result.modulus.nominal_gpa * (1.0 + shear), rel=1e-9)
+    assert (result.course.deflection_at_break_mm is None) is (kind == "strain")
 
 
 def test_modulus_from_the_crosshead_is_refused_on_a_stiff_bar(made):
@@ -322,6 +348,13 @@ def test_trace_to_draw(alumina):
     assert len({column.shape for column in columns.values()}) == 1
     top = int(np.argmax(columns["stress_mpa"]))
     assert columns["stress_mpa"][top] / columns["strain"][top] == pytest.approx(380e3, rel=5e-3)
+
+
+def test_what_the_archivist_seals(alumina):
+    sealed = result_mapping(alumina)
+    trace = sealed.pop("trace")
+    assert sealed == reduce(alumina).as_json()
+    assert {name: column.tolist() for name, column in trace.items()}.keys() == trace_columns(alumina).keys()
 
 
 NUMBERS = st.one_of(
