@@ -40,7 +40,6 @@ PAYLOAD_BYTES_MAX = ENTRY_BYTES_MAX - HEADER_BYTES
 _HEAD = struct.Struct("<4sBBHIQQQ")  # all but the CRC
 _CRC = struct.Struct("<I")
 _FULL = struct.Struct("<4sBBHIQQQI")
-_START = struct.Struct("<4sBBHI")
 _PADDING = tuple(b"\0" * (-length % 8) for length in range(8))
 
 
@@ -50,6 +49,10 @@ class EntryDamaged(MidspanError, ValueError):
     def __init__(self, why: str) -> None:
         super().__init__(f"damaged entry: {why}")
         self.why = why
+
+
+class EntryCutShort(EntryDamaged):
+    """The buffer ends before the entry does; perhaps the rest is still to come."""
 
 
 class PayloadTooLong(MidspanError, ValueError):
@@ -140,28 +143,20 @@ def pack_all(entries: Iterable[Entry]) -> Packed:
     return Packed(data, len(listed), listed[0].sequence, listed[-1].sequence, listed[-1].monotonic_ns)
 
 
-def size_at(buffer: Buffer, offset: int = 0) -> int:
-    """Size of the entry that begins here, by its first 12 bytes alone; the rest is not yet checked."""
-    if len(buffer) - offset < HEADER_BYTES:
-        raise EntryDamaged("cut short inside the header")
-    magic, version, _, _, length = _START.unpack_from(buffer, offset)
-    if magic != MAGIC:
-        raise EntryDamaged(f"begins with {magic!r}")
-    if version != VERSION:
-        raise EntryDamaged(f"layout version {version}, known is {VERSION}")
-    if length > PAYLOAD_BYTES_MAX:
-        raise EntryDamaged(f"payload length {length}")
-    return entry_bytes(length)
-
-
 def check(buffer: Buffer, offset: int = 0) -> Header:
     """Everything about one entry that can be wrong, looked at once."""
-    end = offset + size_at(buffer, offset)
-    if end > len(buffer):
-        raise EntryDamaged("cut short inside the payload")
-    _, _, kind, zero, length, stream_id, sequence, monotonic_ns, crc = _FULL.unpack_from(buffer, offset)
+    if len(buffer) - offset < HEADER_BYTES:
+        raise EntryCutShort("cut short inside the header")
+    magic, version, kind, zero, length, stream_id, sequence, monotonic_ns, crc = _FULL.unpack_from(
+        buffer, offset
+    )
+    if magic != MAGIC or version != VERSION or length > PAYLOAD_BYTES_MAX:
+        raise EntryDamaged(f"begins with {magic!r}, layout version {version}, payload length {length}")
     start = offset + HEADER_BYTES
     stop = start + length
+    end = offset + (HEADER_BYTES + length + 7 & ~7)
+    if end > len(buffer):
+        raise EntryCutShort("cut short inside the payload")
     if crc32(buffer[start:stop], crc32(buffer[offset : start - 4])) != crc:
         raise EntryDamaged("CRC-32 does not match")
     if kind not in _KINDS or zero != 0:
@@ -191,16 +186,19 @@ def gather(data: bytes, *, stream_id: int, after_sequence: int) -> Packed | None
     Damage directly at the front raises; further back it ends the piece, so that it raises at the next look.
     """
     count, first, last, newest_ns, offset = 0, -1, after_sequence, 0, 0
-    try:
-        while len(data) - offset >= HEADER_BYTES and offset + size_at(data, offset) <= len(data):
+    while offset < len(data):
+        try:
             header = check(data, offset)
             if header.stream_id != stream_id:
                 raise EntryDamaged(f"stream {header.stream_id:#x} inside stream {stream_id:#x}")
             if header.sequence <= last:
                 raise EntryDamaged(f"sequence {header.sequence} after {last}")
-            first = header.sequence if count == 0 else first
-            count, last, newest_ns, offset = count + 1, header.sequence, header.monotonic_ns, header.end
-    except EntryDamaged:
-        if count == 0:
-            raise
+        except EntryCutShort:
+            break
+        except EntryDamaged:
+            if count == 0:
+                raise
+            break
+        first = header.sequence if count == 0 else first
+        count, last, newest_ns, offset = count + 1, header.sequence, header.monotonic_ns, header.end
     return Packed(data[:offset], count, first, last, newest_ns) if count else None

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 
 from daq.stream.block import Floats
@@ -19,8 +21,8 @@ def thin_minmax(table: Floats, column: int, rows_max: int) -> Floats:
     stretches = rows_max // 4
     edges = np.linspace(0, count, stretches + 1).astype(np.int64)
     values = np.where(np.isnan(table[:, column]), -np.inf, table[:, column])
-    keep = set()
-    for start, end in zip(edges[:-1], edges[1:], strict=True):
+    keep: set[int] = set()
+    for start, end in pairwise(edges):
         part = values[start:end]
         keep.update((start, start + int(part.argmin()), start + int(part.argmax()), end - 1))
     return table[np.array(sorted(keep), dtype=np.int64)]

@@ -13,6 +13,7 @@ from pathlib import Path
 from random import Random
 
 SECTOR_BYTES = 512
+PENDING_MAX = 8
 
 
 class Inode:
@@ -26,6 +27,10 @@ class Inode:
     def write(self, data: bytes, offset: int) -> None:
         _lay(self.seen, offset, data)
         self.pending.append((offset, bytes(data)))
+        if len(self.pending) > PENDING_MAX:  # as hosts do: old writes go out in the background
+            content = bytearray(self.durable)
+            _lay(content, *self.pending.pop(0))
+            self.durable = bytes(content)
 
     def sync(self) -> None:
         content = bytearray(self.durable)
