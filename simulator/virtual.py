@@ -175,7 +175,7 @@ class VirtualWire:
         while self._heard and self._heard[0][0] <= until_s:
             heard_s, number, data = self._heard.popleft()
             self._hear(max(heard_s, self.now_s), number, data)
-        if until_s > self.machine.now_s:
+        if until_s >= self.machine.now_s:
             self.machine.run_to(until_s)
             quiet_s = math.nextafter(self.machine.quiet_until_s(), 0.0)
             self.machine.run_to(max(min(until_s + AHEAD_S, quiet_s), until_s))
