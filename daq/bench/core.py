@@ -112,7 +112,7 @@ class BenchCore:
         if decoded.blocks or decoded.discarded_bytes or decoded.rejected:
             self._decoded.append((now_ns, link, decoded))
         if decoded.inputs:
-            latest = {sample.name: sample.active for sample in decoded.inputs}
+            latest: dict[str, bool | None] = {sample.name: sample.active for sample in decoded.inputs}
             self._obey(self.pipeline.inputs(latest, now_s), now_ns)
         for reply in decoded.replies:
             self._hear(reply, now_ns)
@@ -222,7 +222,8 @@ class BenchCore:
     def _heed(self, fact: MotionFact, now_ns: int) -> None:
         now_s = self.seconds(now_ns)
         if isinstance(fact, InputsKnown):
-            self._obey(self.pipeline.inputs(dict(fact.inputs), now_s), now_ns)
+            known: dict[str, bool | None] = {name: active for name, active in fact.inputs.items()}
+            self._obey(self.pipeline.inputs(known, now_s), now_ns)
         elif isinstance(fact, NotAnswered):
             self._obey(self.pipeline.fault("not_answered", fact.command, now_s), now_ns)
         elif isinstance(fact, UnknownReply):
@@ -262,7 +263,11 @@ class BenchCore:
             for reason, rows in decoded.rejected.items():
                 self.rejected[reason] = self.rejected.get(reason, 0) + rows
                 account.rejected[reason] = account.rejected.get(reason, 0) + rows
-            told = {"discarded_bytes": decoded.discarded_bytes, "link": link, "rows": dict(decoded.rejected)}
+            told: dict[str, Json] = {
+                "discarded_bytes": decoded.discarded_bytes,
+                "link": link,
+                "rows": dict(decoded.rejected),
+            }
             out.append(
                 (Kind.EVENT, now_ns, pack_event(flat(Event("rejected", self.seconds(now_ns), fields=told))))
             )

@@ -16,6 +16,7 @@ from daq.stream.block import Block
 from drivers.links import open_link
 from drivers.registry import decoder_for
 
+RATE_SHARE = 0.05
 HUM_SHARE = 3.0  # a line is named when it stands this far above the noise
 
 
@@ -78,16 +79,15 @@ def channel_lines(frame: FrameCard, number: int, blocks: list[Block]) -> list[st
 
 def channel_line(name: str, unit: str, quiet: QuietRecord) -> str:
     return (
-        f"{name}: mean {quiet.mean:.6g} {unit}, noise {quiet.sigma:.3g} {unit}, drift {quiet.drift_per_min:.3g} {unit}/min, "
-        f"step {quiet.resolution:.3g} {unit}, {quiet.distinct_values} different values"
+        f"{name}: mean {quiet.mean:.6g} {unit}, noise {quiet.sigma:.3g} {unit}, "
+        f"drift {quiet.drift_per_min:.3g} {unit}/min, step {quiet.resolution:.3g} {unit}, {quiet.distinct_values} different values"
     )
 
 
 def rate_line(link: LinkCard, quiet: QuietRecord) -> str:
-    off = abs(quiet.rate_hz / link.rate_hz - 1.0)
-    return f"link {link.name}: {quiet.rate_hz:.1f} rows/s, card says {link.rate_hz:g}" + (
-        " - NOT THE SAME" if off > 0.05 else ""
-    )
+    off = abs(quiet.rate_hz / link.rate_hz - 1.0) > RATE_SHARE
+    said = f"link {link.name}: {quiet.rate_hz:.1f} rows/s, card says {link.rate_hz:g}"
+    return said + (" - NOT THE SAME" if off else "")
 
 
 def hum_lines(quiet: QuietRecord) -> list[str]:

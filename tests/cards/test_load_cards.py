@@ -380,7 +380,7 @@ def test_a_card_survives_json_and_its_rules_are_checked_without_a_file():
 def test_the_demo_lane_is_lane_a_with_a_short_approach():
     lane_a, demo = load_frame(example_path(A)), load_frame(example_path("kiln-lane-demo.toml"))
     assert demo.motion is not None
-    assert (demo.motion.gap_mm, demo.motion.backoff_mm) == (0.4, 0.4)
+    assert (demo.motion.gap_mm, demo.motion.backoff_mm) == (0.15, 0.3)
     motion = demo.motion.model_copy(update={"gap_mm": 2.0, "backoff_mm": 2.0})
     link = demo.links[0].model_copy(update={"port": lane_a.links[0].port})
     same = {"name": lane_a.name, "title": lane_a.title, "links": (link,), "motion": motion}

@@ -30,10 +30,18 @@ from daq.station.client import Client
 from daq.station.places import places_for
 from daq.station.supervisor import Outfit, Supervisor
 from daq.stream.updates import Update
-from monitor.presenter import Presenter, words
+from monitor.presenter import Presenter
 from monitor.terminal import TerminalView
 
 BARS_MAX = 100
+COLUMNS = {
+    "peak_n": "load N",
+    "strength_mpa": "strength MPa",
+    "strength_u_k2_mpa": "U (k=2) MPa",
+    "stress_rate_mean_mpa_s": "rate MPa/s",
+    "modulus_gpa": "E GPa",
+    "break_class": "break",
+}
 WIRE_TIMEOUT_S = 15.0
 BAR_TIMEOUT_S = 120.0
 
@@ -169,26 +177,18 @@ def finish(console: Console, folder: Path, series: str, reports: Sequence[Mappin
     from daq.record.read import read_meta, read_run
     from daq.series.picture import series_picture
 
-    columns = [
-        "number",
-        "peak_n",
-        "strength_mpa",
-        "strength_u_mpa",
-        "stress_rate_mpa_s",
-        "break_class",
-        "verdict",
-    ]
     table = Table(title=f"{series} - SIMULATED DATA")
-    for name in columns:
-        table.add_column(name)
+    table.add_column("bar")
+    for heading in COLUMNS.values():
+        table.add_column(heading, justify="right")
     with (folder / f"{series}.csv").open("x", newline="", encoding="utf-8") as file:
         sheet = csv.writer(file)
-        sheet.writerow(columns)
+        sheet.writerow(["specimen", *COLUMNS])
         for report in reports:
-            result = report["result"]
-            row = [report["specimen"], *(result.get(name) for name in columns[1:])]
-            sheet.writerow(row)
-            table.add_row(*(words(value, 2, "") if isinstance(value, float) else str(value) for value in row))
+            row = [report["result"].get(name) for name in COLUMNS]
+            sheet.writerow([report["specimen"], *row])
+            shown = (f"{value:.1f}" if isinstance(value, float) else str(value or "-") for value in row)
+            table.add_row(str(report["specimen"]), *shown)
     paths = [Path(str(report["path"])) for report in reports]
     records = [
         (str(r["specimen"]), read_run(p), read_meta(p)["result"]) for r, p in zip(reports, paths, strict=True)
