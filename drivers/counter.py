@@ -11,7 +11,7 @@ from __future__ import annotations
 import numpy as np
 
 from daq.stream.block import GAP_UNKNOWN, Floats
-from drivers.decoded import SCALAR_ROWS, Reason
+from drivers.decoded import Reason
 
 LEAP_S = 10.0
 RESTART_ROWS = 4
@@ -62,11 +62,6 @@ class Counter:
 
     def take_run(self, column: Floats) -> int:
         """How many, from the first on, simply count on: these are taken."""
-        if len(column) <= SCALAR_ROWS:
-            for taken, value in enumerate(column.tolist()):
-                if not self.counts_on(value):
-                    return taken
-            return len(column)
         if self._last is None or self._suspect is not None:
             return 0
         expected = self._last + 1.0 + np.arange(len(column))

@@ -11,10 +11,6 @@ from typing import Protocol
 from daq.cards.frame import InputName
 from daq.stream.block import Block
 
-SCALAR_ROWS = 64
-"""Up to this many rows a chunk is decoded by plain Python; above it numpy wins. Both give the same answer
-(tests)."""
-
 STALE_S = 0.05
 """Rows that arrive sooner than this after the first byte since opening may have been buffered before:
 marked."""

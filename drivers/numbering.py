@@ -17,6 +17,9 @@ from drivers.decoded import NO_REJECTS, InputSample, Reason
 from drivers.plan import RowPlan
 from drivers.timing import CounterTiming, Timing
 
+SCALAR_ROWS = 32
+"""Up to this many rows plain Python compares faster than numpy."""
+
 SLOW_ROWS = 64
 """Rows judged one by one before a run is tried again."""
 
@@ -75,17 +78,21 @@ class Numbering:
 
     def number(self, values: Floats, breaks: Sequence[int], arrival_s: float) -> Numbered:
         """values: (n, w) rows; breaks: rows before which something was thrown away, 0 <= row < n."""
+        at = self._take_run(values, 0, breaks)
+        if at and at == len(values):
+            block = self._block(values, self._next_index, 0, arrival_s)
+            self._next_index += at
+            return Numbered((block,), (), NO_REJECTS)
         self._segments, self._rejected = [], {}
-        at = 0
+        if at:
+            self._extend(0, at, 0)
         while at < len(values):
-            run = self._take_run(values, at, breaks)
-            if run:
-                self._extend(at, at + run, 0)
-                at += run
-                continue
             stop = min(at + SLOW_ROWS, len(values))
             self._judge_rows(values, at, stop, breaks)
-            at = stop
+            run = self._take_run(values, stop, breaks)
+            if run:
+                self._extend(stop, stop + run, 0)
+            at = stop + run
         blocks, inputs = [], []
         for segment in self._segments:
             rows = segment.rows_of(values)
@@ -120,6 +127,8 @@ class Numbering:
             if self._lost or at in breaks:
                 return 0
             stop = min((row for row in breaks if row > at), default=stop)
+        if stop - at <= SCALAR_ROWS:
+            return self._take_few(values[at:stop].tolist())
         for held, place in zip(self._status, self._places, strict=True):
             stop = at + _while_true(values[at:stop, place] == held)
         if plan.time is not None:
@@ -127,6 +136,19 @@ class Numbering:
         if self._counter is None or stop == at:
             return stop - at
         return self._counter.take_run(values[at:stop, plan.counter])
+
+    def _take_few(self, rows: list[list[float]]) -> int:
+        """The same in plain Python, for a few rows."""
+        plan, counter = self._plan, self._counter
+        for taken, row in enumerate(rows):
+            for held, place in zip(self._status, self._places, strict=True):
+                if row[place] != held:
+                    return taken
+            if plan.time is not None and not abs(row[plan.time]) < WHOLE_MAX:
+                return taken
+            if counter is not None and not counter.counts_on(row[plan.counter or 0]):
+                return taken
+        return len(rows)
 
     # -- everything else, row by row
 

@@ -79,7 +79,9 @@ class RowText:
             head = line[: found.start(self._check_group) - len(self.separator)]
             if found[self._check_group] != self._hex % check_value(self.dialect.checksum, head):
                 return None
-        return tuple([float(found[group]) for group in self._groups])
+        if len(self._groups) == 1:
+            return (float(found[self._groups[0]]),)
+        return tuple(map(float, found.group(*self._groups)))
 
     def _plain_form(self) -> re.Pattern[bytes] | None:
         """Prefix, exact fields of up to 15 digits without blanks or units, check. Other rows are left to
