@@ -1,5 +1,6 @@
 """The journal on the real file system: written, tailed, resumed, thinned out, tampered with."""
 
+from dataclasses import replace
 from pathlib import Path
 from random import Random
 
@@ -7,7 +8,9 @@ import pytest
 from made_entries import STREAM, entries, packed
 
 from daq.errors import RecordDamaged, RecordingError
+from daq.stream.checkpoint import Checkpoint, pack_checkpoint
 from daq.stream.entry import Entry, Kind
+from daq.stream.files import OsFiles
 from daq.stream.journal import UNSYNCED_BYTES_MAX, Journal
 from daq.stream.journal_reader import JournalReader
 from daq.stream.payloads import pack_event
@@ -201,7 +204,6 @@ def made(folder: Path) -> list[Entry]:
 
 def bodies(folder: Path) -> list[tuple[Path, int, int]]:
     """Segment, start and end of each batch, read off the files with the walk."""
-    from daq.stream.files import OsFiles
     from daq.stream.journal_walk import Walk
 
     walk, places = Walk(folder, OsFiles()), []
@@ -330,3 +332,77 @@ def test_whole_segments_go_and_the_rest_stays_readable(folder: Path) -> None:
     assert journal.delete_before(10**9) == 1
     journal.close()
     assert list(JournalReader(folder).iterate(len(written) + 1)) == more
+
+
+# --- rare meetings ----------------------------------------------------------------------------------------
+def test_a_batch_that_does_not_hold_what_it_says_does_not_verify(folder: Path) -> None:
+    """The chain vouches for bytes; verify also looks at the entries in them."""
+    sound = packed(1, 3, Random(0))
+    for forged in (
+        replace(sound, count=2),
+        replace(sound, last_sequence=4),
+        replace(sound, newest_ns=1),
+        replace(sound, data=b"\0" * 64),
+        replace(sound, data=sound.data + b"\0" * 8),
+    ):
+        place = folder.with_name(f"forged-{id(forged)}")
+        with Journal.create(place, STREAM, segment_bytes=SEGMENT_BYTES) as journal:
+            journal.append_packed(forged)
+        with pytest.raises(RecordDamaged, match=f"segment-00000001, byte {BODY_OFFSET}"):
+            JournalReader(place).verify()
+
+
+@pytest.mark.parametrize(("stream_id", "segment"), [(STREAM + 1, 1), (STREAM, 9)])
+def test_a_checkpoint_of_something_else_is_refused(folder: Path, stream_id: int, segment: int) -> None:
+    made(folder)
+    point = Checkpoint(10**6, stream_id, segment, BODY_OFFSET, 10**6, bytes(32), closed=False)
+    (folder / "checkpoint").write_bytes(pack_checkpoint(point))
+    with pytest.raises(RecordDamaged):
+        JournalReader(folder).verify()
+    with pytest.raises(RecordDamaged, match="checkpoint"):
+        Journal.resume(folder, segment_bytes=SEGMENT_BYTES)
+
+
+class Interrupted(OsFiles):
+    """The real files, with the recorder let run at the moment the reader looks at the folder."""
+
+    def __init__(self) -> None:
+        self.meanwhile: list = []
+
+    def names(self, folder: Path) -> list[str]:
+        while self.meanwhile:
+            self.meanwhile.pop()()
+        return super().names(folder)
+
+
+def test_a_segment_finished_between_two_looks_is_not_taken_for_damage(folder: Path) -> None:
+    journal = Journal.create(folder, STREAM, segment_bytes=SEGMENT_BYTES)
+    files = Interrupted()
+    reader = JournalReader(folder, files=files)
+    written = write(journal, 1, 1)
+    assert reader.read_new() == written
+    files.meanwhile.append(lambda: written.extend(write(journal, 4, 60, seed=1)))
+    seen = reader.read_new(1 << 30) + reader.read_new(1 << 30)
+    assert len(segments(folder)) > 1
+    assert seen == written[3:]
+    journal.close()
+
+
+class Vanishing(OsFiles):
+    """Lists a segment that is gone by the time it is opened, once."""
+
+    def __init__(self) -> None:
+        self.open_calls = 0
+
+    def open(self, path: Path, *, writable: bool) -> int:
+        self.open_calls += 1
+        if self.open_calls == 1:
+            raise FileNotFoundError(path)
+        return super().open(path, writable=writable)
+
+
+def test_a_segment_removed_between_listing_and_opening_is_looked_for_again(folder: Path) -> None:
+    written = made(folder)
+    reader = JournalReader(folder, files=Vanishing())
+    assert reader.read_new() == []
+    assert reader.read_new(1 << 30) == written

@@ -283,6 +283,19 @@ def test_a_damaged_ring_is_told_with_its_place(path: Path) -> None:
         reader.read_new()
 
 
+def test_a_write_that_fails_is_a_loss_and_not_the_end_of_the_bench(path: Path) -> None:
+    writer = Ring.create(path, SMALL, STREAM)
+    sound = writer._ring.descriptor
+    writer._ring.descriptor = os.open(path, os.O_RDONLY)
+    assert not writer.append_batch(pair(1))
+    os.close(writer._ring.descriptor)
+    writer._ring.descriptor = sound
+    assert writer.append_batch(pair(2))
+    found = RingReader(path).read_new()
+    assert [e.sequence for e in found] == [3, 4, 5]
+    assert losses(found)[0]["entries"] == 2
+
+
 # --- life and death of the file ---------------------------------------------------------------------------
 def test_a_ring_that_does_not_fit_is_refused_with_the_arithmetic(path: Path) -> None:
     with pytest.raises(RecordingError, match=r"ring of 1073741824\.0 MiB does not fit: .* MiB free"):
