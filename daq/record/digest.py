@@ -9,8 +9,9 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from typing import Any
+from zlib import crc32
 
 import h5py
 import numpy as np
@@ -19,18 +20,18 @@ from daq.record.schema import H5_ERRORS
 from daq.record.texts import H5
 
 BLOCK_BYTES = 1 << 19
-BLOCK_DIGITS = 16  # of a block's digest: it only locates; the whole dataset has all 64
 SEAL = "/seal"
+OWN_DIGEST = "sha256"  # attribute of /seal: over its other attributes and its list
 DEPTH_MAX = 4
 OBJECTS_MAX = 10_000
 
 
 class BlockDigest:
-    """Digest of a dataset's bytes, whole and per BLOCK_BYTES, fed in pieces of any size."""
+    """SHA-256 of a dataset's bytes and a CRC-32 per BLOCK_BYTES, which only locates; fed in pieces of any size."""
 
     def __init__(self) -> None:
         self._whole = hashlib.sha256()
-        self._block = hashlib.sha256()
+        self._block = 0
         self._filled = 0
         self.blocks: list[str] = []
 
@@ -39,7 +40,7 @@ class BlockDigest:
         self._whole.update(view)
         while view:
             part = view[: BLOCK_BYTES - self._filled]
-            self._block.update(part)
+            self._block = crc32(part, self._block)
             self._filled += len(part)
             view = view[len(part) :]
             if self._filled == BLOCK_BYTES:
@@ -51,8 +52,8 @@ class BlockDigest:
         return {"sha256": self._whole.hexdigest(), "blocks": self.blocks}
 
     def _end_block(self) -> None:
-        self.blocks.append(self._block.hexdigest()[:BLOCK_DIGITS])
-        self._block = hashlib.sha256()
+        self.blocks.append(f"{self._block:08x}")
+        self._block = 0
         self._filled = 0
 
 
@@ -70,6 +71,11 @@ def _attributes(item: H5) -> str:
         value = np.asarray(item.attrs[name])
         listed.append([name, value.dtype.str, list(value.shape), value.tobytes().hex()])
     return hashlib.sha256(json.dumps(listed).encode()).hexdigest()
+
+
+def seal_digest(words: Mapping[str, str], listed: str) -> str:
+    """Digest of the seal itself, which its list cannot hold."""
+    return hashlib.sha256(json.dumps([sorted(words.items()), listed]).encode()).hexdigest()
 
 
 def address(item: H5) -> int:

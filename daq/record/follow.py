@@ -13,7 +13,7 @@ from typing import TypeAlias
 
 from daq.record.head import Head, head_of_entry
 from daq.record.rows import CLOSED, OPENED, is_event
-from daq.stream.entry import Entry, Packed, unpack
+from daq.stream.entry import Entry, Kind, Packed, unpack
 
 LEAD_IN_ENTRIES = 64
 
@@ -70,7 +70,7 @@ class Follower:
             offset = end
 
     def _take(self, entry: Entry, data: bytes) -> Iterator[Found]:
-        if is_event(entry, OPENED):
+        if entry.kind is Kind.EVENT and is_event(entry, OPENED):
             if self.open:
                 yield Ended(self.last_sequence, closed=False)
             self.open = True
@@ -81,6 +81,6 @@ class Follower:
             self._lead_in.append((entry, data))
             return
         yield Within(entry, data)
-        if is_event(entry, CLOSED):
+        if entry.kind is Kind.EVENT and is_event(entry, CLOSED):
             self.open = False
             yield Ended(entry.sequence, closed=True)

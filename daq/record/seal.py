@@ -17,7 +17,7 @@ import numpy.typing as npt
 
 from daq.errors import RecordingError
 from daq.record.columns import STREAM, Columns
-from daq.record.digest import BlockDigest, address, describe_object, walk
+from daq.record.digest import OWN_DIGEST, BlockDigest, address, describe_object, seal_digest, walk
 from daq.record.front import FRONT_BYTES, front_block
 from daq.record.publish import sha256_of
 from daq.record.rows import Gap
@@ -26,6 +26,8 @@ from daq.record.sink import Sink
 from daq.record.texts import H5, fixed_text, json_text, set_plain_all, set_text, utf8
 
 Column = npt.NDArray[Any]
+DRAWN = ("stress_mpa", "force_net_n", "force_n")  # of the reduction's trace: what a viewer shows
+OVER = ("strain", "deflection_mm", "position_mm", "time_s")  # and over what, the first that is there
 
 
 @dataclass(frozen=True, slots=True)
@@ -165,9 +167,9 @@ class _Sealer:
             self._link_trace(group)
             return
         names = list(trace)
-        signal = "stress_mpa" if "stress_mpa" in names else names[0]
-        others = [name for name in names if name != signal]
-        _name_axes(group, signal, others[0] if others else "")
+        signal = next((name for name in DRAWN if name in trace), names[0])
+        axis = next((name for name in OVER if name in trace and name != signal), "")
+        _name_axes(group, signal, axis)
         for name in names:
             made = self._array(f"/{TRACE}/{name}", np.asarray(trace[name], dtype="<f8"))
             set_text(made, "units", _unit_of(name))
@@ -255,11 +257,17 @@ class _Sealer:
             path: {**describe_object(item), **written.get(address(item), {})}
             for path, item in walk(self._file)
         }
-        set_text(group, "algorithm", "sha256")
-        set_text(group, "previous_record", before.previous_record)
-        set_text(group, "previous_sha256", before.previous_sha256)
-        set_text(group, "journal_chain", before.journal_chain)
-        self._text("/seal/list", json_text(objects))
+        listed = json_text(objects)
+        words = {
+            "algorithm": "sha256",
+            "previous_record": before.previous_record,
+            "previous_sha256": before.previous_sha256,
+            "journal_chain": before.journal_chain,
+        }
+        for name, text in words.items():
+            set_text(group, name, text)
+        set_text(group, OWN_DIGEST, seal_digest(words, listed))
+        self._text("/seal/list", listed)
 
 
 def _cut(whole: Column) -> Iterator[Column]:

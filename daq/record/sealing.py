@@ -8,6 +8,7 @@ SHA256SUMS. A name that is taken is never overwritten and a run is never sealed 
 from __future__ import annotations
 
 import os
+import time
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -18,6 +19,7 @@ import numpy as np
 from daq.errors import RecordDamaged, RecordingError
 from daq.record.columns import Columns
 from daq.record.head import Head
+from daq.record.mark import sync_folder
 from daq.record.publish import add_sum, make_folder, publish_new, read_sums, sha256_of
 from daq.record.read import read_meta
 from daq.record.seal import Before, Outcome, write_record
@@ -46,6 +48,7 @@ class Sealed:
     result: Mapping[str, Any]
     failure: str = ""
     renamed: bool = False  # its own name was taken
+    seal_s: float = 0.0
 
     def as_report(self) -> dict[str, Any]:
         return {
@@ -60,6 +63,7 @@ class Sealed:
             "sha256": self.sha256,
             "result": {"failure": self.failure} if self.failure else dict(self.result),
             "renamed": self.renamed,
+            "seal_s": self.seal_s,
         }
 
 
@@ -72,7 +76,7 @@ class Sealing:
         self._pulse = pulse
 
     def find(self, head: Head) -> Sealed | None:
-        """The record of that run, if it is sealed already; what a kill directly after cut off is made good."""
+        """The record of that run, if it is sealed already; what a kill cut off after its naming is made good."""
         for path in self._names(head):
             if not path.exists():
                 return None
@@ -82,6 +86,7 @@ class Sealing:
                 continue  # not ours to judge here: the name is taken, verify tells why
             if meta["run_id"] == head.run_id:
                 self._temp(head).unlink(missing_ok=True)
+                sync_folder(path.parent)
                 add_sum(path.parent, meta["sha256"], path.name)
                 result = meta["result"]
                 return Sealed(
@@ -91,7 +96,11 @@ class Sealing:
 
     def seal(self, columns: Columns, journal_chain: str) -> Sealed:
         """OSError or RecordingError where it cannot be done now; then nothing is left behind."""
+        begun_s = time.monotonic()
         head = columns.head
+        before = self.find(head)
+        if before is not None:
+            return before  # an earlier attempt had given it its name when the disk refused what comes after
         folder = self._out / head.series
         make_folder(folder)
         _demand_room(folder, columns.size_bytes() + TEXT_ROOM_BYTES + 16 * _rows(columns))
@@ -102,8 +111,16 @@ class Sealing:
         path = self._publish(temp, head)
         digest = self._read_back(path)
         add_sum(folder, digest, path.name)
-        renamed = path.stem != head.stem
-        return Sealed(path, head, columns.rows.interrupted, digest, outcome.result, outcome.failure, renamed)
+        return Sealed(
+            path,
+            head,
+            columns.rows.interrupted,
+            digest,
+            outcome.result,
+            outcome.failure,
+            renamed=path.stem != head.stem,
+            seal_s=time.monotonic() - begun_s,
+        )
 
     def _outcome(self, columns: Columns) -> Outcome:
         try:

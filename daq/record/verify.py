@@ -23,7 +23,7 @@ import numpy as np
 import numpy.typing as npt
 
 from daq.errors import RecordDamaged
-from daq.record.digest import address, describe_object, first_difference, walk
+from daq.record.digest import OWN_DIGEST, address, describe_object, first_difference, seal_digest, walk
 from daq.record.head import Head, head_of_entry
 from daq.record.read import check_bytes, open_unchecked, stream_entries
 from daq.record.rows import COUNTED, OPENED, GapKind, Rows, RunRows, is_event
@@ -139,7 +139,7 @@ class _Checker:
     # Objects against the seal's list ---------------------------------------------------------------------
 
     def _check_objects(self) -> None:
-        promised = json.loads(plain_text(self._file["seal"]["list"][()]))
+        promised = self._check_seal()
         found: set[str] = set()
         good: set[tuple[int, str]] = set()
         for path, item in walk(self._file):
@@ -151,6 +151,16 @@ class _Checker:
                 self._check_object(path, item, promised[path], good)
         for path in sorted(promised.keys() - found):
             self._bad(f"{path}: missing")
+
+    def _check_seal(self) -> dict[str, Any]:
+        """The seal's own digest; what it lists."""
+        seal = self._file["seal"]
+        listed = plain_text(seal["list"][()])
+        words = {name: plain_text(text) for name, text in seal.attrs.items()}
+        if words.pop(OWN_DIGEST, "") != seal_digest(words, listed) or list(seal) != ["list"]:
+            self._bad("/seal: altered")
+        promised: dict[str, Any] = json.loads(listed)
+        return promised
 
     def _check_object(
         self, path: str, item: H5, promised: dict[str, Any], good: set[tuple[int, str]]

@@ -16,7 +16,7 @@ import numpy as np
 import pytest
 
 from daq.errors import RecordDamaged
-from daq.record.digest import BlockDigest, describe_object, slabs_of, walk
+from daq.record.digest import OWN_DIGEST, BlockDigest, describe_object, seal_digest, slabs_of, walk
 from daq.record.front import FRONT_BYTES, front_block
 from daq.record.publish import sha256_of
 from daq.record.read import check_bytes, read_meta, read_run
@@ -57,8 +57,11 @@ def _reseal(file: Any) -> None:
             for _, data in slabs_of(item):
                 digest.feed(data)
             listed[path].update(digest.finish())
-    del file["seal"]["list"]
-    file["seal"].create_dataset("list", data=fixed_text(json.dumps(listed)))
+    seal, text = file["seal"], json.dumps(listed)
+    del seal["list"]
+    seal.create_dataset("list", data=fixed_text(text))
+    words = {name: plain_text(value) for name, value in seal.attrs.items() if name != OWN_DIGEST}
+    seal.attrs[OWN_DIGEST] = fixed_text(seal_digest(words, text))
 
 
 def restream(change: Callable[[list[Entry]], list[Entry]]) -> Callable[[Any], None]:
@@ -158,6 +161,10 @@ def test_content_alone_tells_every_mutant_that_reads_differently(record: Path, t
         ("/: attributes", lambda f: f.attrs.__setitem__("simulated", np.uint8(0))),
         ("/result: attributes", lambda f: f["result"].attrs.__setitem__("peak_n", 1.0)),
         ("/stream: rows 0 to ", lambda f: f["stream"].__setitem__(5000, 7)),
+        (
+            "/seal: altered",
+            lambda f: f["seal"].attrs.__setitem__("previous_record", fixed_text("kiln_A00_01.h5")),
+        ),
         ("/events/json: missing", lambda f: f["events"].__delitem__("json")),
         ("/channels/extra: not in the seal's list", lambda f: f.create_group("channels/extra")),
         ("/channels is a link", lambda f: f.__setitem__("channels", h5py.SoftLink("/trace"))),
