@@ -25,7 +25,6 @@ from simulator.faults import (
     NoiseBurst,
     PopIn,
     Rows,
-    Schedule,
     SensorFault,
     Slip,
     SpeedSlip,
@@ -34,6 +33,7 @@ from simulator.faults import (
 )
 from simulator.grip import Grip
 from simulator.sampling import LinkSampler, Moment, SampleRows
+from simulator.schedule import Schedule
 from simulator.sensors import Sensor
 from simulator.specimen import Bar, InHand, make_bar
 

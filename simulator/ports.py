@@ -163,7 +163,9 @@ class TcpPort:
     close = vanish
 
     def read(self) -> bytes:
-        data = self._receive()  # first: a client that has gone makes room for one that comes in the same round
+        data = (
+            self._receive()
+        )  # first: a client that has gone makes room for one that comes in the same round
         self._accept()
         return data
 

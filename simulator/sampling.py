@@ -12,9 +12,7 @@ from daq.cards.frame import Channel, FrameCard
 from daq.mechanics.quantity import Floats
 from simulator.card import ForceSensor, OtherSensor, SimulatorCard
 from simulator.grip import Grip
-from simulator.sensors import Sensor
-
-SAMPLE_EDGE = 1e-9  # of a period: rounding of a sample that falls on an event
+from simulator.sensors import SAMPLE_EDGE, Sensor
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -49,8 +47,8 @@ class LinkSampler:
         self.link_number = link_number
         self._channels = [channel for channel in frame.channels if channel.link == link.name]
         self._position_sign = frame.motion.position_sign if frame.motion is not None else 1
-        self._period_s = 1 / (link.rate_hz * (1 + card.port.clock_error_ppm * 1e-6))
-        self._counter_start = card.port.counter_start
+        self._period_s = 1 / (link.rate_hz * (1 + card.electronics.clock_error_ppm * 1e-6))
+        self._counter_start = card.electronics.counter_start
         self._next = 0
         self._times: list[Floats] = []
         self._true: list[list[Floats]] = []

@@ -85,6 +85,12 @@ class VirtualBench:
     def now_ns(self) -> int:
         return round(self.now_s * NS)
 
+    def stall(self, silent_s: float) -> None:
+        """The recorder has acknowledged nothing for so long, as the bench process would see it."""
+        self.health = Health(self.health.stopper_alive, silent_s)
+        self._send(self.core.recorder_silence(silent_s, self.now_ns))
+        self._keep()
+
     # --- what people do
     def request(self, request: Request) -> None:
         """Raises Refused."""

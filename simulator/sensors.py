@@ -18,6 +18,7 @@ from simulator.card import ForceSensor, OtherSensor
 from simulator.faults import AnyFault, Drift, Glitch, NoiseBurst, SensorFault, UnitSlip
 
 NOISE_CHUNK = 4096  # samples drawn at once
+SAMPLE_EDGE = 1e-9  # of a period: rounding of a sample that falls on an event
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,7 +87,8 @@ class Sensor:
         return not self._active and not self._glitches
 
     def begin(self, fault: AnyFault, now_s: float) -> None:
-        """A fault of this channel begins with the first sample after now."""
+        """A fault of this channel begins with the first sample after now; one that falls on now is before it."""
+        now_s += SAMPLE_EDGE * self._period_s
         if isinstance(fault, Glitch):
             self._glitches.append((now_s, fault.size, fault.samples))
             return

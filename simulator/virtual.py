@@ -58,7 +58,7 @@ class _Line:
         self.rows_made = self.rows_sent = self.rows_overrun = 0
         self._end = (self.link.lines.line_end if self.link.lines else "").encode("latin-1")
         self._free_s = 0.0
-        self._batch_s = card.port.batch_s
+        self._batch_s = card.electronics.batch_s
         self._garble = np.random.default_rng((card.seed, number, 99))
 
     def through_s(self, now_s: float, data: bytes) -> float:
