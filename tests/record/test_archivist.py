@@ -276,7 +276,7 @@ gc.collect()
 
 @pytest.mark.slow
 @pytest.mark.processes
-@pytest.mark.parametrize("limit", [3_000, 30_000, 100_000, 300_000])
+@pytest.mark.parametrize("limit", [3_000, 30_000, 300_000])
 def test_a_live_file_that_the_disk_refuses_is_given_up_without_a_crash(tmp_path: Path, limit: int) -> None:
     """Without live.py's way out each of these ends by SIGSEGV when the HDF5 objects are let go."""
     command = [sys.executable, "-c", LIVE, str(tmp_path / "live.h5"), str(limit)]
@@ -309,7 +309,7 @@ print(*sorted({report["report"] for report in said}))
 
 @pytest.mark.slow
 @pytest.mark.processes
-@pytest.mark.parametrize("limit", [3_000, 20_000, 60_000, 90_000, 150_000, 250_000, 400_000])
+@pytest.mark.parametrize("limit", [3_000, 60_000, 150_000, 400_000])
 def test_a_disk_that_refuses_at_any_point_never_ends_the_process_by_a_signal(
     tmp_path: Path, limit: int
 ) -> None:

@@ -107,14 +107,14 @@ def test_killed_at_every_few_file_operations(
             rescue(folder)()
         assert files(folder / "out") == expected, f"killed at file operation {step}"
         assert not (folder / "j").exists()
-        step += 4
-    assert died > 12, "the work must be long enough for the kills to mean something"
+        step += 8
+    assert died > 8, "the work must be long enough for the kills to mean something"
 
 
 def test_killed_at_random_moments(tmp_path: Path, journal: Path, records: tuple[Path, ...]) -> None:
     expected = undisturbed(records)
     chance = random.Random(31)
-    for attempt in range(12):
+    for attempt in range(8):
         folder = place(tmp_path / "w", journal)
 
         def kill_soon(child: int) -> None:

@@ -64,7 +64,7 @@ def test_any_failed_write_of_a_seal_is_an_error_and_leaves_no_file(
         write_record(path, columns, Outcome(), Before())
     assert check_contents(path).ok and counted.calls > 50
     path.unlink()
-    for nth in range(1, counted.calls + 1, 13):
+    for nth in range(1, counted.calls + 1, 17):
         with monkeypatch.context() as patch:
             Failing(patch, "pwrite", nth, times, errno.ENOSPC)
             with pytest.raises(OSError, match="No space"):
@@ -92,14 +92,14 @@ def test_any_failed_call_is_told_and_the_record_comes_later(
             monkeypatch.context() as patch,
         ):
             failing = Failing(patch, name, nth, 1 if nth else 0, errno.EIO)
-            for second in range(40):
+            for second in range(20):
                 archivist.advance(float(second))
         (path,) = (work / "out").rglob("*.h5")
         expected = expected or path.read_bytes()
         assert path.read_bytes() == expected, f"{name} {nth}"
         assert "sealed" in {report["report"] for report in said}
         assert [place.name for place in path.parent.iterdir() if place.name.startswith(".")] == []
-        if failing.calls < nth or nth > 11:
+        if failing.calls < nth or nth > 7:
             break
         nth += 1
     assert nth > 1, f"{name} is never called: the test would prove nothing"

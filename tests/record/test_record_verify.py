@@ -133,7 +133,7 @@ def test_content_alone_tells_every_mutant_that_reads_differently(record: Path, t
     """The digest of the front left aside: the seal's own list against an independent reading of each mutant."""
     whole = record.read_bytes()
     rng = np.random.default_rng(7)
-    count = 120
+    count = 80
     for number in range(count):
         place = int(rng.integers(FRONT_BYTES, len(whole)))
         changed = bytes([whole[place] ^ int(rng.integers(1, 256))])

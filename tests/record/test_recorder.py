@@ -202,7 +202,7 @@ def test_killed_again_and_again_while_the_bench_writes(tmp_path: Path) -> None:
     writer = Ring.create(tmp_path / "ring", 4 << 20, 79)
     chance = random.Random(5)
     written = 0
-    for life in range(12):
+    for life in range(8):
         child = os.fork()
         if child == 0:
             try:
