@@ -12,7 +12,7 @@ from typing import Protocol
 
 from daq.cards.derived import channels_of
 from daq.cards.frame import FrameCard
-from daq.errors import LinkClosed, ProtocolViolation
+from daq.errors import LinkClosed, LinkLost, ProtocolViolation
 from drivers.decoded import Decoded
 from drivers.health import LinkFault, LinkHealth
 from drivers.links import Link, open_link, wait_readable
@@ -102,10 +102,14 @@ class WireDriver:
         return decoded
 
     def stop(self) -> None:
-        """Whole bytes or none: a full output is reported as LinkLost by the next read, never waited for."""
+        """Never waits: an output that does not take the whole command is a lost link, said at once."""
         link = self._open_link()
-        if self._motion is not None:
-            link.write(self._motion.encode_stop(self._now_s()))
+        if self._motion is None:
+            return
+        command = self._motion.encode_stop(self._now_s())
+        if link.write(command) < len(command):
+            why = "the output is full: the machine may not have heard STOP"
+            raise LinkLost(why, driver=self._card.name, device=link.device)
 
     def close(self) -> None:
         if self._link is not None:

@@ -58,6 +58,8 @@ class PacketsDecoder:
             self._reply_sync.startswith(self._sync) or self._sync.startswith(self._reply_sync)
         ):
             raise CardError((f"link {link.name}: sync and reply_sync begin alike: choose different ones",))
+        self._sync_bytes_max = max(len(self._sync), len(self._reply_sync))
+        self._next = [-1, -1] if self._reply_sync else [-1]
         self._needs_follower = form.check in WEAK
         self._numbering = Numbering(
             form.plan, timing_for(form.plan, link), source=link_number, rate_hz=link.rate_hz
@@ -91,6 +93,7 @@ class PacketsDecoder:
             self._data = b""
             return decoded_block(block, arrival_s, self._fresh_from_s)
         self._data, self._at = data, 0
+        self._next = [-1] * len(self._next)
         sorting = Sorting(self._broken)
         while self._at < len(self._data):
             if self._locked:
@@ -205,19 +208,27 @@ class PacketsDecoder:
 
     def _may_become_sync(self, at: int) -> bool:
         """The data end before it is clear whether a sync stands here."""
-        tail = self._data[at : at + max(len(self._sync), len(self._reply_sync))]
+        tail = self._data[at : at + self._sync_bytes_max]
         if len(tail) < len(self._sync) and self._sync.startswith(tail):
             return True
         return len(tail) < len(self._reply_sync) and self._reply_sync.startswith(tail)
 
     def _next_sync(self, at: int) -> int:
         """Where after `at` a sync begins, or may begin once more bytes are there."""
-        data = self._data
-        places = [data.find(sync, at + 1) for sync in (self._sync, self._reply_sync) if sync]
-        found = [place for place in places if place >= 0]
-        tail = max(at + 1, len(data) + 1 - max(len(self._sync), len(self._reply_sync)))
-        partial = next((place for place in range(tail, len(data)) if self._may_become_sync(place)), len(data))
-        return min([*found, partial])
+        tail = max(at + 1, len(self._data) + 1 - self._sync_bytes_max)
+        whole = min(self._next_of(which, at + 1) for which in range(len(self._next)))
+        if whole < tail:
+            return whole
+        places = range(tail, len(self._data))
+        return min(whole, next((place for place in places if self._may_become_sync(place)), whole))
+
+    def _next_of(self, which: int, at: int) -> int:
+        """Where from `at` on this sync stands, looked for once: finding nothing again and again is
+        quadratic."""
+        if self._next[which] < at:
+            found = self._data.find((self._sync, self._reply_sync)[which], at)
+            self._next[which] = found if found >= 0 else len(self._data)
+        return self._next[which]
 
     def _drop(self, sorting: Sorting, count: int) -> None:
         sorting.discard(count)

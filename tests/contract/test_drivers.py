@@ -9,7 +9,7 @@ import pytest
 from little_machine import PtyMachine, TcpMachine
 from wire_frames import MOTION, lines_frame, packets_frame
 
-from daq.errors import LinkClosed, LinkLost
+from daq.errors import DriverOpenError, LinkClosed, LinkLost, ProtocolViolation
 from daq.stream.block import Block
 from daq.stream.rundata import ChannelData, RunData
 from drivers.contract import ContractBroken, World, check_driver
@@ -34,6 +34,11 @@ def tcp_machine():
     machine.start()
     yield machine
     machine.close()
+
+
+def repeat(count: int, action) -> None:
+    for _ in range(count):
+        action()
 
 
 def pty_frame(port: str, **link):
@@ -73,6 +78,31 @@ def test_tcp_keeps_the_contract(tcp_machine):
         lose=tcp_machine.lose,
     )
     assert check_driver(lambda: WireDriver(tcp_frame(tcp_machine.port)), world) == []
+
+
+def test_nothing_but_garbage_is_a_violation_of_the_protocol(pty_machine):
+    """Another speed, parity or dialect than the card's: said within the resynchronisation budget, not for ever."""
+    frame = pty_frame(pty_machine.port)
+    other = frame.links[0].lines.model_copy(update={"prefix": "X"})
+    link = frame.links[0].model_copy(update={"lines": other})
+    driver = WireDriver(frame.model_copy(update={"links": (link,)}))
+    with pytest.raises(LinkClosed):
+        driver.read(0.0)
+    driver.open()
+    with pytest.raises(ProtocolViolation, match="speed, parity or dialect") as caught:
+        repeat(1000, lambda: driver.read(0.05))
+    assert caught.value.discarded_bytes > 0
+    driver.close()
+
+
+def test_a_stop_that_does_not_go_out_is_said(pty_machine):
+    """A machine that reads nothing: its input fills up, and a stop that is not taken whole is a lost link."""
+    pty_machine.deaf = True
+    driver = WireDriver(pty_frame(pty_machine.port))
+    driver.open()
+    with pytest.raises(LinkLost, match="may not have heard STOP"):
+        repeat(100_000, driver.stop)
+    driver.close()
 
 
 def recording() -> RunData:
@@ -179,8 +209,6 @@ def test_a_driver_that_moves_at_opening_is_found():
 
 def test_recordings_without_the_channel_are_refused():
     frame = tcp_frame(1)
-    from daq.errors import DriverOpenError
-
     with pytest.raises(DriverOpenError, match="no channel force"):
         recorded_run(RunData({}, (), {}), frame, 0)
     empty = Recorded(np.empty(0, dtype=np.int64), np.empty(0), np.empty((0, 1)))
