@@ -34,9 +34,9 @@ from daq.stream.payloads import unpack_event
 
 PROBLEMS_MAX = 100
 CHILD_MEMORY_BYTES = 2 << 30
-CHILD_SECONDS_MIN = 10.0
-CHILD_BYTES_PER_S = 4e6  # a tenth of what was measured: time limit of large files
-_ROWS_AT_ONCE = 50_000
+CHILD_SECONDS_LEAST = 10.0
+CHILD_BYTES_PER_S = 3e5  # a twelfth of what was measured with entries of one millisecond
+COMPARE_ENTRIES = 20_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -75,7 +75,7 @@ def verify(path: Path) -> Report:
 
 
 def _in_child(path: Path) -> Report:
-    limit_s = max(CHILD_SECONDS_MIN, path.stat().st_size / CHILD_BYTES_PER_S)
+    limit_s = CHILD_SECONDS_LEAST + path.stat().st_size / CHILD_BYTES_PER_S
     command = [sys.executable, "-m", "daq.record.verify", str(path)]
     try:
         done = subprocess.run(command, capture_output=True, timeout=limit_s, check=False)
@@ -202,7 +202,7 @@ class _Checker:
                     rows.feed(entry)
                     if is_event(entry, COUNTED):
                         self._check_count(rows, unpack_event(entry.payload))
-                    if self._entries % 1000 == 0:
+                    if self._entries % COMPARE_ENTRIES == 0:
                         self._compare(compare, rows.take())
         except EntryDamaged as error:
             self._bad(f"/stream after byte {place} (sequence {last}): {error.why}")
