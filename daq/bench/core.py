@@ -222,7 +222,7 @@ class BenchCore:
     def _heed(self, fact: MotionFact, now_ns: int) -> None:
         now_s = self.seconds(now_ns)
         if isinstance(fact, InputsKnown):
-            known: dict[str, bool | None] = {name: active for name, active in fact.inputs.items()}
+            known: dict[str, bool | None] = {**fact.inputs}
             self._obey(self.pipeline.inputs(known, now_s), now_ns)
         elif isinstance(fact, NotAnswered):
             self._obey(self.pipeline.fault("not_answered", fact.command, now_s), now_ns)

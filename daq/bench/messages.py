@@ -28,6 +28,7 @@ CLASSES: Mapping[str, type[Any]] = {
         requests.Reset,
         requests.Note,
         requests.TightenLimit,
+        requests.Prove,
     )
 }
 

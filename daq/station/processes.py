@@ -110,15 +110,12 @@ def archivist(config: Mapping[str, Any], life: Life) -> int:
     from daq.record.archivist import run_archivist
     from daq.record.recorder import drain_ring
     from daq.record.recover import recover
-    from daq.results.reduce import reduce
+    from daq.results.reduce import result_mapping
 
     places = places_of(config)
     report = Reporter("archivist", places.station_socket)
     journal = places.journal(config["stream_id"])
     copy_to = Path(config["copy_to"]) if config.get("copy_to") else None
-
-    def result_of(run: Any) -> Mapping[str, Any]:
-        return reduce(run).as_json()
 
     life.ready()
     own_ring = Path(config["ring_path"])
@@ -128,11 +125,11 @@ def archivist(config: Mapping[str, Any], life: Life) -> int:
     for leftover in sorted(places.spool.glob("journal-*")):
         if leftover != journal:
             report({"report": "recovering", "journal": leftover.name})
-            recover(leftover, places.data, reduce=result_of, report=report, pulse=life.over)
+            recover(leftover, places.data, reduce=result_mapping, report=report, pulse=life.over)
     if await_until(journal.is_dir, life):
-        run_archivist(journal, places.data, places.spool, result_of, report, life.over, copy_to)
+        run_archivist(journal, places.data, places.spool, result_mapping, report, life.over, copy_to)
         if life.orderly:  # the recorder has ended before us: everything is sealed, clear up
-            recover(journal, places.data, reduce=result_of, report=report)
+            recover(journal, places.data, reduce=result_mapping, report=report)
     return 0
 
 

@@ -58,6 +58,7 @@ class Outfit:
     fifo: bool = True
     copy_to: str | None = None
     restarts_max: int = RESTARTS_MAX
+    bench_module: str = "daq.bench.loop"  # benchmarks start the same process with instruments around it
 
 
 class Supervisor:
@@ -156,7 +157,7 @@ class Supervisor:
 
     def _spawn(self, role: str, extra: dict[str, Any], pass_fds: tuple[int, ...] = ()) -> None:
         ours, theirs = socket.socketpair(socket.AF_UNIX, socket.SOCK_SEQPACKET)
-        module = "daq.bench.loop" if role == "bench" else "daq.station.processes"
+        module = self._outfit.bench_module if role == "bench" else "daq.station.processes"
         words = json.dumps({"life_fd": theirs.fileno(), **extra})
         command = [sys.executable, "-m", module, role, str(self._configs[role]), words]
         process = subprocess.Popen(

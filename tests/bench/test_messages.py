@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import get_args
+
 import pytest
 
 from daq.bench.messages import CLASSES, decode, encode_request, encode_snapshot_request
@@ -17,6 +19,7 @@ EXAMPLES = (
     requests.Reset("Ines", looked=True),
     requests.Note("click"),
     requests.TightenLimit("force_n_max", 300.0),
+    requests.Prove("Ines", polarity=True),
 )
 
 
@@ -26,7 +29,8 @@ def test_round_trip(request_: requests.Request) -> None:
 
 
 def test_every_request_has_an_example() -> None:
-    assert {type(one).__name__ for one in EXAMPLES} <= set(CLASSES)
+    known = {cls.__name__ for cls in get_args(requests.Request)}
+    assert {type(one).__name__ for one in EXAMPLES} == set(CLASSES) == known
 
 
 def test_snapshot() -> None:

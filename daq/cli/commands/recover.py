@@ -24,10 +24,10 @@ def command(journals: tuple[Path, ...], data: Path) -> None:
     Example: midspan recover records/.spool/kiln-lane-a/journal-* --data records
     """
     from daq.record.recover import recover
-    from daq.results.reduce import reduce
+    from daq.results.reduce import result_mapping
 
     for journal in journals:
-        records = recover(journal, data, reduce=lambda run: reduce(run).as_json(), report=say)
+        records = recover(journal, data, reduce=result_mapping, report=say)
         click.echo(f"{journal}: {len(records)} records")
 
 
