@@ -43,7 +43,7 @@ class Controller:
         self._frame, self._card = frame, card
         self.crosshead = _crosshead(frame, card)
         self.force_rate_n_s: float | None = None  # wanted of the machine's own force loop
-        self._speed_factor = 1 + card.drive.speed_error_percent / 100
+        self._slip = (1.0, -math.inf)  # factor of a speed slip, until when
         self._switches: dict[InputName, bool] = dict.fromkeys(SWITCHES, False)
         self._faults: dict[str, float] = {}  # what is wrong, until when
         self._ends: list[tuple[float, InputName]] = []  # switches that go back by themselves
@@ -121,10 +121,10 @@ class Controller:
 
     def strike(self, fault: MachineFault | SpeedSlip, now_s: float) -> None:
         """A misfortune of the controller begins. A speed slip shows from the next motion on."""
-        if isinstance(fault, SpeedSlip):
-            self._speed_factor *= fault.factor
-            return
         until_s = math.inf if fault.for_s is None else now_s + fault.for_s
+        if isinstance(fault, SpeedSlip):
+            self._slip = (fault.factor, until_s)
+            return
         if fault.kind not in SWITCH_FAULTS:
             self._faults[fault.kind] = until_s
             return
@@ -138,7 +138,7 @@ class Controller:
         self._faults.clear()
         self._ends.clear()
         self._switches = dict.fromkeys(SWITCHES, False)
-        self._speed_factor = 1 + self._card.drive.speed_error_percent / 100
+        self._slip = (1.0, -math.inf)
 
     # --- inside -------------------------------------------------------------------------------------
     def _switch_back(self, now_s: float) -> None:
@@ -187,7 +187,9 @@ class Controller:
         self.force_rate_n_s = None
         self._kept_s = now_s
         effective_s = now_s + self._card.drive.start_latency_s
-        self.crosshead.order(effective_s, Run(speed_mm_min / 60 * self._speed_factor, goal_mm))
+        factor, until_s = self._slip
+        speed_mm_s = speed_mm_min / 60 * (1 + self._card.drive.speed_error_percent / 100)
+        self.crosshead.order(effective_s, Run(speed_mm_s * (factor if now_s < until_s else 1.0), goal_mm))
         return Answer(heard.reply, loads=speed_mm_min > 0)
 
 

@@ -6,7 +6,7 @@ A fault waits for its anchor (a time or a force), fires once (or once per bar wi
 
 from __future__ import annotations
 
-from typing import Annotated, Literal, TypeAlias, get_args
+from typing import Annotated, ClassVar, Literal, TypeAlias, get_args
 
 from pydantic import Field, model_validator
 
@@ -25,6 +25,8 @@ Drop = Annotated[float, Field(gt=0, lt=100), about("%", "share of the force that
 class Fault(Card):
     """When it happens: at most one anchor. Without any it is there from the beginning."""
 
+    LASTS: ClassVar[bool] = True  # for_s has a meaning
+
     at_s: Annotated[NotNegative | None, about("s", "since power-on")] = None
     after_start_s: Annotated[
         NotNegative | None, about("s", "since the crosshead was first told to move towards this bar")
@@ -42,11 +44,15 @@ class Fault(Card):
         anchors = (self.at_s, self.after_start_s, self.after_contact_s, self.at_force_n)
         if sum(anchor is not None for anchor in anchors) > 1:
             raise ValueError("at most one of at_s, after_start_s, after_contact_s, at_force_n")
+        if self.for_s is not None and not self.LASTS:
+            raise ValueError("for_s has no meaning here: it happens at once and stays")
         return self
 
 
 class Glitch(Fault):
     """A spike of some samples on one channel."""
+
+    LASTS = False
 
     kind: Annotated[Literal["glitch"], about("", "what goes wrong")]
     channel: ChannelName = "force"
@@ -119,12 +125,16 @@ class SpeedSlip(Fault):
 class Slip(Fault):
     """The bar or a roller shifts: the force drops, the stiffness stays."""
 
+    LASTS = False
+
     kind: Annotated[Literal["slip"], about("", "what goes wrong")]
     percent: Drop
 
 
 class PopIn(Fault):
     """An arrested crack: the force drops and the bar is softer from then on."""
+
+    LASTS = False
 
     kind: Annotated[Literal["pop-in"], about("", "what goes wrong")]
     percent: Drop
@@ -138,6 +148,8 @@ class PopIn(Fault):
 
 class Fixturing(Fault):
     """What is in the fixture instead of a bar: nothing, or something that does not give."""
+
+    LASTS = False
 
     kind: Annotated[Literal["no-specimen", "blocked"], about("", "what goes wrong")]
     stiffness_n_mm: Annotated[Positive, about("N/mm", "of the whole load train when blocked")] = 20_000.0

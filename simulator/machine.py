@@ -69,7 +69,7 @@ class Machine:
         self._schedule = Schedule(card.faults)
         for fault in card.faults:
             self._check(fault)
-        self._resting_n = 0.0
+        self._resting_n, self._resting_until_s = 0.0, math.inf
         self._touched = False
         self._awaiting: Bar | None = None
         self._grip = self._empty()
@@ -208,7 +208,7 @@ class Machine:
         """All misfortunes end, switches go back; what broke stays broken."""
         self._schedule.clear()
         self._controller.clear()
-        self._resting_n = 0.0
+        self._resting_n, self._resting_until_s = 0.0, math.inf
         for sampler in self._samplers:
             for sensor in sampler.sensors:
                 sensor.clear()
@@ -225,6 +225,7 @@ class Machine:
         coming: list[tuple[float, Act]] = [
             (self._controller.next_s(), self._controller_acts),
             (self._schedule.next_s(), self._fault_due),
+            (self._resting_until_s, self._halves_go),
         ]
         law = self._grip.law
         if law is None or self._grip.parting is not None:
@@ -295,6 +296,9 @@ class Machine:
         for fault in self._schedule.due(now_s, -math.inf):
             self._apply(fault, now_s)
 
+    def _halves_go(self, _: float) -> None:
+        self._resting_n, self._resting_until_s = 0.0, math.inf
+
     def _force_due(self, now_s: float) -> None:
         for fault in self._schedule.due(-math.inf, self._schedule.next_force_n()):
             self._apply(fault, now_s)
@@ -322,6 +326,7 @@ class Machine:
             self._controller.strike(fault, now_s)
         elif isinstance(fault, HalvesLeft):
             self._resting_n = fault.force_n if self._frame.cell.position == "supports" else 0.0
+            self._resting_until_s = math.inf if fault.for_s is None else now_s + fault.for_s
         else:
             self._apply_to_bar(fault, now_s)
 

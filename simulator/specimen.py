@@ -9,7 +9,7 @@ from typing import Annotated
 import numpy as np
 from pydantic import Field
 
-from daq.cards.base import Card, FileName, NotNegative, Positive
+from daq.cards.base import Card, FileName, NotNegative, Positive, about
 from daq.cards.frame import Fixture
 from daq.mechanics.deflection import (
     load_point_stiffness_n_mm,
@@ -29,17 +29,21 @@ Readings = Positive | tuple[Positive, ...]
 class InHand(Card):
     """A bar about to be mounted. What is left out comes from the card; a sheet's row fits as it is."""
 
-    number: FileName
-    width_mm: Readings | None = None
-    thickness_mm: Readings | None = None
-    inner_diameter_mm: NotNegative | None = None
-    chamfer_mm: NotNegative | None = None
-    strength_mpa: Positive | None = None  # instead of the drawn one: nominal stress at the break
-    break_at_mm: float | None = None  # instead of the drawn one: from the middle
-    strength_factor: Positive = 1.0  # a trend over the series
-    length_mm: Positive | None = None  # of no meaning here
-    batch: str = ""
-    note: Annotated[str, Field(max_length=400)] = ""
+    number: Annotated[FileName, about("", "number of the bar; the same number is always the same bar")]
+    width_mm: Annotated[Readings | None, about("mm", "width, or readings of it")] = None
+    thickness_mm: Annotated[Readings | None, about("mm", "thickness or diameter, or readings of it")] = None
+    inner_diameter_mm: Annotated[NotNegative | None, about("mm", "bore of a tube")] = None
+    chamfer_mm: Annotated[NotNegative | None, about("mm", "leg of the chamfers")] = None
+    strength_mpa: Annotated[
+        Positive | None, about("MPa", "stress at the break, instead of the drawn one")
+    ] = None
+    break_at_mm: Annotated[
+        float | None, about("mm", "place of the break from the middle, instead of the drawn one")
+    ] = None
+    strength_factor: Annotated[Positive, about("", "the strength is multiplied by this: a trend")] = 1.0
+    length_mm: Annotated[Positive | None, about("mm", "of no meaning here")] = None
+    batch: Annotated[str, Field(max_length=80), about("", "of no meaning here")] = ""
+    note: Annotated[str, Field(max_length=400), about("", "of no meaning here")] = ""
 
 
 @dataclass(frozen=True, slots=True)

@@ -44,18 +44,22 @@ def cards_markdown() -> str:
     """The whole page."""
     parts = [INTRODUCTION]
     for kind, model in CARDS.items():
-        parts.append(f"## {kind.capitalize()} card\n\n{model.__doc__}\n")
-        parts.extend(_tables(model, ()))
+        parts.append(card_section(f"{kind.capitalize()} card", model))
     parts.append(SHEET)
     parts.append("What is kept of each bar:\n\n" + "\n".join(_rows(Specimen, ())) + "\n")
     return "\n".join(parts)
 
 
-def _tables(model: type[Card], path: Path) -> Iterator[str]:
+def card_section(title: str, model: type[Card], without: tuple[str, ...] = ()) -> str:
+    """One card: its tables, but for keys told elsewhere."""
+    return "\n".join([f"## {title}\n\n{model.__doc__}\n", *_tables(model, (), without)])
+
+
+def _tables(model: type[Card], path: Path, without: tuple[str, ...] = ()) -> Iterator[str]:
     """The table of one level, then those below it."""
     if path:
         yield f"### `{_title(model, path)}`\n"
-    yield "\n".join(_rows(model, path)) + "\n"
+    yield "\n".join(_rows(model, path, without)) + "\n"
     for key in keys_at(model, path):
         below: Path = (*path, key)
         if keys_at(model, below):
@@ -70,10 +74,10 @@ def _title(model: type[Card], path: Path) -> str:
     return f"[[{name}]]" if path[-1] == 0 else f"[{name}]"
 
 
-def _rows(model: type[Card], path: Path) -> Iterator[str]:
+def _rows(model: type[Card], path: Path, without: tuple[str, ...] = ()) -> Iterator[str]:
     yield "| key | unit | allowed | default | meaning |"
     yield "|---|---|---|---|---|"
-    for key in keys_at(model, path):
+    for key in (key for key in keys_at(model, path) if key not in without):
         at: Path = (*path, key)
         cells = (
             f"`{key}`",

@@ -280,6 +280,13 @@ def test_halves_are_weighed_only_under_the_supports(make):
     assert crosshead.advance(1.0)[0].counts[-1, 0] == 0.0
 
 
+def test_halves_may_be_taken_away(make):
+    machine = make(None, faults=[{"kind": "halves-left", "force_n": 2.6, "at_s": 0.5, "for_s": 1.0}])
+    (rows,) = machine.advance(2.0)
+    loaded = rows.counts[:, 0] > 0
+    assert rows.time_s[loaded] == pytest.approx(np.arange(501, 1501) * 1e-3)
+
+
 def test_speed_errors_and_slips_of_the_drive(make):
     machine = make(None, drive={"speed_error_percent": 2.0}, faults=[{"kind": "speed-slip", "factor": 60.0}])
     start(machine, 0.5, 0.1)

@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 
 from daq.cards.frame import Fixture
+from daq.cards.series import Specimen
 from daq.errors import CardError
 from simulator.card import Contact, SimulatorCard
 from simulator.grip import Grip
@@ -159,3 +160,24 @@ def test_a_softening_bar_breaks_at_its_strength(make_card):
     assert law.force_at(at_break) == pytest.approx(bar.break_n)
     straight = Law(law.stiffness_n_mm, law.origin_mm)
     assert law.slope_at(at_break) / straight.slope_at(at_break) == pytest.approx(0.85, rel=1e-6)
+
+
+def test_hands_take_every_key_of_a_bench_sheet():
+    assert set(Specimen.model_fields) <= set(InHand.model_fields)
+
+
+def test_every_fault_of_a_card_is_told_in_one_line(make_card):
+    """File, key, value, what is allowed, what to do; misfortunes by their own kind."""
+    bad = {
+        "bar": {"modulus_gpa": "380"},
+        "drive": {"stifness_n_mm": 1.0},
+        "faults": [{"kind": "glich"}, {"kind": "slip"}],
+    }
+    with pytest.raises(CardError) as raised:
+        make_card(**bad)
+    lines = raised.value.problems
+    assert len(lines) == 4
+    assert any("bar.modulus_gpa = '380'" in line and "GPa" in line for line in lines)
+    assert any("drive.stifness_n_mm" in line and "did you mean stiffness_n_mm?" in line for line in lines)
+    assert any("faults[#1].kind = 'glich'" in line and "glitch" in line for line in lines)
+    assert any("faults[#2].percent" in line and "%" in line for line in lines)

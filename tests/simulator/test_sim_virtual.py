@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -12,6 +13,7 @@ from hypothesis import strategies as st
 from daq.cards.load import load_frame
 from drivers.registry import decoder_for
 from simulator.card import load_simulator, simulator_from
+from simulator.doc import simulator_markdown
 from simulator.hands import FAULT, Hands
 from simulator.schedule import Schedule
 from simulator.specimen import InHand
@@ -240,6 +242,11 @@ def test_two_anchors_are_refused():
         fault(at_s=1.0, at_force_n=5.0)
 
 
+def test_what_happens_at_once_does_not_last():
+    with pytest.raises(ValueError, match="for_s has no meaning"):
+        fault(for_s=1.0)
+
+
 def test_hands_do_what_they_are_told(make):
     wire = make(bar=None)
     hands = Hands(wire, truthful=True)
@@ -276,6 +283,13 @@ def test_hands_do_what_they_are_told(make):
 )
 def test_hands_refuse_what_they_do_not_understand(make, line):
     assert "refused" in Hands(make(), truthful=True).do(line)
+
+
+def test_the_page_about_simulator_cards_is_fresh():
+    page = Path(__file__).parents[2] / "docs" / "simulator.md"
+    assert page.read_text(encoding="utf-8") == simulator_markdown(), (
+        "python -m simulator.doc > docs/simulator.md"
+    )
 
 
 def test_shipped_cards_load_and_play(shipped):
