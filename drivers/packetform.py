@@ -139,7 +139,8 @@ class PacketForm:
         if width == 3:
             return _whole_24(part if self._endian == "little" else part[:, ::-1], signed=number == "int24")
         typed = np.ascontiguousarray(part).view(f"{self._sign}{number[0]}{width}")
-        return typed[:, 0].astype(np.float64)
+        with np.errstate(invalid="ignore"):  # a signalling NaN is a NaN, not a warning
+            return typed[:, 0].astype(np.float64)
 
     def _octets_of(self, values: Floats, number: Number) -> Octets:
         width = WIDTH[number]

@@ -76,6 +76,17 @@ def test_numbers_are_those_of_struct(endian, number, letter, values):
         assert np.array_equal(found, values, equal_nan=True)
 
 
+def test_a_signalling_nan_is_a_nan():
+    """The bytes 7f800001: numpy warns when it widens them; a decoder must not (found by random bytes)."""
+    frame = packets_frame(
+        {"sync": "fa", "endian": "big", "fields": [{"name": "f", "number": "float32"}]}, FORCE[:1]
+    )
+    stream = bytes.fromhex("fa7f800001") * 3
+    for scalar_rows in (0, 10**9):
+        result = decode(PacketsDecoder(frame, 0, scalar_rows=scalar_rows), [stream])
+        assert np.isnan([row[0] for _, row in result.rows]).all() and len(result.rows) == 3
+
+
 @pytest.mark.parametrize("endian", ["little", "big"])
 @pytest.mark.parametrize("number", ["int24", "uint24"])
 def test_24_bit_numbers_have_the_sign_in_bit_23(endian, number):
