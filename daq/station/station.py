@@ -273,7 +273,7 @@ class Station:
                 self._reports[str(report.get("from"))] = report
 
     def _note_archivist(self, report: Mapping[str, Any]) -> None:
-        if report.get("report") not in ("recovering", "sealed"):
+        if report.get("report") == "status":    # what recovery says meanwhile is not yet its end
             self._caught_up.set()
 
     async def _on_sealed(self, report: Mapping[str, Any]) -> None:
