@@ -68,6 +68,7 @@ class Run:
 
     __slots__ = (
         "aftermath",
+        "back_mm_max",
         "contact_mm",
         "contact_s",
         "drop",
@@ -101,6 +102,7 @@ class Run:
         self.started_s: float | None = None
         self.start_mm: float | None = None
         self.contact_mm: float | None = None
+        self.back_mm_max = float("inf")
         self.contact_s: float | None = None
         self.held_since_s: float | None = None
         self.seating: Seating | None = None
@@ -234,6 +236,7 @@ class Core:
         self.move_now, self.move_s = move, self.clock_s
         self.move_from_mm = self.travel.at_mm if self.travel else None
         if self.travel is not None and self.travel.at_mm is not None:
+            self.travel.begin_move()
             self.speed_watch = SpeedWatch(
                 self.set_speed_mm_s, self.clock_s, self.setup.stop_latency_s, self.travel
             )

@@ -69,7 +69,7 @@ def load_taken_off(core: Core, run: Run) -> None:
     kind.
     """
     what = "crosshead moves away from the specimen"
-    back_mm = core.travel.back_from_top_mm(core.move_s) if core.travel is not None else 0.0
+    back_mm = core.travel.back_mm if core.travel is not None else 0.0
     core.watch.watch(False)
     core.stop(what)
     core.go(Cause.LOAD_TAKEN_OFF, what)
@@ -89,7 +89,6 @@ def _broke(core: Core, run: Run, finding: Finding) -> None:
     run.finding, run.peak_n = finding, max(finding.forecast, 0.0)
     severity = Severity.STOP if verdict is Verdict.UNCLEAR else Severity.REMARK
     core.emit("fracture", severity, **_fields(core, finding, verdict))
-    core.watch.watch(False)
     if run.ended:
         run.restart_tail(verdict, core.clock_s)
     core.end_run(verdict, verdict.value)

@@ -13,10 +13,10 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from enum import Enum
-from math import sqrt
 
 from daq.cards.method import FractureSettings
 from daq.stream.block import Floats
+from daq.watch.candidate import Candidate, Rest
 from daq.watch.noise import Level
 
 INFINITE = float("inf")
@@ -28,9 +28,7 @@ PARTIAL_SIGMA, PARTIAL_SHARE = 6.0, 0.01
 SAG_SHARE, SAG_SIGMA, SAG_S, SAG_RATE_SHARE = 0.95, 3.0, 0.5, 0.1
 BACKSTOP_SAMPLES, BACKSTOP_CONFIRMS = 3, 2.0
 SUDDEN_S, SUDDEN_PERIODS, SUDDEN_LAGS = 0.02, 3.5, 3.0
-NEGATIVE_SHARE, NEGATIVE_SIGMA = 0.2, 20.0
 TWIN_S = 0.5  # partial drops closer than this count together towards the lasting drop
-DULL_SAMPLES, DULL_SIGMA = 8, 0.05
 
 
 class Kind(Enum):
@@ -44,6 +42,7 @@ class Kind(Enum):
 
 
 ENDS_RUN = frozenset({Kind.SUDDEN, Kind.GRADUAL, Kind.LASTING})
+ENDS_WATCH = ENDS_RUN | {Kind.LOST}
 
 
 @dataclass(frozen=True, slots=True)
@@ -65,95 +64,6 @@ class Finding:
     sigma_n: float
     fall_s: float
     samples: int
-
-
-@dataclass(frozen=True, slots=True)
-class Rest:
-    """What the signal looks like at rest: a converter too coarse to show noise is not a dead one."""
-
-    low: float = INFINITE
-    high: float = -INFINITE
-    dull: bool = False
-    step: float = 0.0
-
-
-class Candidate:
-    """An open question: samples since the first that lay outside, against the line as it stood then."""
-
-    __slots__ = (
-        "at_n",
-        "decide_s",
-        "head",
-        "last_good_index",
-        "last_good_s",
-        "limit",
-        "low",
-        "lows",
-        "near",
-        "nears",
-        "origin_s",
-        "sigma_n",
-        "slope_n_s",
-        "sum",
-        "times_s",
-        "values",
-    )
-
-    def __init__(self, level: Level, limit: float, last_good_s: float, last_good_index: int) -> None:
-        self.at_n, self.slope_n_s, self.origin_s = level.at_n, level.slope_n_s, level.origin_s
-        self.sigma_n, self.limit = level.sigma_n, limit
-        self.last_good_s, self.last_good_index = last_good_s, last_good_index
-        self.times_s: list[float] = []
-        self.values: list[float] = []
-        self.lows: list[bool] = []
-        self.nears: list[bool] = []
-        self.head = self.low = self.near = 0
-        self.sum = 0.0
-        self.decide_s = -INFINITE
-
-    def forecast(self, time_s: float) -> float:
-        return self.at_n + self.slope_n_s * (time_s - self.origin_s)
-
-    def add(self, time_s: float, value: float, low_share: float, window_s: float) -> float:
-        """Take a sample, keep the sums of the last window (at least three samples); returns the forecast."""
-        forecast = self.at_n + self.slope_n_s * (time_s - self.origin_s)
-        off = value - forecast
-        low, near = value < low_share * forecast, -self.limit <= 2.0 * off <= self.limit
-        self.times_s.append(time_s)
-        self.values.append(value)
-        self.lows.append(low)
-        self.nears.append(near)
-        self.sum += value
-        self.low += low
-        self.near += near
-        oldest_s, head, count = time_s - window_s, self.head, len(self.values)
-        while count - head > CONFIRM_SAMPLES and self.times_s[head] <= oldest_s:
-            self.sum -= self.values[head]
-            self.low -= self.lows[head]
-            self.near -= self.nears[head]
-            head += 1
-        self.head = head
-        return forecast
-
-    def first_dropped(self) -> int:
-        """Place of the first sample below the threshold; 0 where the candidate began with a kink upward."""
-        for place, (time_s, value) in enumerate(zip(self.times_s, self.values, strict=True)):
-            if value < self.forecast(time_s) - self.limit:
-                return place
-        return 0
-
-    def tail(self) -> int:
-        """Where the last three fifths begin (never fewer than the last window)."""
-        return min(self.head, len(self.values) * 2 // 5)
-
-    def falling(self) -> bool:
-        """Do the last three fifths of the samples still fall, by more than three standard errors?"""
-        times, values = self.times_s[self.tail() :], self.values[self.tail() :]
-        n = len(values)
-        mid_s, _mid_x = sum(times) / n, sum(values) / n
-        spread = sum((t - mid_s) ** 2 for t in times)
-        slope = sum((t - mid_s) * x for t, x in zip(times, values, strict=True)) / spread
-        return slope < -3.0 * self.sigma_n / sqrt(spread)
 
 
 class FractureWatch:
@@ -278,7 +188,10 @@ class FractureWatch:
         if newest > self.highest:
             self.highest = newest
             self._half = self.settings.break_percent / 100.0 * newest
-        return self._sag(time_s, newest) if self.gradual else None
+        found = self._sag(time_s, newest) if self.gradual else None
+        if found is not None:
+            self._end()
+        return found
 
     def _arm(self) -> None:
         """Armed where the forecast has risen above the arming level; stays so until the watch ends."""
@@ -288,7 +201,7 @@ class FractureWatch:
             return
         self.armed = True
         self._bound = level.limit_n
-        self.envelope = self.highest = newest
+        self.envelope = self.highest = self.peak_raw = newest
         self._half = self.settings.break_percent / 100.0 * newest
         self._armed_s = self._envelope_s = newest_s
         self._armed_n = newest
@@ -335,15 +248,26 @@ class FractureWatch:
 
     def _unusual(self, index: int, time_s: float, value: float, residual: float) -> Finding | None:
         if self.candidate is None and not -self._bound <= residual <= self._bound:
-            self.candidate = Candidate(self.level, self._bound, self._good_s, self._good_index)
+            good, share = (self._good_s, self._good_index), self.settings.break_percent / 100.0
+            window_s = self._confirm_s - 0.5 * self.level.period_s
+            self.candidate = Candidate(self.level, self._bound, good, share, window_s)
         found = None
         if self.candidate is not None:
             found = self._examine(self.candidate, time_s, value)
         elif self.level.add(time_s, value, residual):
             found = self._bin_closed(time_s)
-        if found is not None and found.kind in ENDS_RUN:
-            return found
-        return self._backstop(time_s, value) or found
+        if found is None or found.kind not in ENDS_WATCH:
+            found = self._backstop(time_s, value) or found
+        if found is not None and found.kind in ENDS_WATCH:
+            self._end()
+        return found
+
+    def _end(self) -> None:
+        """Decided for good: what comes now is another story, and the level begins with its first samples."""
+        c = self.candidate
+        if c is not None:
+            self.level.begin_anew(c.times_s[c.head :], c.values[c.head :], 0.0)
+        self.watch(False)
 
     def _backstop(self, time_s: float, value: float) -> Finding | None:
         """Below half of the highest level for long enough is a break, however slowly it came."""
@@ -356,71 +280,70 @@ class FractureWatch:
         lasted_s = time_s - self._low_since_s + 1.5 * self.level.period_s
         if self._low_count < BACKSTOP_SAMPLES or lasted_s < BACKSTOP_CONFIRMS * self._confirm_s:
             return None
-        if self.candidate is not None:
-            if self._dull(self.candidate) or self._negative(self.candidate, self.highest):
-                return None
-            return self._broken(self.candidate, "backstop", time_s)
-        return self._slow(Kind.GRADUAL, "backstop", time_s, value)
+        if self.candidate is None:
+            return self._slow(Kind.GRADUAL, "backstop", time_s, value)
+        if self._unlike_a_break(self.candidate):
+            return None
+        return self._broken(self.candidate, "backstop", time_s)
 
     def _examine(self, c: Candidate, time_s: float, value: float) -> Finding | None:
+        c.add(time_s, value)
         period_s = self.level.period_s
-        share = self.settings.break_percent / 100.0
-        forecast = c.add(time_s, value, share, self._confirm_s - 0.5 * period_s)
-        count = len(c.values)
-        window = count - c.head
-        if count >= CONFIRM_SAMPLES and c.times_s[0] <= time_s - self._confirm_s + 1.5 * period_s:
-            is_low = c.lows[-1] and c.low >= LOW_SHARE * window and c.sum < share * forecast * window
-            if is_low and not self._negative(c, forecast) and not self._dull(c):
+        if len(c.values) >= CONFIRM_SAMPLES and c.times_s[0] <= time_s - self._confirm_s + 1.5 * period_s:
+            low = c.lows[-1] and c.low >= LOW_SHARE * c.window and c.mean < c.low_n
+            # one sample more than the window: aliased ringing can keep the newest one high for long (480 Hz at 100 S/s)
+            away = c.times_s[0] <= time_s - self._confirm_s + 0.5 * period_s and c.stays_away()
+            if (low or away) and not self._unlike_a_break(c):
                 return self._broken(c, "confirmed", time_s)
-            if c.nears[-1] and 2 * c.near >= window:
+            if c.nears[-1] and 2 * c.near >= c.window:
                 return self._glitch(c, time_s)
         if time_s - c.times_s[0] + 1.5 * period_s < self._undecided_s or time_s < c.decide_s:
             return None
-        return self._undecided(c, time_s, forecast)
+        return self._undecided(c, time_s)
 
-    def _undecided(self, c: Candidate, time_s: float, forecast: float) -> Finding | None:
+    def _unlike_a_break(self, c: Candidate) -> bool:
+        return c.negative() or c.dull(self.rest, self.level.sigma_rest_n)
+
+    def _undecided(self, c: Candidate, time_s: float) -> Finding | None:
         """Neither break nor glitch after the undecided time."""
-        if self._dull(c):
+        if c.dull(self.rest, self.level.sigma_rest_n):
             return self._decided(c, Kind.LOST, "constant", time_s)
-        if self._negative(c, forecast):
+        if c.negative():
+            if c.shrinks():
+                return self._broken(c, "ringing", time_s)
             return self._decided(c, Kind.LOST, "of the wrong sign", time_s)
-        level_now = c.sum / (len(c.values) - c.head)
-        forecast = c.forecast(0.5 * (c.times_s[c.head] + time_s))  # where the window's mean stands
-        drop, reference = forecast - level_now, forecast
+        tail, reference = c.tail(), c.reference
         if self._last_partial is not None and time_s - self._last_partial[0] < TWIN_S:
-            reference = max(forecast, self._last_partial[1])
-        falling = c.falling()
-        if reference - level_now > self.settings.lasting_percent / 100.0 * reference:
+            reference = max(reference, self._last_partial[1])
+        if reference - c.mean > self.settings.lasting_percent / 100.0 * reference:
             waited_s = time_s - c.times_s[0]
-            if falling and waited_s < FALLING_PATIENCE * self._undecided_s:
-                # a slow fall on its way to the break: the sums are costly at 50 kS/s, so look again a little later
+            if tail.falling and waited_s < FALLING_PATIENCE * self._undecided_s:
+                # on its way to the break; the sums are costly at 50 kS/s, so look again a little later
                 c.decide_s = time_s + 0.1 * self._undecided_s
                 return None
             return self._decided(c, Kind.LASTING, "lasting", time_s)
-        if drop > max(PARTIAL_SIGMA * c.sigma_n, PARTIAL_SHARE * self.envelope) and not falling:
+        drop_min = max(PARTIAL_SIGMA * c.sigma_n, PARTIAL_SHARE * self.envelope)
+        if min(c.drop(), tail.step) > drop_min and not tail.falling:
             found = self._decided(c, Kind.PARTIAL, "partial", time_s)
-            self._last_partial = (time_s, forecast)
+            self._last_partial = (time_s, c.reference)
             self._rebaseline(c, restart_envelope=True)
             return found
-        found = self._decided(c, Kind.REBASELINE, "falling" if drop > 0 else "kink", time_s)
+        found = self._decided(c, Kind.REBASELINE, "falling" if tail.falling else "kink", time_s)
         self._rebaseline(c, restart_envelope=False)
         return found
 
     def _broken(self, c: Candidate, by: str, time_s: float) -> Finding:
         first = c.first_dropped()
-        share = self.settings.break_percent / 100.0
-        half_s = next((t for t, low in zip(c.times_s[first:], c.lows[first:], strict=True) if low), time_s)
         good_s = c.times_s[first - 1] if first else c.last_good_s
-        sudden = half_s - good_s <= self.sudden_s and share > 0
+        sudden = c.first_low_s() - good_s <= self.sudden_s
         return self._decided(c, Kind.SUDDEN if sudden else Kind.GRADUAL, by, time_s)
 
     def _glitch(self, c: Candidate, time_s: float) -> Finding:
         found = self._decided(c, Kind.GLITCH, "back again", time_s)
         self.candidate = None
         index = c.last_good_index
-        for t, x in zip(c.times_s, c.values, strict=True):
+        for t, x, off in zip(c.times_s, c.values, c.off(), strict=True):
             index += 1
-            off = x - c.forecast(t)
             if -c.limit <= off <= c.limit:
                 self._good_s, self._good_index = t, index
                 self.peak_raw = max(self.peak_raw, x)
@@ -430,7 +353,7 @@ class FractureWatch:
 
     def _rebaseline(self, c: Candidate, *, restart_envelope: bool) -> None:
         self.candidate = None
-        tail = c.tail()
+        tail = c.tail_start()
         self.level.begin_anew(c.times_s[tail:], c.values[tail:], None)
         self._bound = self.level.limit_n
         self._good_s, self._good_index = c.times_s[-1], c.last_good_index + len(c.values)
@@ -441,30 +364,10 @@ class FractureWatch:
         else:
             self.peak_raw = max(self.peak_raw, *c.values[tail:])
 
-    def _dull(self, c: Candidate) -> bool:
-        """Constant, or far quieter than the signal at rest: no break looks like that, a dead signal does."""
-        window = c.values[c.head :]
-        low, high = min(window), max(window)
-        quiet = len(window) >= DULL_SAMPLES and high - low <= DULL_SIGMA * self.level.sigma_rest_n
-        if low != high and not quiet:
-            return False
-        rest = self.rest
-        return not (rest.dull and rest.low - rest.step <= low and high <= rest.high + rest.step)
-
-    def _negative(self, c: Candidate, forecast: float) -> bool:
-        """A ring-down swings about what is left on the bar; a level well below zero is a signal of the wrong
-        sign.
-        """
-        level = c.sum / (len(c.values) - c.head)
-        return level < -max(NEGATIVE_SHARE * forecast, NEGATIVE_SIGMA * c.sigma_n)
-
     def _decided(self, c: Candidate, kind: Kind, by: str, time_s: float) -> Finding:
-        first = c.first_dropped()
+        first, off = c.first_dropped(), c.off()
         good_s = c.times_s[first - 1] if first else c.last_good_s
         onset_s = 0.5 * (good_s + c.times_s[first])
-        level_now = c.sum / (len(c.values) - c.head)
-        half_s = next((t for t, low in zip(c.times_s, c.lows, strict=True) if low), time_s)
-        off = [x - c.forecast(t) for t, x in zip(c.times_s, c.values, strict=True)]
         return Finding(
             kind=kind,
             by=by,
@@ -476,11 +379,9 @@ class FractureWatch:
             peak_raw=self.peak_raw,
             forecast=c.forecast(onset_s),
             slope_n_s=c.slope_n_s,
-            level=level_now,
-            drop=c.forecast(0.5 * (c.times_s[c.head] + time_s)) - level_now
-            if kind is not Kind.GLITCH
-            else max(off, key=abs),
+            level=c.mean,
+            drop=max(off, key=abs) if kind is Kind.GLITCH else c.drop(),
             sigma_n=c.sigma_n,
-            fall_s=half_s - good_s,
+            fall_s=c.first_low_s() - good_s,
             samples=sum(not -c.limit <= o <= c.limit for o in off),
         )

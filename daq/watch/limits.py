@@ -138,11 +138,11 @@ def run_limits(setup: WatchSetup, run: RunSetup, sigma_n: float) -> ForceLimits:
 class ForceJudge:
     """Judges gross force sample by sample; carries how many samples in a row lay outside each limit."""
 
-    __slots__ = ("_outside", "_rows", "high_n", "low_n", "outliers")
+    __slots__ = ("_rows", "high_n", "low_n", "outliers", "outside")
 
     def __init__(self, limits: ForceLimits) -> None:
         self.outliers = 0
-        self._outside: dict[int, int] = {}
+        self.outside: dict[int, int] = {}  # place of a row -> samples outside it so far
         self.take(limits)
 
     def take(self, limits: ForceLimits) -> None:
@@ -158,18 +158,10 @@ class ForceJudge:
             (5, limits.wrong_sign_n, INFINITE, 2, Reaction.STOP),
         )
 
-    @property
-    def pending(self) -> bool:
-        """A first sample outside is waiting for its second."""
-        return bool(self._outside)
-
-    def inside(self) -> bool:
-        """To be called for a sample inside [low_n, high_n]; True if a lone outlier came before it."""
-        if not self._outside:
-            return False
-        self._outside.clear()
+    def inside(self) -> None:
+        """A sample inside [low_n, high_n] after one that was not: the lone outlier is counted."""
+        self.outside.clear()
         self.outliers += 1
-        return True
 
     def judge(self, gross_n: float) -> Trip | None:
         """One sample that is not inside [low_n, high_n]; the gravest row that is passed, or None."""
@@ -178,9 +170,9 @@ class ForceJudge:
         passed = None
         for place, (row, low_n, high_n, samples, reaction) in enumerate(self._rows):
             if low_n <= gross_n <= high_n:
-                self._outside.pop(place, None)
+                self.outside.pop(place, None)
                 continue
-            self._outside[place] = count = self._outside.get(place, 0) + 1
+            self.outside[place] = count = self.outside.get(place, 0) + 1
             if count >= samples and passed is None:
                 passed = Trip(row, gross_n, high_n if gross_n > high_n else low_n, "N", reaction)
         return passed

@@ -28,7 +28,7 @@ FLAT_TOE_TIMES = 4.0  # a padded fixture's toe begins at about a tenth of the fi
 CEILING_TIMES, CEILING_MM_MIN = 2.5, 0.2
 SOFT_END_MM = 2.0
 SPEED_SHARE, SPEED_S = 0.2, 0.5
-STANDS_SHARE = 0.05
+STANDS_SHARE, SPEED_EVERY_S = 0.05, 0.1
 BACK_MM_MIN = 0.005
 
 
@@ -131,33 +131,29 @@ class Flat:
 class PositionJudge:
     """Rows 9, 11 and 13: bands of the position along the way towards the specimen; two samples in a row."""
 
-    __slots__ = ("_outside", "_rows", "high_mm", "low_mm")
+    __slots__ = ("_rows", "high_mm", "low_mm", "outside")
 
     def __init__(self) -> None:
-        self._outside: dict[int, int] = {}
+        self.outside: dict[int, int] = {}
         self.take(())
 
     def take(self, rows: tuple[tuple[int, float, float], ...]) -> None:
         """rows: (row, low_mm, high_mm)."""
         self._rows = rows
-        self._outside.clear()
+        self.outside.clear()
         self.low_mm = max((low for _, low, _ in rows), default=-INFINITE)
         self.high_mm = min((high for _, _, high in rows), default=INFINITE)
 
-    @property
-    def pending(self) -> bool:
-        return bool(self._outside)
-
     def inside(self) -> None:
-        self._outside.clear()
+        self.outside.clear()
 
     def judge(self, at_mm: float) -> Trip | None:
         passed = None
         for place, (row, low, high) in enumerate(self._rows):
             if low <= at_mm <= high:
-                self._outside.pop(place, None)
+                self.outside.pop(place, None)
                 continue
-            self._outside[place] = count = self._outside.get(place, 0) + 1
+            self.outside[place] = count = self.outside.get(place, 0) + 1
             if count >= 2 and passed is None:
                 passed = Trip(row, at_mm, high if at_mm > high else low, "mm", Reaction.STOP)
         return passed
@@ -175,18 +171,19 @@ def soft_ends(motion: Motion, speed_mm_s: float, towards: int) -> tuple[int, flo
 class SpeedWatch:
     """Row 14: off by a fifth of the set speed for half a second: caution. The other way at once: stop."""
 
-    __slots__ = ("_begun_s", "_off_since_s", "_set_mm_s", "_told", "_window_s", "stands")
+    __slots__ = ("_due_s", "_off_since_s", "_set_mm_s", "_told", "_window_s", "stands")
 
     def __init__(self, set_mm_s: float, begun_s: float, latency_s: float, travel: Travel) -> None:
         self._set_mm_s, self._told, self.stands = set_mm_s, False, False
         needed_s = 10.0 * travel.resolution_mm / abs(set_mm_s)
         self._window_s = min(max(SPEED_S, needed_s, 5.0 * travel.spacing_s), 2.0)
-        self._begun_s = begun_s + 2.0 * latency_s + self._window_s
+        self._due_s = begun_s + 2.0 * latency_s + self._window_s
         self._off_since_s: float | None = None
 
     def judge(self, now_s: float, travel: Travel) -> Trip | None:
-        if self._told or now_s < self._begun_s:
+        if self._told or now_s < self._due_s:
             return None
+        self._due_s = now_s + SPEED_EVERY_S
         speed = travel.speed_mm_s(self._window_s)
         if speed is None:
             return None

@@ -163,8 +163,8 @@ class Level:
 
     def _refresh(self) -> None:
         kept = len(self._kept)
-        # about 32 refreshes per noise window: a median each time would cost more than everything else together
-        self._refresh_left = max(1, self._kept.maxlen * self.stride // (32 * self.bin_samples))  # type: ignore[operator]
+        # about 16 refreshes per noise window: a median each time would cost more than everything else together
+        self._refresh_left = max(1, self._kept.maxlen * self.stride // (16 * self.bin_samples))  # type: ignore[operator]
         if kept < NOISE_KEPT_TO_BELIEVE:
             return
         median = sorted(self._kept)[kept // 2]

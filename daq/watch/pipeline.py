@@ -157,7 +157,8 @@ class Pipeline:
         core = self._core
         judge = core.judge
         if judge.low_n <= gross_n <= judge.high_n:
-            if judge.pending and judge.inside():
+            if judge.outside:
+                judge.inside()
                 core.emit("limit_outlier", outliers=judge.outliers)
         elif not self._outside(time_s, gross_n):
             core.gross_n = NAN
@@ -237,7 +238,7 @@ class Pipeline:
         core, times_s = self._core, block.time_s[part]
         judge = core.judge
         inside = judge.low_n <= float(gross_n.min()) and float(gross_n.max()) <= judge.high_n
-        if judge.pending or not inside or (at_mm is not None and not position.quiet(core, at_mm)):
+        if judge.outside or not inside or (at_mm is not None and not position.quiet(core, at_mm)):
             return False
         needed = core.frozen_samples
         if needed is not None and self._repeats.longest(counts) + 1 >= needed:

@@ -25,7 +25,7 @@ def sample(core: Core, time_s: float, count: float) -> None:
     travel.feed(time_s, at_mm)
     bands = core.bands
     if bands.low_mm <= at_mm <= bands.high_mm:
-        if bands.pending:
+        if bands.outside:
             bands.inside()
         return
     trip = bands.judge(at_mm)
@@ -58,7 +58,7 @@ def quiet(core: Core, at_mm: Floats) -> bool:
     """True if no sample of this stretch is outside its bands, or no number."""
     bands = core.bands
     inside = bands.low_mm <= float(at_mm.min()) and float(at_mm.max()) <= bands.high_mm
-    return inside and not bands.pending and bool(np.isfinite(at_mm).all())
+    return inside and not bands.outside and bool(np.isfinite(at_mm).all())
 
 
 def take(core: Core, times_s: Floats, at_mm: Floats) -> None:

@@ -158,6 +158,8 @@ def _begin_seating(core: Core, run: Run) -> None:
         speed_mm_s=expected.speed_mm_min / SECONDS_PER_MINUTE,
         contact_mm=run.contact_mm,
     )
+    if core.travel is not None:
+        run.back_mm_max = back_mm_min(core.travel, expected.deflection_mm)
     run.flat = Flat(expected.stiffness_n_mm, expected.deflection_mm, core.watch.level)
     speed = run.plan.method.preload.seating_mm_min or expected.speed_mm_min
     _load(core, run, min(speed, expected.speed_mm_min))
@@ -250,10 +252,8 @@ def _watched(core: Core, run: Run, net_n: float) -> None:
         if trip is not None:
             core.trip(trip)
             return
-    if core.travel is not None and at_mm is not None:
-        back_mm = core.travel.back_from_top_mm(core.move_s)
-        if back_mm > back_mm_min(core.travel, run.plan.expected.deflection_mm):
-            load_taken_off(core, run)
+    if core.travel is not None and at_mm is not None and core.travel.back_mm > run.back_mm_max:
+        load_taken_off(core, run)
 
 
 def _tell_seating(core: Core, run: Run, found: Seated | str | None) -> None:

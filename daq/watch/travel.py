@@ -22,7 +22,7 @@ POINTS_MIN = 4
 class Travel:
     """The last seconds of crosshead positions, mm, growing towards the specimen."""
 
-    __slots__ = ("_points", "at_mm", "resolution_mm", "spacing_s", "step_mm", "time_s")
+    __slots__ = ("_points", "at_mm", "resolution_mm", "spacing_s", "step_mm", "time_s", "top_mm")
 
     def __init__(self, rate_hz: float, step_mm: float) -> None:
         self.spacing_s = max(SPACING_S, 1.0 / rate_hz)
@@ -30,16 +30,22 @@ class Travel:
         self.step_mm = self.resolution_mm = step_mm
         self.at_mm: float | None = None
         self.time_s = float("-inf")
+        self.top_mm = float("-inf")
 
     def feed(self, time_s: float, at_mm: float) -> None:
         """A valid position; kept in the history only where the last kept one is old enough."""
         self.at_mm, self.time_s = at_mm, time_s
+        if at_mm > self.top_mm:
+            self.top_mm = at_mm
         if not self._points or time_s >= self._points[-1][0] + 0.99 * self.spacing_s:
             self._points.append((time_s, at_mm))
 
     def feed_many(self, times_s: Floats, at_mm: Floats) -> None:
         """The same as feeding every one of them."""
+        if len(at_mm) == 0:
+            return
         self.at_mm, self.time_s = float(at_mm[-1]), float(times_s[-1])
+        self.top_mm = max(self.top_mm, float(at_mm.max()))
         place = 0
         while place < len(times_s):
             if self._points:
@@ -51,7 +57,7 @@ class Travel:
 
     def forget(self) -> None:
         """The position is not known any more."""
-        self.at_mm = None
+        self.at_mm, self.top_mm = None, float("-inf")
         self._points.clear()
 
     def learn_at_rest(self, since_s: float) -> None:
@@ -79,6 +85,15 @@ class Travel:
         mid_s = sum(t for t, _ in points) / len(points)
         spread = sum((t - mid_s) ** 2 for t, _ in points)
         return sum((t - mid_s) * x for t, x in points) / spread
+
+    def begin_move(self) -> None:
+        """The furthest point is counted from here."""
+        self.top_mm = self.at_mm if self.at_mm is not None else float("-inf")
+
+    @property
+    def back_mm(self) -> float:
+        """How far the crosshead has gone back since the move began."""
+        return self.top_mm - self.at_mm if self.at_mm is not None else 0.0
 
     def back_from_top_mm(self, since_s: float) -> float:
         """How far the crosshead has gone back from the furthest point it reached since then."""

@@ -10,9 +10,10 @@ from __future__ import annotations
 from dataclasses import asdict
 from math import isfinite
 
+from daq.watch.candidate import Rest
 from daq.watch.core import Core, Run
 from daq.watch.envelope import usable
-from daq.watch.fracture import FractureWatch, Rest
+from daq.watch.fracture import FractureWatch
 from daq.watch.states import Cause
 from daq.watch.tare import CAUTION_SHARE, Collector, TareNote, TareRules, take
 from daq.watch.values import Severity

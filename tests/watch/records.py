@@ -66,7 +66,7 @@ def make(case: Case) -> Record:
     factor = max(1, round(fine / case.rate_hz))
     fine = case.rate_hz * factor
     ramp, drops = _ramp(case, fine)
-    after_s = 3.0
+    after_s = max(3.0, 30.0 * period)
     pieces = [
         np.zeros(round(rest_s * fine)),
         np.full(round(plateau_s * fine), TOUCH_PLATEAU_N),
@@ -188,11 +188,12 @@ STRATA = (
 )
 
 
-def draw(seed: int, stratum: str, rate_hz: float) -> Case:
-    """A case of that stratum at that rate, inside the usable envelope of job.md 3.6."""
+def draw(seed: int, stratum: str, rate_hz: float, *, brief: bool = False) -> Case:
+    """A case of that stratum at that rate, inside the usable envelope of job.md 3.6. brief: short ramps."""
     rng = np.random.default_rng([seed, STRATA.index(stratum), round(rate_hz)])
     peak = rng.uniform(280.0, 560.0)
-    ramp_s = rng.uniform(max(5.0 if rate_hz < 5000 else 2.0, 55.0 / rate_hz), 16.0 if rate_hz < 5000 else 5.0)
+    shortest = max(2.5, 60.0 / rate_hz) if brief or rate_hz > 5000 else max(5.0, 60.0 / rate_hz)
+    ramp_s = rng.uniform(shortest, 2.0 * shortest if brief or rate_hz > 5000 else 16.0)
     sigma = peak / 10 ** rng.uniform(2.0, 3.5)
     case = {
         "seed": int(rng.integers(2**31)),

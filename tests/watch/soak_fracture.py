@@ -118,7 +118,8 @@ def allowed_s(case: Case) -> float:
     """The latest stop that still counts as found."""
     period = 1.0 / case.rate_hz
     if case.end in LOSSES:
-        return max(0.1, 6.5 * period)
+        # a short zero at a low rate may have shown two or three equal values by chance: then nine are waited for
+        return max(0.1, (9.5 if case.end == "frozen" else 6.5) * period)
     if case.fall_tau_s:
         return max(1.2, 4.0 * case.fall_tau_s)
     lag = case.lag_s if case.lag_declared else 0.0
@@ -127,10 +128,10 @@ def allowed_s(case: Case) -> float:
     return max(0.015, 4.5 * period) + 3.0 * lag + ringing + undeclared + 3.0 * period
 
 
-def cases(bars: int, seed: int = 0) -> list[Case]:
-    """Bars spread evenly over strata and rates; high rates fewer, because each of their bars is a million samples."""
+def cases(bars: int, seed: int = 0, *, brief: bool = False) -> list[Case]:
+    """Bars spread evenly over strata and rates."""
     cells = [(s, r) for s in STRATA for r in RATES_HZ]
-    return [draw(seed + n, *cells[n % len(cells)]) for n in range(bars)]
+    return [draw(seed + n, *cells[n % len(cells)], brief=brief) for n in range(bars)]
 
 
 def report(outcomes: list[Outcome], seconds: float) -> int:
@@ -167,10 +168,10 @@ def upper_bound(bad: int, bars: int) -> float:
     return high / bars
 
 
-def main(bars: int) -> int:
+def main(bars: int, *, brief: bool = False) -> int:
     begun = time.monotonic()
     outcomes = []
-    for n, case in enumerate(cases(bars)):
+    for n, case in enumerate(cases(bars, brief=brief)):
         outcome = run(case)
         outcome.seed = n
         outcome.events = [e for e in outcome.events if e.name in ("glitch", "slip", "pop_in", "partial_drop")]
