@@ -48,7 +48,3 @@ class SeriesCard(Card):
     humidity_percent: Annotated[
         Annotated[float, Field(ge=0, le=100)] | None, about("%", "relative humidity at the bar")
     ] = None
-    copy_to: Annotated[
-        Annotated[str, Field(min_length=1, max_length=255)] | None,
-        about("", "a folder that gets a verified copy of each sealed record"),
-    ] = None
