@@ -101,7 +101,7 @@ class PtyPort:
         return data if self._same_speed() else data.translate(GARBLED)
 
     def write(self, data: bytes) -> None:
-        if self._master < 0 or not data:
+        if self._master < 0 or not (data or self._left):
             return
         if not self._same_speed():
             data = data.translate(GARBLED)
@@ -184,7 +184,7 @@ class TcpPort:
         return data
 
     def write(self, data: bytes) -> None:
-        if self._client is None or not data:
+        if self._client is None or not (data or self._left):
             return
         if self._left:
             self._left = self._send(self._left)

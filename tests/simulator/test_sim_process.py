@@ -106,12 +106,9 @@ def read_rows(fd: int, frame: FrameCard, rows: int) -> tuple[list[int], list[byt
 
 
 def hung_up(fd: int) -> bool:
-    try:
-        return os.read(fd, 65536) == b""
-    except BlockingIOError:
-        return False
-    except OSError:
-        return True
+    poll = select.poll()
+    poll.register(fd, 0)
+    return any(events & select.POLLHUP for _, events in poll.poll(0))
 
 
 def test_a_pty_round_trip(tmp_path, shipped):
@@ -154,11 +151,15 @@ def test_rows_keep_pace_and_do_not_drift(tmp_path, shipped):
         played(tmp_path, shipped / "kiln-lane-a.toml") as machine,
         serial.Serial(str(tmp_path / "kiln-lane-a.tty"), 460_800, timeout=0) as port,
     ):
-        early = machine.hand(query=True)["rows_made"]
-        begun_s = time.monotonic()
-        read_rows(port.fileno(), machine.frame, 1200)
-        late, ended_s = machine.hand(query=True)["rows_made"], time.monotonic()
-        assert late - early == pytest.approx((ended_s - begun_s) * 1000, abs=100)
+        looks = []
+        for _ in range(2):
+            before_s = time.monotonic()
+            truth = machine.hand(query=True)
+            looks.append((before_s, time.monotonic(), truth["time_s"]))
+            assert truth["rows_made"] == pytest.approx(truth["time_s"] * 1000 + 1, abs=1.01)
+            read_rows(port.fileno(), machine.frame, 600)
+        (first_s, first_end_s, early_s), (second_s, second_end_s, late_s) = looks
+        assert second_s - first_end_s <= late_s - early_s <= second_end_s - first_s
 
 
 def test_what_nobody_reads_is_dropped_by_whole_pieces(tmp_path, make_frame):
@@ -170,14 +171,16 @@ def test_what_nobody_reads_is_dropped_by_whole_pieces(tmp_path, make_frame):
         for row in rows:
             port.write(row)
         assert port.dropped_bytes > 0
-        got = b""
-        while chunk := reader.read(65536):
-            got += chunk
+        total, got = sum(map(len, rows)), bytearray()
+
+        def all_accounted() -> bool:
+            got.extend(reader.read(65536))
             port.write(b"")
-    *whole, left = got.split(b"\r\n")
-    assert set(whole) <= {row[:-2] for row in rows}
-    assert len(got) + port.dropped_bytes <= sum(map(len, rows)) <= len(got) + port.dropped_bytes + 100
-    assert rows[len(whole)].startswith(left)
+            return len(got) + port.dropped_bytes >= total
+
+        until(all_accounted, "the rest")
+    assert len(got) + port.dropped_bytes == total
+    assert set(bytes(got).split(b"\r\n")) <= {row[:-2] for row in rows} | {b""}
     port.close()
 
 
@@ -216,8 +219,8 @@ def test_a_tcp_round_trip_in_packets(tmp_path, shipped):
     ("frame", "card", "says"),
     [
         ("missing.toml", None, "missing.toml"),
-        (None, "card = 'simulator'\nname = 'x'", "bar: Field required"),
-        (None, "= 5", "cannot be read"),
+        (None, "card = 'simulator'\nname = 'x'", "bar = (missing)"),
+        (None, "= 5", "Invalid statement"),
     ],
 )
 def test_bad_cards_end_in_one_clear_line(tmp_path, shipped, capsys, frame, card, says):
