@@ -5,9 +5,14 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
+from daq.cards.load import load_frame, load_series
+from simulator.card import load_simulator
 from simulator.commands import Ear, Heard, Verb
 from simulator.machine import Machine
 from simulator.specimen import InHand
+from simulator.virtual import VirtualWire
+from simulator.wire import Person
+from simulator.wire import _shipped as shipped_card
 
 BAR = InHand(number="B-1", width_mm=4.0, thickness_mm=3.0, strength_mpa=400.0)
 SCALE_N, SCALE_MM = 0.016, 0.0001  # of kiln-lane-a
@@ -292,3 +297,40 @@ def test_speed_errors_and_slips_of_the_drive(make):
     start(machine, 0.5, 0.1)
     machine.run_to(0.3)
     assert machine.speed_mm_s == pytest.approx(0.5 * 1.02)
+
+
+def test_the_bars_of_the_demonstration_break_three_to_five_seconds_after_contact(shipped):
+    series = load_series(shipped / "demo-series.toml")
+    frame, card = load_frame(shipped / "kiln-lane-demo.toml"), load_simulator(shipped_card("alumina.toml"))
+    seconds = []
+    for specimen in series.specimens:
+        machine = Machine(frame, card, InHand.model_validate_json(specimen.model_dump_json()))
+        for beat in range(80):
+            machine.command(
+                Heard(Verb.KEEP_ALIVE if beat else Verb.START, {"speed_mm_min": 2.0}, ""), beat * 0.3
+            )
+        truths = {truth.what: truth.time_s for truth in machine.take_truths()}
+        seconds.append(truths["broke"] - truths["touched"])
+    assert min(seconds) > 3.0 and max(seconds) < 5.0
+
+
+def test_without_hands_a_person_puts_in_bar_after_bar(make_frame, make_card):
+    population = {
+        "name": "pores",
+        "weibull_modulus": 12.0,
+        "strength_mpa": 50.0,
+        "reference": {"support_span_mm": 40.0, "load_span_mm": 20.0, "width_mm": 4.0, "thickness_mm": 3.0},
+    }
+    card = make_card(bar={"flaws": [population]}, contact={"gap_mm": 0.1}, drive={"watchdog": False})
+    wire = VirtualWire(make_frame(), card)
+    person = Person(wire)
+    assert wire.machine.bar is not None and wire.machine.bar.number == "AUTO-001"
+    for at_s, data in ((0.0, b"V+6.000\r\n"), (2.0, b"S\r\n"), (2.5, b"B1.000,60.000\r\n")):
+        wire.read(at_s)
+        wire.write(data, at_s)
+        person.look(at_s)
+    for at_s in (3.0, 4.0, 4.9, 5.1):
+        wire.read(at_s)
+        person.look(at_s)
+    assert wire.machine.bar.number == "AUTO-002"
+    assert not wire.machine.broken
