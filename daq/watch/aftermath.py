@@ -82,7 +82,8 @@ def _residual(core: Core, run: Run, seen: Aftermath) -> None:
     found = mean_since(core, core.clock_s - max(MEAN_S, 3.5 * period_s))
     if found is None:
         return
-    unloaded = abs(found[0]) < max(RESIDUAL_SHARE * run.peak_n, RESIDUAL_SIGMA * core.sigma_n)
+    # one-sided: a level below zero is a zero that was taken under load, not something that rests on the rollers
+    unloaded = found[0] < max(RESIDUAL_SHARE * run.peak_n, RESIDUAL_SIGMA * core.sigma_n)
     if unloaded or not seen.residual_told:
         seen.residual_told = True
         severity = Severity.REMARK if unloaded else Severity.CAUTION

@@ -31,7 +31,7 @@ from daq.watch.setup import Proven, run_setup
 from daq.watch.states import ARMED, BROKEN, LATCHED, Cause
 from daq.watch.values import Move, MoveKind, Severity, State, Verdict
 
-TOUCH_SEEN_SAMPLES = 2.0
+TOUCH_SEEN_BINS = 2.0  # a touch is shown by a whole bin, begun at any time
 
 
 def handle(core: Core, request: Request) -> None:
@@ -124,7 +124,7 @@ def _approach_speed(core: Core, asked_mm_min: float) -> float:
     """Row 7: what is asked, or what leaves half the cell in hand against a blocked fixture."""
     motion = core.setup.frame.motion
     assert motion is not None
-    seen_s = TOUCH_SEEN_SAMPLES / core.setup.rate_hz + core.setup.lag_s
+    seen_s = TOUCH_SEEN_BINS * core.watch.level.bin_samples / core.setup.rate_hz + core.setup.lag_s
     allowed = approach_mm_min(motion, core.setup.capacity_n, core.touch_n, seen_s)
     allowed = min(allowed, motion.speed_mm_min_max)
     if allowed < motion.speed_mm_min_min:

@@ -26,11 +26,12 @@ LATE_FROM, LATE_TO = 0.5, 0.8
 
 @dataclass(frozen=True, slots=True)
 class Seated:
-    """toe_offset_mm: travel from first contact to where the straight line would have begun; None: no
-    position.
+    """force: now; toe: where the steady windows began. toe_offset_mm: travel from first contact to where the
+    straight line would have begun; None: no position.
     """
 
     force_net_n: float
+    toe_net_n: float
     slope_n_s: float
     toe_offset_mm: float | None
     late_known: bool = False
@@ -53,6 +54,8 @@ class Seating:
         "_slopes",
         "_speed_mm_s",
         "_st",
+        "_start_n",
+        "_starts_n",
         "_stt",
         "_stx",
         "_sx",
@@ -76,6 +79,8 @@ class Seating:
         self.load_p50_n = load_p50_n
         self.force_min_n = max(FORCE_SIGMA * sigma_n, FORCE_SHARE * load_p50_n)
         self._slopes: deque[float] = deque(maxlen=STEADY_WINDOWS)
+        self._starts_n: deque[float] = deque(maxlen=STEADY_WINDOWS)
+        self._start_n = 0.0
         self._highest = 0.0
         self._late_from: float | None = None
         self._told_late = False
@@ -86,7 +91,7 @@ class Seating:
     def feed(self, time_s: float, net_n: float, at_mm: float | None) -> Seated | str | None:
         """One bin mean. Returns the note once seated, or the words of a caution."""
         if self._begun_s == float("-inf"):
-            self._begun_s = time_s
+            self._begun_s, self._start_n = time_s, net_n
         off_s = time_s - self._begun_s
         self._n += 1
         self._st += off_s
@@ -97,13 +102,16 @@ class Seating:
             return None
         spread = self._stt - self._st * self._st / self._n
         slope = (self._stx - self._st * self._sx / self._n) / spread
+        self._starts_n.append(self._start_n)
         self._begin(time_s)
+        self._start_n = net_n
         return self._window_done(slope, net_n, at_mm, time_s)
 
     def restart(self) -> None:
         """After a partial drop: a window across it would show nothing true."""
         self._begin(float("-inf"))
         self._slopes.clear()
+        self._starts_n.clear()
 
     def _begin(self, time_s: float) -> None:
         self._begun_s = time_s
@@ -116,11 +124,12 @@ class Seating:
         self._highest = max(self._highest, slope)
         if self.seated is None:
             if self._steady(slope) and net_n > self.force_min_n:
-                self.seated = Seated(net_n, slope, self._toe_mm(slope, net_n, at_mm), self._told_late)
+                toe_mm = self._toe_mm(slope, net_n, at_mm)
+                self.seated = Seated(net_n, self._starts_n[0], slope, toe_mm, self._told_late)
                 return self.seated
-            if net_n > TOE_SHARE * self.load_p50_n and not self._told_late:
+            if net_n > LATE_FROM * self.load_p50_n and not self._told_late:
                 self._told_late = True
-                return "toe longer than a quarter of the expected break load"
+                return "not steady at half the expected break load"
         return self._late(slope, net_n)
 
     def _steady(self, slope: float) -> bool:

@@ -262,8 +262,10 @@ def _tell_seating(core: Core, run: Run, found: Seated | str | None) -> None:
     p50_n = run.plan.expected.load_p50_n
     if isinstance(found, Seated):
         gross = found.force_net_n + core.tare_n
-        core.emit("seated", force_n=gross, toe_n=found.force_net_n, toe_offset_mm=found.toe_offset_mm)
-        if found.force_net_n > TOE_SHARE * p50_n and not found.late_known:
+        core.emit(
+            "seated", force_n=gross, toe_n=found.toe_net_n + core.tare_n, toe_offset_mm=found.toe_offset_mm
+        )
+        if found.toe_net_n > TOE_SHARE * p50_n and not found.late_known:
             core.emit("uneven_seating", Severity.CAUTION, force_n=gross, why="long toe")
     else:
         net = core.watch.level.newest_n or 0.0
