@@ -13,6 +13,7 @@ import select
 import socket
 import struct
 import termios
+from abc import ABC, abstractmethod
 from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Protocol
@@ -65,7 +66,7 @@ class Link(Protocol):
         ...
 
 
-class _DescriptorLink:
+class _DescriptorLink(ABC):
     """Reading and writing a non-blocking descriptor; what serial ports and sockets share."""
 
     def __init__(self, card: LinkCard, device: str, descriptor: int) -> None:
@@ -110,8 +111,8 @@ class _DescriptorLink:
             self._descriptor = -1
             self._release()
 
-    def _release(self) -> None:
-        raise NotImplementedError
+    @abstractmethod
+    def _release(self) -> None: ...
 
     def _must_be_open(self) -> None:
         if self._descriptor < 0:

@@ -11,9 +11,10 @@ import struct
 import threading
 import time
 import tty
+from abc import ABC, abstractmethod
 
 
-class LittleMachine:
+class LittleMachine(ABC):
     """Sends rows at about 1 kHz on whatever carries its bytes and hears what it is told; one thread, closed
     by close."""
 
@@ -33,9 +34,9 @@ class LittleMachine:
         self._thread.join(5.0)
         self.lose()
 
+    @abstractmethod
     def lose(self) -> None:
         """Pull the cable."""
-        raise NotImplementedError
 
     def _live(self) -> None:
         while not self._done.wait(0.005):
@@ -44,14 +45,14 @@ class LittleMachine:
             if not self.quiet:
                 self._send(b"".join(self._row() for _ in range(5)))
 
-    def _row(self) -> bytes:
-        raise NotImplementedError
+    @abstractmethod
+    def _row(self) -> bytes: ...
 
-    def _hear(self) -> None:
-        raise NotImplementedError
+    @abstractmethod
+    def _hear(self) -> None: ...
 
-    def _send(self, data: bytes) -> None:
-        raise NotImplementedError
+    @abstractmethod
+    def _send(self, data: bytes) -> None: ...
 
 
 class PtyMachine(LittleMachine):
