@@ -19,6 +19,7 @@ from daq.watch.pipeline import Pipeline
 from daq.watch.requests import Request, StopRequest
 from daq.watch.values import Event, Json, Move, Severity, State, Step, Stop
 from drivers.decoded import Decoded, Decoder
+from drivers.health import LinkFault, LinkHealth
 from drivers.motion import (
     Acknowledged,
     InputsKnown,
@@ -30,7 +31,7 @@ from drivers.motion import (
 
 NewEntry: TypeAlias = tuple[Kind, int, bytes]
 
-NS = 1_000_000_000
+LINK_FAULTS = {LinkFault.TOO_FAST: "too_fast", LinkFault.GARBAGE: "protocol"}
 RECORDER_CAUTION_S = 10.0  # job.md 4, row 27
 RECORDER_STOP_S = 45.0  # job.md 4, row 27; the ring holds 60 s
 MOVING = frozenset(
@@ -95,6 +96,8 @@ class BenchCore:
         self.discarded_bytes = 0
         self.rejected: dict[str, int] = {}
         self._account = [Account() for _ in frame.links]
+        self._health = [LinkHealth(link) for link in frame.links]
+        self._link_faults: list[tuple[LinkFault, ...]] = [() for _ in frame.links]
 
     def seconds(self, now_ns: int) -> float:
         """Stream time of a monotonic instant, s."""
@@ -116,6 +119,7 @@ class BenchCore:
             self._obey(self.pipeline.inputs(latest, now_s), now_ns)
         for reply in decoded.replies:
             self._hear(reply, now_ns)
+        self._judge_link(link, decoded, now_ns)
         return self._take_writes()
 
     def tick(self, now_ns: int, health: Health) -> list[Write]:
@@ -151,10 +155,18 @@ class BenchCore:
             return self.fault("recorder_slow", f"nothing recorded for {silent_s:.0f} s", now_ns)
         return []
 
+    def opened(self, link: int, sent: bytes, now_ns: int) -> None:
+        """A port is open; what its card sends at opening has been sent."""
+        self.note("link_open", now_ns, link=self._frame.links[link].name)
+        if sent:
+            self._sent.append((now_ns, link, sent))
+
     def reopened(self, link: int, decoder: Decoder, now_ns: int) -> list[Write]:
         """A lost link is back. Nothing resumes by itself."""
         self._decoders[link] = decoder
-        return self.fault("link_back", self._frame.links[link].name, now_ns)
+        self._health[link] = LinkHealth(self._frame.links[link])
+        self._obey(self.pipeline.fault_over("link_lost", self.seconds(now_ns)), now_ns)
+        return self._take_writes()
 
     def modem(self, inputs: dict[str, bool | None], now_ns: int) -> list[Write]:
         """Status inputs read from modem lines."""
@@ -222,7 +234,7 @@ class BenchCore:
     def _heed(self, fact: MotionFact, now_ns: int) -> None:
         now_s = self.seconds(now_ns)
         if isinstance(fact, InputsKnown):
-            known: dict[str, bool | None] = {**fact.inputs}
+            known: dict[str, bool | None] = {str(name): active for name, active in fact.inputs.items()}
             self._obey(self.pipeline.inputs(known, now_s), now_ns)
         elif isinstance(fact, NotAnswered):
             self._obey(self.pipeline.fault("not_answered", fact.command, now_s), now_ns)
@@ -230,6 +242,15 @@ class BenchCore:
             self._obey(self.pipeline.fault("unknown_reply", fact.text, now_s), now_ns)
         else:
             assert isinstance(fact, Acknowledged)
+
+    def _judge_link(self, link: int, decoded: Decoded, now_ns: int) -> None:
+        """A flood or garbage is told once, as it begins."""
+        faults = self._health[link].judge(decoded, self.seconds(now_ns))
+        for fault in faults:
+            if fault not in self._link_faults[link]:
+                detail = self._frame.links[link].name
+                self._obey(self.pipeline.fault(LINK_FAULTS[fault], detail, self.seconds(now_ns)), now_ns)
+        self._link_faults[link] = faults
 
     # --- what is sent unasked
     def _ask(self, now_s: float, now_ns: int) -> None:

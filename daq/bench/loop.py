@@ -26,7 +26,7 @@ from daq.stream.ring import Ring
 from daq.watch.pipeline import Pipeline, Proven
 from daq.watch.values import Severity
 from drivers.links import Link, open_link
-from drivers.motion import MotionPort
+from drivers.motion import MotionPort, modem_inputs
 from drivers.registry import decoder_for
 
 TICK_NS = 10_000_000  # silence, keep-alive and status are judged at least every 10 ms
@@ -79,6 +79,7 @@ class BenchProcess:
         )
         pipeline = Pipeline(self._frame, clean_start=config.clean_start, proven=Proven(**config.proven))
         motion = MotionPort(self._frame) if self._frame.motion is not None else None
+        self._stop_bytes = MotionPort(self._frame).encode_stop(0.0) if motion is not None else b""
         decoders = [decoder_for(self._frame, number) for number in range(len(self._ports))]
         self._core = BenchCore(self._frame, pipeline, decoders, motion, origin_ns=self._origin_ns)
         self._stop_socket = bind(config.stop_socket)
@@ -103,10 +104,19 @@ class BenchProcess:
             while not self._done:
                 self._turn()
         finally:
+            self._last_stop()                   # whatever broke: these bytes need none of the code that did
             self._write(self._core.stop("bench process ends", time.monotonic_ns()))
             self._record()
             self._goodbye()
         return 0
+
+    def _last_stop(self) -> None:
+        number = motion_link(self._frame)
+        if number is not None and not self._ports[number].lost:
+            try:
+                self._ports[number].link.write(self._stop_bytes)
+            except DriverError:
+                pass                            # the cable is out: nothing more can be done from here
 
     # --- start and end
     def _introduce(self) -> None:
@@ -120,6 +130,7 @@ class BenchProcess:
         )
         for number, port in enumerate(self._ports):
             self._watch(port.link.fileno(), lambda mask, n=number: self._on_link(n, mask))
+            self._core.opened(number, port.link.sent_at_open, time.monotonic_ns())
         self._watch(self._stop_socket.fileno(), self._on_stop)
         self._watch(self._bench_socket.fileno(), self._on_message)
         self._watch(self._life.fileno(), self._on_life)
@@ -139,7 +150,7 @@ class BenchProcess:
                 links = [self._ports[number].link.fileno()]
             end = motion.line_end.encode("latin-1")
             # a leading line end closes a half-sent command; the second STOP is whole whatever stood before
-            stop = (end + 2 * MotionPort(self._frame).encode_stop(0.0)).hex()
+            stop = (end + 2 * self._stop_bytes).hex()
         order = json.dumps({"deadline_s": self._config.deadline_s, "stop": stop}).encode()
         try:
             socket.send_fds(self._stopper, [order], links)
@@ -263,7 +274,7 @@ class BenchProcess:
             if port.lost and now_ns >= port.reopen_ns:
                 self._reopen(number, now_ns)
             elif not port.lost and any(i.source == "modem" for i in self._frame.inputs):
-                self._write(self._core.modem(dict(port.link.modem()), now_ns))
+                self._write(self._core.modem(modem_inputs(self._frame, number, port.link.modem()), now_ns))
         if now_ns - self._alive_ns >= ALIVE_NS:
             self._alive_ns = now_ns
             try:
@@ -350,6 +361,7 @@ class BenchProcess:
             return  # still away; tried again in a second, the state says signal lost
         port.lost = False
         self._write(self._core.reopened(number, decoder_for(self._frame, number), now_ns))
+        self._core.opened(number, port.link.sent_at_open, now_ns)
         self._watch(port.link.fileno(), lambda mask, n=number: self._on_link(n, mask))
         if self._stopper_alive:
             self._hand_links_to_stopper()

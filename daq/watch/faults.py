@@ -37,6 +37,15 @@ FAULTS: Mapping[str, Reaction] = {
     "protocol": Reaction(
         _STOP, Cause.SIGNAL_LOST, False, "too many damaged packets", "look at cable and card"
     ),
+    "too_fast": Reaction(
+        _STOP, Cause.SIGNAL_LOST, False, "far more rows than the card declares", "look at rate and card"
+    ),
+    "move_refused": Reaction(
+        _STOP, Cause.FAULT, False, "the drive cannot do the move that was due", "look at the motion table"
+    ),
+    "bench_late": Reaction(
+        _STOP, Cause.FAULT, False, "the stopper had to act: the bench was late", "look for what held it up"
+    ),
     "stopper_lost": Reaction(_STOP, Cause.FAULT, True, "the stopper process is gone", "restart midspan"),
     "recorder_lost": Reaction(
         _STOP, Cause.FAULT, True, "the recorder does not acknowledge", "look at the disk"

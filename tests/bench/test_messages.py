@@ -19,7 +19,7 @@ EXAMPLES = (
     requests.Reset("Ines", looked=True),
     requests.Note("click"),
     requests.TightenLimit("force_n_max", 300.0),
-    requests.Prove("Ines", polarity=True),
+    requests.Prove("Ines", polarity=True, stop_drill=False),
 )
 
 
