@@ -20,6 +20,7 @@ class Session:
         self._client = client
         self._on_update = on_update
         self.state = ""
+        self.moving = False
         self._closed: dict[str, Mapping[str, Any]] = {}
         self._results: dict[str, Mapping[str, Any]] = {}
 
@@ -63,6 +64,10 @@ class Session:
     def _note(self, update: Update) -> None:
         if update.kind == "state":
             self.state = str(update.body["state"])
+        elif update.kind == "summary":
+            self.moving = any(update.body.get(key) for key in ("armed", "moving")) or bool(
+                (update.body.get("inputs") or {}).get("moving")
+            )
         elif update.kind == "event" and update.body["event"] == "run_closed":
             self._closed[str(update.body["run_id"])] = update.body
         elif update.kind == "result":

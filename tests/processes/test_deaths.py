@@ -197,8 +197,10 @@ def ended(pid: int, timeout_s: float) -> bool:
 
 
 def test_a_second_daemon_for_the_same_frame_is_refused(tmp_path: Path) -> None:
-    with rig_of(data=tmp_path) as rig, pytest.raises(Exception, match="already served"), Supervisor(
-        rig.outfit, rig.said.append
+    with (
+        rig_of(data=tmp_path) as rig,
+        pytest.raises(Exception, match="already served"),
+        Supervisor(rig.outfit, rig.said.append),
     ):
         pass
 
@@ -209,7 +211,10 @@ def test_stop_command_leaves_at_once(tmp_path: Path) -> None:
         rig.start_bar()
         rig.wait("moving", lambda: rig.session.state in ("approaching", "in contact", "seating", "loading"))
         done = subprocess.run(
-            [os.path.join(os.path.dirname(os.sys.executable), "midspan"), "stop"], capture_output=True, text=True, check=False
+            [os.path.join(os.path.dirname(os.sys.executable), "midspan"), "stop"],
+            capture_output=True,
+            text=True,
+            check=False,
         )
         assert done.returncode == 0 and "STOP sent" in done.stdout, done.stderr
         assert stands_still(rig, 1.0)

@@ -31,7 +31,16 @@ def test_a_bar_is_broken_stopped_sealed_and_true(frame_card: str, tmp_path: Path
     assert result["peak_recovered_n"] == pytest.approx(broke["fields"]["force_n"], rel=1e-3)
     assert result["stress_rate_mean_mpa_s"] == pytest.approx(93.0, rel=0.05)
     names = [event["event"] for event in read_run(record).events]
-    for name in ("tared", "ready", "started", "approach_touch", "seated", "fracture", "stopped", "run_closed"):
+    for name in (
+        "tared",
+        "ready",
+        "started",
+        "approach_touch",
+        "seated",
+        "fracture",
+        "stopped",
+        "run_closed",
+    ):
         assert name in names
     reads_without_midspan(record)
 
@@ -47,6 +56,8 @@ def reads_without_midspan(record: Path) -> None:
         " file[file.attrs['default'].decode()][trace.attrs['signal'].decode()].shape[0]]))\n"
         "assert not any(name.startswith(('daq', 'drivers')) for name in sys.modules)\n"
     )
-    done = subprocess.run([sys.executable, "-I", "-c", script, str(record)], capture_output=True, text=True, check=True)
+    done = subprocess.run(
+        [sys.executable, "-I", "-c", script, str(record)], capture_output=True, text=True, check=True
+    )
     highest_n, simulated, kind, rows = json.loads(done.stdout)
     assert highest_n > 250 and simulated == 1 and kind == "NXdata" and rows > 1000

@@ -44,6 +44,7 @@ COLUMNS = {
 }
 WIRE_TIMEOUT_S = 15.0
 BAR_TIMEOUT_S = 120.0
+AGAIN_MAX = 3  # a busy computer may interrupt a bar: it is loaded again, as a technician would
 
 
 @click.command()
@@ -165,10 +166,27 @@ def break_bars(
         for specimen in loaded.specimens:
             lay_bar(hands, specimen.model_dump(mode="json"))
             report = session.break_bar(specimen.number, timeout_s=BAR_TIMEOUT_S)
+            for _ in range(AGAIN_MAX):
+                view.say(f"{specimen.number}: sealed in {report.get('seal_s', 0.0):.2f} s: {report['path']}")
+                if not report["interrupted"]:
+                    break
+                view.say(
+                    f"{specimen.number}: interrupted ({report['result'].get('reason')}); loaded once more"
+                )
+                look_and_reset(session, client, hands)
+                report = session.break_bar(specimen.number, timeout_s=BAR_TIMEOUT_S)
             reports.append(report)
-            view.say(f"{specimen.number}: sealed in {report.get('seal_s', 0.0):.2f} s: {report['path']}")
         client.rise()
     return reports
+
+
+def look_and_reset(session: Session, client: Client, hands: Path) -> None:
+    """What a person does after an interrupted loading: look, raise the crosshead at its own panel, reset."""
+    with socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM) as line:
+        line.sendto(json.dumps({"raise": True}).encode(), str(hands))
+    session.wait_for("standstill", lambda: not session.moving, BAR_TIMEOUT_S)
+    client.do("reset", looked=True)
+    session.wait_for("rest", lambda: session.state == "at rest", BAR_TIMEOUT_S)
 
 
 # --- what is left
