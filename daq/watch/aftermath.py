@@ -161,12 +161,11 @@ def _zero(core: Core, run: Run, seen: Aftermath) -> None:
 
 def _may_close(core: Core, run: Run, seen: Aftermath) -> bool:
     assert run.ended_s is not None
-    after_s = core.clock_s - run.ended_s
     tail_s = max(TAIL_S_MIN, run.plan.method.fracture.tail_s)
-    if after_s < tail_s or core.moving:
+    if core.clock_s - run.ended_s < tail_s or core.moving:
         return False
-    if after_s >= max(CLOSE_S_MAX, tail_s):
+    failed = core.stopping is not None and core.stopping.failed
+    waited_s = core.clock_s - max(run.ended_s, seen.stood_s or run.ended_s)
+    if failed or waited_s >= max(CLOSE_S_MAX, tail_s):
         return True
-    if core.stopping is not None:
-        return False
-    return run.finding is None or seen.zero_done
+    return core.stopping is None and (run.finding is None or seen.zero_done)

@@ -58,7 +58,7 @@ EVENTS: Mapping[str, str] = {
     "slip": "A partial drop with the same stiffness before and after: load_n, drop_n, ratio.",
     "pop_in": "A partial drop with a lower stiffness after (an arrested crack): load_n, drop_n, ratio.",
     "partial_drop": "A partial drop whose kind could not be told: load_n, drop_n, why.",
-    "rebaseline": "A lasting change that is no drop (a kink upward, or a slow fall): the forecast was begun anew.",
+    "rebaseline": "The force falls slowly, without a step: the forecast was begun anew.",
     "events_many": "More slips, pop-ins or glitches than a good loading has: kind, count.",
     "no_break": "The load is above what 999 of 1000 bars bear, without a break.",
     "fracture": "The bar broke: verdict, onset_s, last_good_s, first_dropped_s, last_good_index, peak_raw_n, "

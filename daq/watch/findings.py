@@ -49,7 +49,8 @@ def found(core: Core, finding: Finding) -> None:
     elif finding.kind is Kind.PARTIAL:
         _partial(core, run, finding)
     elif finding.kind is Kind.REBASELINE:
-        core.emit("rebaseline", onset_s=finding.onset_s, by=finding.by, step_n=-finding.drop)
+        if finding.by == "falling":  # a kink upward is silent: every hard toe has one
+            core.emit("rebaseline", onset_s=finding.onset_s, by=finding.by, step_n=-finding.drop)
     else:
         _broke(core, run, finding)
 

@@ -34,6 +34,7 @@ class Level:
         "_kept",
         "_kept_left",
         "_refresh_left",
+        "_share",
         "at_n",
         "bin_samples",
         "history",
@@ -63,7 +64,7 @@ class Level:
         self.stride = -(-noise_samples // NOISE_KEPT_MAX)
         self._kept: deque[float] = deque(maxlen=noise_samples // self.stride)
         self._kept_left = self.stride
-        self._refresh_left = 1
+        self._refresh_left, self._share = 1, 1.0
         self.history: deque[tuple[float, float]] = deque(
             maxlen=round(HISTORY_S * rate_hz / self.bin_samples) + 1
         )
@@ -97,7 +98,7 @@ class Level:
         self._kept_left -= 1
         if self._kept_left == 0:
             self._kept_left = self.stride
-            self._kept.append(residual if residual >= 0.0 else -residual)
+            self._kept.append(abs(residual) * self._share)
         if len(self.pending_x) < self.bin_samples:
             return False
         self._close_bin()
@@ -109,7 +110,7 @@ class Level:
         self.pending_x += values
         assert len(self.pending_x) <= self.bin_samples
         first = self._kept_left - 1
-        self._kept.extend([abs(r) for r in residuals[first :: self.stride]])
+        self._kept.extend([abs(r) * self._share for r in residuals[first :: self.stride]])
         self._kept_left = self.stride - (len(residuals) - self._kept_left) % self.stride
         if len(residuals) < first + 1:
             self._kept_left = first + 1 - len(residuals)
@@ -122,6 +123,15 @@ class Level:
     def room(self) -> int:
         """Samples until the bin is full."""
         return self.bin_samples - len(self.pending_x)
+
+    def stand(self) -> None:
+        """The force stands: keep the newest bin alone, so that an older climb does not go on in the forecast."""
+        for kept in (self._bins_s, self._bins_x):
+            while len(kept) > 1:
+                kept.popleft()
+        self.slope_n_s = 0.0
+        if self._bins_x:
+            self._fit()
 
     def begin_anew(self, times_s: list[float], values: list[float], slope_n_s: float | None) -> None:
         """Forget the line and begin with these samples; the slope is kept until there are three bins."""
@@ -187,5 +197,7 @@ class Level:
         else:
             leverage = 1.0
         self.origin_s, self.at_n = mid_s, mid_x
-        wide = self.threshold_sigma * self.sigma_n * sqrt(1.0 + leverage)
+        widening = sqrt(1.0 + leverage)
+        self._share = 1.0 / widening  # of a residual that is the sample's own noise, not the forecast's
+        wide = self.threshold_sigma * self.sigma_n * widening
         self.limit_n = max(wide, self.threshold_share * (mid_x + self.slope_n_s * ahead_s))

@@ -141,15 +141,17 @@ def _in_contact(core: Core) -> None:
     if run is None or run.started_s is None:
         core.go(Cause.ARRIVED, "jog ended in contact")
         return
-    net_n = core.watch.level.newest_n or 0.0
-    if net_n > PRELOAD_HIGH_SHARE * run.plan.expected.load_p50_n:
-        core.emit("preload_high", Severity.CAUTION, force_n=net_n + core.tare_n)
+    net_n, p50_n = core.watch.level.newest_n or 0.0, run.plan.expected.load_p50_n
+    if net_n > PRELOAD_HIGH_SHARE * p50_n:
+        severity = Severity.CAUTION if net_n > TOE_SHARE * p50_n else Severity.REMARK
+        core.emit("preload_high", severity, force_n=net_n + core.tare_n)
     _begin_seating(core, run)
 
 
 def _begin_seating(core: Core, run: Run) -> None:
     expected, sigma_n, rate_hz = run.plan.expected, core.sigma_n, core.setup.rate_hz
     core.go(Cause.SEATING_BEGUN)
+    core.watch.level.stand()
     core.watch.watch(True, arm_n=zero.arm_n(core, run), gradual=False)
     run.seating = Seating(
         window_s=seating_window_s(rate_hz, sigma_n, expected.rate_n_s, expected.time_to_break_s),

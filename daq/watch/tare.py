@@ -24,6 +24,7 @@ SAMPLES_MIN = 32
 NOISE_TIMES = 3.0
 DRIFT_SHARE_PER_MIN = 0.001
 DRIFT_SIGMA = 3.5
+UNSURE_SIGMA = 6.0
 WINDOW_SHARE = 0.01
 CAUTION_SHARE = 0.002
 FROZEN_PROBABILITY = 1e-6
@@ -118,7 +119,8 @@ def take(times_s: Floats, gross_n: Floats, rules: TareRules) -> Taken:
         why = "the force does not move by a single count: frozen, or too coarse to be judged"
         return Taken(note, (why,), final=True)
     allowed = DRIFT_SHARE_PER_MIN * rules.capacity_n
-    drifting = not abs(note.drift_n_min) <= allowed
+    beyond = abs(note.drift_n_min) - allowed
+    drifting = 0.0 < beyond <= UNSURE_SIGMA * _white_error_n_min(times_s, note)
     return Taken(note, tuple(_refusals(note, gross_n, times_s, rules)), drifting=drifting)
 
 
@@ -185,8 +187,11 @@ def _drift_error_n_min(times_s: Floats, gross_n: Floats, note: TareNote) -> floa
     gives.
     """
     _, of_blocks = _slope(*_blocks(times_s, gross_n))
-    span_s = float(times_s[-1] - times_s[0])
-    return 60.0 * max(of_blocks, note.sigma_n * sqrt(12.0 / len(times_s)) / span_s)
+    return max(60.0 * of_blocks, _white_error_n_min(times_s, note))
+
+
+def _white_error_n_min(times_s: Floats, note: TareNote) -> float:
+    return 60.0 * note.sigma_n * sqrt(12.0 / len(times_s)) / float(times_s[-1] - times_s[0])
 
 
 def _blocks(times_s: Floats, gross_n: Floats) -> tuple[Floats, Floats]:

@@ -94,6 +94,7 @@ class Rig:
     position_of: Callable[[float, float], float] | None = None
     samples_per_block: int = 5
     silent: bool = False
+    on_step: Callable[[Step], None] | None = None
 
     def __post_init__(self) -> None:
         self.pipe = Pipeline(self.card, clean_start=self.clean_start, proven=self.proven)
@@ -139,6 +140,8 @@ class Rig:
         return [count, position][: self.columns]
 
     def take(self, step: Step) -> Step:
+        if self.on_step is not None:
+            self.on_step(step)
         for action in step.actions:
             self.actions.append((self.now_s, action))
             self.machine.obey(action, self.now_s)
