@@ -134,11 +134,11 @@ class LinesEncoder:
         self._grammar = grammar
         self._line_end = grammar.dialect.line_end.encode("ascii", "replace")
         self._separator = grammar.dialect.separator.encode("ascii", "replace")
-        self._labels = [want.label for want in grammar.wants if want.label is not None]
         check = 1 if grammar.check_digits else 0
         self._check = grammar.dialect.checksum if check else None
         by_column = any(want.column is not None for want in grammar.wants)
         self._columns = grammar.dialect.columns or (grammar.fields_min if by_column else 0)
+        self._form, self._order = self._layout()
 
     def encode(
         self,
@@ -175,26 +175,31 @@ class LinesEncoder:
         return rows
 
     def _line(self, values: list[float]) -> bytes:
-        grammar = self._grammar
-        fields = [b"0"] * (self._columns)
-        labelled = []
-        for want, value in zip(grammar.wants, values, strict=True):
-            text = _number_text(value)
-            if grammar.dialect.decimal_comma:
-                text = text.replace(b".", b",")
-            if want.label is not None:
-                labelled.append(want.label + grammar.label_separator + text)
-            else:
-                assert want.column is not None
-                fields[want.column] = text
-        line = grammar.prefix + self._separator.join(fields + labelled)
+        texts = [_number_text(value) for value in values]
+        if self._grammar.dialect.decimal_comma:
+            texts = [text.replace(b".", b",") for text in texts]
+        line = self._form % tuple([texts[place] for place in self._order])
         if self._check is not None:
-            line += self._separator + b"%0*X" % (grammar.check_digits, check_value(self._check, line))
+            digits = b"%0*X" % (self._grammar.check_digits, check_value(self._check, line))
+            return line + self._separator + digits + self._line_end
         return line + self._line_end
+
+    def _layout(self) -> tuple[bytes, tuple[int, ...]]:
+        """The row as a template, and which value stands at each of its places."""
+        wants = self._grammar.wants
+        columns = {want.column: place for place, want in enumerate(wants) if want.label is None}
+        fields = [b"%b" if column in columns else b"0" for column in range(self._columns)]
+        order = [columns[column] for column in range(self._columns) if column in columns]
+        for place, want in enumerate(wants):
+            if want.label is not None:
+                fields.append((want.label + self._grammar.label_separator).replace(b"%", b"%%") + b"%b")
+                order.append(place)
+        separator = self._separator.replace(b"%", b"%%")
+        return self._grammar.prefix.replace(b"%", b"%%") + separator.join(fields), tuple(order)
 
 
 def _number_text(value: float) -> bytes:
     """Shortest text that reads back to the same float."""
-    if value == int(value) if abs(value) < 1e15 else False:
-        return b"%d" % int(value)
+    if value % 1 == 0 and -1e15 < value < 1e15:
+        return b"%d" % value
     return repr(float(value)).encode("ascii")
