@@ -5,7 +5,7 @@ BIN := $(VENV)/bin
 SEED ?= 7
 DEMO ?= --out demo-out --bars 3
 
-.PHONY: demo test check bench soak sim setup clean
+.PHONY: demo test lint check bench soak sim setup clean
 
 demo: setup
 	$(BIN)/midspan demo $(DEMO)
@@ -13,9 +13,10 @@ demo: setup
 test: setup
 	$(BIN)/python -m pytest tests
 
-check: setup
+lint: setup
 	$(BIN)/ruff check . && $(BIN)/ruff format --check . && $(BIN)/mypy
-	$(BIN)/python -m pytest tests
+
+check: lint test
 
 bench: setup
 	$(BIN)/python -m benchmarks --out bench-out
