@@ -119,6 +119,8 @@ def twin(pipeline: Pipeline) -> Pipeline:
     frozen = [pipeline.setup, pipeline.setup.frame, pipeline._force, core.proven, core.watch.settings]
     if core.run is not None:
         frozen.append(core.run.plan)
+    if core.at_once is not None:
+        frozen.append(core.at_once.__self__)  # the bench core is told of stops
     memo: dict[int, Any] = {id(each): each for each in frozen}
     for owner in (core.watch.level, core.travel, core.runaway):
         for name in getattr(owner, "__slots__", ()):

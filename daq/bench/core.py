@@ -1,12 +1,14 @@
 """BenchCore: the bench without its wires. Bytes and requests in; bytes to send and entries to record out.
 
 Pure: it owns no descriptor, clock, file or socket, so that the bench process, the virtual clock and a replay run the
-same lines. The shell must write `Outcome.writes` before it takes the entries: stop first, then tell.
+same lines. The shell must write what a call returns before it takes the entries: stop first, then tell. `at_once`,
+where the shell gives it, writes a STOP the moment it is decided: what follows from it (states, events, the rest of
+the block) takes longer than all that came before it.
 """
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from typing import TypeAlias
 
@@ -75,7 +77,9 @@ class BenchCore:
         motion: MotionPort | None,
         *,
         origin_ns: int,
+        at_once: Callable[[Write], bool] | None = None,
     ) -> None:
+        """at_once: write these bytes now; False where they have not left and must be among the writes returned."""
         assert len(decoders) == len(frame.links)
         self._frame = frame
         self.pipeline = pipeline
@@ -98,6 +102,11 @@ class BenchCore:
         self._account = [Account() for _ in frame.links]
         self._health = [LinkHealth(link) for link in frame.links]
         self._link_faults: list[tuple[LinkFault, ...]] = [() for _ in frame.links]
+        self._at_once = at_once
+        self._stop_write = stop_write(frame)
+        self._stops_left = 0
+        if at_once is not None:
+            pipeline.tell_stops(self._write_stop)
 
     def seconds(self, now_ns: int) -> float:
         """Stream time of a monotonic instant, s."""
@@ -202,11 +211,26 @@ class BenchCore:
             if self._motion is None:
                 continue
             if isinstance(action, Stop):
-                self._send(self._motion.encode_stop(self.seconds(now_ns)), now_ns, urgent=True)
+                self._send_stop(now_ns)
             elif isinstance(action, Move):
                 self._move(action, now_ns)
         if step.events:
             self._steps.append((now_ns, step))
+
+    def _write_stop(self, stop: Stop) -> None:
+        """A Stop was decided this moment. It must not overtake what was to be written before it."""
+        if self._stop_write is None or self._at_once is None or self._writes:
+            return
+        self._stops_left += self._at_once(self._stop_write)
+
+    def _send_stop(self, now_ns: int) -> None:
+        assert self._motion is not None and self._motion_link is not None
+        data = self._motion.encode_stop(self.seconds(now_ns))
+        if self._stops_left:
+            self._stops_left -= 1
+            self._sent.append((now_ns, self._motion_link, data))
+        else:
+            self._send(data, now_ns, urgent=True)
 
     def _move(self, move: Move, now_ns: int) -> None:
         assert self._motion is not None
@@ -271,6 +295,7 @@ class BenchCore:
             self._send(self._motion.keep_alive(now_s), now_ns)
 
     def _take_writes(self) -> list[Write]:
+        assert self._stops_left == 0, "a STOP was written that no step contains"
         writes, self._writes = self._writes, []
         return writes
 
@@ -302,6 +327,12 @@ class BenchCore:
         out.append((Kind.EVENT, now_ns, pack_event(flat(event))))
         if event.name == "run_opened":
             self._account = [Account() for _ in self._account]
+
+
+def stop_write(frame: FrameCard) -> Write | None:
+    """The STOP of a frame, ready to be written; None where it has no motion."""
+    number = motion_link(frame)
+    return None if number is None else Write(number, MotionPort(frame).encode_stop(0.0), urgent=True)
 
 
 @dataclass(slots=True)

@@ -7,7 +7,7 @@ a block is judged stands in pipeline.py; what each state does in stages.py; what
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from math import isfinite
 
 from daq.cards.method import FractureSettings
@@ -136,6 +136,7 @@ class Core:
         self.state = State.AT_REST if clean_start else State.UNKNOWN
         self.clock_s = 0.0
         self.actions: list[Action] = []
+        self.at_once: Callable[[Stop], None] | None = None
         self.events: list[Event] = []
         self.sigma_n = setup.frame.cell.noise_quiet_n or 0.0
         self.limits: ForceLimits = frame_limits(setup, self.sigma_n)
@@ -198,7 +199,7 @@ class Core:
         """Bring the crosshead to rest; cause None is a normal stop that latches nothing."""
         before = self.stopping
         attempt = 1 if before is None else before.attempt + 1
-        self.actions.append(Stop(reason, attempt))
+        self._say(Stop(reason, attempt))
         self.emit("stop_sent", reason=reason, attempt=attempt)
         if before is None:
             self.stopping = StopCheck(
@@ -219,8 +220,14 @@ class Core:
         """The same stop once more: the machine has not been seen to stand."""
         check = self.stopping
         assert check is not None
-        self.actions.append(Stop(check.reason, check.attempt))
+        self._say(Stop(check.reason, check.attempt))
         self.emit("stop_sent", reason=check.reason, attempt=check.attempt)
+
+    def _say(self, stop: Stop) -> None:
+        """Told at once, before what follows from it is worked out, unless an earlier action has to go first."""
+        if self.at_once is not None and not self.actions:
+            self.at_once(stop)
+        self.actions.append(stop)
 
     @property
     def set_speed_mm_s(self) -> float:

@@ -8,7 +8,7 @@ scalar definition decides. Both give the same answer, and so does any cut of the
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from math import isfinite
 
 from daq.cards.frame import FrameCard
@@ -20,7 +20,7 @@ from daq.watch.repeats import Repeats
 from daq.watch.requests import Request
 from daq.watch.setup import Proven, WatchSetup, setup_from_card
 from daq.watch.states import BROKEN, LATCHED
-from daq.watch.values import Json, State, Step
+from daq.watch.values import Json, State, Step, Stop
 
 __all__ = ["Pipeline", "Proven", "WatchSetup", "setup_from_card"]
 
@@ -66,6 +66,12 @@ class Pipeline:
     def run(self) -> Mapping[str, Json] | None:
         run = self._core.run
         return run.plan.run if run is not None else None
+
+    def tell_stops(self, at_once: Callable[[Stop], None]) -> None:
+        """Who hears of a Stop the moment it is decided, so that its bytes need not wait for what follows from it.
+        Changes no decision: the Stop stands in the Step all the same, as its first action.
+        """
+        self._core.at_once = at_once
 
     def advance(self, block: Block | None, now_s: float) -> Step:
         """Judge a block of any source, and silence. None is a tick: to be called every 10 ms at least."""
