@@ -66,6 +66,10 @@ class Port:
     pending: bytearray = field(default_factory=bytearray)
     lost: bool = False
     reopen_ns: int = 0
+    pseudo: bool = field(init=False)
+
+    def __post_init__(self) -> None:
+        self.pseudo = os.path.realpath(self.link.device).startswith(PSEUDO_TERMINALS)
 
 
 class BenchProcess:
@@ -345,7 +349,7 @@ class BenchProcess:
         if 0 < taken < len(write.data):
             port.pending += write.data[taken:]
             self._poll.modify(port.link.fileno(), select.POLLIN | select.POLLOUT)
-        if os.path.realpath(port.link.device).startswith(PSEUDO_TERMINALS):
+        if port.pseudo:
             time.sleep(HAND_ON_S)  # measured under full load: STOP at the other end after 240 instead of 400 us
         return taken > 0
 

@@ -8,7 +8,7 @@ import os
 from dataclasses import dataclass
 
 MCL_CURRENT = 1
-MCL_FUTURE = 2
+MCL_ONFAULT = 4
 PR_SET_TIMERSLACK = 29
 FIFO_PRIORITY = 10
 
@@ -25,7 +25,9 @@ def hurry(*, fifo: bool = True) -> Granted:
     """SCHED_FIFO, locked memory, 1 ns timer slack. Where not permitted the run goes on and says so."""
     libc = ctypes.CDLL(None, use_errno=True)
     libc.prctl(PR_SET_TIMERSLACK, 1, 0, 0, 0)
-    locked = libc.mlockall(MCL_CURRENT) == 0
+    # Only what has been used: pages of libraries that nobody ever touches (120 MB of 50) delay the end of the life pipe
+    # when this process is killed. Killed -> STOP by the stopper, same machine: 20 ms with them, 9 ms without.
+    locked = libc.mlockall(MCL_CURRENT | MCL_ONFAULT) == 0 or libc.mlockall(MCL_CURRENT) == 0
     try:
         if fifo:
             os.sched_setscheduler(0, os.SCHED_FIFO, os.sched_param(FIFO_PRIORITY))
