@@ -17,6 +17,7 @@ from daq.stream.updates import Update, decode
 
 ANSWER_TIMEOUT_MS = 5_000
 UPDATES_HELD_MAX = 10_000
+UPDATES_AT_ONCE_MAX = 2_000  # then the caller must get a look in, however fast more come
 
 
 class Client:
@@ -74,7 +75,9 @@ class Client:
     def updates(self, timeout_s: float) -> Iterator[Update]:
         """What has come, waiting at most timeout_s for the first. Lost updates are counted in `lost_updates`."""
         wait_ms = int(timeout_s * 1000)
-        while self._feed.poll(wait_ms):
+        for _ in range(UPDATES_AT_ONCE_MAX):
+            if not self._feed.poll(wait_ms):
+                return
             wait_ms = 0
             update = decode(self._feed.recv_multipart())
             if self._last_number is not None and update.number > self._last_number + 1:
