@@ -1,39 +1,24 @@
-"""The presenter: updates in, the words and numbers that every view shows out. Pure: time is an argument.
+"""The presenter: updates in, the lines that every view shows out. Pure: time is an argument.
 
-All wording of states, faults and results lives here, so that window, terminal and page say the same thing.
+What is old, lost, simulated or unknown says so. Words live in monitor.wording, so that all views say the same.
 """
 
 from __future__ import annotations
 
+from collections import deque
 from collections.abc import Mapping
 from dataclasses import dataclass
 from enum import Enum
 from typing import Any
 
 from daq.stream.updates import Update
+from monitor.wording import expected_text, fault_text, instruction, number, recording_text, result_text
 
 STALE_S = 3.0  # job.md J3: older data are grey and said to be not current
 NO_CONTACT_S = 10.0
-
-INSTRUCTIONS: Mapping[str, str] = {
-    "at rest": "mount the next bar, shut the shield, then call it",
-    "ready": "hands off; start when the shield is shut and eyes are protected",
-    "approaching": "approaching; hands off",
-    "in contact": "in contact",
-    "seating": "seating",
-    "loading": "loading; watch the bar, stand clear",
-    "holding": "holding",
-    "broken - unloaded": "broken; wait for standstill, keep the pieces together",
-    "broken? - still loaded": "LOAD STILL ON THE BAR - keep the shield shut",
-    "stopped": "stopped; look at the frame, then reset",
-    "unloading": "unloading; hands off",
-    "returning": "returning; hands off",
-    "signal lost": "no signal - the bar may be loaded; keep the shield shut",
-    "overload": "overload - check zero and a check weight before going on",
-    "shield open": "shield open; shut it, then reset",
-    "emergency stop": "emergency stop; release it at the machine, then reset",
-    "unknown - look at the frame": "look at the frame: is a bar mounted or loaded? then reset with your word on it",
-}
+DATA_OLD_S = 1.0  # of the newest sample: above, its age is a caution
+RESULTS_MAX = 1_000
+GRAVE = ("stop", "emergency")
 
 
 class Tone(Enum):
@@ -61,10 +46,21 @@ class Presenter:
     def __init__(self) -> None:
         self._state: Mapping[str, Any] = {}
         self._summary: Mapping[str, Any] = {}
-        self.results: list[Mapping[str, Any]] = []
-        self._heard_s = float("-inf")
+        self._results: deque[Mapping[str, Any]] = deque(maxlen=RESULTS_MAX)
+        self._heard_s = self._summed_s = float("-inf")
+        self._monitor_only = False
         self.frame = ""
         self.simulated = False
+        self.lost_updates = 0
+
+    @property
+    def results(self) -> tuple[Mapping[str, Any], ...]:
+        """Of this series, in the order in which they came; the newest last."""
+        return tuple(self._results)
+
+    @property
+    def state(self) -> str:
+        return str(self._state.get("state", "unknown - look at the frame"))
 
     def take_look(self, look: Mapping[str, Any], now_s: float) -> None:
         """A late joiner's start."""
@@ -72,11 +68,13 @@ class Presenter:
         self._summary = look["summary"]
         self.frame = str(look["frame"]["name"])
         self.simulated = bool(look["frame"]["simulated"])
+        self._monitor_only = look["frame"].get("motion") is None
         sitting = look.get("sitting") or {"bars": []}
-        self.results = [
+        self._results.clear()
+        self._results.extend(
             bar["result"] | {"specimen": bar["number"]} for bar in sitting["bars"] if bar["result"]
-        ]
-        self._heard_s = now_s
+        )
+        self._heard_s = self._summed_s = now_s
 
     def take(self, update: Update, now_s: float) -> None:
         """One update of the feed."""
@@ -85,64 +83,102 @@ class Presenter:
         if update.kind == "state":
             self._state = update.body
         elif update.kind == "summary":
-            self._summary = update.body
+            self._summary, self._summed_s = update.body, now_s
         elif update.kind == "result":
-            self.results.append(
-                {**update.body.get("result", {}), "specimen": update.body.get("specimen", "")}
-            )
+            result = dict(update.body.get("result") or {})
+            self._results.append({**result, "specimen": update.body.get("specimen", "")})
 
     def lines(self, now_s: float) -> list[Line]:
         """The view in the order of job.md 5: state, load, percent, bar, instruction or fault."""
         age_s = now_s - self._heard_s
         if age_s > NO_CONTACT_S:
-            return [Line("state", f"no contact with the station for {age_s:.0f} s", Tone.STOP)]
-        state = str(self._state.get("state", "unknown - look at the frame"))
-        tone = Tone.OLD if age_s > STALE_S else state_tone(state)
-        lines = [Line("state", state + (" (not current)" if age_s > STALE_S else ""), tone)]
-        if self.simulated:
-            lines.insert(0, Line("frame", f"{self.frame}  [PRACTICE - SIMULATED DATA]", Tone.CAUTION))
-        else:
-            lines.insert(0, Line("frame", self.frame))
+            told = f"NO CONTACT with the station for {age_s:.0f} s" if self.frame else "no contact yet"
+            return [self._frame_line(), Line("state", told, Tone.STOP)]
+        old = age_s > STALE_S
+        tone = Tone.OLD if old else state_tone(self.state)
+        lines = [self._frame_line(), Line("state", self.state + (" (not current)" if old else ""), tone)]
         lines += self._numbers(tone)
+        lines.append(self._data_line(now_s))
         lines += self._bar_lines()
-        lines.append(self._instruction(state))
+        lines += self._warnings()
+        lines.append(Line("do now", self._instruction()))
         return lines
+
+    def _frame_line(self) -> Line:
+        if self.simulated:
+            return Line("frame", f"{self.frame}   PRACTICE - SIMULATED DATA", Tone.CAUTION)
+        return Line(
+            "frame", self.frame + ("   monitor only: midspan cannot stop it" if self._monitor_only else "")
+        )
 
     def _numbers(self, tone: Tone) -> list[Line]:
         value = self._summary.get
-        stress = words(value("stress_mpa"), 1, "MPa")
-        percent = value("expected_percent")
-        band = f"{percent:3.0f} % of the expected break load" if percent is not None else "-"
-        rate = words(value("stress_rate_mpa_s"), 1, "MPa/s")
-        return [
-            Line(
-                "load", f"{words(value('net_n'), 1, 'N')} net   {words(value('gross_n'), 1, 'N')} gross", tone
-            ),
+        net, gross = number(value("net_n"), 1, "N"), number(value("gross_n"), 1, "N")
+        stress = number(value("stress_mpa"), 1, "MPa")
+        rate = number(value("stress_rate_mpa_s"), 1, "MPa/s")
+        lines = [
+            Line("load", f"{net} net   {gross} gross", tone),
             Line("stress", f"{stress}   {rate}", tone),
-            Line("expected", band, tone),
-            Line("crosshead", words(value("position_mm"), 3, "mm"), tone),
+            Line("expected", expected_text(self._summary), tone),
         ]
+        if value("position_mm") is not None:
+            lines.append(Line("crosshead", number(value("position_mm"), 3, "mm"), tone))
+        return lines
+
+    def _data_line(self, now_s: float) -> Line:
+        """How old the newest sample is, and what did not reach this view."""
+        age_s = self._summary.get("data_age_s")
+        told, tone = "no samples yet", Tone.CAUTION
+        if age_s is not None:
+            age_s += max(0.0, now_s - self._summed_s)
+            told, tone = f"{age_s:.1f} s old", Tone.PLAIN
+            if age_s > DATA_OLD_S:
+                told, tone = f"NOT CURRENT: {age_s:.0f} s old", Tone.CAUTION
+        if self.lost_updates:
+            told += f"   {self.lost_updates} updates lost in this view; the record has all"
+        return Line("data", told, tone)
 
     def _bar_lines(self) -> list[Line]:
         run = self._state.get("run")
         series, bars = self._state.get("series", ""), self._state.get("bars", 0)
         if run:
-            text = f"{run['specimen']} loading {run['loading']}   bar {self._state.get('bar', 0)} of {bars}"
+            place = f"   bar {self._state['bar']} of {bars}" if bars and self._state.get("bar") else ""
+            text = f"{run['specimen']} loading {run['loading']}{place}"
         else:
-            text = f"none mounted   {bars} bars" if bars else "no series open"
+            text = "no series open"
+            if bars:
+                ahead = f"next {self._state['next']}" if self._state.get("next") else "none left"
+                text = f"none called; {ahead}; {self._state.get('broken', 0)} of {bars} broken"
         lines = [Line("bar", f"{text}   {series}")]
-        if self.results:
-            lines.append(Line("last result", result_text(self.results[-1])))
+        if self._state.get("operator"):
+            lines.append(Line("operator", str(self._state["operator"])))
+        if self._results:
+            lines.append(Line("last bar", result_text(self._results[-1])))
         return lines
 
-    def _instruction(self, state: str) -> Line:
+    def _warnings(self) -> list[Line]:
+        lines = []
+        recording = recording_text(self._state.get("reports") or {}, self._state.get("lost_entries", 0))
+        if recording:
+            lines.append(Line("recording", recording, Tone.CAUTION))
         faults = self._state.get("faults") or []
-        grave = [fault for fault in faults if fault.get("severity") in ("stop", "emergency")]
+        grave = [fault for fault in faults if fault.get("severity") in GRAVE]
         if grave:
-            return Line("fault", fault_text(grave[0]), Tone.STOP)
-        if faults:
-            return Line("caution", fault_text(faults[0]), Tone.CAUTION)
-        return Line("do now", INSTRUCTIONS.get(state, ""))
+            lines.append(Line("fault", counted(grave), Tone.STOP))
+        elif faults:
+            lines.append(Line("caution", counted(faults), Tone.CAUTION))
+        return lines
+
+    def _instruction(self) -> str:
+        run_open, bars = bool(self._state.get("run")), self._state.get("bars", 0)
+        all_done = bool(bars) and self._state.get("broken", 0) == bars
+        return instruction(self.state, run_open=run_open, monitor_only=self._monitor_only, all_done=all_done)
+
+
+def counted(faults: list[Mapping[str, Any]]) -> str:
+    """The first cause, and how many followed."""
+    followers = f"   (+{len(faults) - 1} more)" if len(faults) > 1 else ""
+    return fault_text(faults[0]) + followers
 
 
 def state_tone(state: str) -> Tone:
@@ -158,27 +194,3 @@ def state_tone(state: str) -> Tone:
     if state.startswith(("unknown", "bench process")):
         return Tone.STOP
     return Tone.GOOD if state in ("ready", "broken - unloaded") else Tone.PLAIN
-
-
-def words(value: float | None, decimals: int, unit: str) -> str:
-    """A number with its unit, or a dash where there is none."""
-    return "-" if value is None or value != value else f"{value:.{decimals}f} {unit}"
-
-
-def fault_text(event: Mapping[str, Any]) -> str:
-    """What, value, limit, what was done, what to do now."""
-    what = str(event.get("what") or event["event"].replace("_", " "))
-    parts = [what]
-    if event.get("value") is not None and event.get("limit") is not None:
-        unit = event.get("unit", "")
-        parts.append(f"{event['value']:.4g} {unit}, limit {event['limit']:.4g} {unit}".replace(" ,", ","))
-    parts += [str(event[key]) for key in ("detail", "did", "do_now") if event.get(key)]
-    return "; ".join(parts)
-
-
-def result_text(result: Mapping[str, Any]) -> str:
-    """One bar's outcome in a line."""
-    strength = words(result.get("strength_mpa"), 1, "MPa")
-    load = words(result.get("peak_n"), 1, "N")
-    verdict = result.get("break_class") or result.get("verdict") or ""
-    return f"{result.get('specimen', '')}: {strength} at {load}   {verdict}"

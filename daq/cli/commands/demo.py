@@ -158,7 +158,9 @@ def break_bars(
                 presenter.take(update, now_s)
             if not supervisor.look():
                 raise MidspanError("the bench process has ended")
-            view.show(presenter.lines(now_s), now_s)
+            presenter.lost_updates = client.lost_updates
+            if view.due(now_s):
+                view.show(presenter.lines(now_s), now_s)
 
         client.sit(loaded.card.operator)
         client.do("series", path=str(series))

@@ -12,6 +12,8 @@ from daq.station.client import Client
 from monitor.presenter import Presenter
 from monitor.terminal import TerminalView
 
+UPDATES_WAIT_S = 0.1
+
 
 @click.command()
 @click.option("--terminal", is_flag=True, help="Plain live view in the terminal (the only view so far).")
@@ -30,8 +32,11 @@ def command(terminal: bool, frame: str | None, seconds: float | None) -> None:
         presenter.take_look(client.look(), time.monotonic())
         try:
             while time.monotonic() < until_s:
-                for update in client.updates(0.2):
+                for update in client.updates(UPDATES_WAIT_S):
                     presenter.take(update, time.monotonic())
-                view.show(presenter.lines(time.monotonic()), time.monotonic())
+                presenter.lost_updates = client.lost_updates
+                now_s = time.monotonic()
+                if view.due(now_s):
+                    view.show(presenter.lines(now_s), now_s)
         except KeyboardInterrupt:
             return
