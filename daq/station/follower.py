@@ -44,6 +44,7 @@ class Follower:
         self._frame = frame
         self._columns = [self._columns_of(number) for number in range(len(frame.links))]
         self.run: Mapping[str, Any] | None = None
+        self.tared = False  # a zero has been taken since the last run was opened: net forces mean something
         self.state = "unknown - look at the frame"
         self.reason = ""
         self.faults: list[Mapping[str, Any]] = []
@@ -71,8 +72,10 @@ class Follower:
         return tells
 
     def summary(self) -> dict[str, Any]:
-        """The numbers of now, from the online reduction; empty before the first block of a run."""
-        return dict(self._online.summary()) if self._online is not None else {}
+        """The numbers of the open run; nothing before its tare, and nothing after its end."""
+        if self._online is None or self.run is None or not self.tared:
+            return {}
+        return dict(self._online.summary())
 
     def trace_so_far(self) -> dict[str, Floats]:
         """The run so far, thinned by extremes in time order."""
@@ -144,11 +147,14 @@ class Follower:
         elif name == "state":
             self.state, self.reason = str(event["to"]), str(event.get("reason", ""))
         elif name == "tared" and self._online is not None:
+            self.tared = True
             self._online.tare(float(event["tare_n"]))
         elif name == "seated" and self._online is not None:
             self._online.seated(float(event.get("toe_offset_mm") or 0.0))
         elif name == "fracture" and self._online is not None:
             self._online.broken()
+        elif name == "reset":
+            self.faults = []  # a person has seen them
         if event.get("severity") in ("stop", "emergency", "caution"):
             self.faults = [*self.faults[-7:], event]
         if name == "run_closed":
@@ -157,6 +163,7 @@ class Follower:
 
     def _open(self, event: Mapping[str, Any]) -> None:
         self.run = event["run"]
+        self.tared = False
         self.faults = []
         self._so_far = []
         method = MethodCard.model_validate(event["method"], strict=False)

@@ -69,7 +69,12 @@ class Places:
         """Create the folders, the runtime one closed to everybody else."""
         private_folder(self.runtime.parent)
         private_folder(self.runtime)
-        self.spool.mkdir(parents=True, exist_ok=True)
+        try:
+            self.spool.mkdir(parents=True, exist_ok=True)
+        except OSError as error:
+            raise MidspanError(
+                f"data folder {self.data}: cannot be used ({error.strerror}): name another with --data"
+            ) from error
 
 
 def places_for(frame: str, data: Path) -> Places:
@@ -88,8 +93,13 @@ def places_for(frame: str, data: Path) -> Places:
 
 def private_folder(folder: Path) -> None:
     """Make a folder of mode 0700; refuse one that belongs to somebody else or is a symbolic link."""
-    folder.mkdir(mode=0o700, parents=True, exist_ok=True)
-    facts = os.lstat(folder)
+    try:
+        folder.mkdir(mode=0o700, parents=True, exist_ok=True)
+        facts = os.lstat(folder)
+    except OSError as error:
+        raise MidspanError(
+            f"runtime folder {folder}: {error.strerror}; set XDG_RUNTIME_DIR to a folder of your own on tmpfs"
+        ) from error
     if not stat.S_ISDIR(facts.st_mode) or facts.st_uid != os.getuid():
         raise MidspanError(
             f"runtime folder {folder} is not a folder of this user; remove it or set XDG_RUNTIME_DIR"

@@ -10,14 +10,17 @@ import signal
 import socket
 import sys
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
+from daq.errors import MidspanError
 from daq.station.places import Places
 from daq.stream.ring import RingAbsent, RingReader
 
 ALIVE_S = 0.5
+LINE_BYTES_MAX = 1_500
 
 
 class Life:
@@ -33,12 +36,20 @@ class Life:
     def ready(self) -> None:
         self._pipe.send(b"ready")
 
+    def tell(self, text: str) -> None:
+        """Something a person at the daemon should read."""
+        self._say(b"tell " + text.encode()[:LINE_BYTES_MAX])
+
+    def failed(self, text: str) -> None:
+        """Why this process ends, in one line."""
+        self._say(b"failed " + text.encode()[:LINE_BYTES_MAX])
+
     def over(self) -> bool:
         """Whether to finish; says that we are alive."""
         now_s = time.monotonic()
         if now_s - self._said_s > ALIVE_S:
             self._said_s = now_s
-            self._say()
+            self._say(b".")
         try:
             word = self._pipe.recv(64)
             self.orderly |= word == b"end"
@@ -49,9 +60,9 @@ class Life:
             self._over = True
         return self._over
 
-    def _say(self) -> None:
+    def _say(self, word: bytes) -> None:
         try:
-            self._pipe.send(b".")
+            self._pipe.send(word)
         except OSError:
             pass  # a supervisor that has gone is seen by its end of file
 
@@ -102,13 +113,18 @@ def recorder(config: Mapping[str, Any], life: Life) -> int:
     life.ready()
     if await_until(lambda: ring_is_ready(ring), life):
         report = Reporter("recorder", places.station_socket)
-        run_recorder(ring, places.journal(config["stream_id"]), report, life.over)
+        run_recorder(
+            ring,
+            places.journal(config["stream_id"]),
+            report,
+            life.over,
+            bytes_ahead=int(config["bytes_ahead"]),
+        )
     return 0
 
 
 def archivist(config: Mapping[str, Any], life: Life) -> int:
     from daq.record.archivist import run_archivist
-    from daq.record.recorder import drain_ring
     from daq.record.recover import recover
     from daq.results.reduce import result_mapping
 
@@ -118,19 +134,45 @@ def archivist(config: Mapping[str, Any], life: Life) -> int:
     copy_to = Path(config["copy_to"]) if config.get("copy_to") else None
 
     life.ready()
-    own_ring = Path(config["ring_path"])
-    for ring in sorted(places.runtime.glob("ring-*")):
-        if ring != own_ring:
-            drain_ring(ring, places.spool / f"journal-{ring.name.removeprefix('ring-')}")
-    for leftover in sorted(places.spool.glob("journal-*")):
-        if leftover != journal:
-            report({"report": "recovering", "journal": leftover.name})
-            recover(leftover, places.data, reduce=result_mapping, report=report, pulse=life.over)
+    clear_leftovers(places, config, report, life)
     if await_until(journal.is_dir, life):
         run_archivist(journal, places.data, places.spool, result_mapping, report, life.over, copy_to)
         if life.orderly:  # the recorder has ended before us: everything is sealed, clear up
             recover(journal, places.data, reduce=result_mapping, report=report)
     return 0
+
+
+def clear_leftovers(places: Places, config: Mapping[str, Any], report: Reporter, life: Life) -> None:
+    """Rings and journals of dead daemons become records. What cannot be had now is kept, and said."""
+    from daq.record.recorder import drain_ring
+    from daq.record.recover import recover
+    from daq.results.reduce import result_mapping
+
+    def note(said: Mapping[str, Any]) -> None:
+        report(said)
+        if said["report"] == "sealed":
+            life.tell(f"recovered from an earlier run: {said['path']}")
+        elif said["report"] == "journal_damaged":
+            life.tell(f"{said['path']} is damaged and is kept: {said['why']}")
+
+    for ring in sorted(places.runtime.glob("ring-*")):
+        if ring != Path(config["ring_path"]):
+            with told(life, f"{ring} is kept"):
+                drain_ring(ring, places.spool / f"journal-{ring.name.removeprefix('ring-')}")
+    for leftover in sorted(places.spool.glob("journal-*")):
+        if leftover != places.journal(config["stream_id"]):
+            report({"report": "recovering", "journal": leftover.name})
+            with told(life, f"{leftover} is kept"):
+                recover(leftover, places.data, reduce=result_mapping, report=note, pulse=life.over)
+
+
+@contextmanager
+def told(life: Life, consequence: str) -> Iterator[None]:
+    """What one leftover cannot give must not cost the others, nor the daemon."""
+    try:
+        yield
+    except (MidspanError, OSError) as error:
+        life.tell(f"{consequence}: {error}")
 
 
 def station(config: Mapping[str, Any], life: Life) -> int:
@@ -146,7 +188,12 @@ def main(role: str, config_path: str, words: str) -> int:
     """Run one role until the life pipe ends."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     config = json.loads(Path(config_path).read_text(encoding="utf-8"))
-    return ROLES[role](config, Life(json.loads(words)["life_fd"]))
+    life = Life(json.loads(words)["life_fd"])
+    try:
+        return ROLES[role](config, life)
+    except MidspanError as error:
+        life.failed(str(error))
+        return 4
 
 
 if __name__ == "__main__":

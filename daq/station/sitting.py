@@ -33,6 +33,14 @@ class Bar:
     run_id: str = ""
     result: Mapping[str, Any] = field(default_factory=dict)
     record: str = ""
+    interrupted: bool = False  # the run that is being sealed broke nothing
+
+    @property
+    def to_be_broken(self) -> bool:
+        """An interrupted bar lies on the rollers still: it stays the next one also while its record is being sealed."""
+        return self.state in (BarState.WAITING, BarState.INTERRUPTED) or (
+            self.state is BarState.SEALING and self.interrupted
+        )
 
 
 @dataclass(frozen=True, slots=True)
@@ -65,13 +73,24 @@ class Sitting:
         return frozenset(self._bars)
 
     @property
+    def broken_count(self) -> int:
+        return sum(bar.state is BarState.BROKEN for bar in self.bars)
+
+    @property
     def done(self) -> bool:
-        return all(bar.state is BarState.BROKEN for bar in self.bars)
+        return self.broken_count == len(self.bars)
 
     def next_number(self) -> str | None:
         """The first bar that still has to be broken."""
-        waiting = (bar for bar in self.bars if bar.state in (BarState.WAITING, BarState.INTERRUPTED))
-        return next((bar.specimen.number for bar in waiting), None)
+        return next((bar.specimen.number for bar in self.bars if bar.to_be_broken), None)
+
+    def why_none(self) -> str:
+        """Why there is no next bar."""
+        if self.done:
+            return f"every bar of {self.loaded.card.name} is broken"
+        busy = next(bar for bar in self.bars if bar.state in (BarState.OPEN, BarState.SEALING))
+        word = "called already" if busy.state is BarState.OPEN else "being sealed; try again in a moment"
+        return f"bar {busy.specimen.number} is {word}"
 
     def place_of(self, number: str) -> int:
         """1-based place in the firing order."""
@@ -89,19 +108,26 @@ class Sitting:
         if bar.state is BarState.BROKEN:
             raise Refused("mount", (f"bar {number} is broken already; its record is {bar.record}",))
         if bar.state in (BarState.OPEN, BarState.SEALING):
-            raise Refused("mount", (f"bar {number} is {bar.state.value} just now",))
+            word = "called already" if bar.state is BarState.OPEN else "being sealed; try again in a moment"
+            raise Refused("mount", (f"bar {number} is {word}",))
         self._bars[number] = replace(bar, state=BarState.OPEN, loadings=bar.loadings + 1, run_id=run_id)
         return bar.loadings + 1
+
+    def resume(self, number: str, loading: int, run_id: str) -> None:
+        """The bench has this loading open already: the station, or the operator's terminal, was away meanwhile."""
+        if number in self._bars:
+            bar = self._bars[number]
+            self._bars[number] = replace(bar, state=BarState.OPEN, loadings=loading, run_id=run_id)
 
     def refused(self, number: str) -> None:
         """The bench did not open the run: the bar waits as before; its loading number is not reused."""
         self._bars[number] = replace(self._bars[number], state=BarState.WAITING, run_id="")
 
-    def closed(self, run_id: str) -> None:
+    def closed(self, run_id: str, *, interrupted: bool) -> None:
         """The bench has closed the run; the record is being sealed."""
         for number, bar in self._bars.items():
             if bar.run_id == run_id and bar.state is BarState.OPEN:
-                self._bars[number] = replace(bar, state=BarState.SEALING)
+                self._bars[number] = replace(bar, state=BarState.SEALING, interrupted=interrupted)
 
     def sealed(self, sealed: Sealed) -> None:
         """A record stands on disk. One of another sheet's bar is none of ours."""

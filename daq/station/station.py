@@ -8,7 +8,6 @@ from __future__ import annotations
 import asyncio
 import datetime as dt
 import json
-import os
 import secrets
 import socket
 import time
@@ -20,15 +19,17 @@ from typing import Any
 import zmq
 import zmq.asyncio
 
-from daq.bench import messages
 from daq.cards.frame import FrameCard
 from daq.cards.load import check_fit, load_series
 from daq.cards.questions import questions
 from daq.errors import CardError, MidspanError, Refused
+from daq.station.benchline import SILENT_S, BenchLine
 from daq.station.follower import Follower, Tell
 from daq.station.found import found_records, sealed_from_report
 from daq.station.places import Places
 from daq.station.processes import Life, ring_is_ready
+from daq.station.proofs import KINDS, read_proofs, write_proof
+from daq.station.room import missing_for_runs
 from daq.station.seat import Seat
 from daq.station.sitting import Sitting
 from daq.stream.ring import RingReader
@@ -41,78 +42,11 @@ FOLLOW_S = 0.05  # 20 updates/s for traces
 BEAT_S = 0.1  # snapshot request = heartbeat; the bench stops after 1 s without
 SUMMARY_EVERY = 2  # of the follow turns: 10/s
 HEARTBEAT_S = 1.0  # a state update at least once a second
-ANSWER_TIMEOUT_S = 1.0
 ANSWERING_MAX = 64  # commands in work at a time
 RECOVERY_WAIT_S = 4.0  # a client waits 5 s for its answer
 FEED_QUEUE_UPDATES_MAX = 1_000  # per viewer; ZeroMQ drops beyond, the numbers show it
 REPORT_BYTES_MAX = 65_536
-
-
-class BenchLine:
-    """Requests to the bench process and its answers, over datagrams."""
-
-    def __init__(self, places: Places) -> None:
-        self._address = str(places.bench_socket)
-        self._own = str(places.runtime / f"station-{os.getpid()}")
-        self._socket = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM | socket.SOCK_NONBLOCK)
-        self._socket.bind(self._own)
-        self.snapshot: dict[str, Any] = {}
-        self._heard_s = time.monotonic()
-        self._number = 0
-        self._waiting: dict[int, asyncio.Future[dict[str, Any]]] = {}
-        asyncio.get_running_loop().add_reader(self._socket.fileno(), self._hear)
-
-    async def ask(self, request: Request) -> None:
-        """Raises Refused with what the bench said."""
-        answer = await self._send(messages.encode_request(self._next(), request))
-        if not answer.get("ok"):
-            raise Refused(type(request).__name__, tuple(answer.get("missing", ())))
-
-    def beat(self) -> None:
-        """Our heartbeat, and a question for the watch's present values; waits for nothing."""
-        try:
-            self._socket.sendto(messages.encode_snapshot_request(self._next()), self._address)
-        except OSError:
-            return  # no bench, or its queue is full; the age of `snapshot` tells
-
-    @property
-    def silent_s(self) -> float:
-        """Since the bench last answered."""
-        return time.monotonic() - self._heard_s
-
-    def close(self) -> None:
-        asyncio.get_running_loop().remove_reader(self._socket.fileno())
-        self._socket.close()
-        Path(self._own).unlink(missing_ok=True)
-
-    def _next(self) -> int:
-        self._number += 1
-        return self._number
-
-    async def _send(self, message: bytes) -> dict[str, Any]:
-        number = self._number
-        future: asyncio.Future[dict[str, Any]] = asyncio.get_running_loop().create_future()
-        self._waiting[number] = future
-        try:
-            self._socket.sendto(message, self._address)
-            return await asyncio.wait_for(future, ANSWER_TIMEOUT_S)
-        except (OSError, TimeoutError) as error:
-            raise Refused("bench", ("the bench process does not answer",)) from error
-        finally:
-            self._waiting.pop(number, None)
-
-    def _hear(self) -> None:
-        while True:
-            try:
-                message = self._socket.recv(messages.MESSAGE_BYTES_MAX)
-            except BlockingIOError:
-                return
-            answer = json.loads(message)
-            self._heard_s = time.monotonic()
-            self.snapshot = answer.get("snapshot", self.snapshot)
-            future = self._waiting.get(answer.get("id", -1))
-            if future is not None and not future.done():
-                future.set_result(answer)
+PUSHED_HOLDS_S = 60.0  # for the jog that shows the displacement's sign
 
 
 class Station:
@@ -129,6 +63,7 @@ class Station:
         self._snapshot: dict[str, Any] = {}
         self._caught_up = asyncio.Event()
         self._answering: set[asyncio.Task[None]] = set()
+        self._withdrawal: asyncio.Task[None] | None = None
         self._reports: dict[str, Any] = {}
         self._number = 0
         self._lost_entries = 0
@@ -184,7 +119,9 @@ class Station:
 
     def _notice(self, tell: Tell) -> None:
         if tell.kind == "event" and tell.body["event"] == "run_closed" and self._sitting is not None:
-            self._sitting.closed(str(tell.body["run_id"]))
+            self._sitting.closed(
+                str(tell.body["run_id"]), interrupted=bool(tell.body.get("interrupted", False))
+            )
 
     async def _publish(self, tell: Tell) -> None:
         self._number += 1
@@ -204,7 +141,7 @@ class Station:
     async def _beat(self) -> None:
         while True:
             self._bench.beat()
-            silent = self._bench.silent_s > ANSWER_TIMEOUT_S
+            silent = self._bench.silent_s > SILENT_S
             self._snapshot = {"state": "bench process does not answer"} if silent else self._bench.snapshot
             await asyncio.sleep(BEAT_S)
 
@@ -213,8 +150,9 @@ class Station:
         at_s = self._snapshot.get("time_s")
         age_s = max(0.0, at_s - self._follower.latest_s) if at_s is not None else None
         return {
-            **self._follower.summary(),
             **self._snapshot,
+            **({} if self._follower.tared else {"net_n": None}),
+            **self._follower.summary(),  # newer than the snapshot, and of one moment
             "data_age_s": finite(age_s) if age_s is not None else None,
             "sequence": self._follower.sequence,
         }
@@ -234,6 +172,8 @@ class Station:
             "run": dict(run) if run else None,
             "bar": place,
             "bars": len(sitting.bars) if sitting else 0,
+            "broken": sitting.broken_count if sitting else 0,
+            "next": sitting.next_number() if sitting else None,
             "series": sitting.loaded.card.name if sitting else "",
             "faults": list(self._follower.faults),
             "lost_entries": self._lost_entries,
@@ -273,7 +213,7 @@ class Station:
                 self._reports[str(report.get("from"))] = report
 
     def _note_archivist(self, report: Mapping[str, Any]) -> None:
-        if report.get("report") == "status":    # what recovery says meanwhile is not yet its end
+        if report.get("report") == "status":  # what recovery says meanwhile is not yet its end
             self._caught_up.set()
 
     async def _on_sealed(self, report: Mapping[str, Any]) -> None:
@@ -329,13 +269,19 @@ class Station:
             return self._take_series(words)
         if command == "mount":
             return await self._mount(words)
+        if command == "prove":
+            return await self._prove(words)
         await self._bench.ask(plain_request(command, words, self._seat.operator))
         return {}
 
     def _take_series(self, words: Mapping[str, Any]) -> dict[str, Any]:
-        if self._follower.run is not None:
-            raise Refused("series", ("a run is open; close it first",))
         loaded = load_series(Path(str(words["path"])))
+        run = self._follower.run
+        if run is not None and run["series"] != loaded.card.name:
+            raise Refused(
+                "series",
+                (f"a run of series {run['series']} is open (bar {run['specimen']}); close it first",),
+            )
         check_fit(self._frame, loaded.method, loaded.card.fixture, f"method of {words['path']}")
         asked = questions(
             self._frame, loaded.method, loaded.specimens, fixture=loaded.card.fixture, series=loaded.card
@@ -347,6 +293,8 @@ class Station:
             return {"questions": [question.line for question in asked]}
         found = found_records(self._places.data, loaded.card.name)
         self._sitting = Sitting(loaded, found)
+        if run is not None:
+            self._sitting.resume(str(run["specimen"]), int(run["loading"]), str(run["run_id"]))
         return {"questions": [], "sitting": self._sitting.as_json()}
 
     async def _mount(self, words: Mapping[str, Any]) -> dict[str, Any]:
@@ -361,7 +309,10 @@ class Station:
         sitting = self._sitting
         number = str(words.get("specimen") or sitting.next_number() or "")
         if not number:
-            raise Refused("mount", ("every bar of this series is broken",))
+            raise Refused("mount", (sitting.why_none(),))
+        no_room = missing_for_runs(self._places.data, self._frame, sitting.loaded.method.limits.run_s_max)
+        if no_room is not None:
+            raise Refused("mount", (no_room,))
         run_id = str(uuid.uuid4())
         loading = sitting.open(number, run_id)
         try:
@@ -370,6 +321,37 @@ class Station:
             sitting.refused(number)
             raise
         return {"specimen": number, "loading": loading, "run_id": run_id, "bar": sitting.place_of(number)}
+
+    async def _prove(self, words: Mapping[str, Any]) -> dict[str, Any]:
+        """A drill's word. "pushed" lifts the polarity lock for the jog that follows, for a minute; a kind of proof with
+        what was found is written to the file for the served card, and the bench then holds what the file says.
+        """
+        kind = str(words.get("kind", ""))
+        proven = read_proofs(self._places.proofs, self._frame)
+        if kind == "pushed":
+            await self._bench.ask(requests.Prove(self._seat.operator, True, proven["stop_drill"]))
+            self._withdrawal = asyncio.create_task(self._withdraw())
+            return {}
+        if kind in KINDS:
+            found = {**dict(words["found"]), "who": self._seat.operator, "utc": utc_now()}
+            write_proof(self._places.proofs, self._frame, kind, found)
+        await self._hold_proofs()
+        return {"proven": read_proofs(self._places.proofs, self._frame)}
+
+    async def _hold_proofs(self) -> None:
+        """The bench takes for proven what the file says, no more."""
+        proven = read_proofs(self._places.proofs, self._frame)
+        await self._bench.ask(requests.Prove(self._seat.operator, proven["polarity"], proven["stop_drill"]))
+
+    async def _withdraw(self) -> None:
+        """However the drill ends, and if its terminal dies: nothing stays proven that is not in the file."""
+        await asyncio.sleep(PUSHED_HOLDS_S)
+        while True:
+            try:
+                await self._hold_proofs()
+                return
+            except Refused:
+                await asyncio.sleep(1.0)  # the frame is moving; its stop or arrival comes first
 
     def _open_run(self, number: str, loading: int, run_id: str, words: Mapping[str, Any]) -> requests.OpenRun:
         assert self._sitting is not None

@@ -25,6 +25,7 @@ from daq.bench.sizing import stream_bytes_per_s
 from daq.cards.frame import FrameCard
 from daq.errors import MidspanError
 from daq.station.places import Places
+from daq.station.room import bytes_ahead, check_start
 from daq.stream.ring import ring_bytes
 
 DEADLINE_FIFO_S = 0.25  # reliability.md 2.1: shorter false-trips on a virtual machine
@@ -47,6 +48,7 @@ class Child:
     process: subprocess.Popen[bytes]
     life: socket.socket | None
     heard_s: float
+    failure: str = ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,9 +76,12 @@ class Supervisor:
         self._ending = False
         self._lock: int | None = None
         self._configs: dict[str, Path] = {}
+        self._untidy: list[str] = []
+        self.clean_start = True
 
     def __enter__(self) -> Supervisor:
         self._places.make()
+        check_start(self._places.data, self._outfit.frame)
         self._take_lock()
         self._start()
         return self
@@ -100,10 +105,10 @@ class Supervisor:
             ) from error
 
     def _start(self) -> None:
-        clean = not self._places.running_mark.exists()
+        self.clean_start = not self._places.running_mark.exists()
         self._sweep()
         self._places.running_mark.write_text(f"{os.getpid()}\n", encoding="ascii")
-        self._write_configs(clean)
+        self._write_configs(self.clean_start)
         stopper_end, bench_end = socket.socketpair(socket.AF_UNIX, socket.SOCK_SEQPACKET)
         self._spawn_stopper(stopper_end)
         self._spawn("bench", {"stopper_fd": bench_end.fileno()}, pass_fds=(bench_end.fileno(),))
@@ -111,7 +116,13 @@ class Supervisor:
         bench_end.close()
         for role in RESTARTABLE:
             self._spawn(role, {})
-        self._await_ready()
+        try:
+            self._await_ready()
+        except MidspanError:
+            self.end()
+            if self.clean_start:  # nobody could have moved anything: a failed start leaves no doubt behind
+                self._places.running_mark.unlink(missing_ok=True)
+            raise
 
     def _sweep(self) -> None:
         """Sockets of a dead daemon go; its ring stays until the archivist's start has drained it."""
@@ -139,7 +150,11 @@ class Supervisor:
                 "proven": proven,
                 "fifo": outfit.fifo,
             },
-            "recorder": {**shared, "places": encode_places(places)},
+            "recorder": {
+                **shared,
+                "places": encode_places(places),
+                "bytes_ahead": bytes_ahead(outfit.frame),
+            },
             "archivist": {**shared, "places": encode_places(places), "copy_to": outfit.copy_to},
             "station": {**shared, "places": encode_places(places)},
         }
@@ -172,21 +187,21 @@ class Supervisor:
         self._children[role] = Child(role, process, ours, time.monotonic())
 
     def _await_ready(self) -> None:
+        """Raises MidspanError with the one line of whoever could not start."""
         waiting = {"bench", *RESTARTABLE}
         until_s = time.monotonic() + READY_TIMEOUT_S
         while waiting:
             for role in sorted(waiting):
-                word = self._hear(self._children[role])
-                if word.startswith(b"failed "):
-                    self.end()
-                    raise MidspanError(word[7:].decode("utf-8", "replace"))
+                child = self._children[role]
+                ended = child.process.poll() is not None
+                word = self._hear(child)
+                if child.failure:
+                    raise MidspanError(child.failure)
                 if word == b"ready":
                     waiting.discard(role)
-                elif self._children[role].process.poll() is not None:
-                    self.end()
+                elif ended:
                     raise MidspanError(f"the {role} process ended while starting; its message stands above")
             if time.monotonic() > until_s:
-                self.end()
                 raise MidspanError(f"not ready after {READY_TIMEOUT_S:.0f} s: {', '.join(sorted(waiting))}")
             time.sleep(0.005)
 
@@ -228,25 +243,31 @@ class Supervisor:
                 f"stopper process ended with code {code}; nothing may move until midspan is started again."
             )
             return True
+        why = child.failure or f"code {code}"
         self._restarts = [at for at in self._restarts if now_s - at < RESTART_WINDOW_S] + [now_s]
         if len(self._restarts) > self._outfit.restarts_max:
             self._say(
-                f"{child.role} keeps ending (code {code}): giving up after {RESTARTS_MAX} restarts in a minute"
+                f"{child.role} keeps ending ({why}): giving up after {self._outfit.restarts_max} restarts in a minute"
             )
             return False
-        self._say(f"{child.role} ended with code {code}: started again")
+        self._say(f"{child.role} ended ({why}): started again")
         if child.life is not None:
             child.life.close()
         self._spawn(child.role, {})
         return True
 
-    @staticmethod
-    def _hear(child: Child) -> bytes:
+    def _hear(self, child: Child) -> bytes:
+        """The last word but dots; what the child wants told to people is said on the way."""
         assert child.life is not None
         word = b""
         try:
             while True:
                 heard = child.life.recv(2048)
+                if heard.startswith(b"tell "):
+                    self._say(heard[5:].decode("utf-8", "replace"))
+                    heard = b"."
+                elif heard.startswith(b"failed "):
+                    child.failure = heard[7:].decode("utf-8", "replace")
                 if not heard:
                     return word
                 if word == b"" or heard != b".":
@@ -263,24 +284,34 @@ class Supervisor:
         for child in self._children.values():
             if child.life is not None:
                 child.life.close()
-            child.process.returncode = 0        # nobody waits for them from here
+            child.process.returncode = 0  # nobody waits for them from here
 
     def end(self) -> None:
         """Bench first (it stops the crosshead), then recorder, archivist, station: nothing in the ring is lost."""
         if self._ending:
             return
         self._ending = True
-        clean = True
         for role in ("bench", "stopper", "recorder", "archivist", "station"):
             child = self._children.get(role)
-            if child is not None:
-                clean &= self._end_child(child)
-        if clean and "bench" in self._children:
+            if child is not None and not self._end_child(child):
+                self._untidy.append(role)
+        if not self._untidy and "bench" in self._children:
             self._places.running_mark.unlink(missing_ok=True)
             self._places.ring(self._stream_id).unlink(missing_ok=True)
         self._sweep()
         if self._lock is not None:
             os.close(self._lock)
+
+    def farewell(self, took_s: float) -> str:
+        """How the end went, for people."""
+        if not self._untidy:
+            return (
+                f"ended in {took_s:.1f} s: crosshead stopped, all that was recorded is in {self._places.data}"
+            )
+        return (
+            f"ended in {took_s:.1f} s, not in order ({', '.join(self._untidy)}): the next start recovers what is in"
+            f" {self._places.spool} and asks for a look at the frame"
+        )
 
     def _end_child(self, child: Child) -> bool:
         if child.life is not None:

@@ -65,9 +65,9 @@ def command(
     if live:
         check_live(frame, data, seconds)  # type: ignore[arg-type]
     if polarity:
-        drills.polarity(frame, data)  # type: ignore[arg-type]
+        drills.polarity(frame)  # type: ignore[arg-type]
     if stop_drill:
-        drills.stop_drill(frame, data)  # type: ignore[arg-type]
+        drills.stop_drill(frame)  # type: ignore[arg-type]
 
 
 def check_card(path: Path, frame: FrameCard | None) -> FrameCard | None:
