@@ -80,7 +80,8 @@ def channel_lines(frame: FrameCard, number: int, blocks: list[Block]) -> list[st
 def channel_line(name: str, unit: str, quiet: QuietRecord) -> str:
     return (
         f"{name}: mean {quiet.mean:.6g} {unit}, noise {quiet.sigma:.3g} {unit}, "
-        f"drift {quiet.drift_per_min:.3g} {unit}/min, step {quiet.resolution:.3g} {unit}, {quiet.distinct_values} different values"
+        f"drift {quiet.drift_per_min:.3g} {unit}/min, step {quiet.resolution:.3g} {unit}, "
+        f"{quiet.distinct_values} different values"
     )
 
 

@@ -1,9 +1,11 @@
-"""The command group; each command's module is imported only when it is called."""
+"""The command group; each command's module is imported only when it is called. Every error is one line and a code."""
 
 from __future__ import annotations
 
+import errno
 import importlib
 import sys
+from collections.abc import Sequence
 from typing import Any
 
 import click
@@ -17,11 +19,12 @@ COMMANDS = {
     "watch": "Watch a frame; can move nothing.",
     "stop": "Stop the crosshead now.",
     "simulate": "A virtual frame on a pty or TCP port.",
-    "check": "Check cards, ports and the live bench; never moves a frame unless a drill is asked for.",
-    "verify": "Check a sealed record or a journal; name the first damaged block.",
+    "check": "Check cards, ports and the live bench; moves only for a drill, and asks first.",
+    "verify": "Check sealed records and journals; name the first damaged block.",
     "recover": "Rebuild records from journals that a crash left behind.",
-    "export": "Write a sealed record as CSV, units in the column names.",
+    "export": "Write sealed records as CSV, units in the column names.",
 }
+FAILED, BAD_WORDS = 1, 2  # exit codes: it could not be done; the command line was not understood
 
 
 class LazyGroup(click.Group):
@@ -42,22 +45,62 @@ class LazyGroup(click.Group):
         with formatter.section("Commands"):
             formatter.write_dl(list(COMMANDS.items()))
 
-    def invoke(self, ctx: click.Context) -> Any:
-        """Every error of ours is one clear line and exit code 1."""
+    def main(
+        self,
+        args: Sequence[str] | None = None,
+        prog_name: str | None = None,
+        complete_var: str | None = None,
+        standalone_mode: bool = True,
+        **extra: Any,
+    ) -> Any:
+        """Every expected error leaves as one clear line a fault on standard error, never as a traceback."""
+        if not standalone_mode:
+            return super().main(args, prog_name, complete_var, standalone_mode=False, **extra)
         try:
-            return super().invoke(ctx)
+            done = super().main(args, prog_name, complete_var, standalone_mode=False, **extra)
+        except click.UsageError as error:
+            sys.exit(say_usage(error))
+        except click.ClickException as error:
+            sys.exit(say(error.format_message(), error.exit_code))
+        except click.Abort:
+            sys.exit(say("broken off", FAILED))
         except MidspanError as error:
-            for line in str(error).splitlines():
-                click.echo(f"midspan: {line}", err=True)
-            sys.exit(1)
+            sys.exit(say(str(error), FAILED))
+        except OSError as error:
+            if error.errno == errno.EPIPE:
+                sys.exit(FAILED)  # whoever read our output has enough
+            where = f"{error.filename}: " if error.filename else ""
+            sys.exit(say(f"{where}{error.strerror or error}", FAILED))
+        sys.exit(done if isinstance(done, int) else 0)
+
+
+def say_usage(error: click.UsageError) -> int:
+    """What was not understood, and where to read more."""
+    path = error.ctx.command_path if error.ctx is not None else "midspan"
+    what = error.format_message().rstrip(".").replace("\n", " ")
+    if isinstance(error, click.NoSuchOption | click.BadParameter) or "No such command" not in what:
+        return say(f"{what}; see {path} --help", BAD_WORDS, path)
+    return say(f"{what}; commands are {', '.join(COMMANDS)}", BAD_WORDS, path)
+
+
+def say(text: str, code: int, path: str = "midspan") -> int:
+    for line in text.splitlines() or ["failed"]:
+        click.echo(f"{path}: {line}", err=True)
+    return code
 
 
 @click.group(
-    cls=LazyGroup, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100}
+    cls=LazyGroup,
+    context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100},
+    no_args_is_help=False,
+    invoke_without_command=True,
 )
 @click.version_option(package_name="midspan")
-def midspan() -> None:
+@click.pass_context
+def midspan(ctx: click.Context) -> None:
     """Data acquisition and live monitoring for three- and four-point flexure tests of brittle bars.
 
     Software is never the safety function: rely on the hard-wired emergency stop, the shield and your local rules.
     """
+    if ctx.invoked_subcommand is None:
+        click.echo(ctx.get_help())

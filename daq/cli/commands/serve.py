@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import datetime as dt
 import signal
+import time
 from pathlib import Path
 
 import click
 
+from daq.cards.cautions import cautions
 from daq.cards.load import load_frame
 from daq.cli.options import DATA, FRAME_CARD
 from daq.station.places import places_for
@@ -32,16 +35,25 @@ def command(frame_card: Path, data: Path, copy_to: Path | None, no_fifo: bool) -
     """
     frame = load_frame(frame_card)
     ended: list[int] = []
-    for number in (signal.SIGINT, signal.SIGTERM):
+    for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP):
         signal.signal(number, lambda got, _: ended.append(got))
-    if frame.motion is not None and frame.motion.keep_alive is None:
-        say("THIS FRAME DOES NOT STOP IF THE COMPUTER DIES: its card declares no keep-alive")
+    for caution in cautions(frame, today=dt.date.today()):
+        say(f"! {caution}")
     outfit = Outfit(
         frame, places_for(frame.name, data), fifo=not no_fifo, copy_to=str(copy_to) if copy_to else None
     )
     with Supervisor(outfit, say) as supervisor:
-        say(f"{frame.name}: ready; records go to {data}")
+        word = (
+            ""
+            if supervisor.clean_start
+            else "; THE LAST END WAS UNCLEAN: look at the frame (midspan run, key L)"
+        )
+        mark = " (simulated)" if frame.simulated else ""
+        say(f"{frame.name}{mark}: ready; records go to {data.absolute()}{word}")
         code = supervisor.wait(lambda: bool(ended))
+        begun_s = time.monotonic()
+        say(f"{signal.Signals(ended[0]).name}: ending" if ended else "ending")
+    say(supervisor.farewell(time.monotonic() - begun_s))
     raise SystemExit(code)
 
 
