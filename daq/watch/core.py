@@ -77,6 +77,7 @@ class Run:
         "finding",
         "flat",
         "held_since_s",
+        "noisy_since_s",
         "note",
         "pace",
         "peak_n",
@@ -105,6 +106,7 @@ class Run:
         self.back_mm_max = float("inf")
         self.contact_s: float | None = None
         self.held_since_s: float | None = None
+        self.noisy_since_s: float | None = None
         self.seating: Seating | None = None
         self.flat: Flat | None = None
         self.drop: Drop | None = None
@@ -165,6 +167,7 @@ class Core:
         self.blank_until_s = float("-inf")
         self.watched = False
         self.lost_at_rest = False
+        self.others_lost: set[str] = set()
         self.runaway: Runaway | None = None
         self.frozen_samples: int | None = None
         self.overloaded = False
@@ -244,9 +247,10 @@ class Core:
         self.move_from_mm = self.travel.at_mm if self.travel else None
         if self.travel is not None and self.travel.at_mm is not None:
             self.travel.begin_move()
-            self.speed_watch = SpeedWatch(
-                self.set_speed_mm_s, self.clock_s, self.setup.stop_latency_s, self.travel
-            )
+            # a machine that closes its own force loop chooses its speed itself
+            if move.rate_n_s is None:
+                latency_s = self.setup.stop_latency_s
+                self.speed_watch = SpeedWatch(self.set_speed_mm_s, self.clock_s, latency_s, self.travel)
         self.set_bands()
 
     def moved_mm(self) -> float:

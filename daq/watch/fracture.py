@@ -119,6 +119,7 @@ class FractureWatch:
         self.watching = on
         self._clear(arm_n)
         if on:
+            self._bound = self.level.limit_n
             self._arm()
 
     def _clear(self, arm_n: float) -> None:
@@ -177,10 +178,10 @@ class FractureWatch:
     def _bin_closed(self, time_s: float) -> Finding | None:
         if not self.watching:
             return None
+        self._bound = self.level.limit_n
         if not self.armed:
             self._arm()
             return None
-        self._bound = self.level.limit_n
         newest, newest_s = self.level.newest_n, self.level.newest_s
         assert newest is not None and newest_s is not None
         if newest > self.envelope:
@@ -200,7 +201,6 @@ class FractureWatch:
         if newest is None or newest_s is None or not level.at_n > max(self.arm_n, 20.0 * level.sigma_n):
             return
         self.armed = True
-        self._bound = level.limit_n
         self.envelope = self.highest = self.peak_raw = newest
         self._half = self.settings.break_percent / 100.0 * newest
         self._armed_s = self._envelope_s = newest_s
@@ -232,7 +232,7 @@ class FractureWatch:
             time_s=time_s,
             onset_s=self._envelope_s,
             last_good_s=self._envelope_s,
-            last_good_index=self._good_index,
+            last_good_index=self._good_index - round((self._good_s - self._envelope_s) / self.level.period_s),
             first_dropped_s=self._envelope_s,
             peak_raw=self.peak_raw,
             forecast=self.envelope,
@@ -293,7 +293,7 @@ class FractureWatch:
             low = c.lows[-1] and c.low >= LOW_SHARE * c.window and c.mean < c.low_n
             # one sample more than the window: aliased ringing can keep the newest one high for long (480 Hz at 100 S/s)
             away = c.times_s[0] <= time_s - self._confirm_s + 0.5 * period_s and c.stays_away()
-            if (low or away) and not self._unlike_a_break(c):
+            if self.armed and (low or away) and not self._unlike_a_break(c):
                 return self._broken(c, "confirmed", time_s)
             if c.nears[-1] and 2 * c.near >= c.window:
                 return self._glitch(c, time_s)
@@ -305,7 +305,13 @@ class FractureWatch:
         return c.negative() or c.dull(self.rest, self.level.sigma_rest_n)
 
     def _undecided(self, c: Candidate, time_s: float) -> Finding | None:
-        """Neither break nor glitch after the undecided time."""
+        """Neither break nor glitch after the undecided time. Before the watch is armed that is all there is to
+        decide: glitches are kept out of the level (one +400 N sample would arm it at 10 S/s), kinks are followed.
+        """
+        if not self.armed:
+            found = self._decided(c, Kind.REBASELINE, "kink", time_s)
+            self._rebaseline(c, restart_envelope=False)
+            return found
         if c.dull(self.rest, self.level.sigma_rest_n):
             return self._decided(c, Kind.LOST, "constant", time_s)
         if c.negative():
@@ -363,6 +369,8 @@ class FractureWatch:
             self.envelope, self._envelope_s, self._sag_since_s = newest, newest_s, None
         else:
             self.peak_raw = max(self.peak_raw, *c.values[tail:])
+        if not self.armed:
+            self._arm()
 
     def _decided(self, c: Candidate, kind: Kind, by: str, time_s: float) -> Finding:
         first, off = c.first_dropped(), c.off()

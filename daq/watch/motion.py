@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import deque
-from math import ceil, sqrt
+from math import sqrt
 
 import numpy as np
 
@@ -15,7 +15,8 @@ from daq.watch.noise import Level
 from daq.watch.travel import Travel
 
 RUNAWAY_TIMES = 3.0
-RUNAWAY_SAMPLES_MIN, RUNAWAY_SAMPLES_MAX = 10, 500
+RUNAWAY_S, RUNAWAY_SAMPLES_MIN, RUNAWAY_SAMPLES_MAX = 0.01, 10, 1000
+RUNAWAY_MARGIN_SHARE = 0.015
 RUNAWAY_IN_A_ROW = 3  # one more than the longest glitch
 RUNAWAY_FROM_SHARE = 0.10
 APPROACH_SHARE = 0.5
@@ -49,20 +50,46 @@ def approach_mm_min(motion: Motion, capacity_n: float, touch: float, seen_s: flo
 class Runaway:
     """Row 8: the force rises more than three times as fast as planned, beyond what noise can do.
 
-    Compared over as many samples as the noise asks for, three samples in a row (a glitch has two), and only
-    on new ground: coming back from a dropout is fast, but leads nowhere new.
+    A gross rise (a wrong speed unit is 60 times the plan) is seen over 10 ms against a margin of 1.5 % of the
+    expected load, so that noise that comes up suddenly is not one; three samples in a row, because a glitch has two;
+    and only on new ground: coming back from a dropout is fast, but leads nowhere new. A modest one is seen in the
+    slope of the forecast line (0.1 s), two beats in a row.
     """
 
-    __slots__ = ("_count", "_from_n", "_recent", "_rise_n", "_to_n", "rate_n_s")
+    __slots__ = (
+        "_count",
+        "_from_n",
+        "_lag_s",
+        "_margin_n",
+        "_planned_n",
+        "_recent",
+        "_rise_n",
+        "_steep",
+        "_to_n",
+    )
 
     def __init__(self, rate_n_s: float, load_p50_n: float, sigma_n: float, rate_hz: float) -> None:
-        by_noise = ceil(3.0 * sqrt(2.0) * sigma_n * rate_hz / (RUNAWAY_TIMES * rate_n_s))
-        lag = min(max(RUNAWAY_SAMPLES_MIN, by_noise), RUNAWAY_SAMPLES_MAX)
-        self.rate_n_s = rate_n_s
-        self._rise_n = RUNAWAY_TIMES * rate_n_s * lag / rate_hz + 3.0 * sqrt(2.0) * sigma_n
+        lag = min(max(RUNAWAY_SAMPLES_MIN, round(RUNAWAY_S * rate_hz)), RUNAWAY_SAMPLES_MAX)
+        self._lag_s = lag / rate_hz
+        self._planned_n = RUNAWAY_TIMES * rate_n_s * self._lag_s
+        self._margin_n = RUNAWAY_MARGIN_SHARE * load_p50_n
+        self.use_noise(sigma_n)
         self._from_n, self._to_n = RUNAWAY_FROM_SHARE * load_p50_n, load_p50_n
         self._recent: deque[float] = deque(maxlen=lag)
-        self._count = 0
+        self._count = self._steep = 0
+
+    def use_noise(self, sigma_n: float) -> None:
+        """Noise that has come up since the zero must not look like a rise."""
+        self._rise_n = self._planned_n + max(3.0 * sqrt(2.0) * sigma_n, self._margin_n)
+
+    def judge_slope(self, level: Level, net_n: float) -> Trip | None:
+        """At a beat: the slope of the whole forecast line, beyond three times its own error."""
+        limit = self._planned_n / self._lag_s + 3.0 * level.slope_error_n_s
+        if not (level.full and level.slope_n_s > limit and self._from_n < net_n < self._to_n):
+            self._steep = 0
+            return None
+        self._steep += 1
+        return Trip(8, level.slope_n_s, limit, "N/s", Reaction.STOP) if self._steep >= 2 else None
 
     def judge(self, net_n: float, highest_n: float) -> Trip | None:
         recent = self._recent
@@ -75,7 +102,7 @@ class Runaway:
         self._count += 1
         if self._count < RUNAWAY_IN_A_ROW:
             return None
-        return Trip(8, rise, self._rise_n, "N", Reaction.STOP)
+        return Trip(8, rise / self._lag_s, self._rise_n / self._lag_s, "N/s", Reaction.STOP)
 
     def quiet(self, net_n: Floats) -> bool:
         """True if no sample of this stretch rises too fast, wherever it lies."""

@@ -120,6 +120,17 @@ class Level:
         return True
 
     @property
+    def full(self) -> bool:
+        """The line has all the bins it can have."""
+        return len(self._bins_x) == self._bins_x.maxlen
+
+    @property
+    def slope_error_n_s(self) -> float:
+        """Standard error of the slope of a full line, from the noise."""
+        samples = len(self._bins_x) * self.bin_samples
+        return self.sigma_n * sqrt(12.0 / samples**3) / self.period_s
+
+    @property
     def room(self) -> int:
         """Samples until the bin is full."""
         return self.bin_samples - len(self.pending_x)

@@ -40,6 +40,7 @@ class Pipeline:
         force, place = self.setup.force, self.setup.position
         self._force, self._source = force, force.source
         self._position_column = place.column if place and place.source == force.source else None
+        self._others = bool(self.setup.others)
         self._silence = signal.Silence(len(self.setup.sources))
         self._repeats = Repeats()
         self._beat_samples = self._core.watch.level.bin_samples
@@ -155,7 +156,7 @@ class Pipeline:
                 position.sample(core, time_s, row[place])
             self._beat_left -= 1
             if self._beat_left == 0:
-                self._beat(time_s)
+                self._beat(time_s, row)
             index += 1
 
     def _sample(self, index: int, time_s: float, count: float, gross_n: float) -> None:
@@ -216,8 +217,11 @@ class Pipeline:
             return time_s < core.blank_until_s
         return gross_n < core.judge.low_n and core.watched and core.watch.armed
 
-    def _beat(self, time_s: float) -> None:
+    def _beat(self, time_s: float, row: list[float] | None) -> None:
+        """row: the newest one, None where there is none."""
         self._beat_left, self._beat_s = self._beat_samples, time_s
+        if row is not None and self._others:
+            signal.others(self._core, row)
         stages.beat(self._core)
 
     # --- proven-quiet stretches
@@ -263,7 +267,7 @@ class Pipeline:
             position.take(core, times_s[-1:], at_mm[-1:])
         self._beat_left -= len(net_n)
         if self._beat_left == 0:
-            self._beat(core.clock_s)
+            self._beat(core.clock_s, block.counts[part.stop - 1].tolist())
         return True
 
     def _take(
@@ -297,4 +301,4 @@ class Pipeline:
         self._silence.judge(core, now_s)
         if now_s - max(self._beat_s, core.clock_s) > TICK_BEATS * self._beat_period_s:
             core.clock_s = now_s
-            self._beat(now_s)
+            self._beat(now_s, None)

@@ -127,7 +127,8 @@ class Seating:
                 toe_mm = self._toe_mm(slope, net_n, at_mm)
                 self.seated = Seated(net_n, self._starts_n[0], slope, toe_mm, self._told_late)
                 return self.seated
-            if net_n > LATE_FROM * self.load_p50_n and not self._told_late:
+            shown = len(self._slopes) == STEADY_WINDOWS  # fewer windows can show neither steady nor unsteady
+            if shown and net_n > LATE_FROM * self.load_p50_n and not self._told_late:
                 self._told_late = True
                 return "not steady at half the expected break load"
         return self._late(slope, net_n)

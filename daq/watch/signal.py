@@ -18,6 +18,7 @@ from daq.watch.values import Severity, State
 GAP_SAMPLES_MAX = 5
 FROZEN_S = 0.05
 BACK_S = 0.5
+UNKNOWN_SAMPLES, UNKNOWN_S = 50, 0.5  # reliability F9
 NAN = float("nan")
 
 
@@ -54,6 +55,9 @@ class Silence:
             self._back(core, now_s)
 
     def _back(self, core: Core, now_s: float) -> None:
+        if core.state is not State.SIGNAL_LOST:  # a person was quicker
+            self._back_since_s, core.lost_at_rest = None, False
+            return
         if self._lost or not isfinite(core.gross_n) or core.stopping is not None:
             self._back_since_s = None
             return
@@ -110,12 +114,26 @@ def jumped_to_rail(core: Core, gross_n: float) -> bool:
 
 
 def frozen(core: Core, same: int, since_s: float, now_s: float) -> None:
-    """Identical raw values for longer than this signal shows by chance."""
-    needed = core.frozen_samples
-    if needed is None or same + 1 < needed or now_s - since_s < FROZEN_S:
+    """Identical raw values for longer than this signal shows by chance; before any zero, for half a second."""
+    needed, lasting_s = core.frozen_samples, FROZEN_S
+    if needed is None:
+        needed, lasting_s = UNKNOWN_SAMPLES, UNKNOWN_S
+    if same + 1 < needed or now_s - since_s < lasting_s:
         return
-    if core.armed:
+    if core.armed or (core.moving and core.set_speed_mm_s > 0):
         lost(core, "the value stands still")
+
+
+def others(core: Core, row: list[float]) -> None:
+    """Channels that are not needed for control: their loss is told once, and the run goes on."""
+    for column in core.setup.others:
+        if column.source != core.setup.force.source:
+            continue
+        if isfinite(row[column.column]):
+            core.others_lost.discard(column.name)
+        elif column.name not in core.others_lost:
+            core.others_lost.add(column.name)
+            core.emit("channel_lost", Severity.CAUTION, why="it is not a number", channel=column.name)
 
 
 def position_lost(core: Core, why: str) -> None:

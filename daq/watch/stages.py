@@ -30,6 +30,7 @@ from daq.watch.values import Move, MoveKind, Severity, State, Verdict
 
 PRELOAD_HIGH_SHARE = 0.10
 ABSENT_S = 300.0
+NOISE_TIMES, NOISY_S = 3.0, 2.0
 LATE_SHARE = 0.95
 LOOK_FROM, LOOK_TO, LOOK_OFF_BY = 0.25, 0.5, 0.15
 STOP_FAILED_ROW = 26
@@ -234,6 +235,8 @@ def _armed(core: Core, run: Run) -> None:
             core.emit("no_break", Severity.CAUTION, load_n=gross_n, expected_n=limits.specimen_caution_n)
     if core.state in (State.IN_CONTACT, State.HOLDING):
         _absent(core, run)
+    if run.seating is not None and run.seating.seated is not None:
+        _noise(core, run)
     if core.watched:
         _watched(core, run, net_n)
 
@@ -243,6 +246,12 @@ def _watched(core: Core, run: Run, net_n: float) -> None:
         tell_drop(core, run, seen=True)
     if core.move_now is None or core.watch.candidate is not None:
         return
+    if core.runaway is not None:
+        core.runaway.use_noise(core.watch.level.sigma_n)
+        trip = core.runaway.judge_slope(core.watch.level, net_n)
+        if trip is not None:
+            core.trip(trip)
+            return
     at_mm = _at_mm(core)
     if run.seating is not None:
         _tell_seating(core, run, run.seating.feed(core.clock_s, net_n, at_mm))
@@ -313,7 +322,7 @@ def _correct_speed(core: Core, run: Run, pace: Pace) -> None:
     speed = min(max(factor * move.speed_mm_min, motion.speed_mm_min_min), motion.speed_mm_min_max)
     speed = min(speed, 3.0 * run.plan.expected.speed_mm_min)
     if speed != move.speed_mm_min:
-        _load(core, run, speed)
+        core.move(Move(MoveKind.LOAD, speed))
         core.emit("speed_corrected", speed_mm_min=speed, rate_n_s=pace.rate_n_s)
 
 
@@ -323,6 +332,22 @@ def _once(core: Core, run: Run, trip: Trip, what: str) -> bool:
     run.told.add(what)
     core.tell_limit(trip, what, Severity.CAUTION)
     return True
+
+
+def _noise(core: Core, run: Run) -> None:
+    """Row 17 during the run: above three times the noise at rest for two seconds."""
+    level = core.watch.level
+    limit_n = NOISE_TIMES * level.sigma_rest_n
+    if level.sigma_n <= limit_n:
+        run.noisy_since_s = None
+        return
+    if run.noisy_since_s is None:
+        run.noisy_since_s = core.clock_s
+    if core.clock_s - run.noisy_since_s < NOISY_S:
+        return
+    trip = Trip(17, level.sigma_n, limit_n, "N", Reaction.CAUTION)
+    if _once(core, run, trip, "noise above the quiet record"):
+        core.emit("noise_high", Severity.CAUTION, sigma_n=level.sigma_n, quiet_n=level.sigma_rest_n)
 
 
 def _absent(core: Core, run: Run) -> None:

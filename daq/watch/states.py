@@ -19,7 +19,6 @@ class Cause(Enum):
     """Why a state is left."""
 
     TARED = "tared"
-    TARE_VOID = "tare void"
     STARTED = "started"
     JOGGED = "jog towards the specimen"
     SENT_AWAY = "return"
@@ -98,7 +97,6 @@ _FLOW: Mapping[tuple[State, Cause], State] = {
         Cause.SHIELD_OPENED,
     ): State.AT_REST,  # mounting a bar opens it: blocks the start, trips nothing
     (State.READY, Cause.SHIELD_OPENED): State.AT_REST,  # the bar may have been touched: tare again
-    (State.READY, Cause.TARE_VOID): State.AT_REST,
     (State.READY, Cause.CLOSED): State.AT_REST,
     (State.READY, Cause.STARTED): State.APPROACHING,
     (State.APPROACHING, Cause.TOUCHED): State.IN_CONTACT,

@@ -222,11 +222,13 @@ def _disturb(kind: str, rng: np.random.Generator, case: dict[str, object]) -> di
         return {"pop_ins": ((float(rng.uniform(0.4, 0.85)), float(rng.uniform(0.03, 0.17)), keep),)}
     if kind == "glitch":
         found = []
-        for at in np.sort(rng.uniform(0.2, 0.93, rng.integers(1, 4))):
+        apart = max(10.0 / rate_hz, 0.08) / float(case["ramp_s"])  # type: ignore[arg-type]  # else one long dropout
+        places = np.sort(rng.uniform(0.05, 0.93, rng.integers(1, 4)))
+        for at in places[np.diff(places, prepend=-1.0) > apart]:
             samples = int(rng.integers(1, 3))
             load = at * peak
             # two samples above the specimen's ceiling are a limit passed, not a glitch
-            high = 400.0 if samples == 1 else max(min(400.0, 560.0 - load - 8 * sigma), 10 * sigma)
+            high = 400.0 if samples == 1 else max(min(400.0, 560.0 - load - 8 * sigma), 12 * sigma)
             size = high if rng.random() < 0.5 else -rng.uniform(0.3, 1.0) * min(450.0, load + 20.0)
             found.append((float(at), float(size), samples))
         return {"glitches": tuple(found)}

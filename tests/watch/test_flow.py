@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import math
+from pathlib import Path
 
 import pytest
 
@@ -11,6 +12,7 @@ from daq.cards.frame import FrameCard
 from daq.cards.method import MethodCard
 from daq.errors import Refused
 from daq.stream.payloads import pack_event, unpack_event
+from daq.watch import catalogue
 from daq.watch.catalogue import EVENTS
 from daq.watch.faults import FAULTS
 from daq.watch.pipeline import Pipeline, Proven
@@ -384,6 +386,24 @@ def test_a_position_that_stands_still_while_the_force_rises_is_lost() -> None:
     assert 16 in rig.rows()
 
 
+@pytest.mark.slow
+def test_noise_that_comes_up_during_a_run_is_told_and_stops_nothing() -> None:
+    rig = quick().loading(load_n=150.0)
+    rig.noise_n = 1.0
+    rig.run_for(4.0)
+    assert rig.rows() == [17] and len(rig.named("noise_high")) == 1
+    assert rig.pipe.state is State.LOADING
+
+
+@pytest.mark.slow
+def test_a_jog_with_a_dead_cell_is_stopped() -> None:
+    rig = Rig(machine=Machine(gap_mm=20.0)).run_for(0.3)
+    rig.count_of = lambda t, c: 0.0
+    rig.ask(Jog(1.0, 5.0))
+    rig.run_for(0.7)
+    assert rig.pipe.state is State.SIGNAL_LOST and rig.machine.at_mm < 0.06
+
+
 # --- wires
 
 
@@ -657,14 +677,16 @@ def test_a_tick_without_data_decides_nothing_before_anything_was_heard() -> None
 
 def test_causes_are_all_used() -> None:
     """A cause nobody gives is a hole in the table's story."""
-    import daq.watch as package
-
-    folder = next(iter(package.__path__))
-    from pathlib import Path
-
-    text = "".join(p.read_text() for p in Path(folder).glob("*.py") if p.name != "states.py")
+    folder = Path(catalogue.__file__).parent
+    text = "".join(p.read_text("utf-8") for p in folder.glob("*.py") if p.name != "states.py")
     unused = [cause.name for cause in Cause if f"Cause.{cause.name}" not in text]
-    assert unused in ([], ["TARE_VOID"])
+    assert unused == []
+
+
+def test_the_catalogue_holds_nothing_that_is_never_told() -> None:
+    folder = Path(catalogue.__file__).parent
+    text = "".join(p.read_text("utf-8") for p in folder.glob("*.py") if p.name != "catalogue.py")
+    assert [name for name in EVENTS if f'"{name}"' not in text] == []
 
 
 def test_moves_are_frozen_values() -> None:

@@ -282,6 +282,18 @@ def test_the_way_to_the_bar_is_slowed_where_it_could_crush_the_cell() -> None:
 
 
 @pytest.mark.slow
+@pytest.mark.parametrize(("factor", "stops"), [(4.0, True), (2.5, False)])
+@pytest.mark.parametrize("rate_hz", [20.0, 1000.0])
+def test_a_modest_runaway_is_seen_in_the_slope(rate_hz: float, factor: float, stops: bool) -> None:
+    rig = Rig(frame(rate_hz=rate_hz, motion__gap_mm=0.02), Machine(gap_mm=0.01, strength_n=1e9))
+    rig.samples_per_block = 1
+    rig.started().run_until(lambda: rig.pipe.state is State.LOADING)
+    rig.machine.speed_mm_s *= factor
+    rig.run_for(1.5)
+    assert (8 in rig.rows()) is stops
+
+
+@pytest.mark.slow
 def test_a_run_that_stands_in_contact_for_five_minutes_is_told() -> None:
     """Row 30."""
     rig = Rig(frame(rate_hz=50.0, motion__gap_mm=0.02), Machine(gap_mm=0.01, strength_n=1e9))
