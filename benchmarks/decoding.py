@@ -1,9 +1,9 @@
 """Decoding rate of both dialects, against a bare numpy parse of the same bytes in the same run.
 
 Processor time of this process, the shortest of several tries taken in turn with the floor. Floors: packets,
-numpy.frombuffer of the same fields copied to float64 without looking at sync, check or counter; lines, numpy.loadtxt
-(and numpy.fromstring for one long chunk) of the same numbers with prefix and check already cut off. The decoder does what
-the floor does not: framing, resynchronisation, check, counter, gaps, sample times.
+numpy.frombuffer of the same fields copied to float64 without looking at sync, check or counter; lines,
+numpy.loadtxt (and numpy.fromstring for one long chunk) of the same numbers with prefix and check already cut off.
+The decoder does what the floor does not: framing, resynchronisation, check, counter, gaps, sample times.
 """
 
 from __future__ import annotations

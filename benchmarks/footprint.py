@@ -1,9 +1,9 @@
 """Footprint: processor time and memory of each process while a bar is loaded at 1 kHz; growth at 10 kHz.
 
-The floor of the processor time is the bare Python loop (select, read, two comparisons) on the same rows at the same time.
-Viewers and the instrument are not midspan's and stand apart. Growth: resident memory of each process at the beginning and
-the end of a stretch at ten times the rate, so that an hour's rows pass in some minutes. A supervisor lives in this
-process here; the daemon's own is measured by what it does, its memory is this benchmark's.
+The floor of the processor time is the bare Python loop (select, read, two comparisons) on the same rows at the same
+time. Viewers and the instrument are not midspan's and stand apart. Growth: resident memory of each process at the
+beginning and the end of a stretch at ten times the rate, so that an hour's rows pass in some minutes. The supervisor
+lives in this process here and is left out: it looks at its children ten times a second.
 """
 
 from __future__ import annotations

@@ -1,7 +1,7 @@
 """Harness: figures, quantiles, the state of the machine during a run, processes' CPU and memory, a C compiler.
 
-A figure is worth nothing without its floor: the same work done by bare means in the same run, on the same machine, under
-the same load. Every figure therefore carries its floor, the ratio, and how idle the machine was meanwhile.
+A figure is worth nothing without its floor: the same work done by bare means in the same run, on the same machine,
+under the same load. Every figure therefore carries its floor, the ratio, and how idle the machine was meanwhile.
 """
 
 from __future__ import annotations

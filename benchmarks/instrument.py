@@ -193,10 +193,10 @@ class Program:
                 stream.log.append(f"S {number} {at_ns}")
 
     def _row(self, stream: Stream) -> None:
-        if stream is not self._streams[0] and self._events and not stream.asked_ns:
-            if stream.due_ns < stream.event_ns - WARM_NS:
-                stream.due_ns += self._period_ns
-                return
+        idle = stream is not self._streams[0] and self._events and not stream.asked_ns
+        if idle and stream.due_ns < stream.event_ns - WARM_NS:
+            stream.due_ns += self._period_ns
+            return
         force_n, at_mm = self._lane.row() if stream is self._streams[0] else self._lane.row_again()
         wanted = stream.asked < self._events and not stream.asked_ns and not stream.over_left
         if wanted and stream.due_ns >= stream.event_ns:

@@ -47,7 +47,7 @@ def write_series(folder: Path, *, speed_mm_min: float = SPEED_MM_MIN) -> Path:
     """Series, method and sheet files: the demo's, but slow, and with a limit of its own that events can pass."""
     method = example_path("alumina-demo.toml").read_text("utf-8")
     method = method.replace("speed_mm_min = 2.0", f"speed_mm_min = {speed_mm_min}")
-    method = method.replace("run_s_max = 60.0", f"run_s_max = 86400.0\nforce_n_max = {METHOD_N_MAX}")
+    method = method.replace("run_s_max = 60.0", f"run_s_max = 1200.0\nforce_n_max = {METHOD_N_MAX}")
     (folder / "alumina-demo.toml").write_text(method, encoding="utf-8")
     for name in ("demo-series.toml", "demo-series.csv"):
         (folder / name).write_text(example_path(name).read_text("utf-8"), encoding="utf-8")

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import random
+import time
 from collections.abc import Callable
 from dataclasses import dataclass, field
 
@@ -35,6 +36,7 @@ class Loaded:
     now_s: float = 1.0
     counter: int = 0
     stops: int = 0
+    decided_ns: int = 0  # when the last STOP was decided, by time.perf_counter_ns
     _ticked_s: float = 0.0
 
     def __post_init__(self) -> None:
@@ -42,10 +44,19 @@ class Loaded:
         self.series = lane.slow_series(speed_mm_min=self.speed_mm_min)
         pipeline = Pipeline(self.frame, clean_start=True, proven=Proven(polarity=True, stop_drill=True))
         self.core = BenchCore(
-            self.frame, pipeline, [decoder_for(self.frame, 0)], MotionPort(self.frame), origin_ns=0
+            self.frame,
+            pipeline,
+            [decoder_for(self.frame, 0)],
+            MotionPort(self.frame),
+            origin_ns=0,
+            at_once=self._note_stop,
         )
         stiffness = lane.stiffness_n_mm(self.frame, self.series)
         self.machine = lane.Lane(self.rate_hz, stiffness, random.Random(self.seed))
+
+    def _note_stop(self, write: Write) -> bool:
+        self.decided_ns = time.perf_counter_ns()
+        return False
 
     @property
     def now_ns(self) -> int:

@@ -1,12 +1,12 @@
 """The recording path: rows a second from the ring through the journal to the live HDF5 file, and the seal at the close.
 
-Real recorder and archivist, both on one processor; a producer on another puts entries of three channels (raw bytes and
-decoded block) into a real ring, a thousand reads a second. A rate is sustained when nothing is lost, the ring holds less
-than a second at the end, and the archivist is less than 1.5 s behind (it reports twice a second). Floor: one process
-that appends the same columns to an HDF5 file with the same settings (SWMR, chunks, gzip 1, shuffle, Fletcher-32, a flush
-every 0.15 s of data), processor seconds a million rows. Seal: a run made by the real core (lane.py), archived from its
-journal by the real archivist with the real reduction; time as the archivist reports it, memory as the highest of its
-process.
+Real recorder and archivist, both on one processor; a producer on another puts entries of three channels (raw bytes
+and decoded block) into a real ring, a thousand reads a second. A rate is sustained when nothing is lost, the ring
+holds less than a second at the end, and the archivist is less than 1.5 s behind (it reports twice a second). Floor:
+one process that appends the same columns to an HDF5 file with the same settings (SWMR, chunks, gzip 1, shuffle,
+Fletcher-32, a flush every 0.15 s of data), processor seconds a million rows. Seal: a run made by the real core
+(loaded.py), archived from its journal by the real archivist with the real reduction; time as the archivist reports
+it, memory as the highest of its process.
 """
 
 from __future__ import annotations

@@ -1,11 +1,11 @@
 """Limit passed: from the deciding row to the STOP, against bare loops that decide on the same bytes in the same run.
 
-One instrument process paces the same rows on three ptys, a third of a period apart: the bench process with everything
-around it (recorder, archivist with its live HDF5 file, station feeding three viewers), a bare Python loop and, where
-there is a compiler, a plain C loop, all in the same scheduling class under the same load. Now and then it sends two rows
-above the limit and measures from before the write of the second to after the read of the STOP: two trips through the
-pseudo-terminal and whatever lies between. The bench is the real one, armed again after each STOP (rearmed_bench.py).
-The in-process part (read of the deciding bytes -> STOP written) is measured inside it.
+One instrument process paces the same rows on three ptys, a third of a period apart: the bench process with
+everything around it (recorder, archivist with its live HDF5 file, station feeding three viewers), a bare Python loop
+and, where there is a compiler, a plain C loop, all in the same scheduling class under the same load. Now and then it
+sends two rows above the limit and measures from before the write of the second to after the read of the STOP: two
+trips through the pseudo-terminal and whatever lies between. The bench is the real one, armed again after each STOP
+(rearmed_bench.py). The in-process part (read of the deciding bytes -> STOP written) is measured inside it.
 """
 
 from __future__ import annotations
