@@ -105,11 +105,10 @@ class Presenter:
         return lines
 
     def _frame_line(self) -> Line:
+        name = self.frame + ("   monitor only: midspan cannot stop it" if self._monitor_only else "")
         if self.simulated:
-            return Line("frame", f"{self.frame}   PRACTICE - SIMULATED DATA", Tone.CAUTION)
-        return Line(
-            "frame", self.frame + ("   monitor only: midspan cannot stop it" if self._monitor_only else "")
-        )
+            return Line("frame", f"{name}   PRACTICE - SIMULATED DATA", Tone.CAUTION)
+        return Line("frame", name)
 
     def _numbers(self, tone: Tone) -> list[Line]:
         value = self._summary.get

@@ -84,7 +84,7 @@ def fault_text(event: Numbers) -> str:
         parts.append(
             f"{event['value']:.4g} {unit}, limit {event['limit']:.4g} {unit}".replace(" ,", ",").strip()
         )
-    parts += [str(event[key]) for key in ("detail", "why", "did", "do_now") if event.get(key)]
+    parts += [str(event[key]) for key in ("detail", "text", "why", "did", "do_now") if event.get(key)]
     return "; ".join(parts)
 
 

@@ -217,12 +217,25 @@ class BenchProcess:
         who, address = receive(self._stop_socket)
         now_ns = time.monotonic_ns()
         self._write(self._core.stop(who.decode("utf-8", "replace")[:80] or "stop", now_ns))
+        why = self._why_no_stop()
         reply(
             self._stop_socket,
             address,
-            {"ok": True, "stopped_ns": time.monotonic_ns(), "took_ns": time.monotonic_ns() - now_ns},
+            {
+                "ok": not why,
+                "why": why,
+                "stopped_ns": time.monotonic_ns(),
+                "took_ns": time.monotonic_ns() - now_ns,
+            },
         )
         self._record()
+
+    def _why_no_stop(self) -> str:
+        """Why no STOP has left; empty where its bytes are on the way."""
+        number = motion_link(self._frame)
+        if number is None:
+            return "monitor only: midspan has no way to stop this machine"
+        return "the link to the machine is lost" if self._ports[number].lost else ""
 
     def _on_message(self, mask: int) -> None:
         message, address = receive(self._bench_socket)

@@ -18,7 +18,7 @@ from daq.cards.frame import FrameCard
 from daq.cli.options import running_places
 from daq.errors import MidspanError
 from daq.station.client import Client
-from daq.station.stopline import send_stop
+from daq.station.stopline import stop_frame
 from monitor.presenter import GRAVE
 from monitor.wording import fault_text
 
@@ -90,8 +90,9 @@ class Bench:
         return [update.body for update in self.client.updates(0.05) if update.kind == "event"]
 
     def stop(self) -> None:
-        if not send_stop(self.name, "drill"):
-            raise MidspanError("NO ANSWER TO STOP - USE THE EMERGENCY STOP AT THE MACHINE")
+        why = stop_frame(self.name, "drill")
+        if why:
+            raise MidspanError(f"NO STOP: {why} - USE THE EMERGENCY STOP AT THE MACHINE")
 
 
 def polarity(frame: FrameCard) -> None:

@@ -35,7 +35,7 @@ def stop(words: list[str]) -> int:
     if len(words) > 1 or any(word.startswith("-") for word in words):
         sys.stderr.write("midspan stop: takes at most one frame name; see midspan stop --help\n")
         return 2
-    from daq.station.stopline import running_frames, send_stop
+    from daq.station.stopline import running_frames, stop_frame
 
     frames = words or running_frames()
     if not frames:
@@ -45,11 +45,12 @@ def stop(words: list[str]) -> int:
         return 1
     code = 0
     for frame in frames:
-        if send_stop(frame, "midspan stop"):
-            sys.stdout.write(f"{frame}: STOP sent\n")
-        else:
-            sys.stderr.write(f"{frame}: no answer - USE THE EMERGENCY STOP AT THE MACHINE\n")
+        why = stop_frame(frame, "midspan stop")
+        if why:
+            sys.stderr.write(f"{frame}: {why} - USE THE EMERGENCY STOP AT THE MACHINE\n")
             code = 1
+        else:
+            sys.stdout.write(f"{frame}: STOP sent\n")
     return code
 
 

@@ -76,14 +76,16 @@ class Strokes:
 class Keyboard(threading.Thread):
     """Reads the terminal in a thread of its own, so that a stop never waits for drawing, feed or station."""
 
-    def __init__(self, descriptor: int, stop: Callable[[str], bool]) -> None:
+    def __init__(self, descriptor: int, stop: Callable[[str], str]) -> None:
         super().__init__(name="keyboard", daemon=True)
         self._descriptor = descriptor
         self._stop_frame = stop
         self._strokes = Strokes()
         self._over = threading.Event()
         self.keys: queue.Queue[str] = queue.Queue(KEYS_WAITING_MAX)
-        self.stops: queue.Queue[bool] = queue.Queue(KEYS_WAITING_MAX)  # True: the bench process answered
+        self.stops: queue.Queue[str] = queue.Queue(
+            KEYS_WAITING_MAX
+        )  # empty: the bytes have left; else why not
 
     def run(self) -> None:
         while not self._over.is_set():
@@ -118,10 +120,10 @@ class Keyboard(threading.Thread):
         self.join(1.0)
 
 
-def put(waiting: queue.Queue[str] | queue.Queue[bool], item: str | bool) -> None:
+def put(waiting: queue.Queue[str], item: str) -> None:
     """Never waits: what nobody takes is of no use any more."""
     try:
-        waiting.put_nowait(item)  # type: ignore[arg-type]
+        waiting.put_nowait(item)
     except queue.Full:
         return
 

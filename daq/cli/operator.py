@@ -9,7 +9,7 @@ from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import Any
 
 from daq.cli.keys import LEAVE, Keyboard
 from daq.cli.session import Session
@@ -30,7 +30,6 @@ PUMP_S = 0.05
 BACK_OFF_MM = 2.0  # job.md G4
 BACK_OFF_MM_MIN = 20.0
 RETRY_SEAT_S = 2.0
-Item = TypeVar("Item")
 
 
 @dataclass(slots=True)
@@ -113,10 +112,8 @@ class OperatorTerminal:
 
     # --- keys
     def _tell_stops(self) -> None:
-        for answered in waiting(self._keyboard.stops):
-            self._view.say(
-                "STOP sent" if answered else "STOP NOT ANSWERED - USE THE EMERGENCY STOP AT THE MACHINE"
-            )
+        for why in waiting(self._keyboard.stops):
+            self._view.say(f"NO STOP: {why} - USE THE EMERGENCY STOP AT THE MACHINE" if why else "STOP sent")
 
     def _take_keys(self) -> None:
         for key in waiting(self._keyboard.keys):
@@ -156,7 +153,7 @@ REQUESTS: Mapping[str, tuple[str, Mapping[str, Any]]] = {
 }
 
 
-def waiting(items: queue.Queue[Item]) -> Iterator[Item]:
+def waiting(items: queue.Queue[str]) -> Iterator[str]:
     """What lies in a queue now."""
     while True:
         try:

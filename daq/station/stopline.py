@@ -6,11 +6,14 @@ hard-wired emergency stop is.
 
 from __future__ import annotations
 
+import json
 import os
 import socket
+import threading
 from pathlib import Path
 
 ANSWER_TIMEOUT_S = 0.5
+NO_ANSWER = "no answer from the bench process"
 
 
 def runtime_root() -> Path:
@@ -26,15 +29,21 @@ def running_frames() -> list[str]:
 
 def send_stop(frame: str, who: str) -> bool:
     """Send STOP; True when the bench process answered that the bytes have left."""
-    own = str(runtime_root() / frame / f"stop-{os.getpid()}")
+    return not stop_frame(frame, who)
+
+
+def stop_frame(frame: str, who: str) -> str:
+    """Send STOP; empty when its bytes have left, else why they have not."""
+    own = str(runtime_root() / frame / f"stop-{os.getpid()}-{threading.get_native_id()}")
     line = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM)
     try:
         line.bind(own)
         line.settimeout(ANSWER_TIMEOUT_S)
         line.sendto(who.encode(), str(runtime_root() / frame / "stop"))
-        return bool(line.recv(256))
-    except OSError:
-        return False
+        answer = json.loads(line.recv(4096))
+        return "" if answer["ok"] else str(answer["why"])
+    except (OSError, ValueError, KeyError):
+        return NO_ANSWER
     finally:
         line.close()
         if os.path.exists(own):

@@ -38,6 +38,8 @@ from daq.watch.values import (
 )
 
 ANVIL_CLEAR_MM = 0.5
+RUN_TOO_LONG_ROW = 33
+STOP_BY_HAND = "midspan cannot stop this machine: STOP IT BY ITS OWN CONTROLS"
 
 
 class Aftermath:
@@ -172,6 +174,11 @@ class Core:
         self.frozen_samples: int | None = None
         self.overloaded = False
 
+    @property
+    def monitor_only(self) -> bool:
+        """The card has no motion: this frame is watched and recorded, and can be neither moved nor stopped."""
+        return self.setup.frame.motion is None
+
     # --- telling
 
     def emit(self, name: str, severity: Severity = Severity.REMARK, /, **fields: Json) -> None:
@@ -200,6 +207,10 @@ class Core:
 
     def stop(self, reason: str, cause: Cause | None = None) -> None:
         """Bring the crosshead to rest; cause None is a normal stop that latches nothing."""
+        if self.monitor_only:  # nothing to stop with, and no standstill to wait for: only the word changes
+            if cause is not None:
+                self.go(cause, reason)
+            return
         before = self.stopping
         attempt = 1 if before is None else before.attempt + 1
         self._say(Stop(reason, attempt))
@@ -242,6 +253,8 @@ class Core:
         not ask.
         """
         assert self.state not in LATCHED and self.stopping is None
+        if self.monitor_only:
+            return
         self.actions.append(move)
         self.move_now, self.move_s = move, self.clock_s
         self.move_from_mm = self.travel.at_mm if self.travel else None
@@ -303,6 +316,10 @@ class Core:
             return
         self.tripped_rows.add(trip.row)
         what = trip.what or ROWS[trip.row].what
+        if self.monitor_only and trip.reaction is not Reaction.SIGNAL_LOST and trip.row != RUN_TOO_LONG_ROW:
+            # midspan cannot stop this machine: the person is told, and the recording goes on to the end
+            self.tell_limit(trip, what, Severity.STOP)
+            return
         severity = Severity.CAUTION
         if trip.reaction is not Reaction.CAUTION:
             severity = Severity.STOP
@@ -317,6 +334,7 @@ class Core:
             self.end_run(Verdict.SIGNAL_LOST if lost else Verdict.STOPPED, what)
 
     def tell_limit(self, trip: Trip, what: str, severity: Severity) -> None:
+        by_hand = self.monitor_only and severity is not Severity.CAUTION
         self.emit(
             "limit",
             severity,
@@ -325,8 +343,8 @@ class Core:
             limit=trip.limit if isfinite(trip.limit) else None,
             unit=trip.unit,
             what=what,
-            did=trip.reaction.value,
-            do_now=ROWS[trip.row].do_now,
+            did="told" if self.monitor_only else trip.reaction.value,
+            do_now=STOP_BY_HAND if by_hand else ROWS[trip.row].do_now,
             first=self.is_first(what),
         )
 

@@ -65,6 +65,9 @@ def _require(command: str, missing: list[str]) -> None:
 
 def _stop(core: Core, request: StopRequest) -> None:
     reason = f"stop by {request.who}"
+    if core.monitor_only:
+        core.emit("note", Severity.CAUTION, text=f"{reason}: monitor only, midspan has nothing to stop with")
+        return
     core.stop(reason, Cause.STOP_ASKED)
     if core.run is not None:
         core.end_run(Verdict.STOPPED, reason)
@@ -103,6 +106,10 @@ def _open(core: Core, request: OpenRun) -> None:
 
 def _start(core: Core) -> None:
     run, motion = core.run, core.setup.frame.motion
+    if core.monitor_only:
+        raise Refused(
+            "start", ("monitor only: start the machine by its own controls; the touch begins the run",)
+        )
     missing = core.busy_why()
     if core.state is not State.READY:
         missing.append(f"state is {core.state.value}")

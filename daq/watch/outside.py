@@ -43,6 +43,9 @@ def _tare_void(core: Core) -> None:
 
 
 def _danger(core: Core, what: str, cause: Cause) -> None:
+    if core.monitor_only:
+        core.tell_limit(Trip(25, 1.0, 0.0, "", Reaction.STOP), what, Severity.STOP)
+        return
     core.stop(what, cause)
     core.tell_limit(Trip(25, 1.0, 0.0, "", Reaction.STOP), what, Severity.STOP)
     core.end_run(Verdict.STOPPED, what)
@@ -56,6 +59,8 @@ def fault(core: Core, name: str, detail: str) -> None:
     if reaction.blocks_start:
         core.blocks[name] = f"{reaction.what} ({detail})" if detail else reaction.what
     at_stake = core.run is not None or core.moving or core.stopping is not None
+    if core.monitor_only and reaction.cause is not Cause.SIGNAL_LOST:
+        at_stake = False  # told only: the recording goes on, as the machine does
     stops = reaction.cause is not None and at_stake
     if reaction.cause is not None and at_stake:
         core.stop(reaction.what, reaction.cause)

@@ -134,6 +134,19 @@ def _reckoned_too_far(core: Core) -> bool:
     return core.reckoned_mm() > times * _gap_mm(core)
 
 
+def _ready(core: Core) -> None:
+    """Monitor only: the machine's own controls move the crosshead, so the touch is the start."""
+    run = core.run
+    if run is None or not core.monitor_only or not _above(core, core.touch_n):
+        return
+    run.started_s, run.start_mm = core.clock_s, _at_mm(core)
+    core.go(Cause.STARTED, "touched; started at the machine")
+    core.emit("started", speed_mm_min=None)
+    core.go(Cause.TOUCHED)
+    core.emit("approach_touch", force_n=core.gross_n, position_mm=core.raw_position_mm)
+    _contact(core, run)
+
+
 def _in_contact(core: Core) -> None:
     """Standing on the bar: go on to seating, or, after a jog, be at rest."""
     run = core.run
@@ -172,6 +185,8 @@ def _load(core: Core, run: Run, speed_mm_min: float) -> None:
     rate, expected = run.plan.method.rate, run.plan.expected
     looped = rate.mode != "crosshead" and rate.loop == "frame"
     core.move(Move(MoveKind.LOAD, speed_mm_min, rate_n_s=expected.rate_n_s if looped else None))
+    if core.monitor_only:
+        return
     core.runaway = Runaway(expected.rate_n_s, expected.load_p50_n, core.sigma_n, core.setup.rate_hz)
 
 
@@ -416,6 +431,7 @@ def _at_mm(core: Core) -> float | None:
 
 _STAGES: Mapping[State, Callable[[Core], None]] = {
     State.AT_REST: zero.beat,
+    State.READY: _ready,
     State.APPROACHING: _approaching,
     State.IN_CONTACT: _in_contact,
     State.SEATING: _seating,

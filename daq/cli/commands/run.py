@@ -14,7 +14,7 @@ from daq.cli.operator import OperatorTerminal, Seated, signals_to
 from daq.cli.options import running_places
 from daq.errors import MidspanError
 from daq.station.client import Client
-from daq.station.stopline import send_stop
+from daq.station.stopline import stop_frame
 from monitor.terminal import TerminalView
 
 
@@ -68,7 +68,7 @@ def open_series(seated: Seated, sure: bool) -> bool:
 
 def run_terminal(seated: Seated, frame: str) -> None:
     with TerminalView(Console()) as view, struck_keys() as descriptor:
-        keyboard = Keyboard(descriptor, lambda who: send_stop(frame, who))
+        keyboard = Keyboard(descriptor, lambda who: stop_frame(frame, who))
         terminal = OperatorTerminal(seated, keyboard, view)
         with signals_to(terminal.leave_now):
             keyboard.start()
