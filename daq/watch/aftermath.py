@@ -1,7 +1,6 @@
-"""The tail of a loading: standstill, residual load, a second break, zero after, and the close that always
-comes.
+"""The tail of a loading: standstill, residual load, second break, zero after, and the close that always comes.
 
-Reference: job.md 3.5 step 8, G2 to G5, E6, E7. Works on the bin means of the fracture watch's level, so it
+Reference: job map 3.5 step 8, G2 to G5, E6, E7. Works on the bin means of the fracture watch's level, so it
 sees what the watch accepted; commands only the back-off after a clean break, and only where the card and G4
 allow it.
 """

@@ -1,6 +1,4 @@
-"""Faults told from outside the pure core: what each name means and what is done about it. One table, no
-logic.
-"""
+"""Faults told from outside the pure core: what each name means and what is done. One table, no logic."""
 
 from __future__ import annotations
 

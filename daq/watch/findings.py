@@ -1,8 +1,7 @@
-"""What follows from a finding of the fracture watch: a stop, a verdict, an event, or the operator's own
-unloading.
+"""What follows from a finding of the fracture watch: a stop, a verdict, an event, or an operator's unloading.
 
 The fracture watch knows force only. Before a fall is believed, the crosshead is asked whether it went back
-far enough to have taken the load off itself (job.md 3.5 step 7).
+far enough to have taken the load off itself (job map 3.5 step 7).
 """
 
 from __future__ import annotations
@@ -66,9 +65,7 @@ def _explained(core: Core, run: Run, finding: Finding) -> bool:
 
 
 def load_taken_off(core: Core, run: Run) -> None:
-    """The crosshead goes the other way: the operator, or a drive wired wrongly. Stop, and no break of any
-    kind.
-    """
+    """The crosshead goes the other way: the operator, or a drive wired wrongly. Stop, and no break."""
     what = "crosshead moves away from the specimen"
     back_mm = core.travel.back_mm if core.travel is not None else 0.0
     core.watch.watch(False)

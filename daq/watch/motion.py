@@ -1,4 +1,4 @@
-"""Motion supervision: rows 7 to 14 of job.md section 4 as small pure judges. Commands nothing itself."""
+"""Motion supervision: rows 7 to 14 of job map section 4 as small pure judges. Commands nothing itself."""
 
 from __future__ import annotations
 
@@ -39,9 +39,7 @@ def touch_n(capacity_n: float, sigma_n: float) -> float:
 
 
 def approach_mm_min(motion: Motion, capacity_n: float, touch: float, seen_s: float) -> float:
-    """Row 7: v <= (0.5 C - F_touch)/(k_blocked t_stop). seen_s: the time until a touch is seen, added to the
-    stop.
-    """
+    """Row 7: v <= (0.5 C - F_touch)/(k_blocked t_stop). seen_s: until a touch is seen, added to the stop."""
     room_n = APPROACH_SHARE * capacity_n - touch
     stop_s = motion.stop_latency_s + seen_s
     return SECONDS_PER_MINUTE * room_n / (motion.blocked_stiffness_n_mm * stop_s)

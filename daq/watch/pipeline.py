@@ -250,8 +250,7 @@ class Pipeline:
         inside = judge.low_n <= float(gross_n.min()) and float(gross_n.max()) <= judge.high_n
         if judge.outside or not inside or (at_mm is not None and not position.quiet(core, at_mm)):
             return False
-        needed = core.frozen_samples
-        if needed is not None and self._repeats.longest(counts) + 1 >= needed:
+        if self._repeats.longest(counts) + 1 >= (core.frozen_samples or signal.UNKNOWN_SAMPLES):
             return False
         net_n = gross_n - core.tare_n
         if core.runaway is not None and not core.runaway.quiet(net_n):

@@ -1,6 +1,4 @@
-"""Repeats: how many raw values in a row are identical. A dead signal repeats itself; so does a coarse one,
-less long.
-"""
+"""Repeats: how many raw values in a row are identical. A dead signal repeats itself; a coarse one does, too."""
 
 from __future__ import annotations
 

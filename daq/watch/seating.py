@@ -1,6 +1,6 @@
 """Seating: when the stiffness has become steady, and how long the toe was. Tells; stops nothing.
 
-Reference: job.md 3.1. Slopes over windows of max(0.2 s, 20 samples, 2 % of the time to the median break load,
+Reference: job map 3.1. Slopes over windows of max(0.2 s, 20 samples, 2 % of the time to the median break load,
 and as long as the noise needs for a slope good to 5 % at two sigma): in noise a shorter window would never
 look steady.
 """
@@ -13,6 +13,7 @@ from math import cbrt
 
 WINDOW_S = 0.2
 WINDOW_SAMPLES = 20
+SAMPLES_MIN, WINDOWS_MIN = 6, 12  # three windows of 20 samples would be half of a run at 10 S/s
 WINDOW_SHARE = 0.02
 STEADY = 0.05
 STEADY_WINDOWS = 3
@@ -39,7 +40,8 @@ class Seated:
 
 def seating_window_s(rate_hz: float, sigma_n: float, rate_n_s: float, time_to_break_s: float) -> float:
     by_noise_s = cbrt(48.0 * sigma_n**2 / (rate_hz * (STEADY * rate_n_s) ** 2))
-    return max(WINDOW_S, WINDOW_SAMPLES / rate_hz, WINDOW_SHARE * time_to_break_s, by_noise_s)
+    by_samples_s = max(min(WINDOW_SAMPLES / rate_hz, time_to_break_s / WINDOWS_MIN), SAMPLES_MIN / rate_hz)
+    return max(WINDOW_S, by_samples_s, WINDOW_SHARE * time_to_break_s, by_noise_s)
 
 
 class Seating:

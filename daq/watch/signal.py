@@ -1,5 +1,4 @@
-"""The signal: silence, gaps, frozen values, rails, and a position that cannot be believed. Silence is a
-reading.
+"""The signal: silence, gaps, frozen values, rails, a position that cannot be believed. Silence is a reading.
 
 A lost signal is never a fracture: the stop is sent, nothing is driven back, and the word is *signal lost*. At
 rest, with no run open and nothing moving, a loss is told and heals by itself once the data are back.

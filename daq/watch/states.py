@@ -1,9 +1,8 @@
-"""The one table of states and transitions. Pure; decides nothing about samples, only which word follows which
-cause.
+"""The one table of states and transitions. Decides nothing about samples, only which word follows which cause.
 
 Three promises hold by construction and are checked by tests/watch/test_states.py: a stop cause never leads to
 a moving state, a reset only ever leads to rest, and nothing leads from rest to motion but a deliberate start,
-jog or return (IEC 60204-1 as publicly summarised: stop overrides start, a reset must not restart; job.md
+jog or return (IEC 60204-1 as publicly summarised: stop overrides start, a reset must not restart; job map
 S13).
 """
 

@@ -1,7 +1,6 @@
-"""StopCheck: a stop is not believed until the crosshead is seen to stand. Repeats at 10 Hz, says when it
-failed.
+"""StopCheck: a stop is not believed until the crosshead stands. Repeats at 10 Hz, says when it failed.
 
-Row 26 and row 12 of job.md section 4: displacement still changing 0.3 s after the stop (or half again the
+Row 26 and row 12 of job map section 4: displacement still changing 0.3 s after the stop (or half again the
 measured stop latency), a run-on of ten times what was expected, or a force that still rises, is a failed
 stop.
 """
@@ -79,9 +78,7 @@ class StopCheck:
     def look(
         self, now_s: float, travel: Travel | None, moving: bool | None, force_n: float, rise_n: float
     ) -> Look:
-        """moving: the machine's own word, None if it has none. rise_n: a rise of the force that cannot be
-        noise.
-        """
+        """moving: the machine's own word, None if it has none. rise_n: a rise that cannot be noise."""
         repeat = now_s >= self._repeat_s
         if repeat:
             self._repeat_s = now_s + REPEAT_S

@@ -1,7 +1,6 @@
-"""Tare: a zero taken at rest over whole mains periods, with its noise, drift and uncertainty, or refused with
-reasons.
+"""Tare: a zero taken at rest over whole mains periods, with noise, drift and uncertainty, or refused.
 
-Reference: job.md 3.2 and E4. A second is 50 periods of 50 Hz and 60 of 60 Hz, and each of its ten blocks is 5
+Reference: job map 3.2 and E4. A second is 50 periods of 50 Hz and 60 of 60 Hz, and each of its ten blocks is 5
 and 6: hum leaves the block means, aliased or not, and their median survives a knock. Nothing is ever
 subtracted from the recorded force: limits go on seeing gross.
 """
@@ -172,9 +171,7 @@ def _refusals(note: TareNote, gross_n: Floats, times_s: Floats, rules: TareRules
 
 
 def _white_sigma(times_s: Floats, gross_n: Floats, note: TareNote) -> float:
-    """Noise without hum, which block means leave out; a filtered stream's block means overstate it, so the
-    lesser.
-    """
+    """Noise without hum, which block means leave out; those of a filtered stream overstate it: the lesser."""
     centres_s, means_n = _blocks(times_s, gross_n)
     slope, _ = _slope(centres_s, means_n)
     rest = means_n - means_n.mean() - slope * (centres_s - centres_s.mean())
@@ -183,9 +180,7 @@ def _white_sigma(times_s: Floats, gross_n: Floats, note: TareNote) -> float:
 
 
 def _drift_error_n_min(times_s: Floats, gross_n: Floats, note: TareNote) -> float:
-    """Standard error of the drift: from the scatter of the blocks, and not below what the samples' noise
-    gives.
-    """
+    """Standard error of the drift: from the blocks' scatter, and not below what the samples' noise gives."""
     _, of_blocks = _slope(*_blocks(times_s, gross_n))
     return max(60.0 * of_blocks, _white_error_n_min(times_s, note))
 

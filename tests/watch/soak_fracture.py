@@ -168,12 +168,12 @@ def upper_bound(bad: int, bars: int) -> float:
     return high / bars
 
 
-def main(bars: int, *, brief: bool = False) -> int:
+def main(bars: int, *, seed: int = 0, brief: bool = False) -> int:
     begun = time.monotonic()
     outcomes = []
-    for n, case in enumerate(cases(bars, brief=brief)):
+    for n, case in enumerate(cases(bars, seed, brief=brief)):
         outcome = run(case)
-        outcome.seed = n
+        outcome.seed = seed + n
         outcome.events = [e for e in outcome.events if e.name in ("glitch", "slip", "pop_in", "partial_drop")]
         outcomes.append(outcome)
         if n % 1000 == 999:

@@ -24,7 +24,7 @@ from tests.watch.frames import frame, method, open_run
 
 
 def test_the_plan_of_the_alumina_bar() -> None:
-    """job.md B2 [Calc]: 460 N mean, P0.1 270 and P99.9 564 N, 23.6 MPa/s, 16.3 s, 136 um of travel."""
+    """job map B2 [Calc]: 460 N mean, P0.1 270 and P99.9 564 N, 23.6 MPa/s, 16.3 s, 136 um of travel."""
     plan = run_setup(setup_from_card(frame()), open_run())
     assert not isinstance(plan, tuple)
     expected = plan.expected
@@ -38,7 +38,7 @@ def test_the_plan_of_the_alumina_bar() -> None:
 
 @pytest.mark.parametrize(("m", "ratio"), [(5, 1.60), (8, 1.35), (10, 1.28), (12, 1.23), (15, 1.18)])
 def test_the_highest_of_a_thousand(m: float, ratio: float) -> None:
-    """job.md section 4, row 4 [Calc]."""
+    """job map section 4, row 4 [Calc]."""
     assert weibull_quantile(1.0, m, 0.999) == pytest.approx(ratio, abs=0.005)
 
 
@@ -118,7 +118,7 @@ def test_a_break_before_the_window_is_over_leaves_it_unclear() -> None:
 
 
 def test_the_machine_is_taken_out_of_the_stiffness() -> None:
-    """job.md 3.5 step 3 [FP]: 5 % of the bar shows as 3.3 % in series of 5.1 and 10 kN/mm."""
+    """job map 3.5 step 3 [FP]: 5 % of the bar shows as 3.3 % in series of 5.1 and 10 kN/mm."""
     speed = 0.5 / 60.0
     before, after = (speed * in_series(k, 10_000.0) for k in (5100.0, 0.95 * 5100.0))
     assert after / before == pytest.approx(1 - 0.033, abs=0.002)
@@ -181,7 +181,7 @@ def test_the_sampling_gate(changes: dict[str, float | None], gate: Gate) -> None
 
 
 def test_the_approach_limit_of_the_reference() -> None:
-    """job.md E2 [Calc]: 1 kN, 20 kN/mm, 150 ms, touch 3 N: 9.9 mm/min."""
+    """job map E2 [Calc]: 1 kN, 20 kN/mm, 150 ms, touch 3 N: 9.9 mm/min."""
     motion = frame(motion__blocked_stiffness_n_mm=20_000.0).motion
     assert motion is not None
     assert touch_n(1000.0, 0.15) == 3.0
@@ -291,7 +291,7 @@ def test_the_noise_is_what_it_is_and_never_below_the_one_at_rest() -> None:
 
 
 def test_hum_is_part_of_the_noise() -> None:
-    """job.md 3.3: second differences saw the white noise only, and called the hum partial drops."""
+    """job map 3.3: second differences saw the white noise only, and called the hum partial drops."""
     level = Level(1000.0, 0.05)
     for n in range(2000):
         t = n / 1000.0
