@@ -92,6 +92,11 @@ class Crosshead:
     def following(self) -> bool:
         return self._follow is not None
 
+    @property
+    def halting(self) -> bool:
+        """A Halt was given that has not taken effect yet."""
+        return any(isinstance(order, Halt) for _, order in self._pending)
+
     def reaches_s(self, position_mm: float) -> float:
         """When it comes to a position, moving towards the bar; never where the present motion does not."""
         if self._follow is not None:

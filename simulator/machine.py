@@ -248,6 +248,8 @@ class Machine:
     def _controller_acts(self, now_s: float) -> None:
         if self._controller.act(now_s):
             self._tell("watchdog", {})
+        if self._touched and self._crosshead.moving and not self._crosshead.following:
+            self._close_loop(now_s)  # told while a stop was still under way: from here on
         self._fill_or_raise()
 
     def _fill_or_raise(self) -> None:
@@ -269,7 +271,8 @@ class Machine:
     def _close_loop(self, now_s: float) -> None:
         """The machine's own force loop takes over where it is wanted and there is something to press on."""
         rate_n_s, law = self._controller.force_rate_n_s, self._grip.law
-        if rate_n_s is not None and law is not None and self._grip.parting is None:
+        whole = law is not None and self._grip.parting is None
+        if rate_n_s is not None and law is not None and whole and not self._crosshead.halting:
             self._crosshead.follow(now_s, law.force_at(self.position_mm), rate_n_s, law)
 
     def _breaks(self, now_s: float) -> None:

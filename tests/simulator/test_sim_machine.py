@@ -209,6 +209,19 @@ def test_the_force_loop_takes_over_in_contact_and_stops(make):
     assert not machine.moving
 
 
+def test_a_force_loop_asked_for_while_a_stop_is_under_way_begins_after_it(make):
+    """The stop has its latency; the loop must neither undo it nor be undone by it."""
+    machine = make()
+    start(machine, 6.0)
+    machine.run_to(1.1)
+    stop(machine, 1.1)
+    machine.command(Heard(Verb.FORCE_RATE, {"rate_n_s": 50.0}, "OK F"), 1.11)
+    machine.run_to(1.2499)
+    before_n = machine.force_n
+    machine.run_to(2.25)
+    assert machine.force_n == pytest.approx(before_n + 50.0, rel=2e-3)
+
+
 def test_the_next_bar_waits_until_the_way_is_clear(make):
     machine = make()
     start(machine, 6.0)
