@@ -149,7 +149,8 @@ class PacketForm:
             return typed.view(np.uint8).reshape(-1, width)
         bits = 8 * width
         low, high = (-(2 ** (bits - 1)), 2 ** (bits - 1) - 1) if number[0] == "i" else (0, 2**bits - 1)
-        whole = np.clip(np.rint(np.nan_to_num(values)), low, high).astype(np.int64)
+        known = np.where(np.isnan(values), 0.0, values)
+        whole = np.clip(np.rint(known), low, high).astype(np.int64)
         octets = whole.astype(">i8").view(np.uint8).reshape(-1, 8)[:, 8 - width :]
         return octets if self._endian == "big" else octets[:, ::-1]
 

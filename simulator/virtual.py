@@ -25,7 +25,7 @@ from simulator.machine import Machine
 from simulator.sampling import SampleRows
 from simulator.specimen import InHand
 
-AHEAD_S = 0.05  # rows are made this far ahead while nothing happens; a command takes them back
+AHEAD_S = 0.1  # rows are made this far ahead while nothing happens; a command takes them back
 BACKLOG_BYTES_MAX = 4096  # what a device keeps when its line is too slow; more is lost as in a real one
 HEARD_MAX = 10_000  # bytes on their way to the machine, in pieces; a host that floods loses them
 

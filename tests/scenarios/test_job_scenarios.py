@@ -1,4 +1,4 @@
-"""Acceptance scenarios of the job map (section 6), each by its number, on the virtual clock with the real wire bytes."""
+"""Acceptance scenarios of the job map (section 6), by number, on the virtual clock with the real wire bytes."""
 
 from __future__ import annotations
 
@@ -7,7 +7,6 @@ from typing import Any
 
 import pytest
 
-from daq.bench.core import Health
 from daq.cards.frame import Fixture
 from daq.errors import Refused
 from daq.watch.requests import Jog, OpenRun, Reset, ReturnCrosshead, StartRun, StopRequest
@@ -56,12 +55,14 @@ def stops(bench: VirtualBench) -> list[float]:
 
 
 # 1 ---------------------------------------------------------------------------------------------------------------
-def test_1_clean_alumina_series() -> None:
-    """Thirty bars: all sudden, delay <= 15 ms, recovered peak within 0.1 % each and 0.02 % in the mean, no cautions."""
+@pytest.mark.parametrize("bars", [10, pytest.param(30, marks=[pytest.mark.soak, pytest.mark.timeout(600)])])
+def test_1_clean_alumina_series(bars: int) -> None:
+    """All sudden, delay <= 15 ms, recovered peak within 0.1 % each and 0.02 % in the mean, no cautions."""
     biases, cautions = [], []
-    bench = VirtualBench(frame_of(), bars_of(electronics={"batch_s": 0.004}, contact={"toe_mm": 0.0083}, seed=30))
+    card = bars_of(electronics={"batch_s": 0.004}, contact={"toe_mm": 0.0083}, seed=30)
+    bench = VirtualBench(frame_of(), card, wake_s=0.004)
     warm(bench)
-    for number in range(30):
+    for number in range(bars):
         specimen = bar(f"A-{number:02d}")
         lay(bench, specimen)
         assert bench.break_bar(method_of(), specimen, FIXTURE)
@@ -91,9 +92,20 @@ def test_5_graphite_fails_gradually() -> None:
     frame = frame_of(rate_hz=100.0)
     frame = frame.model_copy(update={"fixtures": (fixture, *frame.fixtures), "compliance": None})
     card = bars_of(
-        bar={"modulus_gpa": 11.0, "width_mm": 10.0, "thickness_mm": 10.0, "chamfer_mm": 0.0, "scatter_mm": 0.0},
+        bar={
+            "modulus_gpa": 11.0,
+            "width_mm": 10.0,
+            "thickness_mm": 10.0,
+            "chamfer_mm": 0.0,
+            "scatter_mm": 0.0,
+        },
         contact={"fixture": "third-60-20", "toe_mm": 0.02},
-        after_break={"kind": "gradual", "fall_s": 0.08, "softening_percent": 15.0, "softening_from_percent": 60.0},
+        after_break={
+            "kind": "gradual",
+            "fall_s": 0.08,
+            "softening_percent": 15.0,
+            "softening_from_percent": 60.0,
+        },
     )
     bench = VirtualBench(frame, card)
     specimen = bar("G-1", 10.0, 10.0).model_copy(update={"chamfer_mm": 0.0})
@@ -123,7 +135,7 @@ def test_9_cable_out(fault: dict[str, Any]) -> None:
     assert bench.run_until(lambda: bench.closed, 60.0)
     assert bench.named("fracture") == []
     lost = bench.named("signal_lost")[0]
-    (struck,) = [t for t in truth_of(bench, "fault")][:1]
+    struck = truth_of(bench, "fault")[0]
     assert lost["time_s"] - struck["time_s"] <= 0.1
     assert bench.state is State.SIGNAL_LOST
     assert bench.named("returned") == []
@@ -139,14 +151,14 @@ def test_10_reversed_bridge_is_a_wrong_sign_stop() -> None:
     bench = VirtualBench(frame_of(stop_latency_s=0.15), card)
     lay(bench, bar(), strength_mpa=900.0)
     warm(bench)
-    with pytest.raises(Refused, match="polarity|zero|tare|gross"):
-        bench.open_run(method_of(), bar(), FIXTURE)
-        bench.run_to(bench.now_s + 3.0)
-        bench.request(StartRun())
-        assert bench.run_until(lambda: bench.closed, 60.0)
-        assert bench.named("polarity_locked")
-        assert abs(query(bench)["force_n"]) <= 65.0
-        bench.request(Reset("Rig"))
+    bench.open_run(method_of(), bar(), FIXTURE)
+    bench.run_to(bench.now_s + 3.0)
+    bench.request(StartRun())
+    assert bench.run_until(lambda: bench.closed, 60.0)
+    assert bench.named("polarity_locked")
+    assert abs(query(bench)["force_n"]) <= 65.0
+    bench.request(Reset("Rig"))
+    with pytest.raises(Refused, match="polarity"):
         bench.open_run(method_of(), bar("B-2"), FIXTURE)
 
 
@@ -168,7 +180,10 @@ def test_10_blocked_fixture_is_approached_slowly_enough() -> None:
 def test_10_wrong_speed_unit_is_a_runaway_stop() -> None:
     """The drive takes mm/min for mm/s: STOP before 15 % of the expected break load."""
     frame = frame_of(stop_latency_s=0.15)
-    card = bars_of(drive={"stop_latency_s": 0.15}, faults=[{"kind": "speed-slip", "factor": 60.0, "after_contact_s": 0.1}])
+    card = bars_of(
+        drive={"stop_latency_s": 0.15},
+        faults=[{"kind": "speed-slip", "factor": 60.0, "after_contact_s": 0.1}],
+    )
     bench = VirtualBench(frame, card)
     lay(bench, bar(), strength_mpa=900.0)
     start(bench, method_of())
@@ -187,7 +202,13 @@ def test_11_event_mix(rate_hz: float) -> None:
     """One slip, one pop-in, three glitches, one sudden break with ringing and residual load: all told apart."""
     faults = [
         {"kind": "slip", "percent": 5.0, "at_force_n": 150.0},
-        {"kind": "pop-in", "percent": 12.0, "stiffness_factor": 0.85, "at_force_n": 230.0, "breaks_at_n": 420.0},
+        {
+            "kind": "pop-in",
+            "percent": 12.0,
+            "stiffness_factor": 0.85,
+            "at_force_n": 230.0,
+            "breaks_at_n": 420.0,
+        },
         {"kind": "glitch", "size": 400.0, "samples": 1, "at_force_n": 300.0},
         {"kind": "glitch", "size": -300.0, "samples": 2 if rate_hz > 500 else 1, "at_force_n": 330.0},
         {"kind": "glitch", "size": -300.0, "samples": 1, "at_force_n": 360.0},
@@ -213,7 +234,9 @@ def test_11_event_mix(rate_hz: float) -> None:
     (broke,) = truth_of(bench, "broke")
     result = result_of(bench)
     assert result["peak_recovered_n"] == pytest.approx(broke["force_n"], rel=2e-3)
-    assert result["peak_raw_n"] < broke["force_n"] + 60.0 or result["peak_screened_n"] < broke["force_n"] + 5.0
+    assert (
+        result["peak_raw_n"] < broke["force_n"] + 60.0 or result["peak_screened_n"] < broke["force_n"] + 5.0
+    )
     assert bench.named("limit") == []
     states = [event["to"] for event in bench.named("state")]
     assert "broken? - still loaded" in states and "broken - unloaded" in states
@@ -258,7 +281,7 @@ def test_19_operator_unload_is_no_break() -> None:
     lay(bench, bar(), strength_mpa=700.0)
     start(bench, method_of())
     assert bench.run_until(lambda: query(bench)["force_n"] > 276.0, 60.0)
-    do(bench, **{"raise": True})                # from the machine's own panel
+    do(bench, **{"raise": True})  # from the machine's own panel
     assert bench.run_until(lambda: bench.closed, 30.0)
     assert bench.named("fracture") == []
     assert bench.named("run_closed")[-1]["verdict"] == "operator unload"
@@ -305,7 +328,7 @@ def test_a_stopper_that_has_gone_ends_the_keep_alive() -> None:
     lay(bench, bar(), strength_mpa=700.0)
     start(bench, method_of())
     assert bench.run_until(lambda: bench.state is State.LOADING, 60.0)
-    bench.health = Health(stopper_alive=False, recorder_silent_s=0.0)
+    bench.stopper_alive = False
     bench.run_to(bench.now_s + 1.0)
     assert query(bench)["speed_mm_s"] == 0.0
 

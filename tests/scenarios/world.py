@@ -46,7 +46,9 @@ def frame_of(
     return frame.model_copy(update={"links": links, "motion": moved})
 
 
-def method_of(name: str = "alumina-bars.toml", *, speed_mm_min: float | None = None, **changes: Any) -> MethodCard:
+def method_of(
+    name: str = "alumina-bars.toml", *, speed_mm_min: float | None = None, **changes: Any
+) -> MethodCard:
     method = shipped_method(name)
     if speed_mm_min is not None:
         changes["rate"] = method.rate.model_copy(update={"speed_mm_min": speed_mm_min})
@@ -64,7 +66,9 @@ def bars_of(
 
 
 def bar(number: str = "B-1", width_mm: float = 4.0, thickness_mm: float = 3.0) -> Specimen:
-    return Specimen(number=number, width_mm=(width_mm,) * 3, thickness_mm=(thickness_mm,) * 3, chamfer_mm=0.12)
+    return Specimen(
+        number=number, width_mm=(width_mm,) * 3, thickness_mm=(thickness_mm,) * 3, chamfer_mm=0.12
+    )
 
 
 def lay(bench: VirtualBench, specimen: Specimen, **truth: Any) -> None:
