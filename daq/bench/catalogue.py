@@ -1,0 +1,14 @@
+"""Events of the bench process itself, beside those of the watch (daq.watch.catalogue). Names and meanings; no logic."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+BENCH_EVENTS: Mapping[str, str] = {
+    "bench_started": "The bench process is up: fifo, memory_locked (what was granted), machine_watchdog.",
+    "link_open": "A port is open, at the start or again after a loss; its decoder begins anew: link.",
+    "rejected": "Bytes or rows that were received and not recorded: link, discarded_bytes, rows by reason.",
+    "accounting": "The account of a run, directly before its end: per link received = recorded + rejected.",
+    "stop_handed_over": "The output was full: the stopper was told to write the STOP in the bench's stead: link.",
+    "ring_loss": "Entries that found no room in the ring: first_sequence, last_sequence, entries, bytes.",
+}
