@@ -11,7 +11,7 @@ demo: setup
 	$(BIN)/midspan demo $(DEMO)
 
 test: setup
-	$(BIN)/python -m pytest tests
+	$(BIN)/python -m pytest tests -n auto --dist worksteal
 
 lint: setup
 	$(BIN)/ruff check . && $(BIN)/ruff format --check . && $(BIN)/mypy
