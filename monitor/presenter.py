@@ -12,7 +12,15 @@ from enum import Enum
 from typing import Any
 
 from daq.stream.updates import Update
-from monitor.wording import expected_text, fault_text, instruction, number, recording_text, result_text
+from monitor.wording import (
+    NOT_CURRENT,
+    expected_text,
+    fault_text,
+    instruction,
+    number,
+    recording_text,
+    result_text,
+)
 
 STALE_S = 3.0  # job.md J3: older data are grey and said to be not current
 NO_CONTACT_S = 10.0
@@ -62,6 +70,10 @@ class Presenter:
     def state(self) -> str:
         return str(self._state.get("state", "unknown - look at the frame"))
 
+    def is_current(self, now_s: float) -> bool:
+        """Whether the station has been heard lately."""
+        return now_s - self._heard_s <= STALE_S
+
     def take_look(self, look: Mapping[str, Any], now_s: float) -> None:
         """A late joiner's start."""
         self._state = look["state"]
@@ -101,7 +113,7 @@ class Presenter:
         lines.append(self._data_line(now_s))
         lines += self._bar_lines()
         lines += self._warnings()
-        lines.append(Line("do now", self._instruction()))
+        lines.append(Line("do now", NOT_CURRENT if old else self._instruction()))
         return lines
 
     def _frame_line(self) -> Line:

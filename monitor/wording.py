@@ -29,6 +29,7 @@ INSTRUCTIONS: Mapping[str, str] = {
     "unknown - look at the frame": "look at the frame: is a bar mounted or loaded? then reset with your word on it",
     "bench process does not answer": "midspan cannot see or stop the frame - USE THE EMERGENCY STOP AT THE MACHINE",
 }
+NOT_CURRENT = "nothing heard from midspan: look at the frame; if it moves, stop it at the machine"
 TARING = "measuring the tare; touch nothing"
 ALL_DONE = "every bar of the series is broken; collect the pieces"
 READY_MONITOR_ONLY = "start the machine by its own controls; midspan can NOT stop it"
@@ -84,6 +85,7 @@ def fault_text(event: Numbers) -> str:
         parts.append(
             f"{event['value']:.4g} {unit}, limit {event['limit']:.4g} {unit}".replace(" ,", ",").strip()
         )
+    parts += [str(reason) for reason in event.get("reasons") or ()]
     parts += [str(event[key]) for key in ("detail", "text", "why", "did", "do_now") if event.get(key)]
     return "; ".join(parts)
 

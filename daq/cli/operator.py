@@ -128,8 +128,9 @@ class OperatorTerminal:
         if key == LEAVE:
             self._leave = True
         elif key == "q":
-            self._leave = not self._moving
-            if self._moving:
+            moving = self._moving and self._presenter.is_current(time.monotonic())
+            self._leave = not moving
+            if moving:
                 self._view.say("the frame is moving: Space stops it, then q leaves")
         elif key == "?":
             self._view.say(KEYS)

@@ -314,18 +314,22 @@ class Supervisor:
         )
 
     def _end_child(self, child: Child) -> bool:
+        """Our end of its pipe stays open until it has gone: closed with words unread, it would lose the "end"."""
         if child.life is not None:
             try:
                 child.life.send(b"end")
             except OSError:
                 pass  # it has ended already
-            child.life.close()
         try:
-            return child.process.wait(END_TIMEOUT_S[child.role]) == 0
+            clean = child.process.wait(END_TIMEOUT_S[child.role]) == 0
         except subprocess.TimeoutExpired:
             child.process.send_signal(signal.SIGKILL)
             child.process.wait()
-            return False
+            clean = False
+        if child.life is not None:
+            self._hear(child)
+            child.life.close()
+        return clean
 
 
 def encode_places(places: Places) -> dict[str, str]:

@@ -6,29 +6,56 @@ from pathlib import Path
 
 import click
 
+from daq.errors import MidspanError
+
 
 @click.command()
-@click.argument("paths", type=click.Path(path_type=Path), nargs=-1, required=True, metavar="FILE...")
+@click.argument("paths", type=click.Path(path_type=Path), nargs=-1, required=True, metavar="PATH...")
 def command(paths: tuple[Path, ...]) -> None:
-    """Check sealed records : every digest, every entry's CRC and number, the accounting.
+    """Check sealed records (every digest, every entry's CRC and number, the account) and journal folders (the chain).
 
-    Exit code 0 when all are whole; 1 when one is not, with the first damaged block named.
+    Exit code 0 when all are whole; 1 when one is not, with the first damaged block named. Changes nothing.
 
     Example: midspan verify records/demo-series/*.h5
     """
-    from daq.record.verify import verify
-
     bad = 0
     for path in paths:
-        report = verify(path)
-        for problem in report.problems:
-            click.echo(problem)
-        if report.ok:
-            account = (
-                "received = recorded + rejected" if report.accounted else "no account of the bench in it"
-            )
-            click.echo(
-                f"{path}: whole: {report.entries} entries, {report.rows} rows, {report.gaps} gaps; {account}"
-            )
-        bad += not report.ok
+        problems = journal_problems(path) if path.is_dir() else record_problems(path)
+        for problem in problems:
+            click.echo(f"midspan verify: {problem}", err=True)
+        bad += bool(problems)
     raise SystemExit(1 if bad else 0)
+
+
+def record_problems(path: Path) -> tuple[str, ...]:
+    """What is wrong with a record; says on standard output that it is whole."""
+    from daq.record.verify import verify
+
+    report = verify(path)
+    if report.ok:
+        account = (
+            "received = recorded + rejected"
+            if report.accounted
+            else "no account in it: the bench did not live to write one"
+        )
+        click.echo(
+            f"{path}: whole: {report.entries} entries, {report.rows} rows, {report.gaps} gaps; {account}"
+        )
+    return tuple(report.problems)
+
+
+def journal_problems(path: Path) -> tuple[str, ...]:
+    """The same for a journal's folder."""
+    from daq.record.recover import check_is_journal
+    from daq.stream.journal_reader import JournalReader
+
+    try:
+        check_is_journal(path)
+        found = JournalReader(path).verify()
+    except MidspanError as error:
+        return (str(error),)
+    ending = "closed" if found.closed else "not closed: its daemon runs, or died"
+    click.echo(
+        f"{path}: whole: {found.entries} entries in {found.segments} segments, {found.undeclared_holes} holes; {ending}"
+    )
+    return ()
