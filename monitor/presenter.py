@@ -202,6 +202,6 @@ def state_tone(state: str) -> Tone:
         "broken? - still loaded",
     ):
         return Tone.STOP
-    if state.startswith(("unknown", "bench process")):
+    if state.startswith(("unknown", "bench process", "midspan has")):
         return Tone.STOP
     return Tone.GOOD if state in ("ready", "broken - unloaded") else Tone.PLAIN

@@ -27,6 +27,7 @@ INSTRUCTIONS: Mapping[str, str] = {
     "shield open": "shield open; shut it, then reset",
     "emergency stop": "emergency stop; release it at the machine, then reset",
     "unknown - look at the frame": "look at the frame: is a bar mounted or loaded? then reset with your word on it",
+    "midspan has ended": "the daemon was ended in order; start `midspan serve` again",
     "bench process does not answer": "midspan cannot see or stop the frame - USE THE EMERGENCY STOP AT THE MACHINE",
 }
 NOT_CURRENT = "nothing heard from midspan: look at the frame; if it moves, stop it at the machine"

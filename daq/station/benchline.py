@@ -50,7 +50,7 @@ class BenchLine:
 
     async def ask(self, request: Request) -> None:
         """Raises Refused with what the bench said."""
-        answer = await self._send(messages.encode_request(self._next(), request))
+        answer = await self._send(messages.encode_request(self._next(), request, time.monotonic_ns()))
         if not answer.get("ok"):
             raise Refused(COMMAND_OF[type(request).__name__], tuple(answer.get("missing", ())))
 

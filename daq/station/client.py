@@ -6,6 +6,7 @@ A stop does not pass here: see daq.station.stopline, which goes straight to the 
 from __future__ import annotations
 
 import json
+import time
 from collections.abc import Iterator
 from typing import Any
 
@@ -48,7 +49,7 @@ class Client:
 
     def do(self, command: str, **words: Any) -> dict[str, Any]:
         """One command. Raises Refused with the missing conditions, MidspanError when the station does not answer."""
-        message = {"do": command, "seat": self._seat, **words}
+        message = {"do": command, "seat": self._seat, "at_ns": time.monotonic_ns(), **words}
         self._control.send(json.dumps(message).encode())
         if not self._control.poll(ANSWER_TIMEOUT_MS):
             raise MidspanError(

@@ -42,10 +42,17 @@ FOLLOW_S = 0.05  # 20 updates/s for traces
 BEAT_S = 0.1  # snapshot request = heartbeat; the bench stops after 1 s without
 SUMMARY_EVERY = 2  # of the follow turns: 10/s
 HEARTBEAT_S = 1.0  # a state update at least once a second
-ANSWERING_MAX = 64  # commands in work at a time
+MOVING_COMMANDS = ("start", "jog", "return", "mount")
+COMMAND_AGE_NS_MAX = (
+    4_000_000_000  # a client waits 5 s for its answer; nothing may move after it has given up
+)
+ANSWERING_MAX = 16  # commands in work at a time
+BACKLOG_ENTRIES = 256  # in one read of the ring; fewer were simply new
 RECOVERY_WAIT_S = 4.0  # a client waits 5 s for its answer
 FEED_QUEUE_UPDATES_MAX = 1_000  # per viewer; ZeroMQ drops beyond, the numbers show it
 REPORT_BYTES_MAX = 65_536
+FAREWELL_MS = 200  # for the last update; a viewer that does not read holds nobody up
+ENDED = "midspan has ended"
 PUSHED_HOLDS_S = 60.0  # for the jog that shows the displacement's sign
 
 
@@ -89,11 +96,13 @@ class Station:
                 task.cancel()
             await asyncio.gather(*tasks, return_exceptions=True)
             self._bench.close()
-            self._context.destroy(linger=0)
+            self._context.destroy(linger=FAREWELL_MS)
 
     async def _end(self) -> None:
         while not self._life.over():
             await asyncio.sleep(0.05)
+        if self._life.orderly:
+            await self._publish(Tell("state", {**self._state(), "state": ENDED}))
 
     # --- ring -> feed
     async def _follow(self) -> None:
@@ -107,6 +116,8 @@ class Station:
                 for tell in self._follower.feed(entries):
                     self._notice(tell)
                     await self._publish(tell)
+                if len(entries) < BACKLOG_ENTRIES:
+                    break  # that was all: to go on would be to chase each row of a fast frame
                 await asyncio.sleep(0)  # a backlog must not hold the heartbeat back
             turn += 1
             if turn % SUMMARY_EVERY == 0:
@@ -226,6 +237,7 @@ class Station:
     async def _serve(self) -> None:
         while True:
             parts = await self._control.recv_multipart()
+            await asyncio.sleep(0)  # a flood of commands must not hold the heartbeat back
             if len(self._answering) >= ANSWERING_MAX:
                 continue  # a flood gets no answer; the stop line does not pass here
             task = asyncio.create_task(self._respond(parts))
@@ -262,6 +274,11 @@ class Station:
             self._seat.sit(str(words["operator"]), token, instead=bool(words.get("instead", False)))
             return {"seat": token}
         self._seat.check(command, str(words.get("seat", "")))
+        if (
+            command in MOVING_COMMANDS
+            and time.monotonic_ns() - int(words.get("at_ns", 0)) > COMMAND_AGE_NS_MAX
+        ):
+            raise Refused(command, ("it is too old to be obeyed; give it again",))
         if command == "rise":
             self._seat.rise(str(words["seat"]))
             return {}

@@ -9,7 +9,6 @@ from __future__ import annotations
 import json
 import os
 import socket
-import threading
 from pathlib import Path
 
 ANSWER_TIMEOUT_S = 0.5
@@ -34,10 +33,9 @@ def send_stop(frame: str, who: str) -> bool:
 
 def stop_frame(frame: str, who: str) -> str:
     """Send STOP; empty when its bytes have left, else why they have not."""
-    own = str(runtime_root() / frame / f"stop-{os.getpid()}-{threading.get_native_id()}")
     line = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM)
     try:
-        line.bind(own)
+        line.bind("")  # a name of the kernel's own choosing: no file that could be in the way of a STOP
         line.settimeout(ANSWER_TIMEOUT_S)
         line.sendto(who.encode(), str(runtime_root() / frame / "stop"))
         answer = json.loads(line.recv(4096))
@@ -46,5 +44,3 @@ def stop_frame(frame: str, who: str) -> str:
         return NO_ANSWER
     finally:
         line.close()
-        if os.path.exists(own):
-            os.unlink(own)

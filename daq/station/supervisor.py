@@ -35,6 +35,7 @@ RESTART_WINDOW_S = 60.0
 READY_TIMEOUT_S = 20.0
 END_TIMEOUT_S = {"bench": 5.0, "stopper": 5.0, "recorder": 30.0, "archivist": 60.0, "station": 5.0}
 HANG_S = {"recorder": 20.0, "archivist": 120.0, "station": 10.0}  # a disc may stall for 10 s
+LOOK_CODES = {("bench", 6), ("stopper", 3)}  # all is safe, but nobody has seen the frame since
 RESTARTABLE = ("recorder", "archivist", "station")
 
 Say = Callable[[str], None]
@@ -77,6 +78,7 @@ class Supervisor:
         self._lock: int | None = None
         self._configs: dict[str, Path] = {}
         self._untidy: list[str] = []
+        self._must_look = False
         self.clean_start = True
 
     def __enter__(self) -> Supervisor:
@@ -293,11 +295,15 @@ class Supervisor:
         self._ending = True
         for role in ("bench", "stopper", "recorder", "archivist", "station"):
             child = self._children.get(role)
-            if child is not None and not self._end_child(child):
-                self._untidy.append(role)
+            code = self._end_child(child) if child is not None else 0
+            if (role, code) in LOOK_CODES:
+                self._must_look = True
+            elif child is not None and code:
+                self._untidy.append(f"{role}: {child.failure or f'code {code}'}")
         if not self._untidy and "bench" in self._children:
-            self._places.running_mark.unlink(missing_ok=True)
             self._places.ring(self._stream_id).unlink(missing_ok=True)
+            if not self._must_look:
+                self._places.running_mark.unlink(missing_ok=True)
         self._sweep()
         if self._lock is not None:
             os.close(self._lock)
@@ -305,15 +311,15 @@ class Supervisor:
     def farewell(self, took_s: float) -> str:
         """How the end went, for people."""
         if not self._untidy:
-            return (
-                f"ended in {took_s:.1f} s: crosshead stopped, all that was recorded is in {self._places.data}"
-            )
+            stopped = "crosshead stopped, " if self._outfit.frame.motion is not None else ""
+            look = "; the next start asks for a look at the frame" if self._must_look else ""
+            return f"ended in {took_s:.1f} s: {stopped}all that was recorded is in {self._places.data}{look}"
         return (
-            f"ended in {took_s:.1f} s, not in order ({', '.join(self._untidy)}): the next start recovers what is in"
+            f"ended in {took_s:.1f} s, not in order ({'; '.join(self._untidy)}): the next start recovers what is in"
             f" {self._places.spool} and asks for a look at the frame"
         )
 
-    def _end_child(self, child: Child) -> bool:
+    def _end_child(self, child: Child) -> int:
         """Our end of its pipe stays open until it has gone: closed with words unread, it would lose the "end"."""
         if child.life is not None:
             try:
@@ -321,15 +327,14 @@ class Supervisor:
             except OSError:
                 pass  # it has ended already
         try:
-            clean = child.process.wait(END_TIMEOUT_S[child.role]) == 0
+            code = child.process.wait(END_TIMEOUT_S[child.role])
         except subprocess.TimeoutExpired:
             child.process.send_signal(signal.SIGKILL)
-            child.process.wait()
-            clean = False
+            code = child.process.wait()
         if child.life is not None:
             self._hear(child)
             child.life.close()
-        return clean
+        return code
 
 
 def encode_places(places: Places) -> dict[str, str]:

@@ -22,7 +22,8 @@ def command(paths: tuple[Path, ...]) -> None:
     for path in paths:
         problems = journal_problems(path) if path.is_dir() else record_problems(path)
         for problem in problems:
-            click.echo(f"midspan verify: {problem}", err=True)
+            where = "" if str(path) in problem else f"{path}: "
+            click.echo(f"midspan verify: {where}{problem}", err=True)
         bad += bool(problems)
     raise SystemExit(1 if bad else 0)
 
