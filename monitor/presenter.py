@@ -13,6 +13,7 @@ from typing import Any
 
 from daq.stream.updates import Update
 from monitor.wording import (
+    ENDED,
     NOT_CURRENT,
     expected_text,
     fault_text,
@@ -102,7 +103,7 @@ class Presenter:
 
     def lines(self, now_s: float) -> list[Line]:
         """The view in the order of job.md 5: state, load, percent, bar, instruction or fault."""
-        age_s = now_s - self._heard_s
+        age_s = 0.0 if self.state == ENDED else now_s - self._heard_s
         if age_s > NO_CONTACT_S:
             told = f"NO CONTACT with the station for {age_s:.0f} s" if self.frame else "no contact yet"
             return [self._frame_line(), Line("state", told, Tone.STOP)]
@@ -170,7 +171,7 @@ class Presenter:
     def _warnings(self) -> list[Line]:
         lines = []
         recording = recording_text(self._state.get("reports") or {}, self._state.get("lost_entries", 0))
-        if recording:
+        if recording and self.state != ENDED:
             lines.append(Line("recording", recording, Tone.CAUTION))
         faults = self._state.get("faults") or []
         grave = [fault for fault in faults if fault.get("severity") in GRAVE]
@@ -202,6 +203,6 @@ def state_tone(state: str) -> Tone:
         "broken? - still loaded",
     ):
         return Tone.STOP
-    if state.startswith(("unknown", "bench process", "midspan has")):
+    if state.startswith(("unknown", "bench process", ENDED)):
         return Tone.STOP
     return Tone.GOOD if state in ("ready", "broken - unloaded") else Tone.PLAIN

@@ -8,6 +8,7 @@ from typing import Any
 BAR_CELLS = 24  # of the load bar in text views
 BAR_FULL_PERCENT = 120.0
 LAG_TOLD_S = 2.0  # of the recorder; it syncs ten times a second
+ENDED = "midspan has ended"  # the station's last word in an orderly end
 
 INSTRUCTIONS: Mapping[str, str] = {
     "at rest": "mount the next bar, shut the shield, then call it",
@@ -27,7 +28,7 @@ INSTRUCTIONS: Mapping[str, str] = {
     "shield open": "shield open; shut it, then reset",
     "emergency stop": "emergency stop; release it at the machine, then reset",
     "unknown - look at the frame": "look at the frame: is a bar mounted or loaded? then reset with your word on it",
-    "midspan has ended": "the daemon was ended in order; start `midspan serve` again",
+    ENDED: "the daemon was ended in order; start `midspan serve` again",
     "bench process does not answer": "midspan cannot see or stop the frame - USE THE EMERGENCY STOP AT THE MACHINE",
 }
 NOT_CURRENT = "nothing heard from midspan: look at the frame; if it moves, stop it at the machine"
