@@ -48,11 +48,14 @@ class TerminalView:
         if self._live is not None:
             self._live.stop()
 
-    def show(self, lines: Sequence[Line], now_s: float) -> None:
-        """Redraw where it is due; in a pipe say the chief numbers twice a second and every change of state."""
+    def show(self, lines: Sequence[Line], now_s: float, *, last: bool = False) -> None:
+        """Redraw where it is due; in a pipe say the chief numbers twice a second and every change of state.
+
+        last: what stays on the screen when the view is left.
+        """
         if self._live is None:
             self._print(lines, now_s)
-        elif now_s >= self._draw_s:
+        elif last or now_s >= self._draw_s:
             begun_s = time.monotonic()
             self._live.update(drawn(lines), refresh=True)
             took_s = time.monotonic() - begun_s

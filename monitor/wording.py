@@ -48,12 +48,12 @@ def instruction(state: str, *, run_open: bool, monitor_only: bool, all_done: boo
     return INSTRUCTIONS.get(state, "")
 
 
-def number(value: float | None, decimals: int, unit: str) -> str:
+def number(value: float | None, decimals: int, unit: str = "") -> str:
     """A number with its unit, or a dash where there is none; never a negative zero."""
     if value is None or value != value:
         return "-"
     rounded = round(value, decimals) + 0.0
-    return f"{rounded:.{decimals}f} {unit}"
+    return f"{rounded:.{decimals}f} {unit}".rstrip()
 
 
 def load_bar(percent: float, low_percent: float | None, high_percent: float | None) -> str:

@@ -19,6 +19,7 @@ from typing import Any
 
 import click
 import numpy as np
+from rich import box
 from rich.console import Console
 from rich.table import Table
 
@@ -32,6 +33,7 @@ from daq.station.supervisor import Outfit, Supervisor
 from daq.stream.updates import Update
 from monitor.presenter import Presenter
 from monitor.terminal import TerminalView
+from monitor.wording import number
 
 BARS_MAX = 100
 COLUMNS = {
@@ -121,12 +123,14 @@ def virtual_frame(cards: Path, folder: Path, seed: int) -> Iterator[Path]:
     hands = folder / "hands"
     words = ["simulate", str(cards / "kiln-lane-demo.toml"), "--bars", str(cards / "alumina.toml")]
     command = [sys.executable, "-m", "daq.cli.entry", *words, "--seed", str(seed), "--hands", str(hands)]
-    process = subprocess.Popen(command, cwd=folder, stdin=subprocess.DEVNULL, stdout=subprocess.DEVNULL)
+    said = folder / "said.txt"
+    with said.open("w", encoding="utf-8") as told:
+        process = subprocess.Popen(command, cwd=folder, stdin=subprocess.DEVNULL, stdout=told, stderr=told)
     try:
         until_s = time.monotonic() + WIRE_TIMEOUT_S
         while not (hands.exists() and any(folder.glob("*.tty"))):
             if process.poll() is not None or time.monotonic() > until_s:
-                raise MidspanError("the virtual frame did not start; its message stands above")
+                raise MidspanError(f"the virtual frame did not start: {said.read_text('utf-8').strip()}")
             time.sleep(0.02)
         yield hands
     finally:
@@ -179,6 +183,7 @@ def break_bars(
                 report = session.break_bar(specimen.number, timeout_s=BAR_TIMEOUT_S)
             reports.append(report)
         client.rise()
+        view.show(presenter.lines(time.monotonic()), time.monotonic(), last=True)
     return reports
 
 
@@ -197,17 +202,19 @@ def finish(console: Console, folder: Path, series: str, reports: Sequence[Mappin
     from daq.record.read import read_meta, read_run
     from daq.series.picture import series_picture
 
-    table = Table(title=f"{series} - SIMULATED DATA")
-    table.add_column("bar")
+    table = Table(title=f"{series} - SIMULATED DATA", box=box.SIMPLE_HEAD, padding=(0, 1))
+    table.add_column("bar", no_wrap=True)
     for heading in COLUMNS.values():
-        table.add_column(heading, justify="right")
+        table.add_column(heading, justify="right", no_wrap=True)
     with (folder / f"{series}.csv").open("x", newline="", encoding="utf-8") as file:
         sheet = csv.writer(file)
         sheet.writerow(["specimen", *COLUMNS])
         for report in reports:
             row = [report["result"].get(name) for name in COLUMNS]
             sheet.writerow([report["specimen"], *row])
-            shown = (f"{value:.1f}" if isinstance(value, float) else str(value or "-") for value in row)
+            shown = (
+                number(value, 1) if isinstance(value, float | None) else str(value or "-") for value in row
+            )
             table.add_row(str(report["specimen"]), *shown)
     paths = [Path(str(report["path"])) for report in reports]
     records = [
