@@ -232,6 +232,7 @@ class Station:
         if self._sitting is not None and report.get("series") == self._sitting.loaded.card.name:
             self._sitting.sealed(sealed)
         await self._publish(Tell("result", dict(report)))
+        await self._publish(Tell("state", self._state()))
 
     # --- control
     async def _serve(self) -> None:

@@ -39,12 +39,13 @@ BARS_MAX = 100
 COLUMNS = {
     "peak_n": "load N",
     "strength_mpa": "strength MPa",
-    "strength_u_k2_mpa": "U (k=2) MPa",
-    "stress_rate_mean_mpa_s": "rate MPa/s",
+    "strength_u_k2_mpa": "U k=2",
+    "stress_rate_mean_mpa_s": "MPa/s",
     "modulus_gpa": "E GPa",
     "break_class": "break",
 }
 WIRE_TIMEOUT_S = 15.0
+LAST_LOOK_S = 0.5
 BAR_TIMEOUT_S = 120.0
 AGAIN_MAX = 3  # a busy computer may interrupt a bar: it is loaded again, as a technician would
 
@@ -183,6 +184,7 @@ def break_bars(
                 report = session.break_bar(specimen.number, timeout_s=BAR_TIMEOUT_S)
             reports.append(report)
         client.rise()
+        session.pump(LAST_LOOK_S)
         view.show(presenter.lines(time.monotonic()), time.monotonic(), last=True)
     return reports
 
@@ -202,7 +204,9 @@ def finish(console: Console, folder: Path, series: str, reports: Sequence[Mappin
     from daq.record.read import read_meta, read_run
     from daq.series.picture import series_picture
 
-    table = Table(title=f"{series} - SIMULATED DATA", box=box.SIMPLE_HEAD, padding=(0, 1))
+    table = Table(
+        title=f"{series} - SIMULATED DATA", box=box.SIMPLE_HEAD, padding=(0, 1), collapse_padding=True
+    )
     table.add_column("bar", no_wrap=True)
     for heading in COLUMNS.values():
         table.add_column(heading, justify="right", no_wrap=True)
