@@ -68,9 +68,13 @@ class Rig:
     def begin(self, *, bars: str = "demo-series.toml") -> None:
         """Sit down, open the series, lay the first bar."""
         series = load_series(example_path(bars))
-        self.client.sit("Rig")
-        self.client.do("series", path=str(example_path(bars)), sure=True)
+        self.open_series(example_path(bars))
         self.lay(series.specimens[0].model_dump(mode="json"))
+
+    def open_series(self, path: Path) -> None:
+        """Sit down and open a series."""
+        self.client.sit("Rig")
+        self.client.do("series", path=str(path), sure=True)
 
     def lay(self, specimen: Mapping[str, Any]) -> None:
         assert "mounted" in self.hands(mount=dict(specimen))
@@ -115,19 +119,37 @@ def rig_of(
 ) -> Iterator[Rig]:
     """Start everything; end it in order whatever the test did."""
     with ExitStack() as stack:
-        folder = Path(tempfile.mkdtemp(prefix="msr-", dir="/dev/shm"))
-        stack.callback(shutil.rmtree, folder, ignore_errors=True)
-        patch = stack.enter_context(pytest.MonkeyPatch.context())
-        patch.setenv("MIDSPAN_RUNTIME", str(folder))
+        folder = runtime_folder(stack)
         card = write_card(frame_card, folder, gap_mm)
-        hands = folder / "hands"
-        simulator = stack.enter_context(virtual_frame(card, bars_card, hands, folder))
-        frame = with_port(load_frame(card), folder)
-        said: list[str] = []
-        outfit = Outfit(frame, places_for(frame.name, data), restarts_max=restarts_max)
-        supervisor = stack.enter_context(Supervisor(outfit, said.append))
-        client = stack.enter_context(Client(outfit.places))
-        yield Rig(frame, outfit, supervisor, client, hands, simulator, folder, said)
+        machine = stack.enter_context(virtual_frame(card, bars_card, folder / "hands", folder))
+        yield stand(stack, card, folder, machine, data=data, restarts_max=restarts_max)
+
+
+def runtime_folder(stack: ExitStack) -> Path:
+    """A short path on tmpfs, gone afterwards; midspan is told to live there."""
+    folder = Path(tempfile.mkdtemp(prefix="msr-", dir="/dev/shm"))
+    stack.callback(shutil.rmtree, folder, ignore_errors=True)
+    patch = stack.enter_context(pytest.MonkeyPatch.context())
+    patch.setenv("MIDSPAN_RUNTIME", str(folder))
+    return folder
+
+
+def stand(
+    stack: ExitStack,
+    card: Path,
+    folder: Path,
+    machine: subprocess.Popen[bytes],
+    *,
+    data: Path,
+    restarts_max: int = 100,
+) -> Rig:
+    """The daemon for this card, and a client of it."""
+    frame = with_port(load_frame(card), folder)
+    said: list[str] = []
+    outfit = Outfit(frame, places_for(frame.name, data), restarts_max=restarts_max)
+    supervisor = stack.enter_context(Supervisor(outfit, said.append))
+    client = stack.enter_context(Client(outfit.places))
+    return Rig(frame, outfit, supervisor, client, folder / "hands", machine, folder, said)
 
 
 def write_card(name: str, folder: Path, gap_mm: float) -> Path:
