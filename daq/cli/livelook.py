@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import select
 import time
+from dataclasses import dataclass, field
 from pathlib import Path
 
 import numpy as np
@@ -20,20 +21,38 @@ RATE_SHARE = 0.05
 HUM_SHARE = 3.0  # a line is named when it stands this far above the noise
 
 
-def look_at_links(frame: FrameCard, seconds: float) -> list[str]:
+@dataclass(slots=True)
+class Findings:
+    """lines: what was seen. faults: why the frame cannot be served like this."""
+
+    lines: list[str] = field(default_factory=list)
+    faults: list[str] = field(default_factory=list)
+
+
+def look_at_links(frame: FrameCard, seconds: float) -> Findings:
     """One line a finding, link by link."""
-    lines: list[str] = []
+    found = Findings()
     for number, link in enumerate(frame.links):
         blocks, discarded, rejected = listen(frame, number, seconds)
-        lines.append(
-            f"link {link.name}: {sum(block.count for block in blocks)} rows, {discarded} bytes discarded, "
-            f"{rejected} rows rejected in {seconds:g} s"
+        rows = sum(block.count for block in blocks)
+        found.lines.append(
+            f"link {link.name}: {rows} rows, {discarded} bytes discarded, {rejected} rows rejected in {seconds:g} s"
         )
         if blocks:
-            lines += channel_lines(frame, number, blocks)
+            look_at_channels(frame, number, blocks, found)
+        elif discarded:
+            found.faults.append(
+                f"link {link.name}: bytes come, but no row: speed_baud, the dialect or its check is wrong in the card"
+            )
         else:
-            lines.append(f"link {link.name}: NO ROWS - speed, wiring, dialect or start command wrong?")
-    return lines
+            found.faults.append(
+                f"link {link.name}: nothing comes: look at power, cable and the device's output setting"
+            )
+        if rejected > rows:
+            found.faults.append(
+                f"link {link.name}: more rows are rejected than taken: look at cable and card"
+            )
+    return found
 
 
 def listen(frame: FrameCard, number: int, seconds: float) -> tuple[list[Block], int, int]:
@@ -59,22 +78,20 @@ def listen(frame: FrameCard, number: int, seconds: float) -> tuple[list[Block], 
     return blocks, discarded, rejected
 
 
-def channel_lines(frame: FrameCard, number: int, blocks: list[Block]) -> list[str]:
+def look_at_channels(frame: FrameCard, number: int, blocks: list[Block], found: Findings) -> None:
     time_s = np.concatenate([block.time_s for block in blocks])
     counts = np.concatenate([block.counts for block in blocks])
-    lines = []
     for column, channel in enumerate(channels_of(frame, number)):
         values = np.array([value_of(channel, count) for count in counts[:, column].tolist()])
         try:
             quiet = quiet_record(time_s, values)
         except ValueError as error:
-            lines.append(f"{channel.name}: {error}")
+            found.lines.append(f"{channel.name}: {error}")
             continue
-        lines.append(channel_line(channel.name, channel.unit, quiet))
+        found.lines.append(channel_line(channel.name, channel.unit, quiet))
         if channel.role == "force":
-            lines += hum_lines(quiet)
-            lines.append(rate_line(frame.links[number], quiet))
-    return lines
+            found.lines += hum_lines(quiet)
+            look_at_rate(frame.links[number], quiet, found)
 
 
 def channel_line(name: str, unit: str, quiet: QuietRecord) -> str:
@@ -85,10 +102,11 @@ def channel_line(name: str, unit: str, quiet: QuietRecord) -> str:
     )
 
 
-def rate_line(link: LinkCard, quiet: QuietRecord) -> str:
-    off = abs(quiet.rate_hz / link.rate_hz - 1.0) > RATE_SHARE
+def look_at_rate(link: LinkCard, quiet: QuietRecord, found: Findings) -> None:
     said = f"link {link.name}: {quiet.rate_hz:.1f} rows/s, card says {link.rate_hz:g}"
-    return said + (" - NOT THE SAME" if off else "")
+    found.lines.append(said)
+    if abs(quiet.rate_hz / link.rate_hz - 1.0) > RATE_SHARE:
+        found.faults.append(f"{said}: correct rate_hz or the device's setting")
 
 
 def hum_lines(quiet: QuietRecord) -> list[str]:
