@@ -224,7 +224,11 @@ def open_port(link: Link, folder: Path) -> Port:
         return PtyPort(link, folder / link.port if link.port is not None else None)
     except OSError as error:
         device = link.port or f"{link.host}:{link.tcp_port}"
-        raise DriverOpenError(str(error), driver="simulator", device=device) from error
+        raise DriverOpenError(
+            f"{os.strerror(error.errno) if error.errno else error}: is another simulation running?",
+            driver="simulator",
+            device=device,
+        ) from error
 
 
 def _point(path: Path, target: str, link: str) -> None:
