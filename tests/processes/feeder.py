@@ -1,4 +1,4 @@
-"""Feeder: a monitor-only instrument of any rate on a pty or TCP port, as a process. Plays noise about a zero; never moves.
+"""Feeder: a monitor-only instrument of any rate on a pty or TCP port, as a process. It plays noise and never moves.
 
 The virtual frame makes its rows one by one and cannot keep up with 50 kS/s in real time. Here a whole turn of the
 counter is encoded once and written over and over, in batches of a millisecond. What the port does not take is written

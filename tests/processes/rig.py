@@ -22,6 +22,8 @@ import pytest
 from daq.cards.frame import FrameCard
 from daq.cards.load import example_path, load_frame, load_series
 from daq.cli.session import Session
+from daq.record.read import read_stream
+from daq.record.verify import verify
 from daq.station.client import Client
 from daq.station.places import places_for
 from daq.station.supervisor import Outfit, Supervisor
@@ -205,3 +207,29 @@ def virtual_frame(card: Path, bars_card: str, hands: Path, folder: Path) -> Iter
 def truths(folder: Path) -> list[dict[str, Any]]:
     """What really happened, as the virtual frame wrote it."""
     return [json.loads(line) for line in (folder / "truth.jsonl").read_text("utf-8").splitlines()]
+
+
+def stands_still(rig: Rig, timeout_s: float = 3.0) -> bool:
+    """The simulated machine itself says that it no longer moves."""
+    until_s = time.monotonic() + timeout_s
+    while time.monotonic() < until_s:
+        if not rig.hands(query=True)["inputs"]["moving"]:
+            return True
+        time.sleep(0.02)
+    return False
+
+
+def records(folder: Path) -> list[Path]:
+    return sorted(folder.glob("*/*.h5"))
+
+
+def check_whole(record: Path) -> None:
+    """Verifies, accounts for every row, and holds each entry once and in order."""
+    found = verify(record)
+    assert found.ok, found.problems
+    sequences = [entry.sequence for entry in read_stream(record)]
+    assert sequences == list(range(sequences[0], sequences[0] + len(sequences)))
+
+
+def rig_series() -> Path:
+    return example_path("demo-series.toml")

@@ -11,33 +11,11 @@ from pathlib import Path
 
 import pytest
 
-from daq.record.read import read_meta, read_run, read_stream
+from daq.record.read import read_meta, read_run
 from daq.record.verify import verify
 from daq.station.stopline import send_stop
 from daq.station.supervisor import Supervisor
-from tests.processes.rig import Rig, rig_of
-
-
-def stands_still(rig: Rig, timeout_s: float = 3.0) -> bool:
-    """The simulated machine itself says that it no longer moves."""
-    until_s = time.monotonic() + timeout_s
-    while time.monotonic() < until_s:
-        if not rig.hands(query=True)["inputs"]["moving"]:
-            return True
-        time.sleep(0.02)
-    return False
-
-
-def records(folder: Path) -> list[Path]:
-    return sorted(folder.glob("*/*.h5"))
-
-
-def check_whole(record: Path) -> None:
-    """Verifies, accounts for every row, and holds each entry once and in order."""
-    found = verify(record)
-    assert found.ok, found.problems
-    sequences = [entry.sequence for entry in read_stream(record)]
-    assert sequences == list(range(sequences[0], sequences[0] + len(sequences)))
+from tests.processes.rig import check_whole, records, rig_of, rig_series, stands_still
 
 
 def test_recorder_and_archivist_killed_again_and_again(tmp_path: Path) -> None:
@@ -73,12 +51,6 @@ def test_station_killed_is_a_controlled_stop_and_the_bar_can_be_loaded_again(tmp
         first = look["sitting"]["bars"][0]
         assert first["state"] == "interrupted" and first["loading"] == 1
     check_whole(records(tmp_path)[0])
-
-
-def rig_series() -> Path:
-    from daq.cards.load import example_path
-
-    return example_path("demo-series.toml")
 
 
 def test_a_stop_works_while_the_station_is_frozen(tmp_path: Path) -> None:
