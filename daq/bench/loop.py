@@ -462,6 +462,7 @@ def main(config_path: str, words: str) -> int:
     except (MidspanError, OSError) as error:
         life = socket.socket(fileno=config.life_fd)
         life.send(b"failed " + str(error).encode()[:1000])
+        socket.socket(fileno=config.stopper_fd).send(b"bye")  # it was given no link: there is nothing to stop
         return 4
     return process.run()
 

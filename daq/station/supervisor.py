@@ -121,6 +121,8 @@ class Supervisor:
         try:
             self._await_ready()
         except MidspanError:
+            for role in RESTARTABLE:  # nothing has begun for them, and each may be killed at any time
+                self._children[role].process.kill()
             self.end()
             if self.clean_start:  # nobody could have moved anything: a failed start leaves no doubt behind
                 self._places.running_mark.unlink(missing_ok=True)
