@@ -101,8 +101,8 @@ class RearmedBench(loop.BenchProcess):
         self._copied_ns = time.monotonic_ns()
         self._copy_ns.append(self._copied_ns - begun_ns)
 
-    def _goodbye(self) -> None:
-        super()._goodbye()
+    def _goodbye(self, *, resting: bool) -> None:
+        super()._goodbye(resting=resting)
         target = os.environ.get("MIDSPAN_BENCH_INSIDE")
         if target:
             told = {

@@ -24,6 +24,7 @@ from drivers.decoded import Decoded, Decoder
 from drivers.health import LinkFault, LinkHealth
 from drivers.motion import (
     Acknowledged,
+    CommandName,
     InputsKnown,
     MotionFact,
     MotionPort,
@@ -36,7 +37,7 @@ NewEntry: TypeAlias = tuple[Kind, int, bytes]
 LINK_FAULTS = {LinkFault.TOO_FAST: "too_fast", LinkFault.GARBAGE: "protocol"}
 RECORDER_CAUTION_S = 10.0  # job.md 4, row 27
 RECORDER_STOP_S = 45.0  # job.md 4, row 27; the ring holds 60 s
-MOVING = frozenset(
+KEPT_ALIVE = frozenset(
     {
         State.APPROACHING,
         State.IN_CONTACT,
@@ -102,6 +103,7 @@ class BenchCore:
         self._account = [Account() for _ in frame.links]
         self._health = [LinkHealth(link) for link in frame.links]
         self._link_faults: list[tuple[LinkFault, ...]] = [() for _ in frame.links]
+        self._told_by_reply = [status.name for status in frame.inputs if status.source == "reply"]
         self._at_once = at_once
         self._stop_write = stop_write(frame)
         self._stops_left = 0
@@ -174,7 +176,12 @@ class BenchCore:
         """A lost link is back. Nothing resumes by itself."""
         self._decoders[link] = decoder
         self._health[link] = LinkHealth(self._frame.links[link])
-        self._obey(self.pipeline.fault_over("link_lost", self.seconds(now_ns)), now_ns)
+        now_s = self.seconds(now_ns)
+        if (
+            self._motion is not None and link == self._motion_link
+        ):  # what was said while it was away was not heard
+            self._send(self._motion.encode_stop(now_s), now_ns, urgent=True)
+        self._obey(self.pipeline.fault_over("link_lost", now_s), now_ns)
         return self._take_writes()
 
     def modem(self, inputs: dict[str, bool | None], now_ns: int) -> list[Write]:
@@ -207,6 +214,8 @@ class BenchCore:
 
     # --- obeying
     def _obey(self, step: Step, now_ns: int) -> None:
+        if step.events:
+            self._steps.append((now_ns, step))
         for action in step.actions:
             if self._motion is None:
                 continue
@@ -214,8 +223,6 @@ class BenchCore:
                 self._send_stop(now_ns)
             elif isinstance(action, Move):
                 self._move(action, now_ns)
-        if step.events:
-            self._steps.append((now_ns, step))
 
     def _write_stop(self, stop: Stop) -> None:
         """A Stop was decided this moment. It must not overtake what was to be written before it."""
@@ -261,6 +268,8 @@ class BenchCore:
             known: dict[str, bool | None] = {str(name): active for name, active in fact.inputs.items()}
             self._obey(self.pipeline.inputs(known, now_s), now_ns)
         elif isinstance(fact, NotAnswered):
+            if fact.command is CommandName.STATUS:
+                self._obey(self.pipeline.inputs(dict.fromkeys(self._told_by_reply), now_s), now_ns)
             self._obey(self.pipeline.fault("not_answered", fact.command, now_s), now_ns)
         elif isinstance(fact, UnknownReply):
             self._obey(self.pipeline.fault("unknown_reply", fact.text, now_s), now_ns)
@@ -287,7 +296,9 @@ class BenchCore:
     def _keep_alive(self, now_s: float, now_ns: int, health: Health) -> None:
         assert self._motion is not None and self._frame.motion is not None
         keep = self._frame.motion.keep_alive
-        if keep is None or self.pipeline.state not in MOVING or now_s - self._kept_s < keep.every_s:
+        if keep is None or self.pipeline.stopping or self.pipeline.state not in KEPT_ALIVE:
+            return  # after a STOP silence is the second way to a standstill
+        if now_s - self._kept_s < keep.every_s:
             return
         fresh = now_s - self._heard_s <= self._fresh_s
         if fresh and health.stopper_alive and health.recorder_silent_s <= RECORDER_STOP_S:

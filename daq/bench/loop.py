@@ -24,6 +24,7 @@ from daq.cards.frame import FrameCard
 from daq.errors import DriverError, LinkLost, MidspanError, Refused
 from daq.stream.ring import Ring
 from daq.watch.pipeline import Pipeline, Proven
+from daq.watch.requests import Jog, OpenRun, ReturnCrosshead, StartRun
 from daq.watch.values import Severity
 from drivers.links import Link, open_link
 from drivers.motion import MotionPort, modem_inputs
@@ -37,6 +38,9 @@ STATION_SILENT_NS = 1_000_000_000  # design.md 2: a station silent for 1 s means
 SUSPEND_NS = 500_000_000  # boot-time clock ahead of the monotonic clock: the computer slept
 PSEUDO_TERMINALS = "/dev/pts/"
 HAND_ON_S = 30e-6  # a pseudo-terminal's bytes are handed on by a kernel worker, which must not wait for all we do next
+REQUEST_AGE_NS_MAX = 1_000_000_000  # the station gives up an answer after 1 s; nothing may move after that
+MOVING_REQUESTS = (OpenRun, StartRun, Jog, ReturnCrosshead)
+LOOK_CODE = 6  # the frame must be looked at before the next motion: the supervisor keeps its mark
 PENDING_BYTES_MAX = 4096  # commands waiting for a full output; more means the link is dead
 
 
@@ -86,6 +90,7 @@ class BenchProcess:
         pipeline = Pipeline(self._frame, clean_start=config.clean_start, proven=Proven(**config.proven))
         motion = MotionPort(self._frame) if self._frame.motion is not None else None
         self._stop_bytes = MotionPort(self._frame).encode_stop(0.0) if motion is not None else b""
+        self._line_end = self._frame.motion.line_end.encode("latin-1") if self._frame.motion else b""
         decoders = [decoder_for(self._frame, number) for number in range(len(self._ports))]
         self._core = BenchCore(
             self._frame,
@@ -117,11 +122,15 @@ class BenchProcess:
             while not self._done:
                 self._turn()
         finally:
+            # only an orderly end at rest is a goodbye; after any other the stopper repeats STOP for 2 s
+            resting = self._done and not self._core.pipeline.at_stake
             self._last_stop()  # whatever broke: these bytes need none of the code that did
-            self._write(self._core.stop("bench process ends", time.monotonic_ns()))
-            self._record()
-            self._goodbye()
-        return 0
+            try:
+                self._write(self._core.stop("bench process ends", time.monotonic_ns()))
+                self._record()
+            finally:
+                self._goodbye(resting=resting)
+        return LOOK_CODE if self._core.pipeline.must_look else 0
 
     def _last_stop(self) -> None:
         number = motion_link(self._frame)
@@ -161,17 +170,16 @@ class BenchProcess:
             assert number is not None
             if not self._ports[number].lost:
                 links = [self._ports[number].link.fileno()]
-            end = motion.line_end.encode("latin-1")
             # a leading line end closes a half-sent command; the second STOP is whole whatever stood before
-            stop = (end + 2 * self._stop_bytes).hex()
+            stop = (self._line_end + 2 * self._stop_bytes).hex()
         order = json.dumps({"deadline_s": self._config.deadline_s, "stop": stop}).encode()
         try:
             socket.send_fds(self._stopper, [order], links)
         except OSError:
             self._stopper_gone()
 
-    def _goodbye(self) -> None:
-        if self._stopper_alive:
+    def _goodbye(self, *, resting: bool) -> None:
+        if self._stopper_alive and resting:
             try:
                 self._stopper.send(b"bye")
             except OSError:
@@ -179,6 +187,7 @@ class BenchProcess:
         for port in self._ports:
             port.link.close()
         self._ring.close()
+        self._stopper.close()
 
     def _watch(self, descriptor: int, handler: Any) -> None:
         self._handlers[descriptor] = handler
@@ -186,7 +195,7 @@ class BenchProcess:
 
     # --- one turn
     def _turn(self) -> None:
-        wait_ms = max(0, self._due_ns - time.monotonic_ns()) // 1_000_000
+        wait_ms = -(-max(0, self._due_ns - time.monotonic_ns()) // 1_000_000)
         ready = self._poll.poll(wait_ms)
         stop_fd = self._stop_socket.fileno()
         if len(ready) > 1:
@@ -204,6 +213,8 @@ class BenchProcess:
         port = self._ports[number]
         if mask & select.POLLOUT:
             self._flush(number)
+            if port.lost:
+                return
         try:
             data = port.link.read()
         except LinkLost as error:
@@ -242,10 +253,14 @@ class BenchProcess:
         self._station_heard_ns = now_ns = time.monotonic_ns()
         number = -1
         try:
-            number, request = messages.decode(message)
+            number, request, sent_ns = messages.decode(message)
             if request is None:
                 reply(self._bench_socket, address, {"id": number, "ok": True, "snapshot": self._snapshot()})
                 return
+            if isinstance(request, MOVING_REQUESTS) and now_ns - sent_ns > REQUEST_AGE_NS_MAX:
+                raise Refused(
+                    "request", ("it is more than a second old: whoever asked has been told otherwise",)
+                )
             self._write(self._core.request(request, now_ns))
             answer: dict[str, Any] = {"id": number, "ok": True}
         except Refused as error:
@@ -291,10 +306,8 @@ class BenchProcess:
             self._beat_ns = now_ns
             try:
                 self._stopper.send(b".")
-            except BlockingIOError:
-                pass  # it has beats enough to read; its own deadline judges
             except OSError:
-                self._stopper_gone()
+                self._stopper_gone()  # dead, or with seconds of unread beats: it does not live either way
         self._judge_neighbours(now_ns, silent_s)
         for number, port in enumerate(self._ports):
             if port.lost and now_ns >= port.reopen_ns:
@@ -310,10 +323,11 @@ class BenchProcess:
         self._record()
 
     def _judge_neighbours(self, now_ns: int, recorder_silent_s: float) -> None:
-        if self._core.pipeline.run is not None:
+        pipeline = self._core.pipeline
+        if pipeline.run is not None or pipeline.moving:
             self._write(self._core.recorder_silence(recorder_silent_s, now_ns))
-            if self._core.pipeline.armed and now_ns - self._station_heard_ns > STATION_SILENT_NS:
-                self._fault("station_silent", "the station has been silent for 1 s")
+        if (pipeline.armed or pipeline.moving) and now_ns - self._station_heard_ns > STATION_SILENT_NS:
+            self._fault("station_silent", "the station has been silent for 1 s")
         offset_ns = boot_offset_ns()
         if offset_ns - self._boot_offset_ns > SUSPEND_NS:
             self._boot_offset_ns = offset_ns
@@ -334,18 +348,25 @@ class BenchProcess:
             port = self._ports[write.link]
             if port.lost:
                 continue
-            if write.urgent:
+            data = write.data
+            if write.urgent and port.pending:
                 port.pending.clear()
+                data = (
+                    self._line_end + data
+                )  # closes the half-sent line, so that STOP stands on one of its own
+            elif len(port.pending) > PENDING_BYTES_MAX:
+                self._lose(write.link, "the machine takes no more commands")
+                continue
             elif port.pending:
-                port.pending += write.data
+                port.pending += data
                 continue
             try:
-                taken = port.link.write(write.data)
+                taken = port.link.write(data)
             except LinkLost as error:
                 self._lose(write.link, str(error))
                 continue
-            if taken < len(write.data):
-                port.pending += write.data[taken:]
+            if taken < len(data):
+                port.pending += data[taken:]
                 self._blocked(write, port)
 
     def _stop_at_once(self, write: Write) -> bool:
@@ -362,16 +383,25 @@ class BenchProcess:
         if 0 < taken < len(write.data):
             port.pending += write.data[taken:]
             self._poll.modify(port.link.fileno(), select.POLLIN | select.POLLOUT)
+            self._tell_stopper()
         if port.pseudo:
-            time.sleep(HAND_ON_S)  # measured under full load: STOP at the other end after 240 instead of 400 us
+            time.sleep(
+                HAND_ON_S
+            )  # measured under full load: STOP at the other end after 240 instead of 400 us
         return taken > 0
 
     def _blocked(self, write: Write, port: Port) -> None:
-        if write.urgent and self._stopper_alive:
-            self._stopper.send(b"stop")
+        if write.urgent and self._tell_stopper():
             self._core.note("stop_handed_over", time.monotonic_ns(), Severity.CAUTION, link=write.link)
-        del port.pending[PENDING_BYTES_MAX:]
         self._poll.modify(port.link.fileno(), select.POLLIN | select.POLLOUT)
+
+    def _tell_stopper(self) -> bool:
+        """Have the stopper write STOP on its own descriptor. Never raises: it is part of stopping."""
+        try:
+            self._stopper.send(b"stop")
+        except OSError:
+            return False  # gone or frozen: the next beat finds out
+        return True
 
     def _flush(self, number: int) -> None:
         port = self._ports[number]
@@ -389,9 +419,14 @@ class BenchProcess:
             return
         port.lost = True
         port.reopen_ns = time.monotonic_ns() + REOPEN_NS
+        carries_motion = number == motion_link(self._frame)
+        if carries_motion:
+            self._tell_stopper()  # what cannot be read may still be written to
         self._poll_drop(port.link.fileno())
         port.link.close()
         port.pending.clear()
+        if carries_motion and self._stopper_alive:
+            self._hand_links_to_stopper()  # nothing: its copy would keep the port busy and the device's name taken
         self._fault("link_lost", detail)
 
     def _reopen(self, number: int, now_ns: int) -> None:
@@ -404,11 +439,11 @@ class BenchProcess:
         except DriverError:
             return  # still away; tried again in a second, the state says signal lost
         port.lost = False
-        self._write(self._core.reopened(number, decoder_for(self._frame, number), now_ns))
-        self._core.opened(number, port.link.sent_at_open, now_ns)
         self._watch(port.link.fileno(), lambda mask, n=number: self._on_link(n, mask))
+        self._core.opened(number, port.link.sent_at_open, now_ns)
         if self._stopper_alive:
             self._hand_links_to_stopper()
+        self._write(self._core.reopened(number, decoder_for(self._frame, number), now_ns))
 
     def _poll_drop(self, descriptor: int) -> None:
         self._handlers.pop(descriptor, None)
@@ -420,8 +455,10 @@ class BenchProcess:
 
     def _record(self) -> None:
         entries = self._core.entries()
-        if entries and not self._ring.append_batch(entries) and not self._ring_lost:
-            self._ring_lost = True
+        if not entries:
+            return
+        before, self._ring_lost = self._ring_lost, not self._ring.append_batch(entries)
+        if self._ring_lost and not before:
             self._fault("ring_full", "the ring is full: the recorder does not keep up")
 
 

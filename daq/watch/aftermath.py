@@ -58,6 +58,7 @@ def close(core: Core) -> None:
     )
     core.run, core.run_closed_s, core.collector = None, core.clock_s, None
     core.watch.watch(False)
+    core.tripped_rows.clear()
     core.last_tare_n = run.note.tare_n if run.note is not None else core.last_tare_n
     core.limits_for_run()
     core.go(Cause.CLOSED, "run closed")
@@ -101,6 +102,8 @@ def _back_off(core: Core, run: Run, seen: Aftermath) -> None:
     if motion is None or not motion.backoff_auto or seen.backed_off or seen.stood_s is None or not clear:
         return
     if core.state is not State.BROKEN_UNLOADED or not core.proven.stop_drill or core.inputs_against():
+        return
+    if run.no_back_off or core.stopping is not None or core.polarity_locked or core.blocks:
         return
     seen.backed_off = True
     core.go(Cause.SENT_AWAY, "back-off")

@@ -1,5 +1,4 @@
-"""Core: what the watch carries from step to step, and the few verbs that change it: emit, go, stop, move,
-trip, end.
+"""Core: what the watch carries from step to step, and the few verbs that change it.
 
 Every stop, every change of state and every motion command of midspan passes through here. The order in which
 a block is judged stands in pipeline.py; what each state does in stages.py; what a person may ask in desk.py.
@@ -79,6 +78,7 @@ class Run:
         "finding",
         "flat",
         "held_since_s",
+        "no_back_off",
         "noisy_since_s",
         "note",
         "pace",
@@ -116,6 +116,7 @@ class Run:
         self.verdict: Verdict | None = None
         self.ended_s: float | None = None
         self.ended_reason = ""
+        self.no_back_off = False  # a stop or an open shield after the end: nothing moves by itself any more
         self.peak_n = 0.0
         self.travel_mm_max = 0.0
         self.pieces: dict[str, int] = {"slip": 0, "pop_in": 0, "partial_drop": 0, "glitch": 0}
@@ -227,6 +228,8 @@ class Core:
             before.attempt = attempt
         self.move_now, self.speed_watch, self.runaway = None, None, None
         if cause is not None:
+            if self.run is not None and self.run.ended:
+                self.run.no_back_off = True
             self.go(cause, reason)
         self.set_bands()
 
@@ -249,9 +252,7 @@ class Core:
         return self.move_now.speed_mm_min / SECONDS_PER_MINUTE if self.move_now is not None else 0.0
 
     def move(self, move: Move) -> None:
-        """Set the crosshead moving. Never from a latched state: an assertion, because desk and stages must
-        not ask.
-        """
+        """Set the crosshead moving; never from a latched state, which desk and stages must not ask for."""
         assert self.state not in LATCHED and self.stopping is None
         if self.monitor_only:
             return

@@ -1,5 +1,4 @@
-"""The desk: what a person may ask, and the list of missing conditions where it cannot be done. Decides on
-values only.
+"""The desk: what a person may ask, and the list of missing conditions where it cannot be done.
 
 Stop is always obeyed. Reset clears a latch and never starts anything. Nothing else moves the frame but
 StartRun, Jog and ReturnCrosshead, each only from rest and each with every condition shown to hold.

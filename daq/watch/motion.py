@@ -212,10 +212,12 @@ class SpeedWatch:
         speed = travel.speed_mm_s(self._window_s)
         if speed is None:
             return None
-        if (
-            abs(speed - self._set_mm_s)
-            <= SPEED_SHARE * abs(self._set_mm_s) + 2.0 * travel.resolution_mm / self._window_s
-        ):
+        seen = SPEED_SHARE * abs(self._set_mm_s) + 2.0 * travel.resolution_mm / self._window_s
+        if speed * self._set_mm_s < 0.0 and abs(speed) > seen:
+            self._told = True
+            minutes = SECONDS_PER_MINUTE
+            return Trip(14, speed * minutes, self._set_mm_s * minutes, "mm/min", Reaction.STOP)
+        if abs(speed - self._set_mm_s) <= seen:
             self._off_since_s = None
             return None
         if self._off_since_s is None:

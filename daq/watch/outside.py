@@ -1,6 +1,4 @@
-"""What comes from outside the samples: status inputs of the machine, faults of drivers and of other
-processes.
-"""
+"""What comes from outside the samples: status inputs of the machine, faults of drivers and processes."""
 
 from __future__ import annotations
 
@@ -23,6 +21,8 @@ def status_input(core: Core, name: str, active: bool | None) -> None:
         _danger(core, f"{name.replace('_', ' ')} is not known", Cause.FAULT)
     if active is not True:
         return
+    if name == "shield_open" and core.run is not None and core.run.ended:
+        core.run.no_back_off = True  # shutting it again must start nothing
     if name == "emergency_stop":
         _danger(core, "emergency stop", Cause.EMERGENCY)
     elif name == "drive_fault":

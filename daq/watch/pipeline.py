@@ -24,6 +24,7 @@ from daq.watch.values import Json, State, Step, Stop
 
 __all__ = ["Pipeline", "Proven", "WatchSetup", "setup_from_card"]
 
+MUST_LOOK = frozenset({State.UNKNOWN, State.OVERLOAD, State.BROKEN_STILL_LOADED})
 SCALAR_SAMPLES_MAX = 64
 STRETCH_MIN = 24
 TICK_BEATS = 2.0
@@ -62,6 +63,21 @@ class Pipeline:
     def moving(self) -> bool:
         """A motion command is in force: of a run, a jog or a return. The keep-alive is needed here too."""
         return self._core.moving
+
+    @property
+    def stopping(self) -> bool:
+        """A STOP has been sent and no standstill been seen yet."""
+        return self._core.stopping is not None
+
+    @property
+    def at_stake(self) -> bool:
+        """Something moves, is to stop, or stands under a run's load: not a moment to leave without a STOP."""
+        return self.moving or self.stopping or self.armed
+
+    @property
+    def must_look(self) -> bool:
+        """What a restart must not forget: a person has to look at the frame before anything moves."""
+        return self.state in MUST_LOOK or self._core.polarity_locked
 
     @property
     def run(self) -> Mapping[str, Json] | None:

@@ -32,7 +32,9 @@ def sample(core: Core, time_s: float, count: float) -> None:
     if trip is None:
         return
     if trip.row == RUN_ON_ROW:
-        stages.stop_failed(core, "the crosshead comes near the lower anvil", RUN_ON_ROW)
+        if RUN_ON_ROW not in core.tripped_rows:  # said once; the stop goes on being repeated
+            core.tripped_rows.add(RUN_ON_ROW)
+            stages.stop_failed(core, "the crosshead comes near the lower anvil", RUN_ON_ROW)
     elif core.state not in LATCHED and core.state not in BROKEN:
         core.trip(trip)
 

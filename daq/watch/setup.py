@@ -154,9 +154,7 @@ def _column(frame: FrameCard, channel: Channel, source: int, column: int) -> Col
 
 
 def _rails(force: Column) -> tuple[float, float]:
-    """Force at 1 % of the converter's range inside each rail (job.md section 4, row 2); infinite if
-    undeclared.
-    """
+    """Force at 1 % of the converter's range inside each rail (row 2); infinite where undeclared."""
     low, high = force.counts_min, force.counts_max
     margin = 0.01 * (high - low) if low is not None and high is not None else 0.0
     ends = [

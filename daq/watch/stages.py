@@ -1,5 +1,4 @@
-"""Stages: what each state does at a beat (a few milliseconds of samples): touch, seating, loading, holding,
-arrival.
+"""Stages: what each state does at a beat (a few milliseconds of samples): touch, seating, loading, arrival.
 
 Nothing here judges force limits or breaks: those come sample by sample, before any beat, in pipeline.py.
 """

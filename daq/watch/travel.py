@@ -22,21 +22,31 @@ POINTS_MIN = 4
 class Travel:
     """The last seconds of crosshead positions, mm, growing towards the specimen."""
 
-    __slots__ = ("_points", "at_mm", "resolution_mm", "spacing_s", "step_mm", "time_s", "top_mm")
+    __slots__ = (
+        "_before_mm",
+        "_points",
+        "at_mm",
+        "resolution_mm",
+        "spacing_s",
+        "step_mm",
+        "time_s",
+        "top_mm",
+    )
 
     def __init__(self, rate_hz: float, step_mm: float) -> None:
         self.spacing_s = max(SPACING_S, 1.0 / rate_hz)
         self._points: deque[tuple[float, float]] = deque(maxlen=int(KEPT_S / self.spacing_s) + 2)
         self.step_mm = self.resolution_mm = step_mm
         self.at_mm: float | None = None
+        self._before_mm = float("nan")
         self.time_s = float("-inf")
         self.top_mm = float("-inf")
 
     def feed(self, time_s: float, at_mm: float) -> None:
         """A valid position; kept in the history only where the last kept one is old enough."""
+        self._before_mm = at_mm if self.at_mm is None else self.at_mm
         self.at_mm, self.time_s = at_mm, time_s
-        if at_mm > self.top_mm:
-            self.top_mm = at_mm
+        self.top_mm = max(self.top_mm, min(at_mm, self._before_mm))
         if not self._points or time_s >= self._points[-1][0] + 0.99 * self.spacing_s:
             self._points.append((time_s, at_mm))
 
@@ -44,8 +54,11 @@ class Travel:
         """The same as feeding every one of them."""
         if len(at_mm) == 0:
             return
+        first_mm = float(at_mm[0]) if self.at_mm is None else self.at_mm
+        before_mm = np.concatenate(([first_mm], at_mm[:-1]))
+        self._before_mm = float(before_mm[-1])
         self.at_mm, self.time_s = float(at_mm[-1]), float(times_s[-1])
-        self.top_mm = max(self.top_mm, float(at_mm.max()))
+        self.top_mm = max(self.top_mm, float(np.minimum(at_mm, before_mm).max()))
         place = 0
         while place < len(times_s):
             if self._points:
@@ -92,8 +105,8 @@ class Travel:
 
     @property
     def back_mm(self) -> float:
-        """How far the crosshead has gone back since the move began."""
-        return self.top_mm - self.at_mm if self.at_mm is not None else 0.0
+        """How far the crosshead has gone back since the move began; one odd sample is not believed."""
+        return self.top_mm - max(self.at_mm, self._before_mm) if self.at_mm is not None else 0.0
 
     def back_from_top_mm(self, since_s: float) -> float:
         """How far the crosshead has gone back from the furthest point it reached since then."""

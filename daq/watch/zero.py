@@ -50,6 +50,9 @@ def _moved(core: Core, before_mm: float | None, now_mm: float | None) -> bool:
     return abs(now_mm - before_mm) > max(STANDING_MM, STANDING_RESOLUTIONS * core.travel.resolution_mm)
 
 
+TARE_SAMPLES_MIN = 4  # fewer say nothing of noise and drift
+
+
 def _judge(core: Core, run: Run, collector: Collector) -> None:
     rules = TareRules(
         capacity_n=core.setup.capacity_n,
@@ -60,6 +63,10 @@ def _judge(core: Core, run: Run, collector: Collector) -> None:
         run_s=run.plan.expected.time_to_break_s,
     )
     times_s, gross_n = collector.cut()
+    if len(times_s) < TARE_SAMPLES_MIN:
+        told = f"{len(times_s)} samples came while at rest, {TARE_SAMPLES_MIN} are needed"
+        _refuse(core, collector, (told,), float(gross_n[-1]) if len(gross_n) else float("nan"))
+        return
     taken = take(times_s, gross_n, rules)
     override = "" if taken.final else run.plan.tare_override_reason
     if taken.drifting and not taken.final and not override and collector.look_longer():

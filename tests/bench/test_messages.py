@@ -25,7 +25,7 @@ EXAMPLES = (
 
 @pytest.mark.parametrize("request_", EXAMPLES, ids=lambda one: type(one).__name__)
 def test_round_trip(request_: requests.Request) -> None:
-    assert decode(encode_request(7, request_)) == (7, request_)
+    assert decode(encode_request(7, request_, 5)) == (7, request_, 5)
 
 
 def test_every_request_has_an_example() -> None:
@@ -34,7 +34,7 @@ def test_every_request_has_an_example() -> None:
 
 
 def test_snapshot() -> None:
-    assert decode(encode_snapshot_request(3)) == (3, None)
+    assert decode(encode_snapshot_request(3)) == (3, None, 0)
 
 
 @pytest.mark.parametrize(
