@@ -67,3 +67,92 @@ def test_numbers_that_are_missing_are_dashes() -> None:
 
 def test_a_fault_without_words_still_says_its_name() -> None:
     assert fault_text({"event": "signal_lost"}) == "signal lost"
+
+
+def summary(presenter: Presenter, now_s: float, **values: Any) -> None:
+    presenter.take(update("summary", values), now_s)
+
+
+def test_the_age_of_the_newest_sample_goes_on_growing_between_updates() -> None:
+    presenter = Presenter()
+    presenter.take(update("state", {"state": "loading"}), 10.0)
+    assert text_of(presenter, "data", 10.0) == ("no samples yet", Tone.CAUTION)
+    summary(presenter, 10.0, data_age_s=0.05)
+    assert text_of(presenter, "data", 10.1) == ("0.1 s old", Tone.PLAIN)
+    assert text_of(presenter, "data", 12.0) == ("NOT CURRENT: 2 s old", Tone.CAUTION)
+
+
+def test_a_silent_machine_is_not_current_however_often_the_station_says_so() -> None:
+    presenter = Presenter()
+    presenter.take(update("state", {"state": "at rest"}), 0.0)
+    for second in range(20):
+        summary(presenter, float(second), gross_n=2.4, data_age_s=float(second))
+    text, tone = text_of(presenter, "data", 19.0)
+    assert text == "NOT CURRENT: 19 s old" and tone is Tone.CAUTION
+
+
+def test_lost_updates_are_counted_in_the_view() -> None:
+    presenter = Presenter()
+    presenter.take(update("state", {"state": "at rest"}), 0.0)
+    summary(presenter, 0.0, data_age_s=0.0)
+    presenter.lost_updates = 17
+    assert "17 updates lost" in text_of(presenter, "data", 0.0)[0]
+
+
+def test_nothing_heard_is_not_an_instruction_to_load() -> None:
+    presenter = Presenter()
+    presenter.take(update("state", {"state": "loading"}), 0.0)
+    assert "stop it at the machine" in text_of(presenter, "do now", 5.0)[0]
+    assert "NO CONTACT with the station for 60 s" in text_of(presenter, "state", 60.0)[0]
+    assert not presenter.is_current(5.0) and presenter.is_current(1.0)
+
+
+def test_a_daemon_that_was_ended_is_ended_not_out_of_contact() -> None:
+    presenter = Presenter()
+    presenter.take(update("state", {"state": "midspan has ended"}), 0.0)
+    assert text_of(presenter, "state", 1000.0) == ("midspan has ended", Tone.STOP)
+
+
+def test_a_late_joiner_sees_what_there_is() -> None:
+    presenter = Presenter()
+    look = {
+        "state": {
+            "state": "loading",
+            "run": {"specimen": "A-2", "loading": 1},
+            "bar": 2,
+            "bars": 30,
+            "series": "s",
+        },
+        "summary": {"net_n": 10.0, "gross_n": 12.4, "data_age_s": 0.1},
+        "frame": {"name": "lane", "simulated": False, "motion": None},
+        "sitting": {"bars": [{"number": "A-1", "result": {"strength_mpa": 300.0, "peak_n": 400.0}}]},
+    }
+    presenter.take_look(look, 5.0)
+    assert text_of(presenter, "frame", 5.0)[0] == "lane   monitor only: midspan cannot stop it"
+    assert text_of(presenter, "bar", 5.0)[0] == "A-2 loading 1   bar 2 of 30   s"
+    assert text_of(presenter, "last bar", 5.0)[0].startswith("A-1: 300.0 MPa")
+    presenter.take(update("result", {"specimen": "A-2", "result": {"strength_mpa": 310.0}}), 6.0)
+    assert text_of(presenter, "last bar", 6.0)[0].startswith("A-2: 310.0 MPa")
+    assert len(presenter.results) == 2
+
+
+def test_between_bars_the_next_one_and_the_count_are_named() -> None:
+    presenter = Presenter()
+    body = {
+        "state": "at rest",
+        "bars": 30,
+        "broken": 4,
+        "next": "A-05",
+        "series": "s",
+        "operator": "A. Person",
+    }
+    presenter.take(update("state", body), 0.0)
+    assert text_of(presenter, "bar", 0.0)[0] == "none called; next A-05; 4 of 30 broken   s"
+    assert text_of(presenter, "operator", 0.0)[0] == "A. Person"
+
+
+def test_trouble_with_the_recording_is_a_caution_of_its_own() -> None:
+    presenter = Presenter()
+    presenter.take(update("state", {"state": "loading", "reports": {"recorder": {"lag_s": 11.0}}}), 0.0)
+    text, tone = text_of(presenter, "recording", 0.0)
+    assert "11 s behind" in text and tone is Tone.CAUTION
