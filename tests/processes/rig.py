@@ -91,6 +91,10 @@ class Rig:
     def wait(self, what: str, test: Callable[[], bool], timeout_s: float = 40.0) -> None:
         self.session.wait_for(what, test, timeout_s)
 
+    def wait_loading(self) -> None:
+        """The crosshead moves and the bar carries load: past the halt after the touch."""
+        self.wait("load on the bar", lambda: self.session.state == "loading" and self.net_n() > 120.0)
+
     def pump(self, seconds: float) -> None:
         until_s = time.monotonic() + seconds
         while time.monotonic() < until_s:

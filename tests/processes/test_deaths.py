@@ -40,7 +40,7 @@ def test_station_killed_is_a_controlled_stop_and_the_bar_can_be_loaded_again(tmp
     with rig_of(data=tmp_path) as rig:
         rig.begin()
         rig.start_bar()
-        rig.wait("load on the bar", lambda: rig.net_n() > 30.0)
+        rig.wait_loading()
         rig.kill("station")
         rig.pump(3.0)
         assert stands_still(rig)
@@ -57,7 +57,7 @@ def test_a_stop_works_while_the_station_is_frozen(tmp_path: Path) -> None:
     with rig_of(data=tmp_path) as rig:
         rig.begin()
         rig.start_bar()
-        rig.wait("load on the bar", lambda: rig.net_n() > 30.0)
+        rig.wait_loading()
         rig.kill("station", signal.SIGSTOP)
         try:
             assert send_stop(rig.frame.name, "test")
@@ -74,7 +74,7 @@ def test_a_dead_or_frozen_bench_is_stopped_by_the_stopper(how: int, tmp_path: Pa
     with rig_of(data=tmp_path) as rig:
         rig.begin()
         rig.start_bar()
-        rig.wait("load on the bar", lambda: rig.net_n() > 30.0)
+        rig.wait_loading()
         rig.kill("bench", how)
         assert stands_still(rig, 2.0)
         if how == signal.SIGSTOP:
@@ -92,7 +92,7 @@ def test_after_a_killed_bench_the_next_start_recovers_the_record_and_knows_nothi
     with rig_of(data=tmp_path) as rig:
         rig.begin()
         rig.start_bar()
-        rig.wait("load on the bar", lambda: rig.net_n() > 30.0)
+        rig.wait_loading()
         rig.kill("bench")
         rig.pump(0.3)
         rig.supervisor.end()
@@ -118,12 +118,12 @@ def test_after_a_killed_bench_the_next_start_recovers_the_record_and_knows_nothi
 def test_a_killed_stopper_stops_the_run_and_blocks_the_next(tmp_path: Path) -> None:
     with rig_of(data=tmp_path) as rig:
         rig.begin()
-        rig.start_bar()
-        rig.wait("load on the bar", lambda: rig.net_n() > 30.0)
+        run_id = rig.start_bar()
+        rig.wait_loading()
         rig.kill("stopper")
         rig.wait("the end of the run", lambda: bool(rig.events("run_closed")), 10.0)
         assert stands_still(rig)
-        rig.wait("the sealed record", lambda: bool(records(tmp_path)), 30.0)
+        rig.session.finish(run_id, timeout_s=30.0)
         with pytest.raises(Exception, match="stopper"):
             rig.client.do("mount")
 
@@ -132,7 +132,7 @@ def test_a_pulled_cable_is_signal_lost_and_the_file_is_closed(tmp_path: Path) ->
     with rig_of(data=tmp_path) as rig:
         rig.begin()
         rig.start_bar()
-        rig.wait("load on the bar", lambda: rig.net_n() > 30.0)
+        rig.wait_loading()
         rig.simulator.kill()
         rig.wait("the end of the run", lambda: bool(rig.events("run_closed")), 10.0)
         assert rig.events("run_closed")[-1]["verdict"].startswith("signal lost")
@@ -148,7 +148,7 @@ def test_a_killed_supervisor_takes_all_with_it_in_order(tmp_path: Path) -> None:
     with rig_of(data=tmp_path) as rig:
         rig.begin()
         rig.start_bar()
-        rig.wait("load on the bar", lambda: rig.net_n() > 30.0)
+        rig.wait_loading()
         processes = dict(rig.supervisor.pids)
         rig.supervisor.abandon()
         assert stands_still(rig, 2.0)
