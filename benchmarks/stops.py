@@ -25,7 +25,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from benchmarks.daemon import Daemon, daemon, ended
-from benchmarks.harness import Report, python_of, quantile
+from benchmarks.harness import Report, memory_kb, python_of, quantile
 from daq.station.stopline import send_stop
 
 NAME = "stops"
@@ -187,7 +187,7 @@ def killed(report: Report, times: int) -> None:
     taken_ms, locked_mb = [], 0.0
     for _ in range(times):
         with wire() as link, standin(link) as bench:
-            locked_mb = locked_kb(bench.pid) / 1024
+            locked_mb = memory_kb(bench.pid)["Locked"] / 1024
             begun = time.monotonic_ns()
             bench.kill()
             taken_ms.append((link.heard_ns(3.0) - begun) / 1e6)
@@ -214,10 +214,3 @@ def frozen(report: Report, times: int) -> None:
         count=times,
         goal="<= 10 ms",
     )
-
-
-def locked_kb(pid: int) -> int:
-    for line in Path(f"/proc/{pid}/status").read_text("ascii", "replace").splitlines():
-        if line.startswith("VmLck:"):
-            return int(line.split()[1])
-    return 0
