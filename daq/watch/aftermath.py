@@ -82,8 +82,9 @@ def _residual(core: Core, run: Run, seen: Aftermath) -> None:
     found = mean_since(core, core.clock_s - max(MEAN_S, 3.5 * period_s))
     if found is None:
         return
-    # one-sided: a level below zero is a zero that was taken under load, not something that rests on the rollers
-    unloaded = found[0] < max(RESIDUAL_SHARE * run.peak_n, RESIDUAL_SIGMA * core.sigma_n)
+    threshold_n = max(RESIDUAL_SHARE * run.peak_n, RESIDUAL_SIGMA * core.sigma_n)
+    # below zero is a zero that was taken under load, if a person said so; else it is a signal not to be believed
+    unloaded = found[0] < threshold_n and (found[0] > -threshold_n or run.tare_overridden)
     if unloaded or not seen.residual_told:
         seen.residual_told = True
         severity = Severity.REMARK if unloaded else Severity.CAUTION

@@ -7,7 +7,9 @@ otherwise turn the halt itself into a fall.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from math import sqrt
 
 from daq.watch.noise import Level
@@ -17,7 +19,7 @@ SAMPLES_MIN = 3
 AWAY_SAMPLES, AWAY_SHARE = 4, 0.75
 DULL_SAMPLES, DULL_SIGMA = 8, 0.05
 NEGATIVE_SHARE, NEGATIVE_SIGMA = 0.2, 20.0
-SHRUNK_SHARE = 0.8
+MIRROR_LIMITS = 3.0
 FALLING_ERRORS = 3.0
 
 
@@ -151,10 +153,28 @@ class Candidate:
         """Where the last three fifths begin (never fewer than the last window)."""
         return min(self.head, len(self.values) * 2 // 5)
 
+    def tail_samples(self) -> tuple[list[float], list[float]]:
+        """The last three fifths without what stands alone among its neighbours: a glitch that falls into a slip
+        must not bend the line that goes on from there.
+        """
+        start, values = self.tail_start(), self.values
+        steps = [abs(b - a) for a, b in pairwise(values[start:])]
+        limit = self.limit + 2.0 * _middle(
+            steps
+        )  # a steep ramp's last sample is far from its neighbours, too
+        near: Sequence[int] = [
+            place
+            for place in range(start, len(values))
+            if abs(values[place] - _middle(values[max(0, place - 2) : place + 3])) <= limit
+        ]
+        kept = (
+            near if len(near) >= max(SAMPLES_MIN, (len(values) - start) // 2) else range(start, len(values))
+        )
+        return [self.times_s[place] for place in kept], [values[place] for place in kept]
+
     def tail(self) -> Tail:
         """What the samples do now, after whatever happened: a step, or a fall that still goes on."""
-        start = self.tail_start()
-        times, values = self.times_s[start:], self.values[start:]
+        times, values = self.tail_samples()
         n = len(values)
         mid_s, mid = sum(times) / n, sum(values) / n
         spread = sum((t - mid_s) ** 2 for t in times)
@@ -172,12 +192,17 @@ class Candidate:
             return False
         return not (rest.dull and rest.low - rest.step <= low and high <= rest.high + rest.step)
 
-    def shrinks(self) -> bool:
-        """The swing is dying down, as a ring-down does and a signal of the wrong sign does not."""
-        return abs(self.values[-1]) < SHRUNK_SHARE * max(
-            abs(self.values[self.first_dropped()]), abs(min(self.values))
-        )
-
     def negative(self) -> bool:
-        """A ring-down swings about what is left on the bar; a level well below zero has the wrong sign."""
-        return self.mean < -max(NEGATIVE_SHARE * self.reference, NEGATIVE_SIGMA * self.sigma_n)
+        """Well below zero, newest and altogether: a ring-down swings about what is left on the bar."""
+        level = -max(NEGATIVE_SHARE * self.reference, NEGATIVE_SIGMA * self.sigma_n)
+        return self.mean < level and self._all_sum < level * len(self.values)
+
+    def mirrored(self) -> bool:
+        """The forecast with the other sign: a change of polarity, which no bar makes."""
+        first = self.first_dropped()
+        pairs = zip(self.times_s[first:], self.values[first:], strict=True)
+        return all(abs(x + self.forecast(t)) <= MIRROR_LIMITS * self.limit for t, x in pairs)
+
+
+def _middle(values: list[float]) -> float:
+    return sorted(values)[len(values) // 2]

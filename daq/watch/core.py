@@ -37,6 +37,7 @@ from daq.watch.values import (
 )
 
 ANVIL_CLEAR_MM = 0.5
+AGE_BINS, AGE_LAGS = 2.0, 3.0
 RUN_TOO_LONG_ROW = 33
 STOP_BY_HAND = "midspan cannot stop this machine: STOP IT BY ITS OWN CONTROLS"
 
@@ -89,6 +90,7 @@ class Run:
         "smooth_since_s",
         "start_mm",
         "started_s",
+        "tare_overridden",
         "tight",
         "told",
         "travel_mm_max",
@@ -100,6 +102,7 @@ class Run:
         self.note: TareNote | None = None
         self.smooth_since_s = float("-inf")
         self.tight: dict[str, float] = {}
+        self.tare_overridden = False
         self.pace: Pace | None = None
         self.aftermath: Aftermath | None = None
         self.started_s: float | None = None
@@ -223,6 +226,7 @@ class Core:
                 speed_mm_s=self.set_speed_mm_s,
                 latency_s=self.setup.stop_latency_s,
                 travel=self.travel,
+                force_age_s=AGE_BINS * self.watch.level.bin_s + AGE_LAGS * self.setup.lag_s,
             )
         else:
             before.attempt = attempt

@@ -89,6 +89,7 @@ def _open(core: Core, request: OpenRun) -> None:
     core.run = Run(plan)
     core.first_cause = ""
     core.tripped_rows.clear()
+    core.judge.outliers = 0
     core.limits_for_run()
     run = plan.run
     core.emit(

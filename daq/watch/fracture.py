@@ -313,10 +313,12 @@ class FractureWatch:
             return found
         if c.dull(self.rest, self.level.sigma_rest_n):
             return self._decided(c, Kind.LOST, "constant", time_s)
-        if c.negative():
-            if c.shrinks():
-                return self._broken(c, "ringing", time_s)
-            return self._decided(c, Kind.LOST, "of the wrong sign", time_s)
+        if (
+            c.negative()
+        ):  # a mirrored force is a wire; anything else below zero by now is for a person to look at
+            if c.mirrored():
+                return self._decided(c, Kind.LOST, "of the wrong sign", time_s)
+            return self._decided(c, Kind.LASTING, "below zero", time_s)
         tail, reference = c.tail(), c.reference
         if self._last_partial is not None and time_s - self._last_partial[0] < TWIN_S:
             reference = max(reference, self._last_partial[1])
@@ -358,8 +360,8 @@ class FractureWatch:
 
     def _rebaseline(self, c: Candidate, *, restart_envelope: bool) -> None:
         self.candidate = None
-        tail = c.tail_start()
-        self.level.begin_anew(c.times_s[tail:], c.values[tail:], None)
+        times_s, values = c.tail_samples()
+        self.level.begin_anew(times_s, values, None)
         self._bound = self.level.limit_n
         self._good_s, self._good_index = c.times_s[-1], c.last_good_index + len(c.values)
         newest, newest_s = self.level.newest_n, self.level.newest_s
@@ -367,7 +369,7 @@ class FractureWatch:
         if restart_envelope:
             self.envelope, self._envelope_s, self._sag_since_s = newest, newest_s, None
         else:
-            self.peak_raw = max(self.peak_raw, *c.values[tail:])
+            self.peak_raw = max(self.peak_raw, *values)
         if not self.armed:
             self._arm()
 

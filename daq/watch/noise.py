@@ -82,6 +82,11 @@ class Level:
         return self.at_n + self.slope_n_s * (time_s - self.origin_s)
 
     @property
+    def bin_s(self) -> float:
+        """How long a bin is."""
+        return self.bin_samples * self.period_s
+
+    @property
     def newest_n(self) -> float | None:
         """Mean of the newest whole bin."""
         return self._bins_x[-1] if self._bins_x else None
@@ -153,14 +158,12 @@ class Level:
             self.slope_n_s = slope_n_s
         size = self.bin_samples
         for start in range(0, len(values) - size + 1, size):
-            self._bins_s.append(sum(times_s[start : start + size]) / size)
-            self._bins_x.append(sum(values[start : start + size]) / size)
+            self._keep(sum(times_s[start : start + size]) / size, sum(values[start : start + size]) / size)
         rest = len(values) // size * size
         self.pending_s += times_s[rest:]
         self.pending_x += values[rest:]
         if not self._bins_x:
-            self._bins_s.append(sum(times_s) / len(times_s))
-            self._bins_x.append(sum(values) / len(values))
+            self._keep(sum(times_s) / len(times_s), sum(values) / len(values))
             self.pending_s.clear()
             self.pending_x.clear()
         self._fit()
@@ -173,13 +176,16 @@ class Level:
             time_s, value = sum(self.pending_s) / size, sum(self.pending_x) / size
         self.pending_s.clear()
         self.pending_x.clear()
-        self._bins_s.append(time_s)
-        self._bins_x.append(value)
-        self.history.append((time_s, value))
+        self._keep(time_s, value)
         self._refresh_left -= 1
         if self._refresh_left <= 0:
             self._refresh()
         self._fit()
+
+    def _keep(self, time_s: float, value: float) -> None:
+        self._bins_s.append(time_s)
+        self._bins_x.append(value)
+        self.history.append((time_s, value))
 
     def _refresh(self) -> None:
         kept = len(self._kept)

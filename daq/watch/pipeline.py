@@ -29,6 +29,8 @@ SCALAR_SAMPLES_MAX = 64
 STRETCH_MIN = 24
 TICK_BEATS = 2.0
 BEAT_S_MIN = 0.01
+SIGN_BLANKING_S = 0.9
+OUTLIERS_TOLD, OUTLIERS_EVERY = 3, 100
 NAN = float("nan")
 
 
@@ -182,7 +184,8 @@ class Pipeline:
         if judge.low_n <= gross_n <= judge.high_n:
             if judge.outside:
                 judge.inside()
-                core.emit("limit_outlier", outliers=judge.outliers)
+                if judge.outliers <= OUTLIERS_TOLD or judge.outliers % OUTLIERS_EVERY == 0:
+                    core.emit("limit_outlier", outliers=judge.outliers)
         elif not self._outside(time_s, gross_n):
             core.gross_n = NAN
             self._repeats.forget()
@@ -222,15 +225,16 @@ class Pipeline:
         return isfinite(gross_n)
 
     def _rings(self, time_s: float, gross_n: float) -> bool:
-        """A released load train swings to -F. Before the break is confirmed the open candidate judges that
-        swing (and calls a signal that stays negative lost); for 0.1 s after it, no force limit but the
-        rails is raised.
+        """A released load train swings to -F. Before the break is confirmed the open candidate judges that swing
+        (and calls a mirrored signal lost). For 0.1 s after it no force limit but the rails is raised; the sign for
+        a second, because 50 Hz at 1 % damping rings that long and a polarity lock would be nonsense.
         """
         core = self._core
         if not core.limits.rail_low_n <= gross_n <= core.limits.rail_high_n:
             return False
         if core.state in BROKEN:
-            return time_s < core.blank_until_s
+            sign_s = SIGN_BLANKING_S if gross_n < core.judge.low_n else 0.0
+            return time_s < core.blank_until_s + sign_s
         return gross_n < core.judge.low_n and core.watched and core.watch.armed
 
     def _beat(self, time_s: float, row: list[float] | None) -> None:

@@ -78,6 +78,7 @@ def _judge(core: Core, run: Run, collector: Collector) -> None:
     newest = slice(-core.watch.level.bin_samples * LEVEL_BINS, None)
     net_n = (gross_n[newest] - taken.note.tare_n).tolist()
     core.watch.level.begin_anew(times_s[newest].tolist(), net_n, 0.0)
+    run.tare_overridden = bool(override and taken.reasons)
     _tell(core, taken.note, rules, override if taken.reasons else "")
     core.go(Cause.TARED)
     _say_envelope(core, run, taken.note)

@@ -209,7 +209,18 @@ def draw(seed: int, stratum: str, rate_hz: float, *, brief: bool = False) -> Cas
         kinds = list(rng.choice(["slip", "pop-in", "glitch", "ringing", "residual", "hum"], 3, replace=False))
     for kind in kinds:
         case |= _disturb(kind, rng, case)
-    return Case(**case)  # type: ignore[arg-type]
+    return Case(**_spread(case))  # type: ignore[arg-type]
+
+
+def _spread(case: dict[str, object]) -> dict[str, object]:
+    """Drops nearer to each other than an eighth of the way up are a crushing bar: that is a stop, and rightly so."""
+    taken = [at for at, *_ in case.get("pop_ins", ())]  # type: ignore[attr-defined]
+    slips = []
+    for slip in case.get("slips", ()):  # type: ignore[attr-defined]
+        if all(abs(slip[0] - at) >= 0.125 for at in taken):
+            slips.append(slip)
+            taken.append(slip[0])
+    return {**case, "slips": tuple(slips)} if "slips" in case else case
 
 
 def _disturb(kind: str, rng: np.random.Generator, case: dict[str, object]) -> dict[str, object]:
