@@ -9,7 +9,7 @@ from __future__ import annotations
 
 from collections import deque
 from dataclasses import dataclass
-from math import cbrt
+from math import cbrt, sqrt
 
 WINDOW_S = 0.2
 WINDOW_SAMPLES = 20
@@ -17,6 +17,8 @@ SAMPLES_MIN, WINDOWS_MIN = 6, 12  # three windows of 20 samples would be half of
 WINDOW_SHARE = 0.02
 STEADY = 0.05
 STEADY_WINDOWS = 3
+WINDOWS_KEPT = 64
+SHOWN_ERRORS = 3.0 * sqrt(2.0)  # of one slope's: a difference of two that noise does not make
 OF_HIGHEST = 0.7
 FORCE_SIGMA = 10.0
 FORCE_SHARE = 0.01
@@ -44,6 +46,11 @@ def seating_window_s(rate_hz: float, sigma_n: float, rate_n_s: float, time_to_br
     return max(WINDOW_S, by_samples_s, WINDOW_SHARE * time_to_break_s, by_noise_s)
 
 
+def slope_u_n_s(rate_hz: float, sigma_n: float, window_s: float) -> float:
+    """Standard error of a least-squares slope over one window of white noise."""
+    return sigma_n * sqrt(12.0 / (rate_hz * window_s**3))
+
+
 class Seating:
     """Slope of the force, window by window, while seating and loading."""
 
@@ -53,16 +60,17 @@ class Seating:
         "_highest",
         "_late_from",
         "_n",
+        "_shown_n_s",
         "_slopes",
         "_speed_mm_s",
         "_st",
         "_start_n",
-        "_starts_n",
         "_stt",
         "_stx",
         "_sx",
         "_told_late",
         "_window_s",
+        "_windows",
         "force_min_n",
         "load_p50_n",
         "seated",
@@ -76,12 +84,14 @@ class Seating:
         load_p50_n: float,
         speed_mm_s: float,
         contact_mm: float | None,
+        slope_u_n_s: float = 0.0,
     ) -> None:
+        self._shown_n_s = SHOWN_ERRORS * slope_u_n_s
         self._window_s, self._contact_mm, self._speed_mm_s = window_s, contact_mm, speed_mm_s
         self.load_p50_n = load_p50_n
         self.force_min_n = max(FORCE_SIGMA * sigma_n, FORCE_SHARE * load_p50_n)
         self._slopes: deque[float] = deque(maxlen=STEADY_WINDOWS)
-        self._starts_n: deque[float] = deque(maxlen=STEADY_WINDOWS)
+        self._windows: deque[tuple[float, float]] = deque(maxlen=WINDOWS_KEPT)  # force at its start, slope
         self._start_n = 0.0
         self._highest = 0.0
         self._late_from: float | None = None
@@ -104,7 +114,7 @@ class Seating:
             return None
         spread = self._stt - self._st * self._st / self._n
         slope = (self._stx - self._st * self._sx / self._n) / spread
-        self._starts_n.append(self._start_n)
+        self._windows.append((self._start_n, slope))
         self._begin(time_s)
         self._start_n = net_n
         return self._window_done(slope, net_n, at_mm, time_s)
@@ -113,7 +123,7 @@ class Seating:
         """After a partial drop: a window across it would show nothing true."""
         self._begin(float("-inf"))
         self._slopes.clear()
-        self._starts_n.clear()
+        self._windows.clear()
 
     def _begin(self, time_s: float) -> None:
         self._begun_s = time_s
@@ -127,10 +137,9 @@ class Seating:
         if self.seated is None:
             if self._steady(slope) and net_n > self.force_min_n:
                 toe_mm = self._toe_mm(slope, net_n, at_mm)
-                self.seated = Seated(net_n, self._starts_n[0], slope, toe_mm, self._told_late)
+                self.seated = Seated(net_n, self._toe_n(slope), slope, toe_mm, self._told_late)
                 return self.seated
-            shown = len(self._slopes) == STEADY_WINDOWS  # fewer windows can show neither steady nor unsteady
-            if shown and net_n > LATE_FROM * self.load_p50_n and not self._told_late:
+            if net_n > LATE_FROM * self.load_p50_n and not self._told_late and self._unsteady(slope):
                 self._told_late = True
                 return "not steady at half the expected break load"
         return self._late(slope, net_n)
@@ -141,16 +150,35 @@ class Seating:
         pairs = zip(self._slopes, list(self._slopes)[1:], strict=False)
         return all(abs(after - before) < STEADY * slope for before, after in pairs)
 
+    def _unsteady(self, slope: float) -> bool:
+        """Shown beyond the noise: a caution for what noise alone can do would be one in every few bars."""
+        if len(self._slopes) < STEADY_WINDOWS:
+            return False
+        pairs = zip(self._slopes, list(self._slopes)[1:], strict=False)
+        worst = max(abs(after - before) for before, after in pairs)
+        return (
+            worst > STEADY * slope + self._shown_n_s or slope < OF_HIGHEST * self._highest - self._shown_n_s
+        )
+
     def _late(self, slope: float, net_n: float) -> str | None:
         """Twist that settles late shows as a stiffness that still rises between half and four fifths."""
         if net_n < LATE_FROM * self.load_p50_n or net_n > LATE_TO * self.load_p50_n:
             return None
         if self._late_from is None:
             self._late_from = slope
-        if self._told_late or not slope > (1.0 + LATE_RISE) * self._late_from:
+        if self._told_late or not slope > (1.0 + LATE_RISE) * self._late_from + self._shown_n_s:
             return None
         self._told_late = True
         return "stiffness still rises late"
+
+    def _toe_n(self, slope: float) -> float:
+        """Where the steady stretch began: noise may have hidden for several windows that it was one."""
+        toe_n, like = self._windows[-1][0], STEADY * slope + self._shown_n_s
+        for start_n, before in reversed(self._windows):
+            if abs(before - slope) > like:
+                break
+            toe_n = start_n
+        return toe_n
 
     def _toe_mm(self, slope: float, net_n: float, at_mm: float | None) -> float | None:
         if at_mm is None or self._contact_mm is None:

@@ -22,7 +22,7 @@ from daq.watch.motion import (
     back_mm_min,
 )
 from daq.watch.pace import Pace
-from daq.watch.seating import TOE_SHARE, Seated, Seating, seating_window_s
+from daq.watch.seating import TOE_SHARE, Seated, Seating, seating_window_s, slope_u_n_s
 from daq.watch.states import ARMED, Cause
 from daq.watch.stopping import Outcome
 from daq.watch.values import Move, MoveKind, Severity, State, Verdict
@@ -166,8 +166,10 @@ def _begin_seating(core: Core, run: Run) -> None:
     core.go(Cause.SEATING_BEGUN)
     core.watch.level.stand()
     core.watch.watch(True, arm_n=zero.arm_n(core, run), gradual=False)
+    window_s = seating_window_s(rate_hz, sigma_n, expected.rate_n_s, expected.time_to_break_s)
     run.seating = Seating(
-        window_s=seating_window_s(rate_hz, sigma_n, expected.rate_n_s, expected.time_to_break_s),
+        window_s=window_s,
+        slope_u_n_s=slope_u_n_s(rate_hz, sigma_n, window_s),
         sigma_n=sigma_n,
         load_p50_n=expected.load_p50_n,
         speed_mm_s=expected.speed_mm_min / SECONDS_PER_MINUTE,

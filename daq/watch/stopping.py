@@ -21,6 +21,7 @@ RESOLUTIONS = 4.0
 RUN_ON_TIMES = 10.0
 SPEED_MM_S_MIN = 0.5 / 60.0
 BLIND_S = 1.0
+FORCE_LOOK_S = 0.1
 RUN_ON = "run-on of ten times the expected"
 
 
@@ -44,6 +45,7 @@ class StopCheck:
     """One stop from its first command until the crosshead stands."""
 
     __slots__ = (
+        "_force_age_s",
         "_force_s",
         "_force_then",
         "_latency_s",
@@ -59,7 +61,14 @@ class StopCheck:
     )
 
     def __init__(
-        self, reason: str, now_s: float, *, speed_mm_s: float, latency_s: float, travel: Travel | None
+        self,
+        reason: str,
+        now_s: float,
+        *,
+        speed_mm_s: float,
+        latency_s: float,
+        travel: Travel | None,
+        force_age_s: float = 0.0,
     ) -> None:
         self.reason, self.begun_s, self.attempt, self.failed = reason, now_s, 1, False
         self.from_mm = travel.at_mm if travel is not None else None
@@ -73,7 +82,9 @@ class StopCheck:
                 max(WINDOW_S, seen_s, 4.0 * travel.spacing_s), WINDOW_S_MAX + 4.0 * travel.spacing_s
             )
         self._window_s = window_s
-        self._force_s, self._force_then = now_s + 1.2 * latency_s, float("nan")
+        # the force at hand is as old as its bin and its filter: one of before the standstill proves no rise after it
+        self._force_age_s = force_age_s
+        self._force_s, self._force_then = now_s + 1.2 * latency_s + force_age_s, float("nan")
 
     def look(
         self, now_s: float, travel: Travel | None, moving: bool | None, force_n: float, rise_n: float
@@ -83,8 +94,6 @@ class StopCheck:
         if repeat:
             self._repeat_s = now_s + REPEAT_S
             self.attempt += 1
-        if now_s >= self._force_s and self._force_then != self._force_then:
-            self._force_then = force_n
         outcome, why = self._judge(now_s, travel, moving, force_n, rise_n)
         if outcome is Outcome.FAILED:
             if self.failed:
@@ -102,7 +111,7 @@ class StopCheck:
         self, now_s: float, travel: Travel | None, moving: bool | None, force_n: float, rise_n: float
     ) -> tuple[Outcome | None, str]:
         after_s = now_s - self.begun_s
-        if after_s >= self.fail_s and force_n - self._force_then > rise_n:
+        if self._rises(now_s, force_n, rise_n):
             return Outcome.FAILED, "the force still rises"
         run_on = self.run_on_mm(travel)
         if travel is None or run_on is None or now_s - travel.time_s > self.fail_s:
@@ -119,6 +128,19 @@ class StopCheck:
         if after_s >= max(self.fail_s, self._latency_s + self._window_s):
             return Outcome.FAILED, "the position still changes" if abs(speed) >= slow else "it says it moves"
         return None, ""
+
+    def _rises(self, now_s: float, force_n: float, rise_n: float) -> bool:
+        """Look after look: a force that has risen and now stays must not be said to rise for ever."""
+        known = self._force_then == self._force_then
+        if now_s < self._force_s:
+            return self.failed and known
+        look_s = FORCE_LOOK_S + self._force_age_s
+        if not known:
+            self._force_then, self._force_s = force_n, max(now_s + look_s, self.begun_s + self.fail_s)
+        elif force_n - self._force_then > rise_n:
+            self._force_then, self._force_s = force_n, now_s + look_s
+            return True
+        return False
 
     def _blind(self, after_s: float, moving: bool | None) -> tuple[Outcome | None, str]:
         if moving is False and after_s >= self._latency_s:
