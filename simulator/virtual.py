@@ -27,6 +27,7 @@ from simulator.specimen import InHand
 
 AHEAD_S = 0.1  # rows are made this far ahead while nothing happens; a command takes them back
 BACKLOG_BYTES_MAX = 4096  # what a device keeps when its line is too slow; more is lost as in a real one
+ASKING = frozenset({Verb.STATUS, Verb.KEEP_ALIVE})  # answered out of any quiet stretch
 HEARD_MAX = 10_000  # bytes on their way to the machine, in pieces; a host that floods loses them
 
 
@@ -223,8 +224,12 @@ class VirtualWire:
 
     def _hear(self, now_s: float, number: int, data: bytes) -> None:
         line = self._lines[number]
-        self.settle(now_s)
-        for heard in line.ear.feed(data):
+        commands = line.ear.feed(data)
+        if now_s <= self.machine.now_s and all(heard.verb in ASKING for heard in commands):
+            self._pass_time(now_s)  # nothing changes: the rows made ahead stay good
+        else:
+            self.settle(now_s)
+        for heard in commands:
             reply = self.machine.command(heard, now_s)
             if heard.verb is Verb.STREAM:
                 line.streaming = True
