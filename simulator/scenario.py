@@ -191,9 +191,9 @@ class VirtualBench:
 
     def _judge_neighbours(self) -> None:
         pipeline, heard_s = self.core.pipeline, self.station_heard_s
-        if pipeline.run is not None and self.recorder_acked_s is not None:
-            self._obey(self.core.recorder_silence(self._recorder_silent_s(), self.now_ns))
-        if pipeline.armed and heard_s is not None and self.now_s - heard_s > STATION_SILENT_S:
+        self._obey(self.core.recorder_silence(self._recorder_silent_s(), self.now_ns))
+        at_stake = pipeline.armed or pipeline.moving
+        if at_stake and heard_s is not None and self.now_s - heard_s > STATION_SILENT_S:
             self._obey(self.core.fault("station_silent", "the station has been silent for 1 s", self.now_ns))
 
     def _recorder_silent_s(self) -> float:

@@ -35,8 +35,8 @@ from drivers.motion import (
 NewEntry: TypeAlias = tuple[Kind, int, bytes]
 
 LINK_FAULTS = {LinkFault.TOO_FAST: "too_fast", LinkFault.GARBAGE: "protocol"}
-RECORDER_CAUTION_S = 10.0  # job.md 4, row 27
-RECORDER_STOP_S = 45.0  # job.md 4, row 27; the ring holds 60 s
+RECORDER_CAUTION_S = 10.0  # job map 4, row 27
+RECORDER_STOP_S = 45.0  # job map 4, row 27; the ring holds 60 s
 KEPT_ALIVE = frozenset(
     {
         State.APPROACHING,
@@ -102,6 +102,7 @@ class BenchCore:
         self.rejected: dict[str, int] = {}
         self._account = [Account() for _ in frame.links]
         self._health = [LinkHealth(link) for link in frame.links]
+        self._recorder_word = ""
         self._link_faults: list[tuple[LinkFault, ...]] = [() for _ in frame.links]
         self._told_by_reply = [status.name for status in frame.inputs if status.source == "reply"]
         self._at_once = at_once
@@ -159,12 +160,17 @@ class BenchCore:
         return self._take_writes()
 
     def recorder_silence(self, silent_s: float, now_ns: int) -> list[Write]:
-        """How long the recorder has acknowledged nothing: a caution, then a stop (job.md 4, row 27)."""
-        if silent_s > RECORDER_STOP_S:
-            return self.fault("recorder_lag", f"nothing recorded for {silent_s:.0f} s", now_ns)
-        if silent_s > RECORDER_CAUTION_S:
-            return self.fault("recorder_slow", f"nothing recorded for {silent_s:.0f} s", now_ns)
-        return []
+        """How long the recorder has acknowledged nothing: a caution, then a stop (job map 4, row 27), while a run is
+        open or something moves. Called at every tick; each is told once, or the telling alone would fill the ring.
+        """
+        word = ""
+        at_stake = self.pipeline.run is not None or self.pipeline.moving
+        if at_stake and silent_s > RECORDER_CAUTION_S:
+            word = "recorder_lag" if silent_s > RECORDER_STOP_S else "recorder_slow"
+        if word == self._recorder_word:
+            return []
+        self._recorder_word = word
+        return self.fault(word, f"nothing recorded for {silent_s:.0f} s", now_ns) if word else []
 
     def opened(self, link: int, sent: bytes, now_ns: int) -> None:
         """A port is open; what its card sends at opening has been sent."""

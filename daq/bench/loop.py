@@ -324,8 +324,7 @@ class BenchProcess:
 
     def _judge_neighbours(self, now_ns: int, recorder_silent_s: float) -> None:
         pipeline = self._core.pipeline
-        if pipeline.run is not None or pipeline.moving:
-            self._write(self._core.recorder_silence(recorder_silent_s, now_ns))
+        self._write(self._core.recorder_silence(recorder_silent_s, now_ns))
         if (pipeline.armed or pipeline.moving) and now_ns - self._station_heard_ns > STATION_SILENT_NS:
             self._fault("station_silent", "the station has been silent for 1 s")
         offset_ns = boot_offset_ns()
