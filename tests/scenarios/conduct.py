@@ -6,12 +6,13 @@ stops at touch and preload are part of a loading and are not meant.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from math import inf
 
-from daq.stream.entry import Kind
-from daq.stream.payloads import unpack_event, unpack_raw
+from daq.cards.derived import block_column, force_channel, value_of
+from daq.stream.entry import Entry, Kind
+from daq.stream.payloads import unpack_block, unpack_event, unpack_raw
 from daq.watch.states import ARMED, BROKEN, LATCHED, WATCHED
 from daq.watch.values import State
 from simulator.commands import Ear, Verb
@@ -24,6 +25,8 @@ ENDED_WORDS = LATCHED_WORDS | {state.value for state in BROKEN} | {State.UNLOADI
 ARMED_WORDS = frozenset(state.value for state in ARMED)
 WATCHED_WORDS = frozenset(state.value for state in WATCHED)
 CALLED = ("sudden break", "gradual failure")
+FORCE_LIMITS = ("hard_n", "working_n", "fixture_n", "specimen_n", "method_n")
+NS = 1e-9
 MARGIN_S = 0.05
 LAPSE_MARGIN_S = 0.2
 NOTICED_S = 2.0
@@ -55,6 +58,7 @@ def conduct_checks(player: Player) -> Iterator[str]:
     story = Story(player)
     yield from obedient(story)
     yield from refusals(story)
+    yield from limits_obeyed(story)
     yield from stands(story)
     yield from breaks_called(story)
     yield from nothing_else_called(story)
@@ -135,11 +139,7 @@ def obedient(story: Story) -> Iterator[str]:
                 may = {Verb.RETREAT}
         elif entry.kind is Kind.RAW and (raw := unpack_raw(entry.payload)).sent and raw.link == link:
             for heard in ear.feed(raw.data):
-                if (
-                    heard.verb in MOTIONS
-                    and heard.verb not in may
-                    and not _stopped_at_once(entries, number, link)
-                ):
+                if heard.verb in MOTIONS and heard.verb not in may and not _stopped_at_once(entries, number):
                     yield f"{entry.monotonic_ns * 1e-9:.3f} s: {raw.data!r} was sent without a start"
                 if heard.verb in (Verb.RETREAT, Verb.JOG):
                     may.discard(heard.verb)
@@ -158,7 +158,7 @@ def _allowed(done: Done, may: set[Verb]) -> set[Verb]:
     return set() if "stop" in done.what or "closes" in done.what else may
 
 
-def _stopped_at_once(entries: list, number: int, link: int) -> bool:  # type: ignore[type-arg]
+def _stopped_at_once(entries: Sequence[Entry], number: int) -> bool:
     """Sent and stopped in one breath: a block that holds both the beginning and the end of a motion."""
     now_ns = entries[number].monotonic_ns
     later = [e for e in entries[number + 1 : number + 6] if e.monotonic_ns == now_ns and e.kind is Kind.RAW]
@@ -170,6 +170,47 @@ def refusals(story: Story) -> Iterator[str]:
     for done in story.player.done:
         if "without a reset" in done.what and done.said is Said.OBEYED:
             yield f"{done.time_s:.3f} s: {done.what}, and was obeyed"
+
+
+def limits_obeyed(story: Story) -> Iterator[str]:
+    """While a run is armed: two samples in a row above a force limit, or one that is no number, and the STOP is
+    written in the same breath as that sample is recorded.
+    """
+    source, column, scale = _force_column(story.plan)
+    limit_n, before_n, armed = inf, 0.0, False
+    entries = story.player.bench.entries
+    stops_ns = {e.monotonic_ns for e in entries if e.kind is Kind.RAW and _is_stop(e, story.plan)}
+    for entry in entries:
+        if entry.kind is Kind.EVENT:
+            event = unpack_event(entry.payload)
+            armed = (armed or event["event"] == "started") and not _ends(event)
+            if event["event"] == "limits":
+                limit_n = min(event[key] for key in FORCE_LIMITS if event[key] is not None)
+            elif event["event"] == "limit_tightened" and event["key"] == "force_n_max":
+                limit_n = event["value"]
+        elif entry.kind is Kind.BLOCK and (block := unpack_block(entry.payload)).source == source:
+            for count in block.counts[:, column].tolist():
+                force_n = scale(count)
+                passed = force_n != force_n or (force_n > limit_n and before_n > limit_n)
+                if armed and passed and entry.monotonic_ns not in stops_ns:
+                    yield f"{entry.monotonic_ns * NS:.3f} s: {force_n:.0f} N, limit {limit_n:.0f} N, and no stop"
+                    return
+                if passed:
+                    armed = False
+                before_n = force_n
+
+
+def _force_column(plan: Plan) -> tuple[int, int, Callable[[float], float]]:
+    """(link, column, counts to gross N), from the card."""
+    channel = force_channel(plan.frame)
+    link, column = block_column(plan.frame, channel)
+    return link, column, lambda count: value_of(channel, count)
+
+
+def _is_stop(entry: Entry, plan: Plan) -> bool:
+    assert plan.frame.motion is not None
+    raw = unpack_raw(entry.payload)
+    return raw.sent and raw.data.startswith(plan.frame.motion.stop.send.encode())
 
 
 def stands(story: Story) -> Iterator[str]:
