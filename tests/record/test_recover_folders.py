@@ -31,7 +31,9 @@ def contents(folder: Path) -> dict[str, bytes]:
     ],
     ids=str,
 )
-def test_a_folder_that_is_no_journal_is_refused_and_not_touched(names: tuple[str, ...], tmp_path: Path) -> None:
+def test_a_folder_that_is_no_journal_is_refused_and_not_touched(
+    names: tuple[str, ...], tmp_path: Path
+) -> None:
     folder = tmp_path / "things"
     folder.mkdir()
     for name in names:
