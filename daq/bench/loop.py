@@ -19,6 +19,7 @@ from typing import Any
 from daq.bench import messages
 from daq.bench.core import BenchCore, Health, Write
 from daq.bench.schedule import hurry, quiet_collector
+from daq.bench.sockets import bind, boot_offset_ns, receive, reply
 from daq.cards.derived import motion_link
 from daq.cards.frame import FrameCard
 from daq.errors import DriverError, LinkLost, MidspanError, Refused
@@ -459,34 +460,6 @@ class BenchProcess:
         before, self._ring_lost = self._ring_lost, not self._ring.append_batch(entries)
         if self._ring_lost and not before:
             self._fault("ring_full", "the ring is full: the recorder does not keep up")
-
-
-def bind(path: str) -> socket.socket:
-    server = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM | socket.SOCK_NONBLOCK)
-    server.bind(path)
-    os.chmod(path, 0o600)
-    return server
-
-
-def receive(server: socket.socket) -> tuple[bytes, Any]:
-    try:
-        return server.recvfrom(messages.MESSAGE_BYTES_MAX)
-    except BlockingIOError:
-        return b"", None
-
-
-def reply(server: socket.socket, address: Any, answer: Mapping[str, Any]) -> None:
-    """Answers are a courtesy: a client that has gone or does not read must not hold the bench."""
-    if address:
-        try:
-            server.sendto(json.dumps(answer, separators=(",", ":")).encode(), socket.MSG_DONTWAIT, address)
-        except OSError:
-            pass
-
-
-def boot_offset_ns() -> int:
-    """Boot-time clock minus monotonic clock: grows only while the computer sleeps."""
-    return time.clock_gettime_ns(time.CLOCK_BOOTTIME) - time.monotonic_ns()
 
 
 def main(config_path: str, words: str) -> int:

@@ -381,7 +381,13 @@ def test_the_demo_lane_is_lane_a_with_a_short_approach():
     lane_a, demo = load_frame(example_path(A)), load_frame(example_path("kiln-lane-demo.toml"))
     assert demo.motion is not None
     assert (demo.motion.gap_mm, demo.motion.backoff_mm) == (0.15, 0.3)
-    motion = demo.motion.model_copy(update={"gap_mm": 2.0, "backoff_mm": 2.0})
+    assert lane_a.motion is not None
+    patient = ("start", "stop", "jog", "retreat", "force_rate", "status")  # longer time-outs, the same words
+    for name in patient:
+        theirs, ours = getattr(demo.motion, name), getattr(lane_a.motion, name)
+        assert theirs.model_copy(update={"timeout_s": ours.timeout_s}) == ours
+    commands = {name: getattr(lane_a.motion, name) for name in patient}
+    motion = demo.motion.model_copy(update={"gap_mm": 2.0, "backoff_mm": 2.0, **commands})
     link = demo.links[0].model_copy(update={"port": lane_a.links[0].port})
     same = {"name": lane_a.name, "title": lane_a.title, "links": (link,), "motion": motion}
     assert demo.model_copy(update=same) == lane_a

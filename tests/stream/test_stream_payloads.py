@@ -83,7 +83,7 @@ def finite(value: object) -> object:
 def test_event_fields_come_back_with_null_for_what_json_cannot_hold(value: object) -> None:
     payload = pack_event({**EVENT, "field": value})
     assert unpack_event(payload) == {**EVENT, "field": finite(value)}
-    assert "NaN" not in json.dumps(unpack_event(payload), allow_nan=False)
+    assert json.dumps(unpack_event(payload), allow_nan=False)
     assert payload == pack_event(dict(reversed(unpack_event(payload).items()))), (
         "bytes depend on content only"
     )
