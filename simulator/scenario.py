@@ -69,7 +69,7 @@ class VirtualBench:
         pipeline = Pipeline(self.frame, clean_start=self.clean_start, proven=self.proven)
         decoders = [decoder_for(self.frame, number) for number in range(len(self.frame.links))]
         motion = MotionPort(self.frame) if self.frame.motion is not None else None
-        self.core = BenchCore(self.frame, pipeline, decoders, motion, origin_ns=0)
+        self.core = BenchCore(self.frame, pipeline, decoders, motion, origin_ns=0, at_once=self._leave)
         for number in range(len(self.frame.links)):
             self._opened(number)
         self._keep()
@@ -202,10 +202,16 @@ class VirtualBench:
     def _obey(self, writes: Iterable[Write]) -> None:
         """Stop first, then tell."""
         for write in writes:
-            if write.link not in self._lost_s:
-                self.sent.append((self.now_s, write.data))
-                self.wire.write(write.data, self.now_s, write.link)
+            self._leave(write)
         self._keep()
+
+    def _leave(self, write: Write) -> bool:
+        """The bytes leave, where there is a port."""
+        if write.link in self._lost_s:
+            return False
+        self.sent.append((self.now_s, write.data))
+        self.wire.write(write.data, self.now_s, write.link)
+        return True
 
     def _keep(self) -> None:
         for kind, monotonic_ns, payload in self.core.entries():

@@ -7,13 +7,16 @@ in conduct.py. Nothing here asks the watch what it thinks: only entries, the wir
 from __future__ import annotations
 
 import json
+import random
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field
+from itertools import pairwise
 
 import numpy as np
 
 from daq.bench.catalogue import BENCH_EVENTS
 from daq.cards.frame import FrameCard
+from daq.record.rows import is_event
 from daq.stream.block import GAP_UNKNOWN, Block
 from daq.stream.entry import Entry, Kind, pack, unpack
 from daq.stream.payloads import pack_block, unpack_block, unpack_event, unpack_raw
@@ -22,8 +25,10 @@ from drivers.decoded import Decoder
 from drivers.registry import decoder_for
 from tests.scenarios.play import Player
 from tests.scenarios.wirebytes import WireRow, rows_in
+from tests.scenarios.world import reduced
 
 NS = 1e-9
+READ_EVERY = 4  # a reduction costs as much as the rest of a scenario: not for every seed
 
 
 def stream_checks(player: Player) -> Iterator[str]:
@@ -38,6 +43,8 @@ def stream_checks(player: Player) -> Iterator[str]:
         yield from rows_once(life, frame)
     yield from gaps_told(entries, frame)
     yield from rebuilt(entries, frame)
+    if player.plan.seed % READ_EVERY == 0:
+        yield from readable(entries, player.plan.seed)
 
 
 # --- the stream
@@ -78,6 +85,18 @@ def paired(events: Sequence[dict[str, object]]) -> Iterator[str]:
             opened = None
     if opened is not None:
         yield f"run {opened} was never closed"
+
+
+def readable(entries: Sequence[Entry], seed: int) -> Iterator[str]:
+    """Whichever entry was the last to be kept: the run up to there can be read and reduced."""
+    chance = random.Random(seed)
+    opened = [place for place, entry in enumerate(entries) if is_event(entry, "run_opened")]
+    for begin, end in pairwise([*opened, len(entries)]):
+        last = chance.randrange(begin, end)
+        try:
+            reduced(entries[begin : last + 1])
+        except (ValueError, ArithmeticError, LookupError, AssertionError, TypeError) as error:
+            yield f"cut after entry {last + 1}: {type(error).__name__}: {error}"
 
 
 # --- received = recorded + rejected

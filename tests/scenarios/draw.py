@@ -26,6 +26,7 @@ RATES_HZ = (10.0, 20.0, 20.0, 25.0, 50.0, 50.0, 80.0, 100.0, 100.0, 125.0, 200.0
 SAMPLES_TO_BREAK_MIN = 65.0  # the usable envelope asks for 50 (job map 3.6)
 # mean strength; the size effect of m = 12 makes the shorter loaded length stronger
 STRENGTH_MPA = {"quarter-40-20": 383.0, "three-40": 452.0}
+HUM_HZ = 50.0
 RING_DIES_HZ = 5.5  # frequency times damping: within the 0.1 s that the wrong-sign limit waits after a break
 
 
@@ -119,7 +120,7 @@ def draw(seed: int) -> Plan:
     frame = frame.model_copy(update={"cell": frame.cell.model_copy(update={"noise_quiet_n": noise_n})})
     scale = Scale(expected.load_p50_n, to_break_s, rate_hz, lane != "no counter", lane == "two links")
     faults, acts = _misfortunes(rng, scale)
-    parts = _machine(rng, expected, fixture, noise_n)
+    parts = _machine(rng, expected, fixture, noise_n, rate_hz)
     return Plan(
         seed=seed,
         frame=frame,
@@ -217,9 +218,12 @@ def _method(
 
 
 def _machine(
-    rng: np.random.Generator, expected: Expected, fixture: str, noise_n: float
+    rng: np.random.Generator, expected: Expected, fixture: str, noise_n: float, rate_hz: float
 ) -> dict[str, Mapping[str, Any]]:
     """What is true of machine, wire and bar, where the frame card only believes."""
+    hum_n = noise_n * float(rng.choice([0.0, 0.0, 0.5, 1.0]))
+    if rate_hz <= HUM_HZ:
+        hum_n = 0.0  # sampled at a part of its own frequency it is a slow wandering, which no tare can see
     ring_hz = float(rng.uniform(80.0, 500.0))
     dying = max(0.01, RING_DIES_HZ / ring_hz)
     after: dict[str, Any] = {"ring_hz": ring_hz, "ring_damping": float(rng.uniform(dying, 2.0 * dying))}
@@ -236,7 +240,7 @@ def _machine(
             "stiffness_n_mm": expected.stiffness_machine_n_mm,
             "stop_latency_s": float(rng.uniform(0.0, 0.15)),
         },
-        "force": {"noise": noise_n, "hum": noise_n * float(rng.choice([0.0, 0.0, 0.5, 1.0]))},
+        "force": {"noise": noise_n, "hum": hum_n},
         "after_break": after,
         "electronics": {
             "clock_error_ppm": float(

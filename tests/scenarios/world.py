@@ -18,7 +18,7 @@ from daq.record.columns import Columns
 from daq.record.head import head_of_entry
 from daq.record.rows import is_event
 from daq.results.reduce import reduce
-from daq.stream.entry import pack
+from daq.stream.entry import Entry, pack
 from simulator.card import SimulatorCard, load_simulator, simulator_from
 from simulator.scenario import VirtualBench
 
@@ -95,13 +95,17 @@ def break_one(bench: VirtualBench, method: MethodCard, specimen: Specimen, fixtu
 def result_of(bench: VirtualBench, run: int = -1) -> dict[str, Any]:
     """One run, from its entries through columns and reduction, as the archivist would."""
     opened = [place for place, entry in enumerate(bench.entries) if is_event(entry, "run_opened")][run]
+    return dict(reduced(bench.entries[opened:]))
+
+
+def reduced(entries: Sequence[Entry]) -> Mapping[str, Any]:
+    """The result of a run from its opening on, as far as these entries go."""
     with tempfile.TemporaryDirectory() as folder:
-        columns = Columns(Path(folder), head_of_entry(bench.entries[opened]))
-        for entry in bench.entries[opened:]:
+        columns = Columns(Path(folder), head_of_entry(entries[0]))
+        for entry in entries:
             columns.add(entry, pack(entry))
             if is_event(entry, "run_closed"):
                 break
-        columns.settle()
         columns.finish()
         result = reduce(columns.run_data()).as_json()
         columns.remove()
