@@ -41,7 +41,9 @@ class Daemon:
         self.session.mount()
         self.wait_for("ready", lambda: self.session.state == "ready")
         self.client.do("start")
-        self.wait_for("loading", lambda: self.session.state == "loading")
+        self.wait_for("loading", lambda: self.session.state in ("loading", "stopped", "signal lost"))
+        if self.session.state != "loading":
+            raise RuntimeError(f"not loading: {self.client.look()['state']['faults']}")
         self.pump(SETTLE_S)
 
     def wait_for(self, what: str, test: Callable[[], bool], timeout_s: float = 60.0) -> None:

@@ -31,7 +31,7 @@ def run(report: Report) -> None:
 def processor_time(report: Report, seconds: float) -> None:
     """One bar in LOADING, 1 kHz, for so long."""
     with ExitStack() as stack:
-        served = stack.enter_context(daemon(1_000, streams=2))
+        served = stack.enter_context(daemon(1_000, streams=2, spacing_s=0.0))
         words = [*python_of("benchmarks.bare"), served.instrument.devices[1], str(LIMIT_COUNTS)]
         bare = stack.enter_context(ended(subprocess.Popen(words)))
         served.load()

@@ -1,8 +1,9 @@
 /* The instrument side of a pseudo-terminal, for benchmarks/response.py and others: a very small machine that paces
  * rows at a given rate on one or more ptys, obeys the motion commands of the benchmark's frame card on the first, and
  * after "go" now and then sends two rows above the limit on each pty and times the STOP. The same program in Python:
- * benchmarks/instrument.py. While events go on, the ptys behind the first get rows only from 2 ms before each of their
- * events until its answer, so that the floors do not eat the processors of what is measured. Single thread, SCHED_FIFO where permitted, waits in ppoll: it never spins.
+ * benchmarks/instrument.py. The ptys behind the first get rows only from 2 ms before each of their events until its
+ * answer, so that the floors do not eat the processors of what is measured; with SPACING_S 0 they always get rows.
+ * Single thread, SCHED_FIFO where permitted, waits in ppoll: it never spins.
  *
  * instrument STREAMS RATE_HZ STIFFNESS_N_MM GAP_MM ZERO_N NOISE_N OVER_N SPACING_S ANSWERS
  * standard output: the names of the slaves, one a line; then "done" when every stream has its events.
@@ -109,7 +110,8 @@ static void hear(int number, long long at_ns) {
 
 static void row(int number) {
     Stream *stream = &streams[number];
-    if (number && events && !stream->asked_ns && stream->due_ns < stream->next_event_ns - WARM_NS) return;
+    int idle = !events || (!stream->asked_ns && stream->due_ns < stream->next_event_ns - WARM_NS);
+    if (number && idle && spacing_s > 0) return;
     char text[64];
     double into_mm = at_mm - gap_mm;
     double force = zero_n + noise_n * noise() + (into_mm > 0 ? stiffness * into_mm : 0.0);

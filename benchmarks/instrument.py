@@ -193,8 +193,9 @@ class Program:
                 stream.log.append(f"S {number} {at_ns}")
 
     def _row(self, stream: Stream) -> None:
-        idle = stream is not self._streams[0] and self._events and not stream.asked_ns
-        if idle and stream.due_ns < stream.event_ns - WARM_NS:
+        early = not stream.asked_ns and stream.due_ns < stream.event_ns - WARM_NS
+        idle = (early or not self._events) and self._spacing_s > 0.0
+        if idle and stream is not self._streams[0]:
             stream.due_ns += self._period_ns
             return
         force_n, at_mm = self._lane.row() if stream is self._streams[0] else self._lane.row_again()

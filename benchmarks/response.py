@@ -32,7 +32,7 @@ from benchmarks.harness import (
 from benchmarks.instrument import Answers
 
 NAME = "response"
-SPACING_S = {1_000: 0.012, 5_000: 0.010, 10_000: 0.010}
+SPACING_S = {1_000: 0.012, 5_000: 0.016, 10_000: 0.016}
 EVENTS, EVENTS_QUICK = 20_000, 500
 LIMIT_COUNTS = round(lane.METHOD_N_MAX / lane.FORCE_SCALE_N)
 ORDERLY_STOPS = 1  # the touch at the end of the approach
@@ -87,8 +87,9 @@ def served_events(rate_hz: int, events: int) -> tuple[Answers, Shares]:
         served.load()
         before = processor_ticks()
         served.instrument.begin(events)
-        while not served.instrument.done(0.0):
-            served.pump(0.2)
+        while not served.instrument.done(0.2):
+            if not served.supervisor.look():
+                raise RuntimeError("the bench process has ended")
         shares = shares_since(before)
         served.pump(0.3)
         return served.instrument.end(), shares

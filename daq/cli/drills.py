@@ -64,12 +64,15 @@ class Bench:
         found = [u.body.get(key) for u in updates if u.kind == "summary"]
         return [float(value) for value in found if value is not None]
 
-    def event(self, *names: str, timeout_s: float) -> Mapping[str, Any]:
-        """The next event of one of these names. Stops the frame when it does not come; a fault ends the drill."""
+    def event(self, *names: str, timeout_s: float, to: str = "") -> Mapping[str, Any]:
+        """The next event of one of these names (and, of a state, to that word). A fault ends the drill.
+
+        Stops the frame when it does not come.
+        """
         until_s = time.monotonic() + timeout_s
         while time.monotonic() < until_s:
             for event in self._events():
-                if event["event"] in names:
+                if event["event"] in names and event.get("to", to) == to:
                     return event
                 if event["severity"] in GRAVE:
                     raise MidspanError(f"the drill ended: {fault_text(event)}; nothing was recorded")
@@ -132,16 +135,16 @@ def jogged(bench: Bench, position_sign: int) -> float:
     before_mm = bench.steady("position_mm")
     patience_s = 60.0 * JOG_MM / JOG_MM_MIN + WAIT_S
     bench.client.do("jog", distance_mm=JOG_MM, speed_mm_min=JOG_MM_MIN)
-    bench.event("arrived", timeout_s=patience_s)
+    bench.event("state", to="at rest", timeout_s=patience_s)  # at its place, or at something in the way
     moved_mm = bench.steady("position_mm") - before_mm
     click.echo(f"Moved: {moved_mm:+.3f} mm")
     if abs(moved_mm * position_sign - JOG_MM) > JOG_OFF_SHARE_MAX * JOG_MM:
         raise MidspanError(
-            f"displacement does not follow the {JOG_MM} mm asked for: check sign, scale and unit of the position"
-            " channel; nothing was recorded"
+            f"displacement does not follow the {JOG_MM} mm asked for: something in the way, or sign, scale or unit of"
+            " the position channel wrong; nothing was recorded"
         )
     bench.client.do("return", distance_mm=JOG_MM, speed_mm_min=JOG_MM_MIN)
-    bench.event("arrived", timeout_s=patience_s)
+    bench.event("state", to="at rest", timeout_s=patience_s)
     return moved_mm
 
 

@@ -9,7 +9,7 @@ from pathlib import Path
 
 import numpy as np
 
-from daq.cards.derived import channels_of, value_of
+from daq.cards.derived import channels_of, link_bytes_per_row, value_of
 from daq.cards.frame import FrameCard
 from daq.cards.frame import Link as LinkCard
 from daq.results.quiet import QuietRecord, quiet_record
@@ -47,6 +47,10 @@ def look_at_links(frame: FrameCard, seconds: float) -> Findings:
         else:
             found.faults.append(
                 f"link {link.name}: nothing comes: look at power, cable and the device's output setting"
+            )
+        if blocks and discarded > rows * link_bytes_per_row(link, frame):
+            found.faults.append(
+                f"link {link.name}: more bytes are thrown away than make rows: speed_baud, dialect or cable is wrong"
             )
         if rejected > rows:
             found.faults.append(

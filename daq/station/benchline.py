@@ -39,7 +39,7 @@ class BenchLine:
 
     def __init__(self, places: Places) -> None:
         self._address = str(places.bench_socket)
-        self._own = str(places.runtime / f"station-{os.getpid()}")
+        self._own = str(places.requests_socket(os.getpid()))
         self._socket = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM | socket.SOCK_NONBLOCK)
         self._socket.bind(self._own)
         self.snapshot: dict[str, Any] = {}

@@ -10,6 +10,7 @@ from pathlib import Path
 from daq.errors import MidspanError
 
 SOCKET_PATH_BYTES_MAX = 107  # sun_path of Linux less its closing zero
+PID_MAX = 4_194_304  # Linux's PID_MAX_LIMIT on 64-bit machines
 
 
 @dataclass(frozen=True, slots=True)
@@ -31,6 +32,10 @@ class Places:
     @property
     def station_socket(self) -> Path:
         return self.runtime / "station"
+
+    def requests_socket(self, pid: int) -> Path:
+        """Where the bench's answers to one station reach it."""
+        return self.runtime / f"station-{pid}"
 
     @property
     def control_address(self) -> str:
@@ -82,7 +87,7 @@ def places_for(frame: str, data: Path) -> Places:
     base = os.environ.get("MIDSPAN_RUNTIME") or os.environ.get("XDG_RUNTIME_DIR")
     root = Path(base) / "midspan" if base else Path(f"/dev/shm/midspan-{os.getuid()}")
     places = Places(frame, root / frame, data.absolute())
-    longest = len(os.fsencode(places.station_socket)) + 1
+    longest = max(len(os.fsencode(path)) for path in (places.station_socket, places.requests_socket(PID_MAX)))
     if longest > SOCKET_PATH_BYTES_MAX:
         raise MidspanError(
             f"runtime folder {places.runtime}: socket paths would be {longest} bytes, at most {SOCKET_PATH_BYTES_MAX}"

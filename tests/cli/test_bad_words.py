@@ -4,7 +4,9 @@ from __future__ import annotations
 
 import os
 import socket
+from collections.abc import Iterator
 from pathlib import Path
+from tempfile import TemporaryDirectory
 
 import pytest
 from click.testing import CliRunner, Result
@@ -20,17 +22,18 @@ SHEET = str(example_path("demo-series.csv"))
 
 
 @pytest.fixture(autouse=True)
-def runtime(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> Path:
-    """Nobody is served here."""
-    folder = tmp_path / "r"
-    monkeypatch.setenv("MIDSPAN_RUNTIME", str(folder))
+def runtime(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> Iterator[Path]:
+    """Nobody is served here. A short path, since a socket's path has room for 107 bytes."""
     monkeypatch.chdir(tmp_path)
     (tmp_path / "folder").mkdir()
     (tmp_path / "text.h5").write_text("no record", encoding="utf-8")
     (tmp_path / "empty.h5").touch()
     (tmp_path / "broken.toml").write_text('card = "frame\n', encoding="utf-8")
     (tmp_path / "binary.toml").write_bytes(bytes(range(256)))
-    return folder
+    with TemporaryDirectory(prefix="ms-") as short:
+        folder = Path(short) / "r"
+        monkeypatch.setenv("MIDSPAN_RUNTIME", str(folder))
+        yield folder
 
 
 def called(*words: str) -> Result:
@@ -128,6 +131,19 @@ def test_a_failed_start_after_an_unclean_end_keeps_the_doubt() -> None:
     mark.touch()
     assert called("serve", FRAME, "--data", "records", "--no-fifo").exit_code == 1
     assert mark.exists()
+
+
+def test_a_full_disk_is_one_line_at_the_start() -> None:
+    Path("tiny").mkdir()
+    if os.system("mount -t tmpfs -o size=24m tmpfs tiny 2>/dev/null"):
+        pytest.skip("needs the right to mount a file system")
+    try:
+        result = called("serve", FRAME, "--data", "tiny")
+    finally:
+        os.system("umount tiny")
+    assert result.exit_code == 1
+    (line,) = result.stderr.splitlines()
+    assert "MB free, at least" in line and "or name another folder with --data" in line
 
 
 def test_cautions_are_said_at_the_check() -> None:

@@ -342,7 +342,9 @@ def calm(story: Story) -> Iterator[str]:
     wedged = plan.card.after_break.residual_percent > 0  # its pieces do carry load for a while
     if not plan.kinds:
         for event in story.events:
-            if event["severity"] != "remark" and not (event["event"] == "residual" and wedged):
+            told = event["event"] == "residual" and wedged
+            told |= event["event"] == "fracture" and event["verdict"] in words_for_a_break(plan)
+            if event["severity"] != "remark" and not told:
                 yield f"{event['time_s']:.3f} s: {event['event']} ({event['severity']}) although nothing was wrong"
 
 
