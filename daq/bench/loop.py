@@ -42,6 +42,7 @@ HAND_ON_S = 30e-6  # a pseudo-terminal's bytes are handed on by a kernel worker,
 REQUEST_AGE_NS_MAX = 1_000_000_000  # the station gives up an answer after 1 s; nothing may move after that
 MOVING_REQUESTS = (OpenRun, StartRun, Jog, ReturnCrosshead)
 LOOK_CODE = 6  # the frame must be looked at before the next motion: the supervisor keeps its mark
+LOCKED_CODE = 7  # the same, and the polarity is locked: the supervisor voids its proof
 PENDING_BYTES_MAX = 4096  # commands waiting for a full output; more means the link is dead
 
 
@@ -131,6 +132,8 @@ class BenchProcess:
                 self._record()
             finally:
                 self._goodbye(resting=resting)
+        if self._core.pipeline.polarity_locked:
+            return LOCKED_CODE
         return LOOK_CODE if self._core.pipeline.must_look else 0
 
     def _last_stop(self) -> None:

@@ -25,6 +25,7 @@ from daq.bench.sizing import stream_bytes_per_s
 from daq.cards.frame import FrameCard
 from daq.errors import MidspanError
 from daq.station.places import Places
+from daq.station.proofs import read_proofs, void_polarity
 from daq.station.room import bytes_ahead, check_start
 from daq.stream.ring import ring_bytes
 
@@ -35,7 +36,8 @@ RESTART_WINDOW_S = 60.0
 READY_TIMEOUT_S = 20.0
 END_TIMEOUT_S = {"bench": 5.0, "stopper": 5.0, "recorder": 30.0, "archivist": 60.0, "station": 5.0}
 HANG_S = {"recorder": 20.0, "archivist": 120.0, "station": 10.0}  # a disc may stall for 10 s
-LOOK_CODES = {("bench", 6), ("stopper", 3)}  # all is safe, but nobody has seen the frame since
+LOCKED = ("bench", 7)  # the watch had locked the polarity
+LOOK_CODES = {("bench", 6), LOCKED, ("stopper", 3)}  # all is safe, but nobody has seen the frame since
 RESTARTABLE = ("recorder", "archivist", "station")
 
 Say = Callable[[str], None]
@@ -295,13 +297,17 @@ class Supervisor:
         if self._ending:
             return
         self._ending = True
+        locked = False
         for role in ("bench", "stopper", "recorder", "archivist", "station"):
             child = self._children.get(role)
             code = self._end_child(child) if child is not None else 0
             if (role, code) in LOOK_CODES:
                 self._must_look = True
+                locked |= (role, code) == LOCKED
             elif child is not None and code:
                 self._untidy.append(f"{role}: {child.failure or f'code {code}'}")
+        if locked:
+            self._void_polarity()
         if not self._untidy and "bench" in self._children:
             self._places.ring(self._stream_id).unlink(missing_ok=True)
             if not self._must_look:
@@ -309,6 +315,13 @@ class Supervisor:
         self._sweep()
         if self._lock is not None:
             os.close(self._lock)
+
+    def _void_polarity(self) -> None:
+        """The wrong sign that locked the watch outlives this daemon, whether or not the station saw it."""
+        try:
+            void_polarity(self._places.proofs, self._stream_id, None)
+        except OSError as error:
+            self._say(f"{self._places.proofs}: the polarity proof could not be voided ({error.strerror})")
 
     def farewell(self, took_s: float) -> str:
         """How the end went, for people."""
@@ -357,6 +370,4 @@ def may_hurry() -> bool:
 
 def proofs_of(places: Places, frame: FrameCard) -> dict[str, bool]:
     """Polarity and stop drill as recorded for this very card and version; a simulated frame needs none."""
-    from daq.station.proofs import read_proofs
-
     return read_proofs(places.proofs, frame)

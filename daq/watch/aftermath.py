@@ -104,7 +104,7 @@ def _back_off(core: Core, run: Run, seen: Aftermath) -> None:
         return
     if core.state is not State.BROKEN_UNLOADED or not core.proven.stop_drill or core.inputs_against():
         return
-    if run.no_back_off or core.stopping is not None or core.polarity_locked or core.blocks:
+    if run.no_back_off or core.stopping is not None or core.polarity_locked_s is not None or core.blocks:
         return
     seen.backed_off = True
     core.go(Cause.SENT_AWAY, "back-off")

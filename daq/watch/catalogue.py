@@ -42,7 +42,7 @@ EVENTS: Mapping[str, str] = {
     "stop_failed": "The machine goes on moving after the stop: press the emergency stop.",
     "reset": "A latched state was cleared by a person: who, looked.",
     "proven": "Polarity and stop drill were recorded as proven: polarity, stop_drill, who.",
-    "polarity_locked": "A wrong sign was seen: no motion until the polarity is proven again.",
+    "polarity_locked": "A wrong sign was seen: the proof is void, nothing moves until the polarity is proven again.",
     "fault": "A fault told by a driver or by another process: name, detail, what, did, do_now, first.",
     "input": "A status input changed: name, active (None: unknown).",
     # the signal

@@ -140,7 +140,7 @@ class Core:
     def __init__(self, setup: WatchSetup, *, clean_start: bool, proven: Proven) -> None:
         self.setup = setup
         self.proven = Proven(True, True) if setup.frame.simulated else proven
-        self.polarity_locked = False
+        self.polarity_locked_s: float | None = None
         self.state = State.AT_REST if clean_start else State.UNKNOWN
         self.clock_s = 0.0
         self.actions: list[Action] = []
@@ -331,7 +331,7 @@ class Core:
             self.stop(what, _CAUSES[trip.reaction])
         self.tell_limit(trip, what, severity)
         if trip.row == 5:
-            self.polarity_locked = True
+            self.polarity_locked_s = self.clock_s
             self.emit("polarity_locked", Severity.STOP)
         self.overloaded = self.overloaded or trip.reaction is Reaction.OVERLOAD
         if severity is Severity.STOP:
@@ -396,7 +396,7 @@ class Core:
         found = [f"state is {self.state.value}"] if self.state in LATCHED | MOVING | BROKEN else []
         if self.stopping is not None:
             found.append("the crosshead has not been seen to stand")
-        if self.polarity_locked or not self.proven.polarity:
+        if self.polarity_locked_s is not None or not self.proven.polarity:
             found.append("polarity is not proven: push on the fixture by hand")
         if not isfinite(self.gross_n):
             found.append("no force signal")

@@ -261,5 +261,6 @@ def _tighten(core: Core, request: TightenLimit) -> None:
 def _prove(core: Core, request: Prove) -> None:
     _require("prove", [] if core.state not in ARMED and not core.moving else ["the frame is moving"])
     core.proven = Proven(request.polarity, request.stop_drill)
-    core.polarity_locked = core.polarity_locked and not request.polarity
+    if request.polarity:
+        core.polarity_locked_s = None
     core.emit("proven", polarity=request.polarity, stop_drill=request.stop_drill, who=request.who)

@@ -79,7 +79,12 @@ class Pipeline:
     @property
     def must_look(self) -> bool:
         """What a restart must not forget: a person has to look at the frame before anything moves."""
-        return self.state in MUST_LOOK or self._core.polarity_locked
+        return self.state in MUST_LOOK or self.polarity_locked
+
+    @property
+    def polarity_locked(self) -> bool:
+        """A wrong sign was seen and the polarity has not been proven since."""
+        return self._core.polarity_locked_s is not None
 
     @property
     def run(self) -> Mapping[str, Json] | None:
@@ -150,6 +155,7 @@ class Pipeline:
             "moving": core.moving,
             "force_n_max": core.limits.ceiling_n,
             "inputs": dict(core.inputs),
+            "polarity_locked_s": core.polarity_locked_s,
             "missing": tuple(core.busy_why()),
         }
 

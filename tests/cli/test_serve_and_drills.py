@@ -6,15 +6,17 @@ import json
 import os
 import signal
 import subprocess
+import time
 from pathlib import Path
 from typing import Any
 
 import pytest
 
-from daq.cards.load import example_path
+from daq.cards.load import example_path, load_frame
 from daq.cli.options import running_places
 from daq.errors import Refused
 from daq.station.client import Client
+from daq.station.proofs import POLARITY, write_proof
 from tests.cli.lane import Lane, lane_of
 from tests.cli.typed import typed
 
@@ -152,6 +154,41 @@ def test_a_reversed_cell_is_found_and_the_lock_stays(tmp_path: Path) -> None:
                 with pytest.raises(Refused, match="polarity is not proven"):
                     client.do("mount")
         assert not (lane.data / ".spool" / "kiln-lane-demo" / "proofs.json").exists()
+
+
+@pytest.mark.parametrize("frozen", [False, True], ids=["station alive", "station frozen"])
+def test_a_wrong_sign_voids_the_stored_proof_and_the_next_start_asks_anew(
+    tmp_path: Path, frozen: bool
+) -> None:
+    with lane_of(DEMO, tmp_path / "records", changes=REAL) as lane:
+        proofs = lane.data / ".spool" / "kiln-lane-demo" / "proofs.json"
+        write_proof(proofs, load_frame(lane.card), POLARITY, {})
+        with lane.served() as daemon:
+            if frozen:
+                os.kill(station_of(daemon.pid), signal.SIGSTOP)
+            lane.hands(fault={"kind": "wrong-polarity"})
+            lane.hands(fault={"kind": "halves-left", "force_n": 60})
+            while not frozen and POLARITY in json.loads(proofs.read_text("utf-8")):
+                time.sleep(0.02)
+            assert lane.call("stop").returncode == 0  # the bench has passed the sample by now
+            daemon.terminate()
+            daemon.communicate(timeout=60)
+        stored = json.loads(proofs.read_text("utf-8"))
+        assert POLARITY not in stored
+        assert [proof["void"]["reason"] for proof in stored["earlier"]] == ["the force had the wrong sign"]
+        lane.hands(clear=True)
+        with lane.served(), Client(running_places(None)) as client:
+            client.sit("Rig")
+            client.do("series", path=SERIES, sure=True)
+            with pytest.raises(Refused, match="polarity is not proven"):
+                client.do("mount")
+
+
+def station_of(pid: int) -> int:
+    """The station among the processes of a daemon."""
+    children = Path(f"/proc/{pid}/task/{pid}/children").read_text("ascii").split()
+    (found,) = [child for child in children if b"station.json" in Path(f"/proc/{child}/cmdline").read_bytes()]
+    return int(found)
 
 
 def test_a_frame_without_motion_is_watched_and_records_what_its_own_controls_do(tmp_path: Path) -> None:
