@@ -61,7 +61,9 @@ class Write:
 
 @dataclass(frozen=True, slots=True)
 class Health:
-    """What the shell sees of the processes around the bench. recorder_silent_s: since its last acknowledgement."""
+    """What the shell sees of the processes around the bench. recorder_silent_s: age of the oldest entry that is not
+    known to be safely recorded, counted from the recorder's last word where there is none.
+    """
 
     stopper_alive: bool
     recorder_silent_s: float
@@ -160,8 +162,8 @@ class BenchCore:
         return self._take_writes()
 
     def recorder_silence(self, silent_s: float, now_ns: int) -> list[Write]:
-        """How long the recorder has acknowledged nothing: a caution, then a stop (job map 4, row 27), while a run is
-        open or something moves. Called at every tick; each is told once, or the telling alone would fill the ring.
+        """How far the recorder is behind: a caution, then a stop, while a run is open or something moves. Called at
+        every tick; each is told once, or the telling alone would fill the ring.
         """
         word = ""
         at_stake = self.pipeline.run is not None or self.pipeline.moving
@@ -170,7 +172,7 @@ class BenchCore:
         if word == self._recorder_word:
             return []
         self._recorder_word = word
-        return self.fault(word, f"nothing recorded for {silent_s:.0f} s", now_ns) if word else []
+        return self.fault(word, f"nothing recorded of the last {silent_s:.0f} s", now_ns) if word else []
 
     def opened(self, link: int, sent: bytes, now_ns: int) -> None:
         """A port is open; what its card sends at opening has been sent."""

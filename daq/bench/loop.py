@@ -35,7 +35,7 @@ TICK_NS = 10_000_000  # silence, keep-alive and status are judged at least every
 STOPPER_BEAT_NS = 20_000_000
 ALIVE_NS = 500_000_000
 REOPEN_NS = 1_000_000_000
-STATION_SILENT_NS = 1_000_000_000  # design.md 2: a station silent for 1 s means a controlled stop
+STATION_SILENT_NS = 1_000_000_000  # a station silent for 1 s means a controlled stop
 SUSPEND_NS = 500_000_000  # boot-time clock ahead of the monotonic clock: the computer slept
 PSEUDO_TERMINALS = "/dev/pts/"
 HAND_ON_S = 30e-6  # a pseudo-terminal's bytes are handed on by a kernel worker, which must not wait for all we do next
@@ -62,6 +62,7 @@ class BenchConfig:
     clean_start: bool
     proven: dict[str, bool]
     fifo: bool = True
+    journal: str = ""  # where the recorder empties the ring; the ring names it
 
 
 @dataclass(slots=True)
@@ -87,7 +88,11 @@ class BenchProcess:
         self._ports = [Port(open_link(link)) for link in self._frame.links]
         self._origin_ns = time.monotonic_ns()
         self._ring = Ring.create(
-            config.ring_path, config.ring_bytes, config.stream_id, origin_ns=self._origin_ns
+            config.ring_path,
+            config.ring_bytes,
+            config.stream_id,
+            origin_ns=self._origin_ns,
+            journal=config.journal,
         )
         pipeline = Pipeline(self._frame, clean_start=config.clean_start, proven=Proven(**config.proven))
         motion = MotionPort(self._frame) if self._frame.motion is not None else None

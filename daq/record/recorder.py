@@ -1,9 +1,9 @@
 """Recorder: the process that takes the stream from the ring to the journal. Standard library and
 daq.stream only.
 
-Reads every 20 ms, syncs every 100 ms, acknowledges to the ring after each sync and never before. After a
-restart it goes on behind the journal's last entry. What the disk refuses stays in the ring, which holds a
-minute, and is told.
+Reads every 20 ms, syncs every 100 ms, acknowledges to the ring after each sync and never before; what it
+says there is how far behind it is, not that it lives. After a restart it goes on behind the journal's last
+entry. What the disk refuses stays in the ring, which holds a minute, and is told.
 """
 
 from __future__ import annotations
@@ -20,6 +20,7 @@ from daq.record.mark import read_mark
 from daq.stream.entry import Packed
 from daq.stream.files import Files
 from daq.stream.journal import SEGMENT_BYTES, Journal
+from daq.stream.ring_file import RingAbsent
 from daq.stream.ring_reader import RingReader, drain
 
 Report: TypeAlias = Callable[[Mapping[str, Any]], None]
@@ -41,18 +42,21 @@ def run_recorder(
     should_stop: Callable[[], bool],
     *,
     bytes_ahead: int = 0,
-) -> None:
-    """Body of the process. Ends after should_stop with what is in the ring safely in the journal.
+    files: Files | None = None,
+) -> str:
+    """Body of the process. Ends after should_stop, with everything in the ring safely in the journal: then "".
 
+    Otherwise the line that says what is left in the ring, why, and what to do: the ring must stay.
     bytes_ahead: room kept filled with zeros for what the planned run will write.
     """
-    recorder = Recorder(ring_path, journal_folder, report, bytes_ahead=bytes_ahead)
+    recorder = Recorder(ring_path, journal_folder, report, bytes_ahead=bytes_ahead, files=files)
     try:
         while not should_stop():
             recorder.advance(time.monotonic_ns())
             time.sleep(POLL_S)
     finally:
-        recorder.finish(time.monotonic_ns)
+        left = recorder.finish(time.monotonic_ns)
+    return left
 
 
 class Recorder:
@@ -69,23 +73,28 @@ class Recorder:
     ) -> None:
         self._journal = open_journal(ring_path, journal_folder, files)
         self._reader = RingReader(ring_path, after_sequence=self._journal.last_sequence)
+        self._ring_path = ring_path
         self._folder = journal_folder
         self._report = report
         self._bytes_ahead = bytes_ahead
         self._pending: Packed | None = None
         self._history: deque[tuple[int, int]] = deque()
-        self._drained_ns = self._safe_ns = 0
+        self._taken_ns = (
+            0  # everything given to the ring before this instant is in the journal, synced or not
+        )
+        self._safe_ns = self._reader.acked_ns  # the same, synced; 0 = nothing yet
+        self._begun_ns = 0
         self._synced_ns = self._said_ns = self._tidied_ns = 0
         self._trouble = ""
         self._bytes = 0
 
     def advance(self, now_ns: int) -> bool:
         """Take what is in the ring; sync, tidy and report when it is time. Whether the ring was emptied."""
-        self._safe_ns = self._safe_ns or now_ns
+        self._begun_ns = self._begun_ns or now_ns
         try:
             drained = self._take()
             if drained:
-                self._drained_ns = now_ns
+                self._taken_ns = now_ns
             if now_ns - self._synced_ns >= SYNC_NS:
                 self._sync(now_ns)
             if now_ns - self._tidied_ns >= TIDY_NS:
@@ -105,6 +114,7 @@ class Recorder:
             if self._pending is None:
                 return True
             self._journal.append_packed(self._pending)
+            self._taken_ns = max(self._taken_ns, self._pending.newest_ns)
             self._bytes += len(self._pending.data)
             self._pending = None
         return False
@@ -112,8 +122,8 @@ class Recorder:
     def _sync(self, now_ns: int) -> None:
         self._journal.sync()
         self._synced_ns = now_ns
-        self._safe_ns = max(self._safe_ns, self._drained_ns)
-        self._reader.acknowledge(self._journal.synced_sequence, now_ns)
+        self._safe_ns = max(self._safe_ns, self._taken_ns)
+        self._reader.acknowledge(self._journal.synced_sequence, self._safe_ns)
 
     def _tidy(self, now_ns: int) -> None:
         """Let segments go that are older than a minute and of no use to the archivist; fill room ahead."""
@@ -135,7 +145,7 @@ class Recorder:
                 "report": "status",
                 "sequence": self._journal.last_sequence,
                 "synced_sequence": self._journal.synced_sequence,
-                "lag_s": (now_ns - self._safe_ns) / SECOND_NS,
+                "lag_s": (now_ns - (self._safe_ns or self._begun_ns)) / SECOND_NS,
                 "lag_bytes": self._reader.lag_bytes,
                 "bytes": self._bytes,
                 "room_bytes": self._journal.free_bytes,
@@ -147,19 +157,43 @@ class Recorder:
             }
         )
 
-    def finish(self, clock_ns: Callable[[], int]) -> None:
-        """Empty the ring, sync, acknowledge, close; for at most FINISH_NS. A disk that refuses to the end is told."""
+    def finish(self, clock_ns: Callable[[], int]) -> str:
+        """Empty the ring, sync, acknowledge, close; for at most FINISH_NS. The line of what is left; "" = nothing."""
         until_ns = clock_ns() + FINISH_NS
         while not self.advance(clock_ns()) and clock_ns() < until_ns:
             time.sleep(POLL_S)
         try:
             self._journal.close()
+            self._safe_ns = max(self._safe_ns, self._taken_ns)
         except RecordingError as error:
             self._trouble = str(error)
-        self._reader.acknowledge(self._journal.synced_sequence, clock_ns())
+        self._reader.acknowledge(self._journal.synced_sequence, self._safe_ns)
         self._said_ns = 0
         self._say(clock_ns())
         self._reader.close()
+        left_bytes = unsafe_bytes(self._ring_path)
+        return left_line(self._ring_path, self._folder, left_bytes, self._trouble) if left_bytes else ""
+
+
+def unsafe_bytes(ring_path: Path) -> int:
+    """Bytes in a ring that no journal is known to hold; 0 where there is no ring."""
+    try:
+        reader = RingReader(ring_path)  # begins at the acknowledged position
+    except RingAbsent:
+        return 0
+    try:
+        return reader.lag_bytes
+    finally:
+        reader.close()
+
+
+def left_line(ring_path: Path, journal_folder: Path, left_bytes: int, why: str) -> str:
+    """What a person has to know and do while data lie in memory only."""
+    return (
+        f"{left_bytes / 1e6:.1f} MB are not on disk yet{f' ({why})' if why else ''}; they stay in {ring_path}, which is"
+        f" memory and LOST WITH A REBOOT: make room, then start `midspan serve` again or call"
+        f" `midspan recover {journal_folder}`"
+    )
 
 
 def open_journal(ring_path: Path, journal_folder: Path, files: Files | None = None) -> Journal:

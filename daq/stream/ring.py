@@ -54,9 +54,11 @@ class Ring:
     """The door to the ring: who creates one writes to it."""
 
     @staticmethod
-    def create(path: str | Path, size_bytes: int, stream_id: int, *, origin_ns: int = 0) -> RingWriter:
-        """A new ring of that capacity; `origin_ns` is the zero of time_s in events."""
-        return RingWriter(RingFile.create(path, size_bytes, stream_id), origin_ns=origin_ns)
+    def create(
+        path: str | Path, size_bytes: int, stream_id: int, *, origin_ns: int = 0, journal: str = ""
+    ) -> RingWriter:
+        """A new ring of that capacity; `origin_ns` is the zero of time_s in events, `journal` where it is emptied."""
+        return RingWriter(RingFile.create(path, size_bytes, stream_id, journal=journal), origin_ns=origin_ns)
 
 
 class RingWriter:
@@ -81,7 +83,7 @@ class RingWriter:
 
     @property
     def acked_ns(self) -> int:
-        """When the recorder said so; 0 = never."""
+        """Everything given to the ring before this monotonic instant is held safely; 0 = nothing was said yet."""
         return int(self._words[W_ACKED_NS])
 
     @property

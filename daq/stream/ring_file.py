@@ -8,6 +8,7 @@ counts of bytes since the ring began, they only grow; the place in the file is p
        1  creator         capacity, bytes
        2  creator         stream id
        3  creator         bytes kept free for EVENTs
+       4  creator         length of the journal's name, bytes; the name itself stands from byte 1024 on
        8  writer          reserved to: bytes before this position may be written at this moment
        9  writer          position: bytes before it are whole entries
       10  writer          last sequence given out
@@ -16,7 +17,7 @@ counts of bytes since the ring began, they only grow; the place in the file is p
       13  writer          1 = closed on purpose
       16  recorder        acknowledged position: the writer may reuse what lies before it
       17  recorder        acknowledged sequence
-      18  recorder        monotonic ns at which it was acknowledged
+      18  recorder        monotonic ns: everything given to the ring before it is safely recorded
 
 Words are native, aligned 64 bit numbers, stored and loaded in one piece; each has one writer, and the three
 groups lie on cache lines of their own. Only this page is mapped. The bytes of the entries pass through pwrite
@@ -39,8 +40,10 @@ PAGE_BYTES = 4096
 RING_BYTES_MIN = PAGE_BYTES
 RING_SECONDS = 60.0  # design.md 4: survives a disc that stalls for 10 s six times over
 _MIB = 1 << 20
+_JOURNAL_AT = 1024
+JOURNAL_NAME_BYTES_MAX = PAGE_BYTES - _JOURNAL_AT
 
-W_MAGIC, W_CAPACITY, W_STREAM_ID, W_EVENT_ROOM = 0, 1, 2, 3
+W_MAGIC, W_CAPACITY, W_STREAM_ID, W_EVENT_ROOM, W_JOURNAL_BYTES = 0, 1, 2, 3, 4
 W_RESERVED_TO, W_POSITION, W_SEQUENCE, W_NEWEST_NS, W_LOST, W_CLOSED = 8, 9, 10, 11, 12, 13
 W_ACKED_POSITION, W_ACKED_SEQUENCE, W_ACKED_NS = 16, 17, 18
 
@@ -76,9 +79,16 @@ class RingFile:
         self.stream_id: int = self.words[W_STREAM_ID]
 
     @classmethod
-    def create(cls, path: str | Path, size_bytes: int, stream_id: int) -> RingFile:
-        """A new ring, owned (flock) by this process for as long as it lives."""
+    def create(cls, path: str | Path, size_bytes: int, stream_id: int, *, journal: str = "") -> RingFile:
+        """A new ring, owned (flock) by this process for as long as it lives. journal: the folder it is emptied into,
+        so that whoever finds it later knows where its data belong.
+        """
         path = Path(path)
+        name = os.fsencode(journal)
+        if len(name) > JOURNAL_NAME_BYTES_MAX:
+            raise RecordingError(
+                f"journal's name has {len(name)} bytes, at most {JOURNAL_NAME_BYTES_MAX} are allowed"
+            )
         capacity = -(-max(size_bytes, RING_BYTES_MIN) // PAGE_BYTES) * PAGE_BYTES
         _demand_room(path, capacity + PAGE_BYTES)
         try:
@@ -98,6 +108,8 @@ class RingFile:
         ring.words[W_CAPACITY] = capacity
         ring.words[W_STREAM_ID] = stream_id
         ring.words[W_EVENT_ROOM] = event_room_bytes(capacity)
+        ring.words[W_JOURNAL_BYTES] = len(name)
+        ring._page[_JOURNAL_AT : _JOURNAL_AT + len(name)] = name
         ring.words[W_MAGIC] = _MAGIC_WORD
         return ring
 
@@ -117,6 +129,12 @@ class RingFile:
             return ring
         ring.close() if ring is not None else os.close(descriptor)
         raise RingAbsent(f"ring {path} is not ready")
+
+    @property
+    def journal(self) -> str:
+        """The folder of the journal this ring is emptied into; "" where its creator named none."""
+        length = min(int(self.words[W_JOURNAL_BYTES]), JOURNAL_NAME_BYTES_MAX)
+        return os.fsdecode(bytes(self._page[_JOURNAL_AT : _JOURNAL_AT + length]))
 
     def write(self, position: int, data: bytes) -> None:
         """Bytes to their place, in two pieces where the round ends between them."""

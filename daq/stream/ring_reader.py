@@ -63,6 +63,11 @@ class RingReader:
         return self._ring.stream_id
 
     @property
+    def journal(self) -> str:
+        """The folder of the journal it is emptied into; "" where nobody said."""
+        return self._ring.journal
+
+    @property
     def last_sequence(self) -> int:
         """The last entry shown, or known from the start; 0 = none."""
         return self._last or 0
@@ -71,6 +76,11 @@ class RingReader:
     def lag_bytes(self) -> int:
         """Bytes written and not yet read here."""
         return int(self._words[W_POSITION]) - self._position
+
+    @property
+    def acked_ns(self) -> int:
+        """Everything given to the ring before this monotonic instant is recorded; 0 = nothing was said yet."""
+        return int(self._words[W_ACKED_NS])
 
     @property
     def lost_entries(self) -> int:
@@ -137,7 +147,7 @@ class RingReader:
 
     # --- acknowledging ------------------------------------------------------------------------------------
     def acknowledge(self, sequence: int, monotonic_ns: int) -> None:
-        """The recorder's word: entries up to `sequence` are safe on disk, said at `monotonic_ns`.
+        """The recorder's word: entries up to `sequence`, and all from before `monotonic_ns`, are safe on disk.
 
         Room is given back up to the end of the last whole piece read that is covered.
         """

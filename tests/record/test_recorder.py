@@ -15,8 +15,9 @@ from typing import Any
 
 import pytest
 
+from daq.record import recorder as recorder_module
 from daq.record.mark import Mark, write_mark
-from daq.record.recorder import Recorder, drain_ring, run_recorder
+from daq.record.recorder import Recorder, drain_ring, run_recorder, unsafe_bytes
 from daq.stream.entry import Kind
 from daq.stream.files import OsFiles
 from daq.stream.journal_reader import JournalReader
@@ -161,10 +162,56 @@ def test_a_disk_that_refuses_to_the_end_is_told_and_the_ring_is_left_for_the_nex
     room.write(10)
     room.disk.write_error = errno.EIO
     clock = iter(range(room.now_ns, room.now_ns + 100 * SECOND, SECOND))
-    room.recorder.finish(lambda: next(clock))
+    left = room.recorder.finish(lambda: next(clock))
     assert room.said[-1]["trouble"]
+    assert str(room.ring_path) in left and "Input/output error" in left and "LOST WITH A REBOOT" in left
+    assert f"midspan recover {room.journal}" in left
     room.writer.close()
     assert drain_ring(room.ring_path, room.journal) == 10
+
+
+def test_the_body_says_whether_the_ring_is_empty(tmp_path: Path) -> None:
+    """What the supervisor goes by before it lets the ring go."""
+    room = Room(tmp_path)
+    room.write(10)
+    room.recorder._journal._let_go()
+    assert unsafe_bytes(room.ring_path) > 0
+    assert not run_recorder(room.ring_path, room.journal, room.said.append, lambda: True, files=room.disk)
+    assert unsafe_bytes(room.ring_path) == 0 == unsafe_bytes(tmp_path / "no ring")
+    room.writer.close()
+
+
+def test_what_is_acknowledged_is_how_far_behind_the_recorder_is(
+    room: Room, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """A recorder that works without pause and is 20 s behind must not look alive and well to the bench."""
+    monkeypatch.setattr(recorder_module, "PIECES_MAX", 1)
+    room.advance(0.2)
+    assert room.writer.acked_ns == room.now_ns
+    for _ in range(4):
+        room.write(1, 200_000)
+        room.now_ns += 5 * SECOND
+    written_ns = room.now_ns - 20 * SECOND
+    for behind_s in (20.0, 15.0, 10.0):
+        room.advance(0.2)
+        assert (room.now_ns - room.writer.acked_ns) * 1e-9 == pytest.approx(behind_s, abs=1.0)
+    assert room.writer.acked_ns == written_ns + 10 * SECOND
+    room.advance(0.2)
+    room.advance(0.2)
+    assert room.writer.acked_ns == room.now_ns, "caught up"
+
+
+def test_a_restarted_recorder_is_as_far_behind_as_the_one_before(room: Room) -> None:
+    room.advance(0.2)
+    safe_ns = room.now_ns
+    room.write(5)
+    room.now_ns += 8 * SECOND
+    room.recorder._journal._let_go()
+    room.recorder = room.new_recorder()
+    room.disk.write_error = errno.ENOSPC
+    room.advance()
+    assert room.said[-1]["lag_s"] == pytest.approx((room.now_ns - safe_ns) * 1e-9)
+    assert room.writer.acked_ns == safe_ns
 
 
 def test_room_ahead_is_filled_piece_by_piece(tmp_path: Path) -> None:
