@@ -60,6 +60,17 @@ class Places:
         return self.spool / "running"
 
     @property
+    def frame_mark(self) -> Path:
+        """Its twin for daemons with another data folder: beside nobody's data, known by the frame's name alone.
+
+        It outlives a reboot, unless MIDSPAN_RUNTIME keeps everything of ours in one place.
+        """
+        if os.environ.get("MIDSPAN_RUNTIME"):
+            return self.runtime.with_name(f"{self.frame}.running")
+        state = os.environ.get("XDG_STATE_HOME") or Path.home() / ".local" / "state"
+        return Path(state) / "midspan" / f"{self.frame}@{os.uname().nodename}.running"
+
+    @property
     def proofs(self) -> Path:
         """Recorded polarity checks and stop drills of this frame."""
         return self.spool / "proofs.json"
@@ -94,6 +105,11 @@ def places_for(frame: str, data: Path) -> Places:
             " are allowed; set XDG_RUNTIME_DIR to a shorter folder"
         )
     return places
+
+
+def data_of_journal(journal: Path) -> Path:
+    """The data folder a journal's records go to: .spool/FRAME/journal-... lies in it."""
+    return journal.parents[2]
 
 
 def private_folder(folder: Path) -> None:

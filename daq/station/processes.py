@@ -10,8 +10,7 @@ import signal
 import socket
 import sys
 import time
-from collections.abc import Callable, Iterator, Mapping
-from contextlib import contextmanager
+from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any
 
@@ -20,6 +19,7 @@ from daq.station.places import Places
 from daq.stream.ring import RingAbsent, RingReader
 
 ALIVE_S = 0.5
+NOT_DRAINED_CODE = 7  # the recorder's: the ring still holds what no journal does
 LINE_BYTES_MAX = 1_500
 
 
@@ -113,66 +113,41 @@ def recorder(config: Mapping[str, Any], life: Life) -> int:
     life.ready()
     if await_until(lambda: ring_is_ready(ring), life):
         report = Reporter("recorder", places.station_socket)
-        run_recorder(
+        left = run_recorder(
             ring,
             places.journal(config["stream_id"]),
             report,
             life.over,
             bytes_ahead=int(config["bytes_ahead"]),
         )
+        if left:
+            life.failed(left)
+            return NOT_DRAINED_CODE
     return 0
 
 
 def archivist(config: Mapping[str, Any], life: Life) -> int:
     from daq.record.archivist import run_archivist
+    from daq.record.recorder import unsafe_bytes
     from daq.record.recover import recover
     from daq.results.reduce import result_mapping
+    from daq.station.leftovers import clear_leftovers
 
     places = places_of(config)
+    ring = Path(config["ring_path"])
     report = Reporter("archivist", places.station_socket)
     journal = places.journal(config["stream_id"])
     copy_to = Path(config["copy_to"]) if config.get("copy_to") else None
 
     life.ready()
-    clear_leftovers(places, config, report, life)
+    clear_leftovers(places, config["stream_id"], result_mapping, report, life.tell, life.over)
     if await_until(journal.is_dir, life):
         run_archivist(journal, places.data, places.spool, result_mapping, report, life.over, copy_to)
-        if life.orderly:  # the recorder has ended before us: everything is sealed, clear up
+        if life.orderly and not unsafe_bytes(
+            ring
+        ):  # the recorder has ended before us and left nothing: clear up
             recover(journal, places.data, reduce=result_mapping, report=report)
     return 0
-
-
-def clear_leftovers(places: Places, config: Mapping[str, Any], report: Reporter, life: Life) -> None:
-    """Rings and journals of dead daemons become records. What cannot be had now is kept, and said."""
-    from daq.record.recorder import drain_ring
-    from daq.record.recover import recover
-    from daq.results.reduce import result_mapping
-
-    def note(said: Mapping[str, Any]) -> None:
-        report(said)
-        if said["report"] == "sealed":
-            life.tell(f"recovered from an earlier run: {said['path']}")
-        elif said["report"] == "journal_damaged":
-            life.tell(f"{said['path']} is damaged and is kept: {said['why']}")
-
-    for ring in sorted(places.runtime.glob("ring-*")):
-        if ring != Path(config["ring_path"]):
-            with told(life, f"{ring} is kept"):
-                drain_ring(ring, places.spool / f"journal-{ring.name.removeprefix('ring-')}")
-    for leftover in sorted(places.spool.glob("journal-*")):
-        if leftover != places.journal(config["stream_id"]):
-            report({"report": "recovering", "journal": leftover.name})
-            with told(life, f"{leftover} is kept"):
-                recover(leftover, places.data, reduce=result_mapping, report=note, pulse=life.over)
-
-
-@contextmanager
-def told(life: Life, consequence: str) -> Iterator[None]:
-    """What one leftover cannot give must not cost the others, nor the daemon."""
-    try:
-        yield
-    except (MidspanError, OSError) as error:
-        life.tell(f"{consequence}: {error}")
 
 
 def station(config: Mapping[str, Any], life: Life) -> int:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import random
+import resource
 import signal
 import subprocess
 import time
@@ -141,6 +142,32 @@ def test_a_pulled_cable_is_signal_lost_and_the_file_is_closed(tmp_path: Path) ->
     check_whole(record)
     meta = read_meta(record)
     assert meta["interrupted"] and meta["result"]["stress_survived_mpa"] > 20.0
+
+
+def test_a_disk_that_is_full_to_the_end_leaves_ring_and_mark_and_the_next_start_has_it_all(
+    tmp_path: Path,
+) -> None:
+    """No byte can be written from the middle of the bar on: the rest lies in the ring only, and is said to."""
+    with rig_of(data=tmp_path) as rig:
+        rig.begin()
+        rig.start_bar()
+        rig.wait_loading()
+        resource.prlimit(rig.supervisor.pids["recorder"], resource.RLIMIT_FSIZE, (0, resource.RLIM_INFINITY))
+        rig.wait("the end of the run", lambda: bool(rig.events("run_closed")), 30.0)
+        rig.supervisor.end()
+        (ring,) = rig.outfit.places.runtime.glob("ring-*")
+        farewell = rig.supervisor.farewell(1.0)
+        assert str(ring) in farewell and "LOST WITH A REBOOT" in farewell and "make room" in farewell
+        assert rig.outfit.places.running_mark.exists() and not records(tmp_path)
+        with Supervisor(rig.outfit, rig.said.append) as again:
+            assert not again.clean_start
+            until_s = time.monotonic() + 20.0
+            while not records(tmp_path) and time.monotonic() < until_s:
+                time.sleep(0.05)
+            assert not ring.exists()
+    (record,) = records(tmp_path)
+    check_whole(record)
+    assert verify(record).accounted and not read_meta(record)["interrupted"]
 
 
 def test_a_killed_supervisor_takes_all_with_it_in_order(tmp_path: Path) -> None:

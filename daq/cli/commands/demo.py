@@ -76,7 +76,7 @@ def command(out: Path, bars: int, seed: int, no_window: bool) -> None:
     with tempfile.TemporaryDirectory(prefix="midspan-demo-") as scratch:
         frame = with_port(load_frame(cards / "kiln-lane-demo.toml"), Path(scratch))
         with virtual_frame(cards, Path(scratch), seed) as hands:
-            outfit = Outfit(frame, places_for(frame.name, out))
+            outfit = Outfit(frame, places_for(frame.name, out), own_machine=True)
             with Supervisor(outfit, lambda text: console.print(text, markup=False)) as supervisor:
                 reports = break_bars(console, supervisor, outfit, cards / f"{series}.toml", hands)
     finish(console, out / series, series, reports)

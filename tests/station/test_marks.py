@@ -1,0 +1,58 @@
+"""An unclean end is known to the next daemon of that frame, whatever its data folder."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import pytest
+
+from daq.station.marks import RunningMarks
+from daq.station.places import Places, places_for
+
+
+@pytest.fixture
+def root(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
+    monkeypatch.setenv("MIDSPAN_RUNTIME", str(tmp_path))
+    return tmp_path
+
+
+def made(name: str, data: Path) -> Places:
+    places = places_for(name, data)
+    places.make()
+    return places
+
+
+def test_another_data_folder_does_not_hide_an_unclean_end(root: Path) -> None:
+    first, second = made("lane", root / "a"), made("lane", root / "b")
+    assert RunningMarks(first).set() == ""
+    assert RunningMarks(second).stand()
+    assert str(root / "a") in RunningMarks(second).where_else() and RunningMarks(first).where_else() == ""
+    assert not RunningMarks(made("other lane", root / "b")).stand()
+
+
+def test_an_orderly_end_clears_both(root: Path) -> None:
+    places = made("lane", root / "a")
+    marks = RunningMarks(places)
+    marks.set()
+    marks.clear()
+    assert not marks.stand() and not places.frame_mark.exists() and not places.running_mark.exists()
+
+
+def test_without_a_place_for_the_twin_the_mark_beside_the_data_serves_and_that_is_said(
+    root: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    (root / "file").touch()
+    places = made("lane", root / "a")
+    monkeypatch.delenv("MIDSPAN_RUNTIME")
+    monkeypatch.setenv("XDG_STATE_HOME", str(root / "file"))
+    line = RunningMarks(places).set()
+    assert "set XDG_STATE_HOME" in line and RunningMarks(places).stand()
+
+
+def test_the_twin_outlives_a_reboot_and_is_this_computers(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.delenv("MIDSPAN_RUNTIME", raising=False)
+    monkeypatch.setenv("XDG_STATE_HOME", str(tmp_path))
+    twin = Places("lane", Path("/run/user/1/midspan/lane"), tmp_path / "data").frame_mark
+    assert twin.parent == tmp_path / "midspan" and twin.name.startswith("lane@")
