@@ -17,7 +17,7 @@ from daq.cards.derived import (
     silence_s,
     spans_of,
 )
-from daq.cards.frame import FrameCard, Motion
+from daq.cards.frame import Fixture, FrameCard, Motion
 from daq.cards.method import MethodCard
 
 # Elementary flexure is trusted between these (common practice, no source).
@@ -105,6 +105,7 @@ def _method_cautions(frame: FrameCard, method: MethodCard, fixture: str | None) 
     spans, fitted = geometry_of(method), fixture or ""
     if any(item.name == fitted for item in frame.fixtures):
         spans = spans_of(fixture_by_name(frame, fitted))
+        yield from _fixture_cautions(method, fixture_by_name(frame, fitted))
     size = nominal_section(method)
     yield from _slenderness_cautions(method, spans, size)
     load_n = median_load_n(method, spans)
@@ -113,10 +114,22 @@ def _method_cautions(frame: FrameCard, method: MethodCard, fixture: str | None) 
         yield f"method {method.name}: median break load {load_n:.3g} N is below the verified {low_n:g} N"
     if method.modulus == "crosshead" and compliance_for(frame, fitted) is None:
         yield f"method {method.name}: no compliance table for fixture {fitted or '?'}, so no modulus is shown"
-    unchecked = [clause.key for clause in method.clauses if clause.mark != "checked"]
+    unchecked = [clause.key for clause in method.clauses if clause.mark not in ("checked", "own choice")]
     if unchecked:
         keys = ", ".join(unchecked)
         yield f"method {method.name}: values not checked against the standard: {keys}"
+
+
+def _fixture_cautions(method: MethodCard, fixture: Fixture) -> Iterator[str]:
+    needs, diameter_mm = method.needs, fixture.roller_diameter_mm
+    window = needs.roller_diameter_mm
+    if window is not None and not window[0] <= diameter_mm <= window[1]:
+        yield (
+            f"method {method.name}: rollers of fixture {fixture.name} are {diameter_mm:g} mm, "
+            f"the method wants {window[0]:g} to {window[1]:g} mm"
+        )
+    if needs.rollers_free and fixture.rollers == "fixed":
+        yield f"method {method.name}: rollers of fixture {fixture.name} are fixed, the method wants them free"
 
 
 def _slenderness_cautions(method: MethodCard, spans: Spans, size: SectionSize) -> Iterator[str]:

@@ -7,9 +7,11 @@ from typing import Annotated, Literal
 from pydantic import Field
 
 from daq.cards.base import Card, FileName, NotNegative, Positive, about
+from daq.cards.validity import FixtureNeeds, Measuring, ReportField, Rounding, Strength, Validity
 
 Geometry = Literal["3-point", "4-point-quarter", "4-point-third", "4-point"]
 Section = Literal["rectangle", "circle", "tube"]
+Mark = Literal["confirmed", "from memory", "unchecked", "checked", "own choice"]
 IsoDay = Annotated[str, Field(pattern=r"^$|^[0-9]{4}-[0-9]{2}-[0-9]{2}$")]
 
 
@@ -17,13 +19,17 @@ class Clause(Card):
     """Where a value comes from."""
 
     key: Annotated[str, Field(min_length=1, max_length=80), about("", "dotted key of this card")]
-    standard: Annotated[str, Field(min_length=1, max_length=80), about("", "designation of the standard")]
-    edition: Annotated[str, Field(max_length=40), about("", "edition")] = ""
-    clause: Annotated[str, Field(max_length=40), about("", "clause")] = ""
-    mark: Annotated[
-        Literal["confirmed", "from memory", "unchecked", "checked"],
-        about("", "how sure the value is; 'checked' needs checked_by and checked_on"),
-    ] = "unchecked"
+    standard: Annotated[
+        str, Field(max_length=80), about("", "designation of the standard; empty: the card's own")
+    ] = ""
+    edition: Annotated[str, Field(max_length=40), about("", "edition; empty: the card's own")] = ""
+    clause: Annotated[str, Field(max_length=40), about("", "clause; empty: not recorded")] = ""
+    mark: Annotated[Mark, about("", "how sure the value is; 'checked' needs checked_by and checked_on")] = (
+        "unchecked"
+    )
+    source: Annotated[
+        str, Field(max_length=120), about("", "where a confirmed value was seen, or how it was computed")
+    ] = ""
     checked_by: Annotated[str, Field(max_length=80), about("", "who compared it with the standard")] = ""
     checked_on: Annotated[IsoDay, about("date", "when, as YYYY-MM-DD")] = ""
 
@@ -45,6 +51,17 @@ class Rate(Card):
         about("", "who holds a force or stress rate: the machine itself, or midspan"),
     ] = "frame"
     tolerance_percent: Annotated[Positive, Field(le=100), about("%", "band of the achieved rate")] = 20.0
+    speed_band_mm_min: Annotated[
+        tuple[NotNegative, Positive] | None, about("mm/min", "speeds the standard allows; overrides the band")
+    ] = None
+    band_n_s: Annotated[
+        tuple[NotNegative, Positive] | None,
+        about("N/s", "force rates the standard allows; overrides the band"),
+    ] = None
+    band_mpa_s: Annotated[
+        tuple[NotNegative, Positive] | None,
+        about("MPa/s", "stress rates the standard allows; overrides the band"),
+    ] = None
 
 
 class Expected(Card):
@@ -107,6 +124,11 @@ class MethodCard(Card):
     card: Annotated[Literal["method"], about("", "kind of this card")]
     name: Annotated[FileName, about("", "name of the method")]
     title: Annotated[str, Field(max_length=120), about("", "one line for people")] = ""
+    standard: Annotated[
+        str, Field(max_length=80), about("", "designation of the standard; empty: a method of one's own")
+    ] = ""
+    edition: Annotated[str, Field(max_length=40), about("", "edition of the standard")] = ""
+    scope: Annotated[str, Field(max_length=120), about("", "what it is for, in a few words")] = ""
     geometry: Annotated[
         Geometry,
         about("", "load span: 0 (3-point), half (quarter), a third (third) of the support span, or free"),
@@ -145,6 +167,21 @@ class MethodCard(Card):
     time_to_break_s: Annotated[
         tuple[Positive, Positive] | None, about("s", "shortest and longest time from start to break")
     ] = None
+    measuring: Annotated[Measuring, about("", "table: what is measured of each bar")] = Measuring()
+    needs: Annotated[FixtureNeeds, about("", "table: what the fixture must be")] = FixtureNeeds()
+    validity: Annotated[Validity, about("", "table: when a result counts")] = Validity()
+    strength: Annotated[Strength, about("", "table: how the printed strength is made")] = Strength()
+    rounding: Annotated[Rounding, about("", "table: rounding of the report")] = Rounding()
+    report_fields: Annotated[
+        tuple[ReportField, ...],
+        Field(max_length=40),
+        about("", "what the report must hold; a missing one makes it incomplete"),
+    ] = ()
+    notes: Annotated[
+        tuple[Annotated[str, Field(min_length=1, max_length=160)], ...],
+        Field(max_length=12),
+        about("", "facts in a few words of one's own, shown with the card"),
+    ] = ()
     clauses: Annotated[
         tuple[Clause, ...], Field(max_length=100), about("", "list of tables: sources of values")
     ] = ()

@@ -11,6 +11,7 @@ from pydantic import ValidationError
 from daq.cards.describe import keys_at
 from daq.cards.faults import Fault
 from daq.cards.method import Clause, Expected, MethodCard, Rate
+from daq.cards.rules_validity import window_faults
 
 # Spans typed with three decimals still count as half or third.
 SHARE_TOLERANCE = 1e-3
@@ -81,8 +82,9 @@ def method_faults(parts: MethodParts) -> Iterator[Fault]:
     yield from _slenderness_faults(card)
     yield from _time_faults(card)
     yield from _fracture_faults(card)
+    yield from window_faults(card)
     for number, clause in enumerate(card.clauses):
-        yield from _clause_faults(number, clause)
+        yield from _clause_faults(number, clause, card.standard)
     if parts.rate is not None and card.preload.seating_mm_min is None and parts.rate.speed_mm_min is None:
         allowed = "a speed > 0 mm/min, because rate.speed_mm_min does not give one"
         yield Fault(("preload", "seating_mm_min"), allowed, "add the speed of seating")
@@ -196,7 +198,10 @@ def _fracture_faults(card: MethodCard) -> Iterator[Fault]:
         )
 
 
-def _clause_faults(number: int, clause: Clause) -> Iterator[Fault]:
+def _clause_faults(number: int, clause: Clause, standard: str) -> Iterator[Fault]:
+    if not clause.standard and not standard and clause.mark != "own choice":
+        allowed = "the designation of a standard, here or in the card's own key 'standard'"
+        yield Fault(("clauses", number, "standard"), allowed, "add it, or mark the value as 'own choice'")
     path = tuple(clause.key.split("."))
     if path[-1] not in keys_at(MethodCard, path[:-1]):
         allowed = "the dotted key of a value of this card, such as rate.speed_mm_min"

@@ -214,6 +214,54 @@ RULES = [
         [('key = "chamfer_mm"', 'checked_on = "2026-02-30"\nkey = "chamfer_mm"')],
         ["clauses[#3].checked_on = '2026-02-30'|a day of the calendar"],
     ),
+    (
+        "clause of no standard",
+        ALUMINA,
+        [('key = "chamfer_mm"\nstandard = "ASTM C1161"', 'key = "chamfer_mm"')],
+        ["clauses[#3].standard = (missing)|the designation of a standard"],
+    ),
+    (
+        "window the wrong way round",
+        ALUMINA,
+        [("[limits]", "[validity]\nstrain_rate_per_s = [2e-4, 5e-5]\n[limits]")],
+        ["validity.strain_rate_per_s[#2] = 5e-05|more than the lower end of 0.0002"],
+    ),
+    (
+        "band of another mode",
+        ALUMINA,
+        [("[rate]", "[rate]\nband_n_s = [40.0, 60.0]")],
+        ["rate.band_n_s = (a list of 2)|left out in mode 'crosshead': use speed_band_mm_min"],
+    ),
+    (
+        "rate outside its own band",
+        ALUMINA,
+        [("[rate]", "[rate]\nspeed_band_mm_min = [0.1, 0.3]")],
+        ["rate.speed_mm_min = 0.5|from 0.1 to 0.3"],
+    ),
+    (
+        "load span of a 3-point bar",
+        MORTAR,
+        [("[limits]", '[validity.break_place]\nregion = "load span"\n[limits]')],
+        ["validity.break_place.region = 'load span'|'anywhere'"],
+    ),
+    (
+        "stress at the break of a tile",
+        MORTAR,
+        [("[limits]", '[validity.break_place]\nnear_stress = "at the break"\n[limits]')],
+        ["validity.break_place.near_stress = 'at the break'|'nominal'"],
+    ),
+    (
+        "sizes of another section",
+        ALUMINA,
+        [("[limits]", '[measuring]\ndimensions = ["width", "diameter"]\n[limits]')],
+        ["measuring.dimensions[#2] = 'diameter'|a size that a bar of section 'rectangle' has"],
+    ),
+    (
+        "two ways of rounding",
+        ALUMINA,
+        [("[limits]", "[rounding]\nstress_step_mpa = 0.1\nstress_digits = 3\n[limits]")],
+        ["rounding.stress_digits = 3|left out where stress_step_mpa is given"],
+    ),
 ]
 
 
@@ -251,6 +299,24 @@ ALLOWED = [
     (ALUMINA, [TUBE, NO_CHAMFER, (SIZES, "diameter_mm = 4.0\ninner_diameter_mm = 2.0")]),
     (GLASS, [('loop = "frame"', 'loop = "midspan"\nspeed_mm_min = 0.3')]),
     (ALUMINA, [('key = "chamfer_mm"', 'checked_on = "2026-02-28"\nkey = "chamfer_mm"')]),
+    (ALUMINA, [("[rate]", "[rate]\nspeed_band_mm_min = [0.5, 1.5]")]),
+    (
+        ALUMINA,
+        [
+            ('key = "chamfer_mm"\nstandard = "ASTM C1161"', 'key = "chamfer_mm"'),
+            ("name =", 'standard = "X"\nname ='),
+        ],
+    ),
+    (ALUMINA, [("[limits]", "[needs]\nroller_diameter_mm = [4.5, 4.5]\n[limits]")]),
+    (
+        ALUMINA,
+        [
+            (
+                "[limits]",
+                '[validity.break_place]\nregion = "load span"\nnear_stress = "at the break"\n[limits]',
+            )
+        ],
+    ),
 ]
 
 

@@ -476,6 +476,17 @@ def test_a_good_bench_has_only_the_unsigned_clauses(frame, method):
     )
 
 
+def test_a_fixture_that_the_method_does_not_want_is_told(frame, changed):
+    """Rollers of lane A are 4.5 mm and free."""
+    card = changed("alumina-bars.toml", ("[limits]", "[needs]\nroller_diameter_mm = [2.0, 2.5]\n[limits]"))
+    lines = cautions(frame, card, fixture="quarter-40-20", today=TODAY)
+    assert lines[0].endswith("fixture quarter-40-20 are 4.5 mm, the method wants 2 to 2.5 mm")
+    fixed = [fixture.model_copy(update={"rollers": "fixed"}) for fixture in frame.fixtures]
+    stiff = frame.model_copy(update={"fixtures": tuple(fixed)})
+    free = changed("alumina-bars.toml", ("[limits]", "[needs]\nrollers_free = true\n[limits]"))
+    assert cautions(stiff, free, fixture="quarter-40-20", today=TODAY)[0].endswith("wants them free")
+
+
 INPUT = '[[inputs]]\nname = "{}"\nsource = "reply"\nletter = "{}"\n'
 CAUTIONS = [
     (
