@@ -21,7 +21,8 @@ PAGE = Path(__file__).parents[2] / "docs" / "cards.md"
 UNIT_OF_SUFFIX = {
     "_mm_min": "mm/min", "_n_mm": "N/mm", "_n_s": "N/s", "_mpa_s": "MPa/s", "_n": "N", "_mm": "mm",
     "_um": "um", "_s": "s", "_hz": "Hz", "_percent": "%", "_kg": "kg", "_mpa": "MPa", "_gpa": "GPa", "_baud": "baud",
-    "_bits": "bit", "_per_s": "1/s", "_mpa_n": "MPa/N", "_c": "degC", "_sigma": "sigma", "_bytes": "bytes", "_on": "date", "_due": "date",
+    "_bits": "bit",  "_c": "degC", "_sigma": "sigma", "_bytes": "bytes", "_on": "date", "_due": "date",
+    "_per_s": "1/s", "_mpa_n": "MPa/N",
 }  # fmt: skip
 NO_UNIT = {
     "column",
