@@ -14,7 +14,8 @@ It refuses to know where in a message the check stands.
 
 from __future__ import annotations
 
-from functools import lru_cache, reduce
+from collections.abc import Callable
+from functools import lru_cache, partial, reduce
 from operator import xor
 from typing import TypeAlias
 from zlib import crc32
@@ -56,10 +57,19 @@ _TABLES: dict[Check, Words] = {
 }
 
 
+def check_function(kind: Check) -> Callable[[bytes], int]:
+    """The check of one message, as a function of the message alone."""
+    return _sum8 if kind == "sum8" else partial(check_value, kind)
+
+
+def _sum8(message: bytes) -> int:
+    return sum(message) & 0xFF
+
+
 def check_value(kind: Check, message: bytes) -> int:
     """The check of one message."""
     if kind == "sum8":
-        return sum(message) & 0xFF
+        return _sum8(message)
     if kind == "xor8":
         return reduce(xor, message, 0)
     if kind == "crc8":

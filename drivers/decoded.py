@@ -3,10 +3,10 @@ only."""
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from enum import StrEnum
-from typing import Protocol
+from typing import Protocol, TypeAlias, runtime_checkable
 
 from daq.cards.frame import InputName
 from daq.stream.block import Block
@@ -76,6 +76,20 @@ class Decoder(Protocol):
 
     def feed(self, data: bytes, arrival_s: float) -> Decoded:
         """Decode what arrived. Never raises on bytes, never keeps more than a few kilobytes."""
+        ...
+
+
+Look: TypeAlias = Callable[[tuple[float, ...]], None]
+
+
+@runtime_checkable
+class ShowsRows(Protocol):
+    """A decoder that can show a row before it is numbered, timed and made into a block."""
+
+    def show_rows(self, look: Look) -> None:
+        """From now on call look(row) with each row that comes alone and simply counts on, channels first. What is shown
+        is always among the blocks of the same feed.
+        """
         ...
 
 

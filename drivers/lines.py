@@ -15,7 +15,7 @@ from daq.cards.frame import FrameCard
 from daq.stream.block import Floats
 from daq.stream.clock import ClockModel
 from drivers.checks import check_value
-from drivers.decoded import STALE_S, Decoded, Reason
+from drivers.decoded import STALE_S, Decoded, Look, Reason
 from drivers.framing import LineFramer
 from drivers.numbering import Numbering
 from drivers.plan import link_of, transmission_s
@@ -56,6 +56,10 @@ class LinesDecoder:
     def clock(self) -> ClockModel | None:
         """Drift and jitter of the device's counter, where it has one."""
         return self._numbering.clock
+
+    def show_rows(self, look: Look) -> None:
+        """See ShowsRows."""
+        self._numbering.look = look
 
     def feed(self, data: bytes, arrival_s: float) -> Decoded:
         """Decode what arrived at arrival_s; never raises on bytes."""

@@ -13,7 +13,7 @@ import numpy as np
 from daq.stream.block import GAP_UNKNOWN, Block, Floats
 from daq.stream.clock import ClockModel
 from drivers.counter import WHOLE_MAX, Counter
-from drivers.decoded import NO_REJECTS, InputSample, Reason
+from drivers.decoded import NO_REJECTS, InputSample, Look, Reason
 from drivers.plan import RowPlan
 from drivers.timing import CounterTiming, Timing
 
@@ -70,6 +70,7 @@ class Numbering:
         self._lost = False  # without a counter: something was thrown away since the last accepted row
         self._segments: list[_Segment] = []
         self._rejected: dict[str, int] = {}
+        self.look: Look | None = None  # sees a row of `one` before its time and block are worked out
 
     @property
     def clock(self) -> ClockModel | None:
@@ -107,11 +108,12 @@ class Numbering:
         plan = self._plan
         if plan.time is not None or self._lost:
             return None
-        for held, place in zip(self._status, self._places, strict=True):
-            if row[place] != held:
-                return None
+        if self._places and any(row[at] != held for held, at in zip(self._status, self._places, strict=True)):
+            return None
         if self._counter is not None and not self._counter.counts_on(row[plan.counter or 0]):
             return None
+        if self.look is not None:
+            self.look(row)
         index = self._next_index
         self._next_index = index + 1
         time_s = self._timing.feed(index, None, 1, arrival_s)

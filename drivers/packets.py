@@ -19,7 +19,7 @@ from daq.errors import CardError
 from daq.stream.block import Block, Floats
 from daq.stream.clock import ClockModel
 from drivers.checks import WEAK
-from drivers.decoded import STALE_S, Decoded, Reason
+from drivers.decoded import STALE_S, Decoded, Look, Reason
 from drivers.numbering import Numbering
 from drivers.packetform import PacketForm
 from drivers.plan import link_of, transmission_s
@@ -81,6 +81,10 @@ class PacketsDecoder:
     def clock(self) -> ClockModel | None:
         """Drift and jitter of the device's counter, where it has one."""
         return self._numbering.clock
+
+    def show_rows(self, look: Look) -> None:
+        """See ShowsRows."""
+        self._numbering.look = look
 
     def feed(self, data: bytes, arrival_s: float) -> Decoded:
         """Decode what arrived at arrival_s; never raises on bytes."""

@@ -17,7 +17,7 @@ import re
 from daq.cards.derived import channels_of
 from daq.cards.frame import Channel, FrameCard, LinesDialect
 from daq.errors import CardError
-from drivers.checks import CHECK_BYTES, check_value
+from drivers.checks import CHECK_BYTES, check_function, check_value
 from drivers.decoded import Reason
 from drivers.plan import InputRule, RowPlan, inputs_in_rows, known_replies, link_of
 
@@ -65,23 +65,21 @@ class RowText:
         number = _NUMBER.replace(rb"\.", re.escape(point))
         self._number = re.compile(rb"\s*(" + number + rb")\s*")
         self._number_and_unit = re.compile(rb"\s*(" + number + rb")\s*([^\d\s].*)")
-        self._groups: tuple[int, ...] = ()
-        self._check_group = 0
-        self._plain = self._plain_form()
         self._hex = b"%%0%dX" % self.check_digits
+        self._line_bytes_max = dialect.line_bytes_max
+        self._check_of = check_function(dialect.checksum)
+        self._groups: tuple[int, ...] = ()
+        self._plain = self._plain_form()
 
     def plain(self, line: bytes) -> tuple[float, ...] | None:
         """The numbers of a row of the usual plain form, quickly; None: ask `classify`."""
         found = self._plain.fullmatch(line) if self._plain is not None else None
-        if found is None or len(line) > self.dialect.line_bytes_max:
+        if found is None or len(line) > self._line_bytes_max:
             return None
-        if self.check_digits:
-            head = line[: found.start(self._check_group) - len(self.separator)]
-            if found[self._check_group] != self._hex % check_value(self.dialect.checksum, head):
-                return None
-        if len(self._groups) == 1:
-            return (float(found[self._groups[0]]),)
-        return tuple(map(float, found.group(*self._groups)))
+        head, check, *fields = found.group(*self._groups)
+        if check and int(check, 16) != self._check_of(head):
+            return None
+        return tuple(map(float, fields))
 
     def _plain_form(self) -> re.Pattern[bytes] | None:
         """Prefix, exact fields of up to 15 digits without blanks or units, check. Other rows are left to
@@ -96,10 +94,10 @@ class RowText:
         ]
         if (self.dialect.columns or self.fields_min) != self.fields_min or len(self.separator) > 1:
             return None
-        self._groups = tuple(columns.index(want.column) + 1 for want in self.wants if want.column is not None)
-        self._check_group = len(columns) + 1
-        check = separator + rb"([0-9A-F]{%d})" % self.check_digits if self.check_digits else b""
-        return re.compile(re.escape(self.prefix) + separator.join(fields) + check)
+        places = (columns.index(want.column) + 2 for want in self.wants if want.column is not None)
+        self._groups = (1, len(columns) + 2, *places)
+        check = separator + rb"([0-9A-F]{%d})" % self.check_digits if self.check_digits else b"()"
+        return re.compile(b"(" + re.escape(self.prefix) + separator.join(fields) + b")" + check)
 
     def classify(self, line: bytes) -> tuple[float, ...] | Reason | bytes | None:
         """The row's numbers in plan order, why it is rejected, the text of a reply, or None for a blank

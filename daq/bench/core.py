@@ -20,7 +20,7 @@ from daq.stream.payloads import pack_block, pack_event, pack_raw
 from daq.watch.pipeline import Pipeline
 from daq.watch.requests import Request, StopRequest
 from daq.watch.values import Event, Json, Move, Severity, State, Step, Stop
-from drivers.decoded import Decoded, Decoder
+from drivers.decoded import Decoded, Decoder, ShowsRows
 from drivers.health import LinkFault, LinkHealth
 from drivers.motion import (
     Acknowledged,
@@ -112,6 +112,7 @@ class BenchCore:
         self._stops_left = 0
         if at_once is not None:
             pipeline.tell_stops(self._write_stop)
+            self._look_early()
 
     def seconds(self, now_ns: int) -> float:
         """Stream time of a monotonic instant, s."""
@@ -126,6 +127,7 @@ class BenchCore:
         for block in decoded.blocks:
             self._heard_s = now_s
             self._obey(self.pipeline.advance(block, now_s), now_ns)
+        assert self._stops_left == 0, "a STOP was written that no step contains"
         if decoded.blocks or decoded.discarded_bytes or decoded.rejected:
             self._decoded.append((now_ns, link, decoded))
         if decoded.inputs:
@@ -183,6 +185,7 @@ class BenchCore:
     def reopened(self, link: int, decoder: Decoder, now_ns: int) -> list[Write]:
         """A lost link is back. Nothing resumes by itself."""
         self._decoders[link] = decoder
+        self._look_early()
         self._health[link] = LinkHealth(self._frame.links[link])
         now_s = self.seconds(now_ns)
         if (
@@ -232,9 +235,20 @@ class BenchCore:
             elif isinstance(action, Move):
                 self._move(action, now_ns)
 
-    def _write_stop(self, stop: Stop) -> None:
+    def _look_early(self) -> None:
+        """Have the decoder of the force's link show its rows as soon as they are read."""
+        decoder = self._decoders[self.pipeline.setup.force.source]
+        if self._at_once is not None and isinstance(decoder, ShowsRows):
+            decoder.show_rows(self._look)
+
+    def _look(self, row: tuple[float, ...]) -> None:
+        """A row that will be judged in a moment: where it ends in a Stop, the Stop is written now."""
+        if self.pipeline.would_stop(row):
+            self._write_stop()
+
+    def _write_stop(self, _: Stop | None = None) -> None:
         """A Stop was decided this moment. It must not overtake what was to be written before it."""
-        if self._stop_write is None or self._at_once is None or self._writes:
+        if self._stop_write is None or self._at_once is None or self._writes or self._stops_left:
             return
         self._stops_left += self._at_once(self._stop_write)
 

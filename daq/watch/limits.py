@@ -163,6 +163,13 @@ class ForceJudge:
         self.outside.clear()
         self.outliers += 1
 
+    def next_passes(self, gross_n: float) -> int | None:
+        """The row that `judge` would find passed by this number as the next sample; changes nothing."""
+        for place, (row, low_n, high_n, samples, _) in enumerate(self._rows):
+            if not low_n <= gross_n <= high_n and self.outside.get(place, 0) + 1 >= samples:
+                return row
+        return None
+
     def judge(self, gross_n: float) -> Trip | None:
         """One sample that is not inside [low_n, high_n]; the gravest row that is passed, or None."""
         if gross_n != gross_n:

@@ -8,7 +8,7 @@ scalar definition decides. Both give the same answer, and so does any cut of the
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from math import isfinite
 
 from daq.cards.frame import FrameCard
@@ -108,6 +108,18 @@ class Pipeline:
                 position.other_block(core, block)
         self._tick(now_s)
         return core.take_step()
+
+    def would_stop(self, row: Sequence[float]) -> bool:
+        """Would this row of the force's link, taken next, stop a loading at a limit? Changes nothing: the bench asks
+        it of a row that has been read and not yet numbered or timed, so that STOP need not wait for that work. Only for
+        force above the limits: below zero a ring-down has to be told from a wrong sign, which needs the time.
+        """
+        force, core = self._force, self._core
+        gross_n = force.sign * (row[force.column] * force.scale + force.offset)
+        if not gross_n > core.judge.high_n or not core.watched or core.stopping is not None:
+            return False
+        passed = core.judge.next_passes(gross_n)
+        return passed is not None and passed not in core.tripped_rows and not core.monitor_only
 
     def inputs(self, values: Mapping[str, bool | None], now_s: float) -> Step:
         """Status inputs as the machine tells them; None is not known, and counts as a fault where it matters."""
