@@ -172,9 +172,8 @@ def judge_stop(found: Mapping[str, Any]) -> None:
     if found["event"] == "stop_failed":
         raise MidspanError("the frame went on moving after STOP: see to the drive before anything else")
     if not found["verified"] or found["run_on_mm"] is None:
-        raise MidspanError(
-            "no displacement sensor saw the standstill: the stop cannot be proven on this frame"
-        )
+        why = found.get("why") or "no position is known"
+        raise MidspanError(f"the standstill was not seen ({why}): the stop cannot be proven on this frame")
     click.echo(f"Stood still after {found['after_s']:.3f} s, run-on {abs(found['run_on_mm']) * 1e3:.1f} um")
     if found["after_s"] > STOP_S_MAX:
         raise MidspanError(

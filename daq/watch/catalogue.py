@@ -38,7 +38,8 @@ EVENTS: Mapping[str, str] = {
     "limit_outlier": "One single sample outside a limit: counted, not obeyed.",
     "limit_tightened": "A limit was lowered: key, value, before.",
     "stop_sent": "A stop was commanded: reason, attempt.",
-    "stopped": "The crosshead stands: run_on_mm, after_s, verified (False: nothing to see it by).",
+    "stopped": "The crosshead stands: run_on_mm, after_s, verified, seen_by (position, force, the machine's own word); "
+    "verified False: it has not been seen to stand, why.",
     "stop_failed": "The machine goes on moving after the stop: press the emergency stop.",
     "reset": "A latched state was cleared by a person: who, looked.",
     "proven": "Polarity and stop drill were recorded as proven: polarity, stop_drill, who.",

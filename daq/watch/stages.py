@@ -6,6 +6,7 @@ Nothing here judges force limits or breaks: those come sample by sample, before 
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
+from math import sqrt
 
 from daq.watch import aftermath, signal, zero
 from daq.watch.core import Core, Run
@@ -23,8 +24,8 @@ from daq.watch.motion import (
 )
 from daq.watch.pace import Pace
 from daq.watch.seating import TOE_SHARE, Seated, Seating, seating_window_s, slope_u_n_s
-from daq.watch.states import ARMED, Cause
-from daq.watch.stopping import Outcome
+from daq.watch.states import ARMED, BROKEN, Cause
+from daq.watch.stopping import Force, Outcome
 from daq.watch.values import Move, MoveKind, Severity, State, Verdict
 
 PRELOAD_HIGH_SHARE = 0.10
@@ -33,6 +34,7 @@ NOISE_TIMES, NOISY_S = 3.0, 2.0
 LATE_SHARE = 0.95
 LOOK_FROM, LOOK_TO, LOOK_OFF_BY = 0.25, 0.5, 0.15
 STOP_FAILED_ROW = 26
+TOUCHING_SHARE, TOUCHING_STIFFNESS = 0.1, 0.5  # beyond the toe; half of what was planned
 
 
 def beat(core: Core) -> None:
@@ -58,21 +60,39 @@ def _look_at_stop(core: Core) -> None:
     check = core.stopping
     assert check is not None
     travel = core.travel if core.travel is not None and core.travel.at_mm is not None else None
-    force_n = core.watch.level.newest_n or 0.0
-    rise_n = max(6.0 * core.sigma_n, 0.01 * core.setup.capacity_n)
-    look = check.look(core.clock_s, travel, core.inputs.get("moving"), force_n, rise_n)
+    look = check.look(core.clock_s, travel, core.inputs.get("moving"), _force_witness(core))
     if look.repeat:
         core.repeat_stop()
     if look.outcome is Outcome.FAILED:
         stop_failed(core, look.why, look.row)
     elif look.outcome is not None:
         core.stopping = None
+        stands = look.outcome is Outcome.STANDS
         core.emit(
             "stopped",
             run_on_mm=check.run_on_mm(travel),
             after_s=core.clock_s - check.begun_s,
-            verified=look.outcome is Outcome.STANDS,
+            verified=stands,
+            seen_by=look.why if stands else None,
+            why=None if stands else look.why,
         )
+
+
+def _force_witness(core: Core) -> Force:
+    """The force as a second witness of a standstill: beyond the toe, on a bar that is not broken."""
+    level, run = core.watch.level, core.run
+    force_n = level.newest_n or 0.0
+    stiffness_n_mm = 0.0
+    if run is not None and run.contact_s is not None and core.state not in BROKEN and run.finding is None:
+        expected = run.plan.expected
+        if force_n > TOUCHING_SHARE * expected.load_p50_n:
+            stiffness_n_mm = TOUCHING_STIFFNESS * expected.stiffness_n_mm
+    return Force(
+        force_n=force_n,
+        rise_n=max(6.0 * core.sigma_n, 0.01 * core.setup.capacity_n),
+        sigma_n=level.sigma_n / sqrt(level.bin_samples),
+        stiffness_n_mm=stiffness_n_mm,
+    )
 
 
 def stop_failed(core: Core, why: str, row: int = STOP_FAILED_ROW) -> None:

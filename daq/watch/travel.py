@@ -99,6 +99,17 @@ class Travel:
         spread = sum((t - mid_s) ** 2 for t, _ in points)
         return sum((t - mid_s) * x for t, x in points) / spread
 
+    def mean_mm(self, window_s: float) -> float:
+        """Mean position over the last window; NaN where there is none."""
+        if not self._points:
+            return float("nan")
+        first_s, total_mm, count = self._points[-1][0] - window_s, 0.0, 0
+        for time_s, at_mm in reversed(self._points):
+            if time_s < first_s:
+                break
+            total_mm, count = total_mm + at_mm, count + 1
+        return total_mm / count
+
     def begin_move(self) -> None:
         """The furthest point is counted from here."""
         self.top_mm = self.at_mm if self.at_mm is not None else float("-inf")

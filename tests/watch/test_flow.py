@@ -29,7 +29,7 @@ from daq.watch.requests import (
 )
 from daq.watch.states import Cause
 from daq.watch.values import Move, MoveKind, Severity, State, Stop
-from tests.watch.frames import FORCE_STEP_N, frame, method, open_run
+from tests.watch.frames import FORCE_STEP_N, POSITION_STEP_MM, frame, method, open_run
 from tests.watch.rig import Machine, Rig
 
 FAST = {"rate__speed_mm_min": 3.0}
@@ -216,7 +216,29 @@ def test_without_a_position_the_stop_is_said_to_be_unverified() -> None:
     rig.loading(method(**FAST), load_n=80.0)
     rig.ask(StopRequest())
     rig.to_close()
-    assert rig.named("stopped")[-1]["verified"] is False
+    told = rig.named("stopped")[-1]
+    assert (told["verified"], told["seen_by"], told["why"]) == (False, None, "no position is known")
+
+
+@pytest.mark.slow
+def test_what_the_position_cannot_show_is_said_and_not_taken_for_a_standstill() -> None:
+    """0.1 mm/min against steps of 1 um: nothing shows it within 3 s of a break; on a sound bar the force does."""
+    for strength_n, shown in (
+        (60.0, (False, None, "slower than the position channel can show")),
+        (1e9, None),
+    ):
+        rig = quick(channels__1__scale=1e-3)
+        rig.machine.strength_n = strength_n
+        rig.position_of = lambda t, at: round(at / 1e-3) * POSITION_STEP_MM
+        rig.started(method(rate__speed_mm_min=0.1, limits__run_s_max=600.0))
+        rig.run_until(lambda rig=rig: rig.machine.broken or (rig.pipe.snapshot()["net_n"] or 0) > 90.0, 60.0)  # type: ignore[misc]
+        if shown is None:
+            rig.ask(StopRequest())
+            shown = (True, "force", None)
+        rig.run_for(4.0)
+        told = rig.named("stopped")[-1]
+        assert (told["verified"], told["seen_by"], told["why"]) == shown
+        assert not rig.named("stop_failed")
 
 
 # --- what the bar does
