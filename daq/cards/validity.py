@@ -145,6 +145,6 @@ class Rounding(Card):
 
     stress_step_mpa: Annotated[Positive | None, about("MPa", "strengths are a multiple of this")] = None
     stress_digits: Annotated[
-        int | None, Field(ge=1, le=6), about("", "or have this many significant digits")
+        int | None, Field(ge=1, le=6), about("", "strengths have this many significant digits")
     ] = None
     force_step_n: Annotated[Positive | None, about("N", "breaking forces are a multiple of this")] = None

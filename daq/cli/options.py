@@ -21,6 +21,20 @@ DATA = click.option(
 
 FRAME_CARD = click.argument("frame_card", type=click.Path(dir_okay=False, path_type=Path))
 
+METHOD_FOLDERS = click.option(
+    "--methods",
+    type=click.Path(file_okay=False, path_type=Path),
+    multiple=True,
+    help="Folder of your own method cards; may be given several times. Always looked into: the user's configuration "
+    "folder, midspan/methods.",
+)
+
+
+def method_folders(given: tuple[Path, ...]) -> tuple[Path, ...]:
+    """Folders of own method cards, the given ones first; the user's own folder where it is there."""
+    own = Path(platformdirs.user_config_dir("midspan")) / "methods"
+    return (*given, own) if own.is_dir() else given
+
 
 def running_places(frame: str | None) -> Places:
     """The frame that is meant: the named one, or the only one that is served."""
