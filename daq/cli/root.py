@@ -23,6 +23,7 @@ COMMANDS = {
     "methods": "List and show method cards, each value with its mark.",
     "verify": "Check sealed records and journals; name the first damaged block.",
     "recover": "Rebuild records from journals that a crash left behind.",
+    "note": "Break note, correction, verdict or remark beside a sealed record.",
     "export": "Write sealed records as CSV, units in the column names.",
 }
 FAILED, BAD_WORDS = 1, 2  # exit codes: it could not be done; the command line was not understood

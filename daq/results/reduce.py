@@ -19,12 +19,15 @@ from daq.results.course import bending_beside, course_of
 from daq.results.loading import Loading, fall_time_constant_s, loading_of
 from daq.results.loads import loads_of, peak_of
 from daq.results.remarks import Facts, remarks_of
-from daq.results.result import Counting, Loads, Result, Stresses
+from daq.results.result import Loads, Result, Stresses
+from daq.results.rules import Remark, rules_of
 from daq.results.samples import samples_of
+from daq.results.secondlook import explanations
 from daq.results.setup import setup_from_cards
 from daq.results.stiffness import modulus_of, strain_of
 from daq.results.story import story_of
 from daq.results.uncertainty import Uncertainty, uncertainty_of
+from daq.results.verdict import Evidence, Verdict, judge
 from daq.results.zero import AfterZero, after_zero_of
 from daq.stream.block import Floats
 from daq.stream.rundata import ChannelData, RunData
@@ -63,13 +66,15 @@ def _reduce(run: RunData) -> Result:
         aligned=bending is not None and bending.aligned,
     )
     interrupted = not story.broken if story.interrupted is None else story.interrupted
+    break_class = story.closed_verdict if story.fracture is None else story.fracture.verdict
+    stresses, remarks = _stresses(loading, loads, after), remarks_of(facts)
     return Result(
-        counting=Counting.INTERRUPTED if interrupted else Counting.PROVISIONAL,
-        break_class=story.closed_verdict if story.fracture is None else story.fracture.verdict,
+        verdict=_verdict(loading, interrupted, break_class, remarks, missing, stresses),
+        break_class=break_class,
         interrupted=interrupted,
         reason=story.reason,
         loads=loads,
-        stresses=_stresses(loading, loads, after),
+        stresses=stresses,
         course=course,
         modulus=modulus_of(bending, samples, setup, loading.inside, loading.highest_n),
         tare_n=None if story.tare is None else story.tare.tare_n,
@@ -82,8 +87,34 @@ def _reduce(run: RunData) -> Result:
         sample_period_s=_finite(samples.period_s),
         events=_short_events(run),
         missing=missing,
-        remarks=remarks_of(facts),
+        remarks=remarks,
     )
+
+
+def _verdict(
+    loading: Loading,
+    interrupted: bool,
+    break_class: str,
+    remarks: tuple[Remark, ...],
+    missing: tuple[str, ...],
+    stresses: Stresses,
+) -> Verdict:
+    """By the method's rules, from what is known at the close: nobody has looked at the pieces yet."""
+    setup, ratio = loading.setup, loading.story.stiffness_ratio
+    told = () if ratio is None else explanations(ratio, setup.section, setup.spans)
+    evidence = Evidence(
+        broken=loading.story.broken,
+        interrupted=interrupted,
+        reason=loading.story.reason,
+        break_class=break_class,
+        remarks=remarks,
+        missing=missing,
+        has_strength=stresses.strength_mpa is not None,
+        spans=setup.spans,
+        stiffness_ratio=ratio,
+        explained=" or ".join(one.text for one in told),
+    )
+    return judge(evidence, rules_of(setup.method))
 
 
 def result_mapping(run: RunData) -> dict[str, Any]:

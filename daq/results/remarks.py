@@ -8,7 +8,8 @@ from dataclasses import dataclass
 from daq.cards.method import MethodCard
 from daq.mechanics.deflection import load_point_stiffness_n_mm
 from daq.mechanics.rates import force_rate_for_stress_rate_n_s, force_rate_n_s
-from daq.results.result import Course, Loads, Remark
+from daq.results.result import Course, Loads
+from daq.results.rules import Remark
 from daq.results.setup import Setup
 from daq.results.story import Story
 from daq.results.uncertainty import Uncertainty

@@ -9,33 +9,17 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass
-from enum import Enum
 from typing import Any
 
 from daq.results.peak import Peak
+from daq.results.rules import Counting, Remark
 from daq.results.stiffness import Modulus
 from daq.results.tracking import Rates
 from daq.results.uncertainty import COVERAGE, Contributor, Uncertainty
+from daq.results.verdict import Verdict
 from daq.results.zero import AfterZero
 
 SCHEMA_VERSION = 1
-
-
-class Counting(Enum):
-    """Whether a bar counts is judged by the method's rules and a person; the reduction only says what it
-    can.
-    """
-
-    PROVISIONAL = "provisional"
-    INTERRUPTED = "interrupted"
-
-
-@dataclass(frozen=True, slots=True)
-class Remark:
-    """Something a reader of the number must know. code is fixed, text carries the figures."""
-
-    code: str
-    text: str
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,7 +70,7 @@ class Course:
 class Result:
     """The whole reduction of one loading."""
 
-    counting: Counting
+    verdict: Verdict
     break_class: str
     interrupted: bool
     reason: str
@@ -106,11 +90,15 @@ class Result:
     missing: tuple[str, ...]
     remarks: tuple[Remark, ...]
 
+    @property
+    def counting(self) -> Counting:
+        return self.verdict.counting
+
     def as_json(self) -> dict[str, Any]:
         """Plain values only; a number that is not finite becomes null."""
         return {
             "schema": SCHEMA_VERSION,
-            "verdict": self.counting.value,
+            **self.verdict.as_json(),
             "break_class": self.break_class,
             "interrupted": self.interrupted,
             "reason": self.reason,

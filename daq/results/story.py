@@ -68,6 +68,7 @@ class Story:
     unloaded: bool | None
     shift_n: float | None
     shift_flagged: bool
+    stiffness_ratio: float | None
     closed_verdict: str
     interrupted: bool | None
     reason: str
@@ -119,6 +120,7 @@ def story_of(events: Sequence[Mapping[str, Any]]) -> Story:
         unloaded=None if residual is None else bool(residual.get("unloaded")),
         shift_n=number(after, "shift_n"),
         shift_flagged=bool(after is not None and after.get("flagged")),
+        stiffness_ratio=number(last.get("second_look"), "ratio"),
         closed_verdict="" if closed is None else str(closed.get("verdict", "")),
         interrupted=None if interrupted is None else bool(interrupted),
         reason="" if closed is None else str(closed.get("reason", "")),

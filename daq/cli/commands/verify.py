@@ -12,7 +12,8 @@ from daq.errors import MidspanError
 @click.command()
 @click.argument("paths", type=click.Path(path_type=Path), nargs=-1, required=True, metavar="PATH...")
 def command(paths: tuple[Path, ...]) -> None:
-    """Check sealed records (every digest, every entry's CRC and number, the account) and journal folders (the chain).
+    """Check sealed records (every digest, every entry's CRC and number, the account), their notes and journal
+    folders (the chains).
 
     Exit code 0 when all are whole; 1 when one is not, with the first damaged block named. Changes nothing.
 
@@ -42,7 +43,17 @@ def record_problems(path: Path) -> tuple[str, ...]:
         click.echo(
             f"{path}: whole: {report.entries} entries, {report.rows} rows, {report.gaps} gaps; {account}"
         )
-    return tuple(report.problems)
+    return (*report.problems, *notes_problems(path))
+
+
+def notes_problems(path: Path) -> tuple[str, ...]:
+    """The notes beside it, where there are any or were."""
+    from daq.record.notes import notes_path, read_notes
+
+    kept = read_notes(path)
+    if kept.notes and not kept.problems:
+        click.echo(f"{notes_path(path)}: whole: {len(kept.notes)} notes, chain head {kept.head}")
+    return kept.problems
 
 
 def journal_problems(path: Path) -> tuple[str, ...]:
