@@ -8,6 +8,7 @@ from enum import Enum
 from types import MappingProxyType
 
 from daq.cards.method import MethodCard
+from daq.cards.validity import Outcome
 from daq.mechanics.sections import Spans
 
 
@@ -98,8 +99,28 @@ class Rules:
         return self.consequences.get(code, DEFAULTS.get(code, Consequence.REMARK))
 
 
+OUTCOMES: Mapping[Outcome, Consequence] = MappingProxyType({
+    "counted": Consequence.NOTHING,
+    "remark": Consequence.REMARK,
+    "not counted": Consequence.NOT_COUNTED,
+})  # fmt: skip
+
+
 def rules_of(method: MethodCard | None) -> Rules:
-    """The rules a method card states."""
+    """The rules a method card states; what it leaves out is no rule."""
     if method is None:
         return Rules()
-    return Rules(source=f"rules of method {method.name}")
+    place = method.validity.break_place
+    standard = f" ({method.standard} {method.edition}".rstrip() + ")" if method.standard else ""
+    return Rules(
+        place=PlaceRule(
+            region=Region(place.region),
+            near_share=place.near_percent / 100.0,
+            near=OUTCOMES[place.near],
+            near_local=place.near_stress == "at the break",
+            beyond=OUTCOMES[place.beyond],
+            needed=place.needed,
+        ),
+        edge_thickness=method.measuring.thickness_at == "broken edge",
+        source=f"rules of method {method.name}{standard}",
+    )

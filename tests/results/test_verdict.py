@@ -6,10 +6,11 @@ import dataclasses
 
 import pytest
 
+from daq.cards.library import find_method
 from daq.mechanics.breakplace import break_place, from_mid_of_left_mm, local_stress_mpa
 from daq.mechanics.sections import Rectangle, Spans
 from daq.mechanics.stress import beam_stress_mpa, offcentre_stress_mpa
-from daq.results.rules import Consequence, Counting, PlaceRule, Region, Remark, Rules
+from daq.results.rules import Consequence, Counting, PlaceRule, Region, Remark, Rules, rules_of
 from daq.results.secondlook import explanations, off_by
 from daq.results.verdict import Evidence, judge
 
@@ -135,3 +136,11 @@ def test_second_look_against_the_series() -> None:
     assert (
         off_by(460.0, [300.0, 340.0, 380.0, 420.0, 460.0]) is None
     )  # within 4 robust sigma of a wide series
+
+
+def test_the_rules_come_from_the_card() -> None:
+    """The shipped card of ASTM C78 states the 5 % rule (confirmed from a public excerpt), that of tiles the edge."""
+    concrete = rules_of(find_method("C78").card)
+    assert concrete.place == FIVE_PERCENT and "C78" in concrete.source
+    assert rules_of(find_method("ISO-10545-4").card).edge_thickness
+    assert rules_of(None) == Rules()
