@@ -214,8 +214,9 @@ class VirtualBench:
         return True
 
     def _keep(self) -> None:
-        for kind, monotonic_ns, payload in self.core.entries():
-            self.entries.append(Entry(kind, STREAM_ID, self._next_sequence, monotonic_ns, payload))
-            self._next_sequence += 1
-            if kind is Kind.EVENT:
-                self.events.append(unpack_event(payload))
+        while batch := self.core.entries():
+            for kind, monotonic_ns, payload in batch:
+                self.entries.append(Entry(kind, STREAM_ID, self._next_sequence, monotonic_ns, payload))
+                self._next_sequence += 1
+                if kind is Kind.EVENT:
+                    self.events.append(unpack_event(payload))

@@ -34,9 +34,10 @@ from drivers.motion import (
 
 NewEntry: TypeAlias = tuple[Kind, int, bytes]
 
+RING_FULL = "ring_full"  # reason for rows that were decoded and found no room in the ring
 LINK_FAULTS = {LinkFault.TOO_FAST: "too_fast", LinkFault.GARBAGE: "protocol"}
-RECORDER_CAUTION_S = 10.0  # job map 4, row 27
-RECORDER_STOP_S = 45.0  # job map 4, row 27; the ring holds 60 s
+RECORDER_CAUTION_S = 10.0
+RECORDER_STOP_S = 45.0  # the ring holds 60 s
 KEPT_ALIVE = frozenset(
     {
         State.APPROACHING,
@@ -103,6 +104,7 @@ class BenchCore:
         self.discarded_bytes = 0
         self.rejected: dict[str, int] = {}
         self._account = [Account() for _ in frame.links]
+        self._offered: list[tuple[int, int]] = []  # link and rows of the last batch
         self._health = [LinkHealth(link) for link in frame.links]
         self._recorder_word = ""
         self._link_faults: list[tuple[LinkFault, ...]] = [() for _ in frame.links]
@@ -206,22 +208,44 @@ class BenchCore:
         self._steps.append((now_ns, Step(events=(event,))))
 
     def entries(self) -> list[NewEntry]:
-        """What happened since the last call, ready for the ring; RAW stands directly before its BLOCK."""
+        """What happened since the last call, ready for the ring; RAW stands directly before its BLOCK. Call until
+        there is nothing: the end of a run is a batch of its own, so that its account knows what became of the rows
+        before it. Where the ring had no room, say so with `refused` before the next call.
+        """
         out: list[NewEntry] = []
+        self._offered.clear()
         for now_ns, link, data in self._received:
             out.append((Kind.RAW, now_ns, pack_raw(link, False, data)))
         for now_ns, link, decoded in self._decoded:
             self._count(decoded, link, now_ns, out)
-        for now_ns, step in self._steps:
-            for event in step.events:
-                self._book(event, now_ns, out)
-        for now_ns, link, data in self._sent:
-            out.append((Kind.RAW, now_ns, pack_raw(link, True, data)))
         self._received.clear()
         self._decoded.clear()
-        self._steps.clear()
+        if not self._book_steps(out):
+            return out
+        for now_ns, link, data in self._sent:
+            out.append((Kind.RAW, now_ns, pack_raw(link, True, data)))
         self._sent.clear()
         return out
+
+    def _book_steps(self, out: list[NewEntry]) -> bool:
+        """The events so far; False where the end of a run has to wait for the rows of this batch."""
+        for place, (now_ns, step) in enumerate(self._steps):
+            for number, event in enumerate(step.events):
+                if event.name == "run_closed" and self._offered:
+                    self._steps[: place + 1] = [(now_ns, Step(events=step.events[number:]))]
+                    return False
+                self._book(event, now_ns, out)
+        self._steps.clear()
+        return True
+
+    def refused(self) -> None:
+        """The ring had no room for the rows of the last batch: they were received, and are not recorded."""
+        for link, rows in self._offered:
+            account = self._account[link]
+            account.recorded -= rows
+            account.reject(RING_FULL, rows)
+            self.rejected[RING_FULL] = self.rejected.get(RING_FULL, 0) + rows
+        self._offered.clear()
 
     # --- obeying
     def _obey(self, step: Step, now_ns: int) -> None:
@@ -337,11 +361,13 @@ class BenchCore:
         out.extend((Kind.BLOCK, now_ns, pack_block(block)) for block in decoded.blocks)
         account = self._account[link]
         account.recorded += decoded.rows
+        if decoded.rows:
+            self._offered.append((link, decoded.rows))
         if decoded.discarded_bytes or decoded.rejected:
             self.discarded_bytes += decoded.discarded_bytes
             for reason, rows in decoded.rejected.items():
                 self.rejected[reason] = self.rejected.get(reason, 0) + rows
-                account.rejected[reason] = account.rejected.get(reason, 0) + rows
+                account.reject(reason, rows)
             told: dict[str, Json] = {
                 "discarded_bytes": decoded.discarded_bytes,
                 "link": link,
@@ -360,6 +386,7 @@ class BenchCore:
         out.append((Kind.EVENT, now_ns, pack_event(flat(event))))
         if event.name == "run_opened":
             self._account = [Account() for _ in self._account]
+            self._offered.clear()  # rows before the opening are nobody's
 
 
 def stop_write(frame: FrameCard) -> Write | None:
@@ -374,6 +401,9 @@ class Account:
 
     recorded: int = 0
     rejected: dict[str, int] = field(default_factory=dict)
+
+    def reject(self, reason: str, rows: int) -> None:
+        self.rejected[reason] = self.rejected.get(reason, 0) + rows
 
     def as_json(self) -> dict[str, Json]:
         received = self.recorded + sum(self.rejected.values())

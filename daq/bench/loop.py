@@ -462,12 +462,12 @@ class BenchProcess:
         self._record()
 
     def _record(self) -> None:
-        entries = self._core.entries()
-        if not entries:
-            return
-        before, self._ring_lost = self._ring_lost, not self._ring.append_batch(entries)
-        if self._ring_lost and not before:
-            self._fault("ring_full", "the ring is full: the recorder does not keep up")
+        while entries := self._core.entries():
+            before, self._ring_lost = self._ring_lost, not self._ring.append_batch(entries)
+            if self._ring_lost:
+                self._core.refused()
+            if self._ring_lost and not before:
+                self._fault("ring_full", "the ring is full: the recorder does not keep up")
 
 
 def main(config_path: str, words: str) -> int:
