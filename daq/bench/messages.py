@@ -35,6 +35,9 @@ CLASSES: Mapping[str, type[Any]] = {
         requests.Note,
         requests.TightenLimit,
         requests.Prove,
+        requests.TakeSeat,
+        requests.TellFault,
+        requests.FaultOver,
     )
 }
 

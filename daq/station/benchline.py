@@ -31,6 +31,9 @@ COMMAND_OF = {
     "Note": "note",
     "TightenLimit": "tighten",
     "Prove": "prove",
+    "TakeSeat": "sit",
+    "TellFault": "room",
+    "FaultOver": "room",
 }
 
 

@@ -19,6 +19,7 @@ EVENTS: Mapping[str, str] = {
     "started": "The deliberate start was given.",
     "run_closed": "End of the loading: run_id, verdict, reason, interrupted.",
     "note": "A remark of the operator, by one key.",
+    "seat_taken": "A named person has taken the operator's seat: operator, before (whose it was; empty: it was free).",
     "second_look": "The stiffness on the way up is off what was planned: ratio.",
     # motion
     "approach_touch": "The force rose above the touch level: force_n, position_mm.",

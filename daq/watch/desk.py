@@ -9,12 +9,13 @@ from __future__ import annotations
 from math import isfinite
 
 from daq.errors import Refused
-from daq.watch import aftermath
+from daq.watch import aftermath, outside
 from daq.watch.core import Core, Run
 from daq.watch.limits import INFINITE
 from daq.watch.motion import approach_mm_min
 from daq.watch.requests import (
     CloseRun,
+    FaultOver,
     Jog,
     Note,
     OpenRun,
@@ -24,6 +25,8 @@ from daq.watch.requests import (
     ReturnCrosshead,
     StartRun,
     StopRequest,
+    TakeSeat,
+    TellFault,
     TightenLimit,
 )
 from daq.watch.setup import Proven, run_setup
@@ -53,6 +56,12 @@ def handle(core: Core, request: Request) -> None:
         core.emit("note", text=request.text)
     elif isinstance(request, TightenLimit):
         _tighten(core, request)
+    elif isinstance(request, TakeSeat):
+        core.emit("seat_taken", operator=request.operator, before=request.before)
+    elif isinstance(request, TellFault):
+        outside.fault(core, request.name, request.detail)
+    elif isinstance(request, FaultOver):
+        core.blocks.pop(request.name, None)
     else:
         _prove(core, request)
 

@@ -90,6 +90,41 @@ class Prove:
     stop_drill: bool
 
 
+@dataclass(frozen=True, slots=True)
+class TakeSeat:
+    """A named person has taken the operator's seat. before: whose it was, "" where it was free."""
+
+    operator: str
+    before: str
+
+
+@dataclass(frozen=True, slots=True)
+class TellFault:
+    """The station has found a fault that only it can see: a name of daq.watch.faults."""
+
+    name: str
+    detail: str
+
+
+@dataclass(frozen=True, slots=True)
+class FaultOver:
+    """It is over, and blocks the start no longer."""
+
+    name: str
+
+
 Request: TypeAlias = (
-    StopRequest | OpenRun | StartRun | CloseRun | Jog | ReturnCrosshead | Reset | Note | TightenLimit | Prove
+    StopRequest
+    | OpenRun
+    | StartRun
+    | CloseRun
+    | Jog
+    | ReturnCrosshead
+    | Reset
+    | Note
+    | TightenLimit
+    | Prove
+    | TakeSeat
+    | TellFault
+    | FaultOver
 )

@@ -20,6 +20,9 @@ EXAMPLES = (
     requests.Note("click"),
     requests.TightenLimit("force_n_max", 300.0),
     requests.Prove("Ines", polarity=True, stop_drill=False),
+    requests.TakeSeat("Olaf", "Ines"),
+    requests.TellFault("disk_low", "3 % free"),
+    requests.FaultOver("disk_low"),
 )
 
 

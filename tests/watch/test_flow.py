@@ -18,6 +18,7 @@ from daq.watch.faults import FAULTS
 from daq.watch.pipeline import Pipeline, Proven
 from daq.watch.requests import (
     CloseRun,
+    FaultOver,
     Jog,
     Note,
     Prove,
@@ -25,6 +26,8 @@ from daq.watch.requests import (
     ReturnCrosshead,
     StartRun,
     StopRequest,
+    TakeSeat,
+    TellFault,
     TightenLimit,
 )
 from daq.watch.states import Cause
@@ -556,6 +559,22 @@ def test_faults_stop_what_moves_and_only_tell_at_rest(name: str) -> None:
     reaction = FAULTS.get(name)
     if reaction is not None and reaction.blocks_start:
         assert any(reaction.what in why for why in refusal(rig, open_run()))
+
+
+def test_what_only_the_station_sees_blocks_the_start_until_it_is_over() -> None:
+    rig = quick().run_for(0.3)
+    rig.ask(TellFault("disk_low", "3 % free"))
+    assert rig.one("fault")["name"] == "disk_low" and not rig.stops()
+    assert "too little room on the disk for a series (3 % free)" in refusal(rig, open_run())
+    rig.ask(FaultOver("disk_low"))
+    rig.ready()
+    assert rig.pipe.state is State.READY
+
+
+def test_a_seat_that_changes_hands_is_an_event_in_every_state() -> None:
+    rig = Rig(clean_start=False).run_for(0.1)
+    rig.ask(TakeSeat("Olaf", "Ines"))
+    assert rig.one("seat_taken") == {"operator": "Olaf", "before": "Ines"}
 
 
 @pytest.mark.slow
