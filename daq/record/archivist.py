@@ -84,7 +84,8 @@ class Archivist:
         self._spool = spool_folder
         self._report = report
         self._stream_is_dead = stream_is_dead
-        self._sealing = Sealing(out_folder, reduce, pulse)
+        self._pulse = pulse
+        self._sealing = Sealing(out_folder, reduce, self._pulse_and_say)
         self._lock = _lock(journal_folder)
         self._mark = read_mark(journal_folder) or Mark(0, 0)
         if afresh:
@@ -264,17 +265,41 @@ class Archivist:
         if not self._follower.open and self._owed is None and now_s - self._marked_s >= MARK_S:
             self._marked_s = now_s
             self._set_mark(max(self._mark.needed_from, self._follower.needed_from), self._mark.copies)
-        if now_s - self._said_s >= STATUS_S:
-            self._said_s = now_s
-            self._report(
-                {
-                    "report": "status" if self._caught_up else "recovering",
-                    "sequence": self._follower.last_sequence,
-                    "run_open": self._follower.open,
-                    "copies_owed": self.copies_owed,
-                    "trouble": self.trouble,
-                }
-            )
+        self._say(now_s)
+
+    def _pulse_and_say(self) -> None:
+        """While a long record is being sealed: we live, and the run in hand is known to a station that comes up now."""
+        self._pulse()
+        self._say(time.monotonic())
+
+    def _say(self, now_s: float) -> None:
+        if now_s - self._said_s < STATUS_S:
+            return
+        self._said_s = now_s
+        self._report(
+            {
+                "report": "status" if self._caught_up else "recovering",
+                "sequence": self._follower.last_sequence,
+                "run": self._run_in_hand(),
+                "copies_owed": self.copies_owed,
+                "trouble": self.trouble,
+            }
+        )
+
+    def _run_in_hand(self) -> dict[str, Any] | None:
+        """The run that is no record yet: still open, or ended and owed."""
+        columns = self._owed or self._columns
+        if columns is None:
+            return None
+        head = columns.head
+        return {
+            "run_id": head.run_id,
+            "series": head.series,
+            "specimen": head.specimen,
+            "loading": head.loading,
+            "closed": self._owed is not None,
+            "interrupted": columns.rows.interrupted,
+        }
 
     # --- trouble --------------------------------------------------------------------------------------------
     def _start_over(self, why: str, now_s: float) -> None:

@@ -55,6 +55,18 @@ class Sealed:
     result: Mapping[str, Any]
 
 
+@dataclass(frozen=True, slots=True)
+class Unsealed:
+    """A run that is no record yet, as the archivist knows it from the journal. closed: it has ended."""
+
+    run_id: str
+    series: str
+    specimen: str
+    loading: int
+    closed: bool
+    interrupted: bool
+
+
 class Sitting:
     """Bars in firing order. Every change comes through one of the methods below."""
 
@@ -120,8 +132,25 @@ class Sitting:
             self._bars[number] = replace(bar, state=BarState.OPEN, loadings=loading, run_id=run_id)
 
     def refused(self, number: str) -> None:
-        """The bench did not open the run: the bar waits as before; its loading number is not reused."""
-        self._bars[number] = replace(self._bars[number], state=BarState.WAITING, run_id="")
+        """The bench did not open the run: the bar is what it was before; its loading number is not reused."""
+        bar = self._bars[number]
+        state = BarState.INTERRUPTED if bar.record else BarState.WAITING
+        self._bars[number] = replace(bar, state=state, run_id="")
+
+    def unsealed(self, run: Unsealed) -> None:
+        """The archivist's word of a run we may not have seen: we were away, or its series was opened only now."""
+        bar = self._bars.get(run.specimen)
+        if bar is None or run.series != self.loaded.card.name:
+            return
+        unknown = run.loading > bar.loadings
+        if unknown or (bar.state is BarState.OPEN and bar.run_id == run.run_id and run.closed):
+            self._bars[run.specimen] = replace(
+                bar,
+                state=BarState.SEALING if run.closed else BarState.OPEN,
+                loadings=run.loading,
+                run_id=run.run_id,
+                interrupted=run.interrupted,
+            )
 
     def closed(self, run_id: str, *, interrupted: bool) -> None:
         """The bench has closed the run; the record is being sealed."""

@@ -78,6 +78,11 @@ class RingReader:
         return int(self._words[W_POSITION]) - self._position
 
     @property
+    def acked_sequence(self) -> int:
+        """The last entry the recorder holds safely; 0 = none."""
+        return int(self._words[W_ACKED_SEQUENCE])
+
+    @property
     def acked_ns(self) -> int:
         """Everything given to the ring before this monotonic instant is recorded; 0 = nothing was said yet."""
         return int(self._words[W_ACKED_NS])

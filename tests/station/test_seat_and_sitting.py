@@ -10,7 +10,7 @@ import pytest
 from daq.cards.load import load_series
 from daq.errors import Refused
 from daq.station.seat import Seat
-from daq.station.sitting import BarState, Sealed, Sitting
+from daq.station.sitting import BarState, Sealed, Sitting, Unsealed
 
 TOKEN, OTHER = "a" * 32, "b" * 32
 
@@ -129,3 +129,52 @@ def test_a_late_interrupted_report_does_not_mend_a_broken_bar() -> None:
     sitting = demo_sitting((sealed(first, 1),))
     sitting.sealed(sealed(first, 2, interrupted=True))
     assert sitting.bar(first).state is BarState.BROKEN
+
+
+def test_a_refused_opening_leaves_an_interrupted_bar_interrupted() -> None:
+    first = demo_sitting().bars[0].specimen.number
+    sitting = demo_sitting((sealed(first, 1, interrupted=True),))
+    sitting.open(first, "r2")
+    sitting.refused(first)
+    bar = sitting.bar(first)
+    assert bar.state is BarState.INTERRUPTED and bar.loadings == 2 and bar.record == f"{first}.h5"
+
+
+def unsealed(number: str, *, closed: bool, interrupted: bool = False, loading: int = 1) -> Unsealed:
+    series = demo_sitting().loaded.card.name
+    return Unsealed("r1", series, number, loading, closed, interrupted)
+
+
+def test_a_bar_whose_record_is_being_sealed_is_not_offered_again_by_a_station_that_was_away() -> None:
+    sitting = demo_sitting()
+    first, second = (bar.specimen.number for bar in sitting.bars[:2])
+    sitting.unsealed(unsealed(first, closed=True))
+    assert sitting.next_number() == second
+    with pytest.raises(Refused, match="being sealed"):
+        sitting.open(first, "r2")
+    sitting.sealed(sealed(first))
+    sitting.unsealed(unsealed(first, closed=True))  # an old word, come late
+    assert sitting.bar(first).state is BarState.BROKEN
+
+
+def test_a_run_that_is_open_at_the_bench_closes_as_the_archivist_tells() -> None:
+    sitting = demo_sitting()
+    first, second = (bar.specimen.number for bar in sitting.bars[:2])
+    sitting.unsealed(unsealed(first, closed=False, interrupted=True))
+    assert sitting.bar(first).state is BarState.OPEN and sitting.next_number() == second
+    sitting.unsealed(unsealed(first, closed=True, interrupted=True))
+    assert sitting.bar(first).state is BarState.SEALING and sitting.next_number() == first
+    with pytest.raises(Refused, match="being sealed"):
+        sitting.open(first, "r2")
+
+
+def test_a_strange_or_known_run_changes_nothing() -> None:
+    sitting = demo_sitting()
+    first = sitting.bars[0].specimen.number
+    sitting.unsealed(unsealed("FOREIGN", closed=True))
+    sitting.open(first, "r1")
+    sitting.unsealed(unsealed(first, closed=False))
+    assert sitting.bar(first).state is BarState.OPEN and sitting.bar(first).loadings == 1
+    sitting.closed("r1", interrupted=False)
+    sitting.unsealed(unsealed(first, closed=False))  # said before the close was read
+    assert sitting.bar(first).state is BarState.SEALING
