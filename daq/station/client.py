@@ -17,6 +17,7 @@ from daq.station.places import Places
 from daq.stream.updates import Update, decode
 
 ANSWER_TIMEOUT_MS = 5_000
+SERIES_TIMEOUT_MS = 60_000  # every record of the series is read
 UPDATES_HELD_MAX = 10_000
 UPDATES_AT_ONCE_MAX = 2_000  # then the caller must get a look in, however fast more come
 
@@ -51,7 +52,7 @@ class Client:
         """One command. Raises Refused with the missing conditions, MidspanError when the station does not answer."""
         message = {"do": command, "seat": self._seat, "at_ns": time.monotonic_ns(), **words}
         self._control.send(json.dumps(message).encode())
-        if not self._control.poll(ANSWER_TIMEOUT_MS):
+        if not self._control.poll(SERIES_TIMEOUT_MS if command == "series" else ANSWER_TIMEOUT_MS):
             raise MidspanError(
                 f"the station of frame {self._places.frame} does not answer; is `midspan serve` running?"
             )

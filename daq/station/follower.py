@@ -53,6 +53,7 @@ class Follower:
         self._online: OnlineReduction | None = None
         self._position_mm = float("nan")
         self._so_far: list[Floats] = []
+        self.generation = 0  # of the trace so far; within one it only grows
 
     # --- in
     def feed(self, entries: Iterable[Entry]) -> list[Tell]:
@@ -82,9 +83,12 @@ class Follower:
         if not self._so_far or self._online is None:
             return {}
         table = np.concatenate(self._so_far)
-        if len(table) > TRACE_SO_FAR_ROWS_MAX:
-            table = thin_minmax(table, 1, TRACE_SO_FAR_ROWS_MAX)
-            self._so_far = [table]
+        if (
+            len(table) > TRACE_SO_FAR_ROWS_MAX
+        ):  # well below, so that it is not thinned at every look from then on
+            table = thin_minmax(table, 1, TRACE_SO_FAR_ROWS_MAX // 2)
+            self.generation += 1
+        self._so_far = [table]
         return self._named(table)
 
     # --- blocks
@@ -166,6 +170,7 @@ class Follower:
         self.tared = False
         self.faults = []
         self._so_far = []
+        self.generation += 1
         method = MethodCard.model_validate(event["method"], strict=False)
         specimen = Specimen.model_validate(event["specimen_card"], strict=False)
         self._online = OnlineReduction(self._frame, method, specimen, str(event["fixture"]))

@@ -1,6 +1,6 @@
 """Room on the disk: enough for the journal at a start, and for ten of the longest runs before a bar is called.
 
-job.md 4, row 27. Looks at the file system; writes nothing.
+Looks at the file system; writes nothing.
 """
 
 from __future__ import annotations
@@ -14,6 +14,7 @@ from daq.errors import MidspanError
 from daq.stream.journal import SEGMENT_BYTES
 
 RUNS_MIN = 10
+FREE_SHARE_MIN = 0.05  # common practice, no source: file systems slow down and fragment beyond
 MODERATE_RUN_S = 60.0  # a bar breaks in 5 to 90 s
 AHEAD_BYTES_MAX = 64 << 20
 SEGMENTS_AT_START = 2  # the one in use and the next
@@ -36,23 +37,39 @@ def check_start(folder: Path, frame: FrameCard) -> None:
         )
 
 
-def missing_for_runs(folder: Path, frame: FrameCard, run_s_max: float) -> str | None:
-    """Why the next bar may not be called, with the arithmetic; None where ten of the longest runs have room."""
-    rate = stream_bytes_per_s(frame)
-    run = rate * run_s_max
-    free = free_bytes(folder)
-    if free >= RUNS_MIN * run:
-        return None
-    return (
-        f"disk of {folder}: {free / MEGA:.0f} MB free are {free / run:.1f} of the longest runs ({run_s_max:g} s at "
-        f"{rate / 1e3:.0f} kB/s = {run / MEGA:.0f} MB), at least {RUNS_MIN} are wanted: make room"
-    )
+def why_too_little(folder: Path, frame: FrameCard, run_s_max: float) -> str:
+    """Why the next bar may not be called, with the arithmetic; "" where ten of the longest runs have room and the disk
+    is not nearly full. run_s_max: of the method, s; 0 while no series is open.
+    """
+    facts = disk_facts(folder)
+    free, total = facts.f_bavail * facts.f_frsize, facts.f_blocks * facts.f_frsize
+    return judge(f"disk of {folder}", free, total, stream_bytes_per_s(frame), run_s_max)
+
+
+def judge(disk: str, free: int, total: int, rate: float, run_s_max: float) -> str:
+    """The rule itself. free, total: bytes; rate: of the stream, bytes/s."""
+    run, share = rate * run_s_max, free / max(1, total)
+    if free < RUNS_MIN * run:
+        return (
+            f"{disk}: {free / MEGA:.0f} MB free are {free / run:.1f} of the longest runs ({run_s_max:g} s at "
+            f"{rate / 1e3:.0f} kB/s = {run / MEGA:.0f} MB), at least {RUNS_MIN} are wanted: make room"
+        )
+    if share < FREE_SHARE_MIN:
+        return (
+            f"{disk}: {free / MEGA:.0f} MB free are {100 * share:.1f} % of it, at least "
+            f"{100 * FREE_SHARE_MIN:.0f} % are wanted: make room"
+        )
+    return ""
 
 
 def free_bytes(folder: Path) -> int:
     """What an ordinary user may still write there."""
+    facts = disk_facts(folder)
+    return facts.f_bavail * facts.f_frsize
+
+
+def disk_facts(folder: Path) -> os.statvfs_result:
     try:
-        facts = os.statvfs(folder)
+        return os.statvfs(folder)
     except OSError as error:
         raise MidspanError(f"data folder {folder}: {error.strerror}: name another with --data") from error
-    return facts.f_bavail * facts.f_frsize

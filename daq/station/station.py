@@ -6,13 +6,14 @@ It can ask the bench for things, never touch a link. If it hangs or dies the ben
 from __future__ import annotations
 
 import asyncio
-import datetime as dt
 import json
 import secrets
 import socket
 import time
 import uuid
-from collections.abc import Mapping
+from collections import deque
+from collections.abc import Callable, Coroutine, Mapping, Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -20,23 +21,25 @@ import zmq
 import zmq.asyncio
 
 from daq.cards.frame import FrameCard
-from daq.cards.load import check_fit, load_series
-from daq.cards.questions import questions
+from daq.cards.load import LoadedSeries, check_fit, load_series
+from daq.cards.questions import Question, questions
 from daq.errors import CardError, MidspanError, Refused
+from daq.station.aside import Aside
+from daq.station.asks import open_run, plain_request, utc_now
 from daq.station.benchline import SILENT_S, BenchLine
 from daq.station.follower import Follower, Tell
 from daq.station.found import found_records, sealed_from_report
 from daq.station.places import Places
 from daq.station.processes import Life, ring_is_ready
 from daq.station.proofs import KINDS, POLARITY, read_proofs, void_polarity, write_proof
-from daq.station.room import missing_for_runs
+from daq.station.room import why_too_little
 from daq.station.seat import Seat
-from daq.station.sitting import Sitting
+from daq.station.sitting import Sealed, Sitting, Unsealed
+from daq.station.tracetext import TraceText, finite
 from daq.stream.ring import RingReader
 from daq.stream.updates import Update, encode
 from daq.version import VERSION
 from daq.watch import requests
-from daq.watch.requests import Request
 
 FOLLOW_S = 0.05  # 20 updates/s for traces
 BEAT_S = 0.1  # snapshot request = heartbeat; the bench stops after 1 s without
@@ -48,7 +51,11 @@ COMMAND_AGE_NS_MAX = (
 )
 ANSWERING_MAX = 16  # commands in work at a time
 BACKLOG_ENTRIES = 256  # in one read of the ring; fewer were simply new
-RECOVERY_WAIT_S = 4.0  # a client waits 5 s for its answer
+RECOVERY_WAIT_S = 3.0  # a client waits 5 s for its answer
+ASIDE_S = 1.5  # what a healthy disk answers at once
+SERIES_S = 55.0  # every record of a series is read whole; the client waits a minute
+ROOM_S = 2.0
+SEALED_KEPT_MAX = 1_000  # reports; a series read meanwhile may have missed them on disk
 FEED_QUEUE_UPDATES_MAX = 1_000  # per viewer; ZeroMQ drops beyond, the numbers show it
 REPORT_BYTES_MAX = 65_536
 FAREWELL_MS = 200  # for the last update; a viewer that does not read holds nobody up
@@ -64,11 +71,20 @@ class Station:
         self._places = places
         self._life = life
         self._frame = FrameCard.model_validate_json(json.dumps(config["frame"]))
+        self._frame_json = config["frame"]
         self._follower = Follower(self._frame)
+        self._trace_text = TraceText()
+        self._aside = Aside()
         self._seat = Seat()
         self._sitting: Sitting | None = None
         self._snapshot: dict[str, Any] = {}
+        self._joined_sequence: int | None = (
+            None  # what was recorded before we came is the archivist's to tell
+        )
         self._caught_up = asyncio.Event()
+        self._unsealed: Unsealed | None = None
+        self._sealed: deque[Mapping[str, Any]] = deque(maxlen=SEALED_KEPT_MAX)
+        self._room_word = ""
         self._answering: set[asyncio.Task[None]] = set()
         self._withdrawal: asyncio.Task[None] | None = None
         self._locked_s: float | None = None  # when the watch last locked the polarity
@@ -87,7 +103,7 @@ class Station:
         self._control = self._context.socket(zmq.ROUTER)
         self._control.bind(self._places.control_address)
         self._reports_socket = self._open_reports()
-        tasks = [asyncio.create_task(body()) for body in (self._follow, self._beat, self._serve, self._end)]
+        tasks = [asyncio.create_task(body()) for body in self._bodies()]
         self._life.ready()
         try:
             done, _ = await asyncio.wait(tasks, return_when=asyncio.FIRST_COMPLETED)
@@ -99,6 +115,9 @@ class Station:
             await asyncio.gather(*tasks, return_exceptions=True)
             self._bench.close()
             self._context.destroy(linger=FAREWELL_MS)
+
+    def _bodies(self) -> tuple[Callable[[], Coroutine[Any, Any, None]], ...]:
+        return (self._follow, self._beat, self._serve, self._watch_room, self._end)
 
     async def _end(self) -> None:
         while not self._life.over():
@@ -112,6 +131,7 @@ class Station:
         while not ring_is_ready(ring):
             await asyncio.sleep(0.01)
         reader = RingReader(ring)
+        self._joined_sequence = reader.acked_sequence
         turn, heard_s = 0, 0.0
         while True:
             while entries := reader.read_new():
@@ -196,16 +216,18 @@ class Station:
             "reports": self._reports,
         }
 
-    def _look(self) -> dict[str, Any]:
+    def _look(self) -> str:
+        """Everything a late joiner needs, as JSON; the trace is encoded once for all who ask."""
         trace = self._follower.trace_so_far()
-        return {
+        rest = {
             "version": VERSION,
-            "frame": self._frame.model_dump(mode="json"),
+            "frame": self._frame_json,
             "state": self._state(),
             "summary": self._summary(),
             "sitting": self._sitting.as_json() if self._sitting else None,
-            "trace": {name: [finite(value) for value in column] for name, column in trace.items()},
         }
+        text = self._trace_text.json(self._follower.generation, trace)
+        return f'{{"ok": true, "look": {json.dumps(rest)[:-1]}, "trace": {text}}}}}'
 
     # --- reports of recorder and archivist
     def _open_reports(self) -> socket.socket:
@@ -229,15 +251,46 @@ class Station:
                 self._reports[str(report.get("from"))] = report
 
     def _note_archivist(self, report: Mapping[str, Any]) -> None:
-        if report.get("report") == "status":  # what recovery says meanwhile is not yet its end
+        """It knows which runs have ended and are no records yet, also those from before our time."""
+        if report.get("report") != "status":  # what recovery says meanwhile is not yet its end
+            return
+        run = report.get("run")
+        self._unsealed = Unsealed(**run) if run else None
+        self._tell_sitting()
+        if self._joined_sequence is not None and int(report["sequence"]) >= self._joined_sequence:
             self._caught_up.set()
 
+    def _tell_sitting(self) -> None:
+        if self._sitting is not None and self._unsealed is not None:
+            self._sitting.unsealed(self._unsealed)
+
     async def _on_sealed(self, report: Mapping[str, Any]) -> None:
-        sealed = sealed_from_report(report)
+        self._sealed.append(report)
         if self._sitting is not None and report.get("series") == self._sitting.loaded.card.name:
-            self._sitting.sealed(sealed)
+            self._sitting.sealed(sealed_from_report(report))
         await self._publish(Tell("result", dict(report)))
         await self._publish(Tell("state", self._state()))
+
+    # --- room on the disk
+    async def _watch_room(self) -> None:
+        """Too little room is a fault of the bench: shown to all, and it blocks the next bar."""
+        while True:
+            try:
+                word = await self._aside.do(
+                    "room", f"data folder {self._places.data}", self._why_no_room, ASIDE_S
+                )
+                if word and word != self._room_word:
+                    await self._bench.ask(requests.TellFault("disk_low", word))
+                elif self._room_word and not word:
+                    await self._bench.ask(requests.FaultOver("disk_low"))
+                self._room_word = word
+            except MidspanError:
+                pass  # bench or disk do not answer just now; asked again
+            await asyncio.sleep(ROOM_S)
+
+    def _why_no_room(self) -> str:
+        run_s_max = self._sitting.loaded.method.limits.run_s_max if self._sitting else 0.0
+        return why_too_little(self._places.data, self._frame, run_s_max)
 
     # --- control
     async def _serve(self) -> None:
@@ -252,11 +305,15 @@ class Station:
 
     async def _respond(self, parts: list[bytes]) -> None:
         answer = await self._answer(parts[-1])
-        await self._control.send_multipart([*parts[:-1], json.dumps(answer).encode()])
+        text = answer if isinstance(answer, str) else json.dumps(answer)
+        await self._control.send_multipart([*parts[:-1], text.encode()])
 
-    async def _answer(self, message: bytes) -> dict[str, Any]:
+    async def _answer(self, message: bytes) -> dict[str, Any] | str:
+        """What goes back, as JSON already where it is long."""
         try:
             command = json.loads(message)
+            if command["do"] == "look":
+                return self._look()
             body = await self._do(str(command["do"]), command)
             return {"ok": True, **body}
         except Refused as error:
@@ -270,15 +327,11 @@ class Station:
 
     async def _do(self, command: str, words: Mapping[str, Any]) -> dict[str, Any]:
         """One command. Everything but looking, sitting down and stopping needs the seat."""
-        if command == "look":
-            return {"look": self._look()}
         if command == "stop":
             await self._bench.ask(requests.StopRequest(str(words.get("who", "control"))))
             return {}
         if command == "sit":
-            token = secrets.token_hex(16)
-            self._seat.sit(str(words["operator"]), token, instead=bool(words.get("instead", False)))
-            return {"seat": token}
+            return await self._sit(words)
         self._seat.check(command, str(words.get("seat", "")))
         if (
             command in MOVING_COMMANDS
@@ -289,7 +342,7 @@ class Station:
             self._seat.rise(str(words["seat"]))
             return {}
         if command == "series":
-            return self._take_series(words)
+            return await self._take_series(words)
         if command == "mount":
             return await self._mount(words)
         if command == "prove":
@@ -297,28 +350,55 @@ class Station:
         await self._bench.ask(plain_request(command, words, self._seat.operator))
         return {}
 
-    def _take_series(self, words: Mapping[str, Any]) -> dict[str, Any]:
-        loaded = load_series(Path(str(words["path"])))
+    async def _sit(self, words: Mapping[str, Any]) -> dict[str, Any]:
+        """Who sits, and instead of whom, stands in the stream: a run may have begun under another name."""
+        before = replace(self._seat)
+        token = secrets.token_hex(16)
+        self._seat.sit(str(words["operator"]), token, instead=bool(words.get("instead", False)))
+        try:
+            await self._bench.ask(requests.TakeSeat(self._seat.operator, before.operator))
+        except Refused:
+            self._seat = before
+            raise
+        return {"seat": token}
+
+    async def _take_series(self, words: Mapping[str, Any]) -> dict[str, Any]:
+        path = Path(str(words["path"]))
+        loaded, asked, found = await self._aside.do(
+            "series",
+            f"card {path} or data folder {self._places.data}",
+            lambda: self._read_series(path),
+            SERIES_S,
+        )
+        self._seat.check("series", str(words.get("seat", "")))  # reading took a while
         run = self._follower.run
         if run is not None and run["series"] != loaded.card.name:
             raise Refused(
                 "series",
                 (f"a run of series {run['series']} is open (bar {run['specimen']}); close it first",),
             )
-        check_fit(self._frame, loaded.method, loaded.card.fixture, f"method of {words['path']}")
-        asked = questions(
-            self._frame, loaded.method, loaded.specimens, fixture=loaded.card.fixture, series=loaded.card
-        )
         grave = tuple(question.line for question in asked if question.must_correct)
         if grave:
             raise Refused("series", grave)
         if asked and not words.get("sure", False):
             return {"questions": [question.line for question in asked]}
-        found = found_records(self._places.data, loaded.card.name)
-        self._sitting = Sitting(loaded, found)
+        lately = [
+            sealed_from_report(report) for report in self._sealed if report["series"] == loaded.card.name
+        ]
+        self._sitting = Sitting(loaded, [*found, *lately])
         if run is not None:
             self._sitting.resume(str(run["specimen"]), int(run["loading"]), str(run["run_id"]))
+        self._tell_sitting()
         return {"questions": [], "sitting": self._sitting.as_json()}
+
+    def _read_series(self, path: Path) -> tuple[LoadedSeries, Sequence[Question], list[Sealed]]:
+        """Everything that touches files; runs beside the loop."""
+        loaded = load_series(path)
+        check_fit(self._frame, loaded.method, loaded.card.fixture, f"method of {path}")
+        asked = questions(
+            self._frame, loaded.method, loaded.specimens, fixture=loaded.card.fixture, series=loaded.card
+        )
+        return loaded, asked, found_records(self._places.data, loaded.card.name)
 
     async def _mount(self, words: Mapping[str, Any]) -> dict[str, Any]:
         if self._sitting is None:
@@ -327,19 +407,23 @@ class Station:
             await asyncio.wait_for(self._caught_up.wait(), RECOVERY_WAIT_S)
         except TimeoutError as error:
             raise Refused(
-                "mount", ("records of an earlier run are still being recovered; try again",)
+                "mount", ("an earlier run is still being sealed or recovered; try again in a moment",)
             ) from error
         sitting = self._sitting
         number = str(words.get("specimen") or sitting.next_number() or "")
         if not number:
             raise Refused("mount", (sitting.why_none(),))
-        no_room = missing_for_runs(self._places.data, self._frame, sitting.loaded.method.limits.run_s_max)
-        if no_room is not None:
+        folder = f"data folder {self._places.data}"
+        no_room = await self._aside.do("mount", folder, self._why_no_room, ASIDE_S)
+        if no_room:
             raise Refused("mount", (no_room,))
         run_id = str(uuid.uuid4())
-        loading = sitting.open(number, run_id)
+        loading, specimen = sitting.open(number, run_id), sitting.bar(number).specimen
+        reason = str(words.get("tare_override_reason", ""))
         try:
-            await self._bench.ask(self._open_run(number, loading, run_id, words))
+            await self._bench.ask(
+                open_run(sitting.loaded, specimen, loading, run_id, self._seat.operator, reason)
+            )
         except Refused:
             sitting.refused(number)
             raise
@@ -393,57 +477,6 @@ class Station:
                 return
             except Refused:
                 await asyncio.sleep(1.0)  # the frame is moving; its stop or arrival comes first
-
-    def _open_run(self, number: str, loading: int, run_id: str, words: Mapping[str, Any]) -> requests.OpenRun:
-        assert self._sitting is not None
-        card = self._sitting.loaded.card
-        run = {
-            "run_id": run_id,
-            "series": card.name,
-            "specimen": number,
-            "loading": loading,
-            "operator": self._seat.operator,
-            "material": card.material,
-            "temperature_c": card.temperature_c,
-            "humidity_percent": card.humidity_percent,
-            "utc": utc_now(),
-            "local": dt.datetime.now().astimezone().isoformat(timespec="milliseconds"),
-            "version": VERSION,
-        }
-        return requests.OpenRun(
-            run=run,
-            specimen=self._sitting.bar(number).specimen.model_dump(mode="json"),
-            method=self._sitting.loaded.method.model_dump(mode="json"),
-            fixture=card.fixture,
-            tare_override_reason=str(words.get("tare_override_reason", "")),
-        )
-
-
-def plain_request(command: str, words: Mapping[str, Any], operator: str) -> Request:
-    """Commands that go to the bench as they are."""
-    if command == "start":
-        return requests.StartRun()
-    if command == "close":
-        return requests.CloseRun(str(words.get("reason", "")) or "operator")
-    if command == "jog":
-        return requests.Jog(float(words["distance_mm"]), float(words["speed_mm_min"]))
-    if command == "return":
-        return requests.ReturnCrosshead(float(words["distance_mm"]), float(words["speed_mm_min"]))
-    if command == "reset":
-        return requests.Reset(operator, looked=bool(words.get("looked", False)))
-    if command == "note":
-        return requests.Note(str(words["text"])[:400])
-    if command == "tighten":
-        return requests.TightenLimit(str(words["key"]), float(words["value"]))
-    raise Refused(command, ("no such command",))
-
-
-def utc_now() -> str:
-    return dt.datetime.now(dt.UTC).isoformat(timespec="milliseconds")
-
-
-def finite(value: float) -> float | None:
-    return float(value) if value == value and abs(value) != float("inf") else None
 
 
 def run_station(config: Mapping[str, Any], places: Places, life: Life) -> int:
