@@ -6,6 +6,7 @@ A port never waits. What nobody reads is dropped by whole pieces and counted: a 
 from __future__ import annotations
 
 import contextlib
+import hashlib
 import ipaddress
 import os
 import pty
@@ -55,11 +56,17 @@ class PtyPort:
     def __init__(self, link: Link, path: Path | None) -> None:
         self._link = link
         self._path = path
+        self._named = False  # whether what stands under the name is ours
+        self._claim = _claim(path, link.name) if path is not None else None
         self._speed = getattr(termios, f"B{link.speed_baud}", None)
         self._master = self._slave = -1
         self._left = b""
         self.dropped_bytes = 0
-        self.appear()
+        try:
+            self.appear()
+        except (OSError, DriverOpenError):
+            self.close()
+            raise
 
     @property
     def title(self) -> str:
@@ -78,12 +85,14 @@ class PtyPort:
         os.set_blocking(self._master, False)
         if self._path is not None:
             _point(self._path, os.ttyname(self._slave), self._link.name)
+            self._named = True
 
     def vanish(self) -> None:
         """Unplugged: readers see the line hang up, and the name is gone."""
         if self._master < 0:
             return
-        if self._path is not None:
+        if self._path is not None and self._named:
+            self._named = False
             with contextlib.suppress(OSError):
                 self._path.unlink()
         os.close(self._master)
@@ -91,7 +100,10 @@ class PtyPort:
         self._master = self._slave = -1
         self._left = b""
 
-    close = vanish
+    def close(self) -> None:
+        self.vanish()
+        if self._claim is not None:
+            self._claim.close()
 
     def read(self) -> bytes:
         try:
@@ -229,6 +241,26 @@ def open_port(link: Link, folder: Path) -> Port:
             driver="simulator",
             device=device,
         ) from error
+
+
+def _claim(path: Path, link: str) -> socket.socket:
+    """The name is ours until we end, however that happens: an abstract socket, which leaves nothing behind.
+
+    Without it a second simulation would quietly turn the name from the first one, whose reader goes on with a machine
+    that nobody else sees.
+    """
+    name = hashlib.sha256(os.fsencode(path.parent.resolve() / path.name)).hexdigest()
+    claim = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM)
+    try:
+        claim.bind(f"\0midspan simulate {name}")
+    except OSError as error:
+        claim.close()
+        raise DriverOpenError(
+            "another simulation is running under this name; end that one first, or run in another folder",
+            driver=f"simulator link {link}",
+            device=str(path),
+        ) from error
+    return claim
 
 
 def _point(path: Path, target: str, link: str) -> None:

@@ -243,6 +243,23 @@ def test_ports_refuse_what_is_not_theirs(tmp_path, make_frame):
     assert (tmp_path / "kiln-lane-a.tty").read_text() == "a note"
 
 
+def test_a_second_simulation_does_not_take_the_name_of_a_living_one(tmp_path, make_frame):
+    """By whatever way the folder is reached; the name is free again once the first one has ended."""
+    link = make_frame().links[0]
+    (tmp_path / "other way").symlink_to(tmp_path)
+    first = open_port(link, tmp_path)
+    stands = os.readlink(tmp_path / "kiln-lane-a.tty")
+    for folder in (tmp_path, tmp_path / "other way"):
+        with pytest.raises(DriverOpenError, match="another simulation is running under this name"):
+            open_port(link, folder)
+    assert os.readlink(tmp_path / "kiln-lane-a.tty") == stands
+    first.vanish()
+    with pytest.raises(DriverOpenError, match="another simulation"):
+        open_port(link, tmp_path)  # unplugged for a moment, not gone
+    first.close()
+    open_port(link, tmp_path).close()
+
+
 def test_a_stale_link_is_replaced_and_a_port_in_use_is_told(tmp_path, make_frame):
     (tmp_path / "kiln-lane-a.tty").symlink_to("/nowhere")
     port = open_port(make_frame().links[0], tmp_path)
