@@ -20,6 +20,7 @@ COMMANDS = {
     "stop": "Stop the crosshead now.",
     "simulate": "A virtual frame on a pty or TCP port.",
     "check": "Check cards, ports and the live bench; moves only for a drill, and asks first.",
+    "plan": "Plan a series: loads, rate, time, gates, cell, number of bars, firing order.",
     "methods": "List and show method cards, each value with its mark.",
     "verify": "Check sealed records and journals; name the first damaged block.",
     "recover": "Rebuild records from journals that a crash left behind.",
