@@ -7,6 +7,7 @@ DriverOpenError with one clear line.
 
 from __future__ import annotations
 
+import errno
 import fcntl
 import os
 import select
@@ -45,6 +46,7 @@ class Link(Protocol):
 
     name: str
     device: str
+    card: LinkCard
     sent_at_open: bytes
 
     def fileno(self) -> int: ...
@@ -72,6 +74,7 @@ class _DescriptorLink(ABC):
     def __init__(self, card: LinkCard, device: str, descriptor: int) -> None:
         self.name = card.name
         self.device = device
+        self.card = card
         self.sent_at_open = b""
         self._descriptor = descriptor
 
@@ -153,16 +156,11 @@ class SerialLink(_DescriptorLink):
 
 
 class TcpLink(_DescriptorLink):
-    """A TCP connection, made within CONNECT_S; small packets leave at once; a dead peer is noticed within
-    seconds."""
+    """A TCP connection; small packets leave at once; a dead peer is noticed within seconds."""
 
-    def __init__(self, card: LinkCard) -> None:
-        device = f"{card.host}:{card.tcp_port}"
-        try:
-            self._socket = socket.create_connection((card.host, card.tcp_port), timeout=CONNECT_S)
-        except OSError as error:
-            why = open_trouble(error.errno, str(error), tcp=True)
-            raise DriverOpenError(why, driver=card.name, device=device) from error
+    def __init__(self, card: LinkCard, connected: socket.socket) -> None:
+        self._socket = connected
+        self.family, self.address = connected.family, connected.getpeername()
         self._socket.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
         self._socket.setsockopt(socket.SOL_SOCKET, socket.SO_KEEPALIVE, 1)
         self._socket.setsockopt(socket.IPPROTO_TCP, socket.TCP_KEEPIDLE, 1)
@@ -170,15 +168,68 @@ class TcpLink(_DescriptorLink):
         self._socket.setsockopt(socket.IPPROTO_TCP, socket.TCP_KEEPCNT, 3)
         self._socket.setsockopt(socket.IPPROTO_TCP, socket.TCP_USER_TIMEOUT, int(CONNECT_S * 1000))
         self._socket.setblocking(False)
-        super().__init__(card, device, self._socket.fileno())
+        super().__init__(card, tcp_device(card), self._socket.fileno())
 
     def _release(self) -> None:
         self._socket.close()
 
 
+def tcp_device(card: LinkCard) -> str:
+    return f"{card.host}:{card.tcp_port}"
+
+
+def connect(card: LinkCard) -> TcpLink:
+    """A TCP connection, made within CONNECT_S; waits for it."""
+    try:
+        return TcpLink(card, socket.create_connection((card.host, card.tcp_port), timeout=CONNECT_S))
+    except OSError as error:
+        raise _not_connected(card, error) from error
+
+
+def _not_connected(card: LinkCard, error: OSError) -> DriverOpenError:
+    why = open_trouble(error.errno, str(error), tcp=True)
+    return DriverOpenError(why, driver=card.name, device=tcp_device(card))
+
+
+class Connecting:
+    """A TCP connection that is being made again, to the address of before: no name is looked up, nothing waits."""
+
+    def __init__(self, before: TcpLink) -> None:
+        """Raises DriverOpenError where it is refused at once."""
+        self._card = before.card
+        self._socket = socket.socket(before.family, socket.SOCK_STREAM | socket.SOCK_NONBLOCK)
+        number = self._socket.connect_ex(before.address)
+        if number not in (0, errno.EINPROGRESS):
+            self.close()
+            raise _not_connected(self._card, OSError(number, os.strerror(number)))
+
+    def link(self) -> Link | None:
+        """The open link; None while the other end has not answered. Raises DriverOpenError where it will not."""
+        poll = select.poll()
+        poll.register(self._socket, select.POLLOUT)
+        if not poll.poll(0):
+            return None
+        number = self._socket.getsockopt(socket.SOL_SOCKET, socket.SO_ERROR)
+        try:
+            if number:
+                raise OSError(number, os.strerror(number))
+            return _begun(TcpLink(self._card, self._socket))
+        except OSError as error:
+            self.close()
+            raise _not_connected(self._card, error) from error
+
+    def close(self) -> None:
+        self._socket.close()
+
+
 def open_link(card: LinkCard) -> Link:
     """Open one port of a frame card, empty its input and send its start command."""
-    link = TcpLink(card) if card.kind == "tcp" else SerialLink(card, device_of(card))
+    return _begun(connect(card) if card.kind == "tcp" else SerialLink(card, device_of(card)))
+
+
+def _begun(link: TcpLink | SerialLink) -> Link:
+    """Input emptied, start command sent."""
+    card = link.card
     try:
         for _ in range(FLUSH_READS):
             if link.read() is None:

@@ -171,7 +171,7 @@ class VirtualBench:
         """The port has vanished, or is there again."""
         if number not in self._lost_s:
             self._lost_s[number] = self.now_s
-            self._obey(self.core.fault("link_lost", self.frame.links[number].name, self.now_ns))
+            self._obey(self.core.lost(number, "unplugged", self.now_ns))
         elif self.now_s >= self._lost_s[number] + REOPEN_S and not self.core.pipeline.armed:
             del self._lost_s[number]
             self._obey(self.core.reopened(number, decoder_for(self.frame, number), self.now_ns))
@@ -210,6 +210,7 @@ class VirtualBench:
         if write.link in self._lost_s:
             return False
         self.sent.append((self.now_s, write.data))
+        self.core.sent(write.link, write.data, self.now_ns)
         self.wire.write(write.data, self.now_s, write.link)
         return True
 

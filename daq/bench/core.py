@@ -1,7 +1,8 @@
 """BenchCore: the bench without its wires. Bytes and requests in; bytes to send and entries to record out.
 
 Pure: it owns no descriptor, clock, file or socket, so that the bench process, the virtual clock and a replay run the
-same lines. The shell must write what a call returns before it takes the entries: stop first, then tell. `at_once`,
+same lines. The shell must write what a call returns before it takes the entries: stop first, then tell; and it says
+with `sent` what has left. `at_once`,
 where the shell gives it, writes a STOP the moment it is decided: what follows from it (states, events, the rest of
 the block) takes longer than all that came before it.
 """
@@ -9,12 +10,13 @@ the block) takes longer than all that came before it.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TypeAlias
 
 from daq.cards.derived import motion_link, silence_s
 from daq.cards.frame import FrameCard
 from daq.errors import Refused
+from daq.stream.block import after_loss
 from daq.stream.entry import Kind
 from daq.stream.payloads import pack_block, pack_event, pack_raw
 from daq.watch.pipeline import Pipeline
@@ -101,6 +103,8 @@ class BenchCore:
         self._decoded: list[tuple[int, int, Decoded]] = []
         self._steps: list[tuple[int, Step]] = []
         self._sent: list[tuple[int, int, bytes]] = []
+        self._opened: set[int] = set()
+        self._after_loss: set[int] = set()
         self.discarded_bytes = 0
         self.rejected: dict[str, int] = {}
         self._account = [Account() for _ in frame.links]
@@ -125,6 +129,9 @@ class BenchCore:
         """Bytes arrived on a link. Returns what must be written now."""
         now_s = self.seconds(now_ns)
         decoded = self._decoders[link].feed(data, now_s)
+        if self._after_loss and link in self._after_loss and decoded.blocks:
+            self._after_loss.discard(link)
+            decoded = replace(decoded, blocks=(after_loss(decoded.blocks[0]), *decoded.blocks[1:]))
         self._received.append((now_ns, link, data))
         for block in decoded.blocks:
             self._heard_s = now_s
@@ -161,8 +168,14 @@ class BenchCore:
         return self.request(StopRequest(who), now_ns)
 
     def fault(self, name: str, detail: str, now_ns: int) -> list[Write]:
-        """Something around the watch broke: link lost, station silent, recorder behind, ring full."""
+        """Something around the watch broke: station silent, recorder behind, ring full."""
         self._obey(self.pipeline.fault(name, detail, self.seconds(now_ns)), now_ns)
+        return self._take_writes()
+
+    def lost(self, link: int, detail: str, now_ns: int) -> list[Write]:
+        """A link broke. Each blocks the start until it is back itself."""
+        name = self._frame.links[link].name
+        self._obey(self.pipeline.fault("link_lost", detail, self.seconds(now_ns), where=name), now_ns)
         return self._take_writes()
 
     def recorder_silence(self, silent_s: float, now_ns: int) -> list[Write]:
@@ -180,13 +193,20 @@ class BenchCore:
 
     def opened(self, link: int, sent: bytes, now_ns: int) -> None:
         """A port is open; what its card sends at opening has been sent."""
-        self.note("link_open", now_ns, link=self._frame.links[link].name)
-        if sent:
-            self._sent.append((now_ns, link, sent))
+        again = link in self._opened
+        self._opened.add(link)
+        self.note("link_open", now_ns, link=self._frame.links[link].name, again=again)
+        self.sent(link, sent, now_ns)
+
+    def sent(self, link: int, data: bytes, now_ns: int) -> None:
+        """These bytes have left: the shell's word, so that the record holds nothing that the machine never got."""
+        if data:
+            self._sent.append((now_ns, link, data))
 
     def reopened(self, link: int, decoder: Decoder, now_ns: int) -> list[Write]:
-        """A lost link is back. Nothing resumes by itself."""
+        """A lost link is back. Nothing resumes by itself, and its first block follows a gap of unknown size."""
         self._decoders[link] = decoder
+        self._after_loss.add(link)
         self._look_early()
         self._health[link] = LinkHealth(self._frame.links[link])
         now_s = self.seconds(now_ns)
@@ -194,7 +214,7 @@ class BenchCore:
             self._motion is not None and link == self._motion_link
         ):  # what was said while it was away was not heard
             self._send(self._motion.encode_stop(now_s), now_ns, urgent=True)
-        self._obey(self.pipeline.fault_over("link_lost", now_s), now_ns)
+        self._obey(self.pipeline.fault_over("link_lost", now_s, where=self._frame.links[link].name), now_ns)
         return self._take_writes()
 
     def modem(self, inputs: dict[str, bool | None], now_ns: int) -> list[Write]:
@@ -281,7 +301,6 @@ class BenchCore:
         data = self._motion.encode_stop(self.seconds(now_ns))
         if self._stops_left:
             self._stops_left -= 1
-            self._sent.append((now_ns, self._motion_link, data))
         else:
             self._send(data, now_ns, urgent=True)
 
@@ -296,7 +315,6 @@ class BenchCore:
     def _send(self, data: bytes, now_ns: int, *, urgent: bool = False) -> None:
         assert self._motion_link is not None
         self._writes.append(Write(self._motion_link, data, urgent))
-        self._sent.append((now_ns, self._motion_link, data))
 
     def _hear(self, reply: bytes, now_ns: int) -> None:
         if self._motion is None:

@@ -7,17 +7,17 @@ entries go into the ring. It refuses nothing and decides nothing itself.
 from __future__ import annotations
 
 import json
-import os
 import select
 import socket
 import sys
 import time
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from typing import Any
 
 from daq.bench import messages
 from daq.bench.core import BenchCore, Health, Write
+from daq.bench.ports import Port
 from daq.bench.schedule import hurry, quiet_collector
 from daq.bench.sockets import bind, boot_offset_ns, receive, reply
 from daq.cards.derived import motion_link
@@ -27,17 +27,15 @@ from daq.stream.ring import Ring
 from daq.watch.pipeline import Pipeline, Proven
 from daq.watch.requests import Jog, OpenRun, ReturnCrosshead, StartRun
 from daq.watch.values import Severity
-from drivers.links import Link, open_link
+from drivers.links import open_link
 from drivers.motion import MotionPort, modem_inputs
 from drivers.registry import decoder_for
 
 TICK_NS = 10_000_000  # silence, keep-alive and status are judged at least every 10 ms
 STOPPER_BEAT_NS = 20_000_000
 ALIVE_NS = 500_000_000
-REOPEN_NS = 1_000_000_000
 STATION_SILENT_NS = 1_000_000_000  # a station silent for 1 s means a controlled stop
 SUSPEND_NS = 500_000_000  # boot-time clock ahead of the monotonic clock: the computer slept
-PSEUDO_TERMINALS = "/dev/pts/"
 HAND_ON_S = 30e-6  # a pseudo-terminal's bytes are handed on by a kernel worker, which must not wait for all we do next
 REQUEST_AGE_NS_MAX = 1_000_000_000  # the station gives up an answer after 1 s; nothing may move after that
 MOVING_REQUESTS = (OpenRun, StartRun, Jog, ReturnCrosshead)
@@ -63,20 +61,6 @@ class BenchConfig:
     proven: dict[str, bool]
     fifo: bool = True
     journal: str = ""  # where the recorder empties the ring; the ring names it
-
-
-@dataclass(slots=True)
-class Port:
-    """One link while it lives, and the command bytes its full output has not taken yet."""
-
-    link: Link
-    pending: bytearray = field(default_factory=bytearray)
-    lost: bool = False
-    reopen_ns: int = 0
-    pseudo: bool = field(init=False)
-
-    def __post_init__(self) -> None:
-        self.pseudo = os.path.realpath(self.link.device).startswith(PSEUDO_TERMINALS)
 
 
 class BenchProcess:
@@ -145,7 +129,8 @@ class BenchProcess:
         number = motion_link(self._frame)
         if number is not None and not self._ports[number].lost:
             try:
-                self._ports[number].link.write(self._stop_bytes)
+                taken = self._ports[number].link.write(self._stop_bytes)
+                self._core.sent(number, self._stop_bytes[:taken], time.monotonic_ns())
             except DriverError:
                 pass  # the cable is out: nothing more can be done from here
 
@@ -159,6 +144,12 @@ class BenchProcess:
             memory_locked=granted.memory_locked,
             machine_watchdog=self._frame.motion is not None and self._frame.motion.keep_alive is not None,
         )
+        self._attach()
+        quiet_collector()
+        self._life.send(b"ready")
+
+    def _attach(self) -> None:
+        """Watch every descriptor."""
         for number, port in enumerate(self._ports):
             self._watch(port.link.fileno(), lambda mask, n=number: self._on_link(n, mask))
             self._core.opened(number, port.link.sent_at_open, time.monotonic_ns())
@@ -167,8 +158,6 @@ class BenchProcess:
         self._watch(self._life.fileno(), self._on_life)
         self._watch(self._stopper.fileno(), self._on_stopper)
         self._hand_links_to_stopper()
-        quiet_collector()
-        self._life.send(b"ready")
 
     def _hand_links_to_stopper(self) -> None:
         motion = self._frame.motion
@@ -319,7 +308,7 @@ class BenchProcess:
                 self._stopper_gone()  # dead, or with seconds of unread beats: it does not live either way
         self._judge_neighbours(now_ns, silent_s)
         for number, port in enumerate(self._ports):
-            if port.lost and now_ns >= port.reopen_ns:
+            if port.lost:
                 self._reopen(number, now_ns)
             elif not port.lost and any(i.source == "modem" for i in self._frame.inputs):
                 self._write(self._core.modem(modem_inputs(self._frame, number, port.link.modem()), now_ns))
@@ -355,15 +344,18 @@ class BenchProcess:
         for write in writes:
             port = self._ports[write.link]
             if port.lost:
+                self._not_sent(write.link, write.data, "the link is lost")
                 continue
             data = write.data
             if write.urgent and port.pending:
+                self._not_sent(write.link, bytes(port.pending), "a STOP went first")
                 port.pending.clear()
                 data = (
                     self._line_end + data
                 )  # closes the half-sent line, so that STOP stands on one of its own
             elif len(port.pending) > PENDING_BYTES_MAX:
                 self._lose(write.link, "the machine takes no more commands")
+                self._not_sent(write.link, data, "the link is lost")
                 continue
             elif port.pending:
                 port.pending += data
@@ -372,7 +364,9 @@ class BenchProcess:
                 taken = port.link.write(data)
             except LinkLost as error:
                 self._lose(write.link, str(error))
+                self._not_sent(write.link, data, "the link is lost")
                 continue
+            self._core.sent(write.link, data[:taken], time.monotonic_ns())
             if taken < len(data):
                 port.pending += data[taken:]
                 self._blocked(write, port)
@@ -388,6 +382,7 @@ class BenchProcess:
             taken = port.link.write(write.data)
         except LinkLost:
             return False
+        self._core.sent(write.link, write.data[:taken], time.monotonic_ns())
         if 0 < taken < len(write.data):
             port.pending += write.data[taken:]
             self._poll.modify(port.link.fileno(), select.POLLIN | select.POLLOUT)
@@ -414,11 +409,14 @@ class BenchProcess:
     def _flush(self, number: int) -> None:
         port = self._ports[number]
         try:
-            del port.pending[: port.link.write(bytes(port.pending))]
+            taken = port.link.write(bytes(port.pending))
         except LinkLost as error:
             self._lose(number, str(error))
             return
+        self._core.sent(number, bytes(port.pending[:taken]), time.monotonic_ns())
+        del port.pending[:taken]
         if not port.pending:
+            self._sum_unsent(number)
             self._poll.modify(port.link.fileno(), select.POLLIN)
 
     def _lose(self, number: int, detail: str) -> None:
@@ -426,27 +424,39 @@ class BenchProcess:
         if port.lost:
             return
         port.lost = True
-        port.reopen_ns = time.monotonic_ns() + REOPEN_NS
         carries_motion = number == motion_link(self._frame)
         if carries_motion:
             self._tell_stopper()  # what cannot be read may still be written to
         self._poll_drop(port.link.fileno())
-        port.link.close()
-        port.pending.clear()
+        waited = port.lose(time.monotonic_ns())
+        if waited:
+            self._not_sent(number, waited, "the link is lost")
         if carries_motion and self._stopper_alive:
             self._hand_links_to_stopper()  # nothing: its copy would keep the port busy and the device's name taken
-        self._fault("link_lost", detail)
+        self._write(self._core.lost(number, detail, time.monotonic_ns()))
+        self._record()
+
+    def _not_sent(self, number: int, data: bytes, why: str) -> None:
+        """Told, not recorded as sent: the machine never got it."""
+        told = self._ports[number].unsent.add(data)
+        if told is not None:
+            self._core.note("not_sent", time.monotonic_ns(), Severity.CAUTION, link=number, why=why, **told)
+
+    def _sum_unsent(self, number: int) -> None:
+        """Bytes leave again: what was not told one by one is told as a count."""
+        told = self._ports[number].sum_unsent()
+        if told is not None:
+            why = "all since the first"
+            self._core.note("not_sent", time.monotonic_ns(), Severity.CAUTION, link=number, why=why, **told)
 
     def _reopen(self, number: int, now_ns: int) -> None:
         port = self._ports[number]
-        port.reopen_ns = now_ns + REOPEN_NS
         if self._core.pipeline.armed:
+            port.give_up()
             return  # nothing is opened while a bar may still be loaded by a command
-        try:
-            port.link = open_link(self._frame.links[number])
-        except DriverError:
+        if not port.open_again(now_ns):
             return  # still away; tried again in a second, the state says signal lost
-        port.lost = False
+        self._sum_unsent(number)
         self._watch(port.link.fileno(), lambda mask, n=number: self._on_link(n, mask))
         self._core.opened(number, port.link.sent_at_open, now_ns)
         if self._stopper_alive:

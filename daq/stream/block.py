@@ -38,3 +38,8 @@ class Block:
     @property
     def count(self) -> int:
         return int(self.time_s.shape[0])
+
+
+def after_loss(block: Block) -> Block:
+    """The first block of a link that is open again after a loss: nobody knows how many samples are missing."""
+    return Block(block.source, block.first_index, block.time_s, block.counts, GAP_UNKNOWN)

@@ -165,7 +165,7 @@ class Core:
         self.stopping: StopCheck | None = None
         self.jog_base_n = 0.0
         self.inputs: dict[str, bool | None] = {status.name: None for status in setup.frame.inputs}
-        self.blocks: dict[str, str] = {}
+        self.blocks: dict[tuple[str, str], str] = {}  # (fault, where) -> what stands against a start
         self.run: Run | None = None
         self.run_closed_s: float | None = None
         self.first_cause = ""

@@ -51,13 +51,14 @@ def _danger(core: Core, what: str, cause: Cause) -> None:
     core.end_run(Verdict.STOPPED, what)
 
 
-def fault(core: Core, name: str, detail: str) -> None:
+def fault(core: Core, name: str, detail: str, where: str = "") -> None:
     """A named fault. Where nothing moves and no run is open it is told, and may block the start, but latches
     nothing: restarting the station between two bars must not cost a reset.
     """
     reaction = FAULTS.get(name, UNLISTED)
     if reaction.blocks_start:
-        core.blocks[name] = f"{reaction.what} ({detail})" if detail else reaction.what
+        said = ": ".join(part for part in (where, detail) if part)
+        core.blocks[name, where] = f"{reaction.what} ({said})" if said else reaction.what
     at_stake = core.run is not None or core.moving or core.stopping is not None
     if core.monitor_only and reaction.cause is not Cause.SIGNAL_LOST:
         at_stake = False  # told only: the recording goes on, as the machine does

@@ -134,16 +134,16 @@ class Pipeline:
         desk.handle(self._core, request)
         return self._core.take_step()
 
-    def fault(self, name: str, detail: str, now_s: float) -> Step:
-        """A fault told by a driver or by another process; names in daq.watch.faults."""
+    def fault(self, name: str, detail: str, now_s: float, *, where: str = "") -> Step:
+        """A fault told by a driver or by another process; names in daq.watch.faults. where: which of several alike."""
         self._clock(now_s)
-        outside.fault(self._core, name, detail)
+        outside.fault(self._core, name, detail, where)
         return self._core.take_step()
 
-    def fault_over(self, name: str, now_s: float) -> Step:
-        """A fault that blocks the start is gone; never lifts a latch."""
+    def fault_over(self, name: str, now_s: float, *, where: str = "") -> Step:
+        """A fault that blocks the start is gone, there and not elsewhere; never lifts a latch."""
         self._clock(now_s)
-        self._core.blocks.pop(name, None)
+        self._core.blocks.pop((name, where), None)
         return self._core.take_step()
 
     def snapshot(self) -> Mapping[str, Json]:

@@ -46,6 +46,7 @@ class EarlyBench(VirtualBench):
         self.judged_s.append(self.core.pipeline._core.clock_s)
         if self.takes:
             self.sent.append((self.now_s, write.data))
+            self.core.sent(write.link, write.data, self.now_ns)
             self.wire.write(write.data, self.now_s, write.link)
         return self.takes
 

@@ -17,7 +17,7 @@ import numpy as np
 from daq.bench.catalogue import BENCH_EVENTS
 from daq.cards.frame import FrameCard
 from daq.record.rows import is_event
-from daq.stream.block import GAP_UNKNOWN, Block
+from daq.stream.block import GAP_UNKNOWN, Block, after_loss
 from daq.stream.entry import Entry, Kind, pack, unpack
 from daq.stream.payloads import pack_block, unpack_block, unpack_event, unpack_raw
 from daq.watch.catalogue import EVENTS
@@ -247,6 +247,9 @@ def rebuilt(entries: Sequence[Entry], frame: FrameCard) -> Iterator[str]:
     cards = [json.dumps(e["frame"]) for e in map(_event, entries) if e.get("event") == "run_opened"]
     rebuilt_frame = FrameCard.model_validate_json(cards[0]) if cards else frame
     decoders: dict[int, Decoder] = {}
+    again: set[int] = (
+        set()
+    )  # links that have been lost: nobody knows what is missing before their first block
     made: list[bytes] = []
     kept = [entry.payload for entry in entries if entry.kind is Kind.BLOCK]
     for entry in entries:
@@ -254,12 +257,16 @@ def rebuilt(entries: Sequence[Entry], frame: FrameCard) -> Iterator[str]:
             raw = unpack_raw(entry.payload)
             if not raw.sent:
                 decoded = decoders[raw.link].feed(raw.data, entry.monotonic_ns * NS)
-                made += [pack_block(block) for block in decoded.blocks]
+                for block in decoded.blocks:
+                    made.append(pack_block(after_loss(block) if raw.link in again else block))
+                    again.discard(raw.link)
         elif entry.kind is Kind.EVENT:
             event = unpack_event(entry.payload)
             if event["event"] == "link_open":
                 link = names.index(event["link"])
                 decoders[link] = decoder_for(rebuilt_frame, link)
+                if event["again"]:
+                    again.add(link)
     if made != kept:
         differing = (n for n, (a, b) in enumerate(zip(made, kept, strict=False)) if a != b)
         first = next(differing, min(len(made), len(kept)))
