@@ -17,6 +17,7 @@ from daq.watch.fracture import Finding, FractureWatch
 from daq.watch.limits import ROWS, ForceJudge, ForceLimits, Reaction, Trip, frame_limits, run_limits
 from daq.watch.motion import Flat, PositionJudge, Runaway, SpeedWatch, soft_ends, touch_n
 from daq.watch.pace import Pace
+from daq.watch.repeats import still_samples
 from daq.watch.seating import Seating
 from daq.watch.setup import Proven, RunSetup, WatchSetup
 from daq.watch.states import ARMED, BROKEN, LATCHED, MOVING, WATCHED, Cause, next_state
@@ -39,6 +40,7 @@ from daq.watch.values import (
 ANVIL_CLEAR_MM = 0.5
 AGE_BINS, AGE_LAGS = 2.0, 3.0
 RUN_TOO_LONG_ROW = 33
+UNKNOWN_SAMPLES = 50  # reliability F9
 STOP_BY_HAND = "midspan cannot stop this machine: STOP IT BY ITS OWN CONTROLS"
 
 
@@ -176,6 +178,11 @@ class Core:
         self.others_lost: set[str] = set()
         self.runaway: Runaway | None = None
         self.frozen_samples: int | None = None
+        # before the first zero: identical samples that are too many; None: this signal may stand still
+        quiet_n, step_n = setup.frame.cell.noise_quiet_n, setup.force.step
+        by_chance = still_samples(step_n, quiet_n) if quiet_n is not None and step_n > 0 else UNKNOWN_SAMPLES
+        self.still_samples = max(by_chance, UNKNOWN_SAMPLES) if by_chance is not None else None
+        self.lively = quiet_n is not None and step_n > 0  # known to change by itself
         self.overloaded = False
 
     @property

@@ -15,7 +15,7 @@ from daq.cards.frame import FrameCard
 from daq.stream.block import Block, Floats
 from daq.watch import desk, findings, outside, position, signal, stages
 from daq.watch.core import Core
-from daq.watch.limits import Reaction
+from daq.watch.limits import INFINITE, Reaction
 from daq.watch.repeats import Repeats
 from daq.watch.requests import Request
 from daq.watch.setup import Proven, WatchSetup, setup_from_card
@@ -258,6 +258,8 @@ class Pipeline:
     def _beat(self, time_s: float, row: list[float] | None) -> None:
         """row: the newest one, None where there is none."""
         self._beat_left, self._beat_s = self._beat_samples, time_s
+        if row is not None and self._core.frozen_samples is None:
+            signal.learn_still(self._core, self._repeats, time_s)
         if row is not None and self._others:
             signal.others(self._core, row)
         stages.beat(self._core)
@@ -288,7 +290,7 @@ class Pipeline:
         inside = judge.low_n <= float(gross_n.min()) and float(gross_n.max()) <= judge.high_n
         if judge.outside or not inside or (at_mm is not None and not position.quiet(core, at_mm)):
             return False
-        if self._repeats.longest(counts) + 1 >= (core.frozen_samples or signal.UNKNOWN_SAMPLES):
+        if self._repeats.longest(counts) + 1 >= (core.frozen_samples or core.still_samples or INFINITE):
             return False
         net_n = gross_n - core.tare_n
         if core.runaway is not None and not core.runaway.quiet(net_n):

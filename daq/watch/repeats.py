@@ -2,9 +2,39 @@
 
 from __future__ import annotations
 
+from math import ceil, erf, log, sqrt
+
 import numpy as np
 
 from daq.stream.block import Floats
+
+FROZEN_PROBABILITY = 1e-6  # job map 3.5 step 6
+ALWAYS_STILL = 0.999
+
+
+def repeat_probability(step: float, sigma: float) -> float:
+    """That a value with Gaussian noise, counted in such steps, is the same again; its mean in the middle of a count,
+    where it moves least.
+    """
+    if not step > 0:
+        return 0.0
+    if not sigma > 0:
+        return 1.0
+    width = step / (sigma * sqrt(2.0))
+    inner = erf(0.5 * width)
+    total, k = inner * inner, 1
+    while inner < 1.0 - 1e-9 and k < 100:
+        outer = erf((k + 0.5) * width)
+        total, inner, k = total + 2.0 * (0.5 * (outer - inner)) ** 2, outer, k + 1
+    return total
+
+
+def still_samples(step: float, sigma: float) -> int | None:
+    """How many identical values in a row come by chance less than once in a million; None: any number may."""
+    likely = repeat_probability(step, sigma)
+    if likely > ALWAYS_STILL:
+        return None
+    return ceil(log(FROZEN_PROBABILITY) / log(max(likely, 1e-3)))
 
 
 class Repeats:

@@ -9,15 +9,16 @@ from __future__ import annotations
 from math import isfinite
 
 from daq.stream.block import GAP_UNKNOWN, Block
-from daq.watch.core import Core
+from daq.watch.core import UNKNOWN_SAMPLES, Core
 from daq.watch.limits import CAUTION_SHARE, Reaction, Trip
+from daq.watch.repeats import Repeats
 from daq.watch.states import Cause
 from daq.watch.values import Severity, State
 
 GAP_SAMPLES_MAX = 5
 FROZEN_S = 0.05
 BACK_S = 0.5
-UNKNOWN_SAMPLES, UNKNOWN_S = 50, 0.5  # reliability F9
+UNKNOWN_S = 0.5  # reliability F9
 NAN = float("nan")
 
 
@@ -112,11 +113,22 @@ def jumped_to_rail(core: Core, gross_n: float) -> bool:
     return not low_n <= gross_n <= high_n and not near_top
 
 
+def learn_still(core: Core, repeats: Repeats, now_s: float) -> None:
+    """Before the first zero, at rest: what stands still here for half a second may do so on a way without contact."""
+    long = repeats.same + 1 >= UNKNOWN_SAMPLES and now_s - repeats.since_s >= UNKNOWN_S
+    if long and not core.lively and not core.armed and not core.moving:
+        core.still_samples = None
+
+
 def frozen(core: Core, same: int, since_s: float, now_s: float) -> None:
-    """Identical raw values for longer than this signal shows by chance; before any zero, for half a second."""
+    """Identical raw values for longer than this signal shows by chance; before any zero, for half a second at least and
+    only where count and quiet record, or what was seen at rest, say that it should have changed.
+    """
     needed, lasting_s = core.frozen_samples, FROZEN_S
     if needed is None:
-        needed, lasting_s = UNKNOWN_SAMPLES, UNKNOWN_S
+        needed, lasting_s = core.still_samples, UNKNOWN_S
+        if needed is None:
+            return
     if same + 1 < needed or now_s - since_s < lasting_s:
         return
     if core.armed or (core.moving and core.set_speed_mm_s > 0):
