@@ -23,6 +23,8 @@ CHECK_BYTES = {"none": 0, "sum8": 1, "xor8": 1, "crc8": 1, "crc16": 2, "crc32": 
 FIELD_CHARACTERS_GUESS = 8
 # Limits that always apply: stop at 90 % of the cell's capacity and of the fixture's rating.
 WORKING_SHARE = 0.9
+# A fixture within 1 % of the method's span fits; results use the measured span (common practice, no source).
+SPAN_TOLERANCE = 0.01
 
 
 # --- links and channels ---
@@ -216,6 +218,20 @@ def geometry_of(method: MethodCard) -> Spans:
     return Spans(method.support_span_mm, method.load_span_mm)
 
 
+def spans_apart(method: MethodCard, fixture: Fixture) -> dict[str, tuple[float, float]]:
+    """Spans that do not agree: key -> (what the method asks for, what was measured on the fixture), mm."""
+    wanted, measured = geometry_of(method), spans_of(fixture)
+    pairs = {
+        "support_span_mm": (wanted.support_mm, measured.support_mm),
+        "load_span_mm": (wanted.load_mm, measured.load_mm),
+    }
+    return {
+        key: (want, have)
+        for key, (want, have) in pairs.items()
+        if not abs(want - have) <= SPAN_TOLERANCE * have
+    }
+
+
 def compliance_for(frame: FrameCard, fixture_name: str) -> Compliance | None:
     """The compliance table, when it was measured with this fixture and this cell."""
     table = frame.compliance
@@ -272,6 +288,30 @@ def median_strength_mpa(method: MethodCard) -> float:
 def median_load_n(method: MethodCard, spans: Spans) -> float:
     """P50 of the expected break load of a nominal bar."""
     return load_for_stress_n(median_strength_mpa(method), nominal_section(method), spans)
+
+
+@dataclass(frozen=True, slots=True)
+class PlannedSpeed:
+    """Crosshead speed that a force or stress rate needs, and what it follows from: rate over stiffness."""
+
+    rate_n_s: float
+    stiffness_n_mm: float
+
+    @property
+    def mm_min(self) -> float:
+        return 60.0 * self.rate_n_s / self.stiffness_n_mm
+
+
+def planned_speed(frame: FrameCard, method: MethodCard, fixture: Fixture) -> PlannedSpeed | None:
+    """For a nominal bar in series with the frame; None where the method sets the speed itself."""
+    spans, size = spans_of(fixture), nominal_section(method)
+    rate_n_s = method.rate.rate_n_s if method.rate.mode == "force" else None
+    if method.rate.mode == "stress" and method.rate.rate_mpa_s is not None:
+        rate_n_s = load_for_stress_n(method.rate.rate_mpa_s, size, spans)
+    if rate_n_s is None:
+        return None
+    bar = bar_stiffness_n_mm(method.expected.modulus_gpa, size, spans)
+    return PlannedSpeed(rate_n_s, 1.0 / (1.0 / bar + 1.0 / frame_stiffness_n_mm(frame, fixture.name)))
 
 
 def working_limit_n(frame: FrameCard, fixture: Fixture) -> float:

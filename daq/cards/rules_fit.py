@@ -7,18 +7,16 @@ from collections.abc import Iterator
 from daq.cards.derived import (
     channels_with,
     fixture_by_name,
-    geometry_of,
     median_load_n,
+    planned_speed,
     position_channel,
+    spans_apart,
     spans_of,
     working_limit_n,
 )
 from daq.cards.faults import Fault
 from daq.cards.frame import Fixture, FrameCard, Motion
 from daq.cards.method import MethodCard
-
-# A fixture within 1 % of the method's span fits; results use the measured span (common practice, no source).
-SPAN_TOLERANCE = 0.01
 
 
 def fit_faults(frame: FrameCard, method: MethodCard, fixture_name: str) -> Iterator[Fault]:
@@ -34,6 +32,7 @@ def fit_faults(frame: FrameCard, method: MethodCard, fixture_name: str) -> Itera
     yield from _sensor_faults(frame, method)
     if frame.motion is not None:
         yield from _motion_faults(frame, method, frame.motion)
+        yield from _planned_speed_faults(frame, method, fixture, frame.motion)
 
 
 def _span_faults(frame: FrameCard, method: MethodCard, fixture: Fixture) -> Iterator[Fault]:
@@ -42,28 +41,19 @@ def _span_faults(frame: FrameCard, method: MethodCard, fixture: Fixture) -> Iter
         allowed = f"a {fixture.geometry} method, because fixture {fixture.name} is fitted"
         yield Fault(("geometry",), allowed, _other_fixture(frame, method))
         return
-    wanted, measured = geometry_of(method), spans_of(fixture)
-    pairs = {
-        "support_span_mm": (wanted.support_mm, measured.support_mm),
-        "load_span_mm": (wanted.load_mm, measured.load_mm),
-    }
-    for key, (want, have) in pairs.items():
-        if abs(want - have) > SPAN_TOLERANCE * have:
-            allowed = f"{have:g} mm within 1 %, the span of the fitted fixture {fixture.name}"
-            yield Fault((key,), allowed, _other_fixture(frame, method))
+    for key, (_, have) in spans_apart(method, fixture).items():
+        allowed = f"{have:g} mm within 1 %, the span of the fitted fixture {fixture.name}"
+        yield Fault((key,), allowed, _other_fixture(frame, method))
 
 
 def fitting_fixtures(frame: FrameCard, method: MethodCard) -> tuple[str, ...]:
     """Names of the frame's fixtures that have the method's geometry and spans."""
-    three, wanted = method.geometry == "3-point", geometry_of(method)
-    names = []
-    for fixture in frame.fixtures:
-        spans = spans_of(fixture)
-        near = abs(spans.support_mm - wanted.support_mm) <= SPAN_TOLERANCE * spans.support_mm
-        near = near and abs(spans.load_mm - wanted.load_mm) <= SPAN_TOLERANCE * spans.load_mm
-        if near and (fixture.geometry == "3-point") == three:
-            names.append(fixture.name)
-    return tuple(names)
+    three = method.geometry == "3-point"
+    return tuple(
+        fixture.name
+        for fixture in frame.fixtures
+        if (fixture.geometry == "3-point") == three and not spans_apart(method, fixture)
+    )
 
 
 def _other_fixture(frame: FrameCard, method: MethodCard) -> str:
@@ -115,6 +105,31 @@ def _motion_faults(frame: FrameCard, method: MethodCard, motion: Motion) -> Iter
         yield Fault(
             ("rate", "loop"), allowed, "set loop = 'midspan' and rate.speed_mm_min", f"'{method.rate.loop}'"
         )
+    yield from _travel_faults(frame, method, motion)
+
+
+def _planned_speed_faults(
+    frame: FrameCard, method: MethodCard, fixture: Fixture, motion: Motion
+) -> Iterator[Fault]:
+    """A force or stress rate that the drive in force could not hold, with the arithmetic."""
+    planned, low, high = (
+        planned_speed(frame, method, fixture),
+        motion.speed_mm_min_min,
+        motion.speed_mm_min_max,
+    )
+    if planned is None or low <= planned.mm_min <= high:
+        return
+    key = "rate_n_s" if method.rate.mode == "force" else "rate_mpa_s"
+    sums = (
+        f"{planned.rate_n_s:.4g} N/s / {planned.stiffness_n_mm:.4g} N/mm x 60 = {planned.mm_min:.4g} mm/min"
+    )
+    allowed = (
+        f"a rate within {low:g} to {high:g} mm/min of frame {frame.name} ({sums}, bar and frame in series)"
+    )
+    yield Fault(("rate", key), allowed, "choose another rate; check span, dimensions and modulus_gpa")
+
+
+def _travel_faults(frame: FrameCard, method: MethodCard, motion: Motion) -> Iterator[Fault]:
     travel_mm = motion.travel_mm_max - motion.travel_mm_min
     asked_mm = method.limits.travel_mm_max
     if asked_mm is not None and asked_mm > travel_mm:

@@ -11,9 +11,9 @@ from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from enum import Enum
 
+from daq.cards.derived import WORKING_SHARE
 from daq.watch.setup import RunSetup, WatchSetup
 
-WORKING_SHARE = 0.9
 CAUTION_SHARE = 0.8
 SPECIMEN_SHARE = 1.1
 WRONG_SIGN_SHARE = 0.02

@@ -13,15 +13,13 @@ from typing import Any
 
 from pydantic import ValidationError
 
-from daq.cards.frame import Channel, Compliance, Fixture, FrameCard, Link
+from daq.cards.derived import block_column, compliance_for, silence_s, spans_apart, working_limit_n
+from daq.cards.frame import Channel, Fixture, FrameCard
 from daq.cards.method import MethodCard
 from daq.cards.series import Specimen
 from daq.watch.expected import Expected, expect
 from daq.watch.requests import OpenRun
 
-SILENCE_S_MIN = 0.05
-SILENCE_PERIODS = 3.0
-SPAN_AGREEMENT_MM = 1e-6
 RUN_KEYS = ("run_id", "series", "specimen", "loading", "operator")
 
 
@@ -119,20 +117,9 @@ def setup_from_card(frame: FrameCard) -> WatchSetup:
     return WatchSetup(frame, sources, forces[0], position, others, _rails(forces[0]))
 
 
-def silence_s(link: Link) -> float:
-    """Silence is a reading: after this long without data the link is lost."""
-    return link.silence_s or max(SILENCE_PERIODS / link.rate_hz, SILENCE_S_MIN)
-
-
 def _columns(frame: FrameCard) -> list[Column]:
-    """Every channel with its place; a block holds a link's channels in the order of the card."""
-    places = {link.name: place for place, link in enumerate(frame.links)}
-    taken = dict.fromkeys(places, 0)
-    columns = []
-    for channel in frame.channels:
-        columns.append(_column(frame, channel, places[channel.link], taken[channel.link]))
-        taken[channel.link] += 1
-    return columns
+    """Every channel with its place."""
+    return [_column(frame, channel, *block_column(frame, channel)) for channel in frame.channels]
 
 
 def _column(frame: FrameCard, channel: Channel, source: int, column: int) -> Column:
@@ -182,9 +169,9 @@ def run_setup(setup: WatchSetup, request: OpenRun) -> RunSetup | tuple[str, ...]
     missing += open_problems(setup, method, specimen, fixture)
     if missing:
         return tuple(missing)
-    compliance = _compliance_of(setup, fixture)
+    compliance = compliance_for(setup.frame, fixture.name)
     plan = expect(method, specimen, fixture, compliance, _frame_stiffness(setup))
-    missing += capacity_problems(setup, method, fixture, plan)
+    missing += capacity_problems(setup, method, fixture, plan) + speed_problems(setup, plan)
     if missing:
         return tuple(missing)
     return RunSetup(
@@ -200,13 +187,10 @@ def run_setup(setup: WatchSetup, request: OpenRun) -> RunSetup | tuple[str, ...]
 
 def open_problems(setup: WatchSetup, method: MethodCard, specimen: Specimen, fixture: Fixture) -> list[str]:
     """Why this bar cannot be tried by this method in this fixture."""
-    found = []
-    if abs(method.support_span_mm - fixture.support_span_mm) > SPAN_AGREEMENT_MM:
-        found.append(
-            f"support span: method {method.support_span_mm:g} mm, fixture {fixture.support_span_mm:g} mm"
-        )
-    if abs(method.load_span_mm - fixture.load_span_mm) > SPAN_AGREEMENT_MM:
-        found.append(f"load span: method {method.load_span_mm:g} mm, fixture {fixture.load_span_mm:g} mm")
+    found = [
+        f"{key.removesuffix('_mm').replace('_', ' ')}: method {want:g} mm, fixture {have:g} mm"
+        for key, (want, have) in spans_apart(method, fixture).items()
+    ]
     if not specimen.thickness_mm:
         found.append("the specimen has no thickness reading")
     if method.section == "rectangle" and not specimen.width_mm and method.width_mm is None:
@@ -232,7 +216,7 @@ def _rate_problems(setup: WatchSetup, method: MethodCard) -> list[str]:
 
 def capacity_problems(setup: WatchSetup, method: MethodCard, fixture: Fixture, plan: Expected) -> list[str]:
     """Limits that could not be kept, or a bar that could not be broken inside them (reliability F30)."""
-    ceiling = min(0.9 * setup.capacity_n, 0.9 * fixture.rating_n)
+    ceiling = working_limit_n(setup.frame, fixture)
     found = []
     if not plan.load_p50_n < ceiling:
         found.append(
@@ -250,12 +234,15 @@ def capacity_problems(setup: WatchSetup, method: MethodCard, fixture: Fixture, p
     return found
 
 
-def _compliance_of(setup: WatchSetup, fixture: Fixture) -> Compliance | None:
-    table = setup.frame.compliance
-    usable = (
-        table is not None and table.fixture == fixture.name and table.cell_serial == setup.frame.cell.serial
-    )
-    return table if usable else None
+def speed_problems(setup: WatchSetup, plan: Expected) -> list[str]:
+    """A rate that the drive cannot hold on this very bar; the card check has asked it of a nominal one."""
+    motion = setup.frame.motion
+    if motion is None or motion.speed_mm_min_min <= plan.speed_mm_min <= motion.speed_mm_min_max:
+        return []
+    return [
+        f"{plan.rate_n_s:.4g} N/s / {plan.stiffness_n_mm:.4g} N/mm x 60 = {plan.speed_mm_min:.4g} mm/min is outside"
+        f" {motion.speed_mm_min_min:g}..{motion.speed_mm_min_max:g} mm/min of the drive"
+    ]
 
 
 def _frame_stiffness(setup: WatchSetup) -> float | None:

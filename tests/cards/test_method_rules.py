@@ -443,6 +443,15 @@ FIT = [
         ["limits.force_only_allowed = false|true on frame kiln-lane-a"],
     ),
     (
+        "a stress rate that the drive cannot hold",
+        "kiln-lane-a.toml",
+        GLASS,
+        [],
+        [("rate_mpa_s = 2.0", "rate_mpa_s = 2000.0")],
+        "quarter-40-20",
+        ["rate.rate_mpa_s = 2000.0|within 0.05 to 60 mm/min of frame kiln-lane-a (2400 N/s / "],
+    ),
+    (
         "no displacement sensor, allowed",
         "kiln-lane-a.toml",
         ALUMINA,

@@ -37,6 +37,29 @@ def test_the_plan_of_the_alumina_bar() -> None:
     assert expected.deflection_mm == pytest.approx(0.136, rel=0.02)
 
 
+@pytest.mark.parametrize(("span_mm", "fits"), [(40.3, True), (39.7, True), (40.5, False), (39.5, False)])
+def test_spans_agree_within_the_one_per_cent_of_the_cards(span_mm: float, fits: bool) -> None:
+    plan = run_setup(setup_from_card(frame(fixtures__0__support_span_mm=span_mm)), open_run())
+    assert isinstance(plan, tuple) is not fits
+    if isinstance(plan, tuple):
+        assert plan == (f"support span: method 40 mm, fixture {span_mm:g} mm",)
+
+
+@pytest.mark.parametrize(("speed_max", "fits"), [(0.55, True), (0.45, False)])
+def test_a_rate_that_the_drive_cannot_hold_on_this_bar_is_refused_with_the_sum(
+    speed_max: float, fits: bool
+) -> None:
+    """23.57 MPa/s on the 4 x 3 bar is 0.5 mm/min against a frame of 10 kN/mm (job map B2 [Calc])."""
+    stress = method(rate={"mode": "stress", "rate_mpa_s": 23.57, "loop": "midspan"})
+    plan = run_setup(
+        setup_from_card(frame(motion__speed_mm_min_max=speed_max, motion__approach_mm_min=0.4)),
+        open_run(stress),
+    )
+    assert isinstance(plan, tuple) is not fits
+    if isinstance(plan, tuple):
+        assert "28.28 N/s / 3391 N/mm x 60" in plan[0] and "is outside 0.01..0.45 mm/min" in plan[0], plan
+
+
 @pytest.mark.parametrize(("m", "ratio"), [(5, 1.60), (8, 1.35), (10, 1.28), (12, 1.23), (15, 1.18)])
 def test_the_highest_of_a_thousand(m: float, ratio: float) -> None:
     """job map section 4, row 4 [Calc]."""
