@@ -61,7 +61,7 @@ def handle(core: Core, request: Request) -> None:
     elif isinstance(request, TellFault):
         outside.fault(core, request.name, request.detail)
     elif isinstance(request, FaultOver):
-        core.blocks.pop(request.name, None)
+        core.blocks.pop((request.name, ""), None)
     else:
         _prove(core, request)
 
