@@ -5,12 +5,12 @@ BIN := $(VENV)/bin
 SEED ?= 7
 DEMO ?= --out demo-out --bars 3
 
-.PHONY: demo test lint check bench soak sim setup clean
+.PHONY: demo test lint check bench soak sim setup libraries clean
 
 demo: setup
 	$(BIN)/midspan demo $(DEMO)
 
-test: setup
+test: setup libraries
 	$(BIN)/python -m pytest tests -n auto --dist worksteal
 
 lint: setup
@@ -28,6 +28,10 @@ sim: setup
 	$(BIN)/python -m tests.scenarios.run --seed $(SEED)
 
 setup: $(VENV)/ready
+
+# Shared libraries and a font that the window needs off-screen: installed by apt where they are missing.
+libraries:
+	@sh .ci/libraries
 
 $(VENV)/ready: pyproject.toml constraints.txt
 	@$(PYTHON) -c 'import sys; sys.exit(None if (3, 11) <= sys.version_info[:2] <= (3, 13) else "midspan needs Python 3.11 to 3.13, this is " + sys.version.split()[0])'

@@ -28,6 +28,7 @@ NO_CONTACT_S = 10.0
 DATA_OLD_S = 1.0  # of the newest sample: above, its age is a caution
 RESULTS_MAX = 1_000
 GRAVE = ("stop", "emergency")
+AT_REST = "at rest"
 
 
 class Tone(Enum):
@@ -60,6 +61,7 @@ class Presenter:
         self._monitor_only = False
         self.frame = ""
         self.simulated = False
+        self.noise_n: float | None = None  # of the quiet record
         self.lost_updates = 0
 
     @property
@@ -71,23 +73,46 @@ class Presenter:
     def state(self) -> str:
         return str(self._state.get("state", "unknown - look at the frame"))
 
+    @property
+    def state_body(self) -> Mapping[str, Any]:
+        """The newest state update as it came."""
+        return self._state
+
+    @property
+    def summary(self) -> Mapping[str, Any]:
+        """The newest numbers as they came."""
+        return self._summary
+
+    @property
+    def moving(self) -> bool:
+        """Whether the newest numbers say that the crosshead moves, or may move by itself."""
+        told = self._summary.get
+        return bool(told("armed") or told("moving") or (told("inputs") or {}).get("moving"))
+
+    def is_proven_at_rest(self, now_s: float) -> bool:
+        """At rest by the state, by the numbers, and both are fresh: then a key may be a letter instead of a stop."""
+        age_s = self._summary.get("data_age_s")
+        fresh = age_s is not None and age_s + max(0.0, now_s - self._summed_s) <= DATA_OLD_S
+        return self.state == AT_REST and fresh and not self.moving and now_s - self._heard_s <= DATA_OLD_S
+
     def is_current(self, now_s: float) -> bool:
         """Whether the station has been heard lately."""
         return now_s - self._heard_s <= STALE_S
 
-    def take_look(self, look: Mapping[str, Any], now_s: float) -> None:
-        """A late joiner's start."""
-        self._state = look["state"]
-        self._summary = look["summary"]
+    def take_look(self, look: Mapping[str, Any], now_s: float, *, newer_heard: bool = False) -> None:
+        """A late joiner's start. newer_heard: updates after this look have come; state and numbers stay theirs."""
+        if not newer_heard:
+            self._state, self._summary = look["state"], look["summary"]
+            self._heard_s = self._summed_s = now_s
         self.frame = str(look["frame"]["name"])
         self.simulated = bool(look["frame"]["simulated"])
         self._monitor_only = look["frame"].get("motion") is None
+        self.noise_n = (look["frame"].get("cell") or {}).get("noise_quiet_n")
         sitting = look.get("sitting") or {"bars": []}
         self._results.clear()
         self._results.extend(
             bar["result"] | {"specimen": bar["number"]} for bar in sitting["bars"] if bar["result"]
         )
-        self._heard_s = self._summed_s = now_s
 
     def take(self, update: Update, now_s: float) -> None:
         """One update of the feed."""

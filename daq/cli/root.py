@@ -16,7 +16,7 @@ COMMANDS = {
     "demo": "Break a few simulated bars: the whole stack on a virtual frame.",
     "serve": "Serve one frame: the daemon.",
     "run": "Run a series from the terminal: the operator's session.",
-    "watch": "Watch a frame; can move nothing.",
+    "watch": "The window: watch a frame, run it with --operator, play a record.",
     "stop": "Stop the crosshead now.",
     "simulate": "A virtual frame on a pty or TCP port.",
     "check": "Check cards, ports and the live bench; moves only for a drill, and asks first.",

@@ -25,6 +25,7 @@ from daq.stream.thin import thin_minmax
 TRACE_SO_FAR_ROWS_MAX = 4_000
 TURNS = frozenset({"run_opened", "tared", "seated", "fracture", "run_closed"})  # what changes the reduction
 SO_FAR_PIECES_MAX = 200
+EVENTS_OF_RUN_MAX = 64  # for late joiners
 TRACE_ROWS_PER_UPDATE_MAX = 1_000  # 20 updates/s: 20,000 rows/s leave unthinned
 
 
@@ -48,6 +49,8 @@ class Follower:
         self.state = "unknown - look at the frame"
         self.reason = ""
         self.faults: list[Mapping[str, Any]] = []
+        self.opened: Mapping[str, Any] | None = None  # the last run's cards; its run may be over
+        self.events: list[Mapping[str, Any]] = []  # of the last run, without changes of state
         self.latest_s = float("nan")
         self.sequence = -1
         self._online: OnlineReduction | None = None
@@ -161,12 +164,16 @@ class Follower:
             self.faults = []  # a person has seen them
         if event.get("severity") in ("stop", "emergency", "caution"):
             self.faults = [*self.faults[-7:], event]
+        if name not in ("state", "run_opened"):
+            self.events = [*self.events[-EVENTS_OF_RUN_MAX + 1 :], event]
         if name == "run_closed":
             self.run = None
         return Tell("event", event)
 
     def _open(self, event: Mapping[str, Any]) -> None:
         self.run = event["run"]
+        self.opened = event
+        self.events = []
         self.tared = False
         self.faults = []
         self._so_far = []

@@ -183,9 +183,11 @@ class Sitting:
             "method": self.loaded.method.name,
             "fixture": self.loaded.card.fixture,
             "next": self.next_number(),
+            "method_card": self.loaded.method.model_dump(mode="json"),
             "bars": [
                 {
                     "number": bar.specimen.number,
+                    "specimen": bar.specimen.model_dump(mode="json"),
                     "state": bar.state.value,
                     "loading": bar.loadings,
                     "record": bar.record,

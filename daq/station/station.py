@@ -221,10 +221,13 @@ class Station:
         trace = self._follower.trace_so_far()
         rest = {
             "version": VERSION,
+            "update": self._number,  # what a viewer has heard beyond this number is newer than this look
             "frame": self._frame_json,
             "state": self._state(),
             "summary": self._summary(),
             "sitting": self._sitting.as_json() if self._sitting else None,
+            "opened": self._follower.opened,
+            "events": self._follower.events,
         }
         text = self._trace_text.json(self._follower.generation, trace)
         return f'{{"ok": true, "look": {json.dumps(rest)[:-1]}, "trace": {text}}}}}'

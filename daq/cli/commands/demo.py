@@ -62,7 +62,7 @@ AGAIN_MAX = 3  # a busy computer may interrupt a bar: it is loaded again, as a t
     "--bars", type=click.IntRange(1, BARS_MAX), default=3, show_default=True, help="How many bars to break."
 )
 @click.option("--seed", type=int, default=7, show_default=True, help="Seed of sizes, flaws and noise.")
-@click.option("--no-window", is_flag=True, help="Stay in the terminal (there is no window yet).")
+@click.option("--no-window", is_flag=True, help="Stay in the terminal.")
 def command(out: Path, bars: int, seed: int, no_window: bool) -> None:
     """Break a few simulated alumina bars at true pace: real processes, a real pty, sealed HDF5 records.
 

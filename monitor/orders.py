@@ -1,0 +1,188 @@
+"""The operator's orders: keys to requests, answers to words, the seat, the look. The bench decides what is obeyed."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Mapping
+from functools import partial
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from daq.errors import MidspanError
+from daq.record.read import read_trace
+from monitor.errands import Answer, Desk
+from monitor.presenter import Tone
+from monitor.tracebuffer import thin_xy
+from monitor.traceplot import GHOST_POINTS, Ghost
+from monitor.wording import refusal_lines
+
+if TYPE_CHECKING:
+    from monitor.window import Outside, Window
+
+BACK_OFF_MM = 2.0  # job.md G4
+BACK_OFF_MM_MIN = 20.0
+SEAT_AGAIN_S = 2.0
+REQUESTS: Mapping[str, tuple[str, Mapping[str, Any]]] = {
+    "m": ("mount", {}),
+    "r": ("reset", {}),
+    "L": ("reset", {"looked": True}),
+    "C": ("close", {"reason": "closed by the operator"}),
+    "start": ("start", {}),
+    "return": ("return", {"distance_mm": BACK_OFF_MM, "speed_mm_min": BACK_OFF_MM_MIN}),
+}
+WATCHING = (
+    "watching only: this window can stop the frame, never move it; the operator's window has --operator"
+)
+
+
+class Orders:
+    """One window's orders."""
+
+    def __init__(self, window: Window, outside: Outside) -> None:
+        self._window, self._outside = window, outside
+        self._seated_s = float("-inf")
+        self._ghosts_of: set[str] = set()
+        self.verdicts: dict[str, str] = {}
+        self.may_mark = True
+        self.questions: tuple[str, ...] = ()
+
+    def begin(self) -> None:
+        self.look()
+        if self._outside.operator:
+            self.sit(instead=self._outside.instead)
+
+    def end(self) -> None:
+        if self._outside.operator:
+            self._window.errands.do("rise")
+
+    def stop(self, who: str) -> None:
+        """On key-down, before anything else is done or shown."""
+        self._window.stop_line.stop(who)
+
+    # --- one turn
+    def turn(self, now_s: float) -> None:
+        """Keys that have become due, and answers that have come."""
+        key = self._window.judge.due(now_s)
+        if key:
+            self.obey(key)
+        for why in self._window.stop_line.answers():
+            if why:
+                self._window.tell(f"NO STOP: {why} - USE THE EMERGENCY STOP AT THE MACHINE", Tone.STOP, 60.0)
+            else:
+                self._window.tell("STOP sent", Tone.STOP, 2.0)
+        for answer in self._window.errands.answers():
+            self._hear(answer)
+        presenter = self._window.scene.presenter
+        nobody = presenter.frame and not presenter.state_body.get("operator")
+        if self._outside.operator and nobody and now_s - self._seated_s > SEAT_AGAIN_S:
+            self.sit()  # the station was started again and knows nobody
+
+    def obey(self, key: str) -> None:
+        """One deliberate key."""
+        window = self._window
+        plain = {
+            "?": window.toggle_keys,
+            "s": window.swap_chief,
+            "t": window.trace.turn,
+            "d": window.swap_theme,
+            "q": self._leave,
+        }
+        if key in plain:
+            plain[key]()
+        elif key in REQUESTS or key in "123456789":
+            self._request(key)
+
+    def _request(self, key: str) -> None:
+        if not self._outside.operator:
+            self._window.tell(WATCHING, Tone.PLAIN, 4.0)
+            return
+        if key in REQUESTS:
+            name, fields = REQUESTS[key]
+            self._ask(name, fields)
+        else:
+            self._ask("note", {"text": f"operator's mark {key}"})
+
+    def _ask(self, name: str, fields: Mapping[str, Any]) -> None:
+        if not self._window.errands.do(name, **fields):
+            self._window.tell("the station has not answered yet; wait a moment")
+
+    def _leave(self) -> None:
+        if self._outside.operator and self._window.scene.presenter.moving:
+            self._window.tell("the frame is moving: Space stops it, then q leaves")
+            return
+        self._window.close()
+
+    # --- seat, series, look
+    def sit(self, *, instead: bool = False, sure: bool = False) -> None:
+        """Take the seat and open the series."""
+        self._seated_s = time.monotonic()
+        name, series = self._outside.operator, self._outside.series
+
+        def work(desk: Desk) -> Mapping[str, Any]:
+            desk.sit(name, instead=instead)
+            return desk.do("series", path=str(series), sure=sure) if series is not None else {}
+
+        self._window.errands.ask("sit", work)
+
+    def look(self) -> None:
+        self._window.errands.ask("look", lambda desk: desk.look())
+
+    def _hear(self, answer: Answer) -> None:
+        if answer.name == "look" and answer.good:
+            self._window.take_look(answer.body)
+        elif answer.name == "ghost" and answer.good:
+            self._window.trace.add_ghost(answer.body["ghost"])
+        elif answer.name in ("look", "ghost"):
+            return  # the foot and the state say how old everything is
+        elif not answer.good:
+            self._refused(answer)
+        elif answer.name == "sit":
+            self.look()
+            if answer.body.get("questions"):
+                self._window.tell("; ".join(answer.body["questions"]), Tone.CAUTION, 60.0)
+        else:
+            self._window.be_quiet()
+            self._window.scene.wants_look |= answer.name in ("mount", "series")
+
+    def _refused(self, answer: Answer) -> None:
+        if answer.trouble:
+            self._window.tell(answer.trouble, Tone.STOP)
+        else:
+            self._window.tell("  ".join(refusal_lines(answer.name, answer.missing)))
+
+    # --- the bars before
+    def read_ghosts(self, sitting: Mapping[str, Any] | None) -> None:
+        """Traces of the series' sealed records, read outside the window's own thread, each once."""
+        for bar in (sitting or {}).get("bars", ()):
+            path = str(bar.get("record") or "")
+            on_screen = bar["number"] == self._window.scene.ending.specimen
+            if path and bar["state"] == "broken" and path not in self._ghosts_of and not on_screen:
+                self._ghosts_of.add(path)
+                self._window.errands.ask("ghost", partial(ghost_answer, Path(path)))
+
+    def mark_break(self, end_mm: float) -> None:
+        """Clicked on the drawing."""
+        self._window.scene.breaks_mm = (end_mm,)
+
+
+def ghost_answer(path: Path, desk: Desk) -> Mapping[str, Any]:
+    """Needs no station; only its thread."""
+    del desk
+    return {"ghost": ghost_of(path)}
+
+
+def ghost_of(path: Path) -> Ghost:
+    """A sealed record's trace, thinned. Raises MidspanError where it does not read."""
+    columns = read_trace(path)
+    if not columns:
+        raise MidspanError(f"{path}: holds no trace")
+    until = (
+        int(columns["force_net_n"].argmax()) + 1
+    )  # what comes after the highest load belongs to no other bar
+    time_s, load_n = columns["time_s"][:until], columns["force_net_n"][:until]
+    nothing = time_s * float("nan")
+    along = columns.get("strain", columns.get("deflection_mm", nothing))[:until]
+    stress = columns.get("stress_mpa", nothing)[:until]
+    thin_along, thin_stress = thin_xy(along, stress, GHOST_POINTS)
+    thin_time, thin_load = thin_xy(time_s - time_s[0], load_n, GHOST_POINTS)
+    return Ghost(thin_along, thin_stress, thin_time, thin_load)
