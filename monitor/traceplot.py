@@ -178,6 +178,11 @@ class TracePlot(QWidget):
             self._marks.append(mark)
         self._drawn_rows = -1
 
+    def column_max(self) -> float:
+        """Highest net load that is kept, N; NaN where there is none."""
+        load_n = self.buffer.column(LOAD)
+        return float(np.fmax.reduce(load_n)) if len(load_n) else float("nan")
+
     @property
     def break_s(self) -> float | None:
         return self._break_s
