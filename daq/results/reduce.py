@@ -15,9 +15,10 @@ import numpy as np
 
 from daq.mechanics.edges import chamfer_factor
 from daq.mechanics.sections import Rectangle
-from daq.results.course import bending_beside, course_of
+from daq.results.course import at_mid_span, bending_beside, course_of
 from daq.results.loading import Loading, fall_time_constant_s, loading_of
 from daq.results.loads import loads_of, peak_of
+from daq.results.printed import printed_of
 from daq.results.remarks import Facts, remarks_of
 from daq.results.result import Loads, Result, Stresses
 from daq.results.rules import Remark, rules_of
@@ -67,7 +68,8 @@ def _reduce(run: RunData) -> Result:
     )
     interrupted = not story.broken if story.interrupted is None else story.interrupted
     break_class = story.closed_verdict if story.fracture is None else story.fracture.verdict
-    stresses, remarks = _stresses(loading, loads, after), remarks_of(facts)
+    mid_mm = course.deflection_at_break_mm if at_mid_span(bending, setup) else None
+    stresses, remarks = _stresses(loading, loads, after, mid_mm), remarks_of(facts)
     return Result(
         verdict=_verdict(loading, interrupted, break_class, remarks, missing, stresses),
         break_class=break_class,
@@ -182,7 +184,7 @@ def _after_zero(loading: Loading, loads: Loads) -> AfterZero | None:
     )
 
 
-def _stresses(loading: Loading, loads: Loads, after: AfterZero | None) -> Stresses:
+def _stresses(loading: Loading, loads: Loads, after: AfterZero | None, mid_mm: float | None) -> Stresses:
     section, chamfer_mm = loading.setup.section, loading.setup.chamfer_mm
     factor = None
     if isinstance(section, Rectangle) and chamfer_mm <= min(section.width_mm, section.thickness_mm) / 2.0:
@@ -196,7 +198,9 @@ def _stresses(loading: Loading, loads: Loads, after: AfterZero | None) -> Stress
         corrected = strength + after.correction_n * per_newton
     if not loading.story.broken and loads.screened_n is not None:
         survived = loads.screened_n * per_newton
-    return Stresses(strength, factor, corrected, survived, per_newton)
+    return Stresses(
+        strength, factor, corrected, survived, per_newton, printed_of(loading.setup, loads.used_n, mid_mm)
+    )
 
 
 def _uncertainty(loading: Loading, loads: Loads) -> Uncertainty | None:

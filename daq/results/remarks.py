@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from daq.cards.method import MethodCard
 from daq.mechanics.deflection import load_point_stiffness_n_mm
 from daq.mechanics.rates import force_rate_for_stress_rate_n_s, force_rate_n_s
+from daq.results.methodrules import method_remarks
 from daq.results.result import Course, Loads
 from daq.results.rules import Remark
 from daq.results.setup import Setup
@@ -43,7 +44,8 @@ class Facts:
 def remarks_of(facts: Facts) -> tuple[Remark, ...]:
     """In a fixed order."""
     parts = (_peak, _lag, _sampling, _course, _zero, _events, _range, _rest)
-    return tuple(remark for part in parts for remark in part(facts))
+    own = [remark for part in parts for remark in part(facts)]
+    return (*own, *method_remarks(facts.setup, facts.loads, facts.course))
 
 
 def _peak(facts: Facts) -> Iterator[Remark]:
@@ -101,11 +103,7 @@ def _course(facts: Facts) -> Iterator[Remark]:
         )
     if method is None:
         return
-    wanted = planned_rate_n_s(facts.setup, method)
-    if wanted is not None and course.rates is not None:
-        off = course.rates.mean_n_s / wanted - 1.0
-        if abs(off) > method.rate.tolerance_percent / 100.0:
-            yield Remark("rate out of band", f"mean rate {100 * off:+.0f} % from the method's")
+    yield from _rate(facts, method)
     band, lasted_s_ = method.time_to_break_s, course.time_to_break_s
     if (
         band is not None
@@ -114,6 +112,27 @@ def _course(facts: Facts) -> Iterator[Remark]:
         and not band[0] <= lasted_s_ <= band[1]
     ):
         yield Remark("time to break", f"{lasted_s_:.1f} s; the method wants {band[0]:g} to {band[1]:g} s")
+
+
+def _rate(facts: Facts, method: MethodCard) -> Iterator[Remark]:
+    """Against the band the card prints, in its own unit; without one, against the planned rate."""
+    rates, per_newton = facts.course.rates, facts.setup.stress_per_newton_mpa
+    if rates is None:
+        return
+    for band, mean, unit in (
+        (method.rate.band_n_s, rates.mean_n_s, "N/s"),
+        (method.rate.band_mpa_s, rates.mean_n_s * per_newton, "MPa/s"),
+    ):
+        if band is not None:
+            if not band[0] <= mean <= band[1]:
+                text = f"mean {mean:.3g} {unit}; the method allows {band[0]:g} to {band[1]:g} {unit}"
+                yield Remark("rate out of band", text)
+            return
+    wanted = planned_rate_n_s(facts.setup, method)
+    if wanted is not None:
+        off = rates.mean_n_s / wanted - 1.0
+        if abs(off) > method.rate.tolerance_percent / 100.0:
+            yield Remark("rate out of band", f"mean rate {100 * off:+.0f} % from the method's")
 
 
 def planned_rate_n_s(setup: Setup, method: MethodCard) -> float | None:

@@ -12,6 +12,7 @@ from dataclasses import dataclass
 from typing import Any
 
 from daq.results.peak import Peak
+from daq.results.printed import NOTHING_PRINTED, Printed
 from daq.results.rules import Counting, Remark
 from daq.results.stiffness import Modulus
 from daq.results.tracking import Rates
@@ -50,19 +51,26 @@ class Stresses:
     zero_corrected_mpa: float | None
     survived_mpa: float | None
     per_newton_mpa: float | None
+    printed: Printed = NOTHING_PRINTED
 
 
 @dataclass(frozen=True, slots=True)
 class Course:
-    """Times are counted from the opening of the run; displacement at the break, toe taken off."""
+    """Times are counted from the opening of the run; displacement at the break, toe taken off.
+
+    toe_share: toe load over the highest; work_mj: area under load over displacement from contact to the break, of the
+    bar alone where the machine's part was removed.
+    """
 
     seated_s: float | None
     toe_n: float | None
+    toe_share: float | None
     toe_offset_mm: float | None
     time_to_break_s: float | None
     strain_at_break: float | None
     deflection_at_break_mm: float | None
     displacement: str
+    work_mj: float | None
     rates: Rates | None
 
 
@@ -141,6 +149,10 @@ def _stresses(stresses: Stresses, uncertainty: Uncertainty | None) -> dict[str, 
         "strength_chamfer_mpa": _times(strength, stresses.chamfer_factor),
         "strength_zero_corrected_mpa": _plain(stresses.zero_corrected_mpa),
         "stress_survived_mpa": _plain(stresses.survived_mpa),
+        "breaking_strength_n": _plain(stresses.printed.breaking_strength_n),
+        "strength_plate_mpa": _plain(stresses.printed.plate_mpa),
+        "strength_rounded_factor_mpa": _plain(stresses.printed.rounded_factor_mpa),
+        "strength_large_deflection_mpa": _plain(stresses.printed.large_deflection_mpa),
     }
 
 
@@ -172,11 +184,13 @@ def _course(course: Course, per_newton_mpa: float | None) -> dict[str, Any]:
     found = {
         "seated_at_s": _plain(course.seated_s),
         "toe_n": _plain(course.toe_n),
+        "toe_share_percent": _times(course.toe_share, 100.0),
         "toe_offset_mm": _plain(course.toe_offset_mm),
         "time_to_break_s": _plain(course.time_to_break_s),
         "strain_at_break": _plain(course.strain_at_break),
         "deflection_at_break_mm": _plain(course.deflection_at_break_mm),
         "displacement": course.displacement,
+        "work_to_break_mj": _plain(course.work_mj),
     }
     for name in ("mean", "min", "max"):
         rate_n_s = None if rates is None else float(getattr(rates, f"{name}_n_s"))

@@ -6,11 +6,13 @@ The bound is where twice the drop of log-likelihood equals the chi-square quanti
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
+from daq.mechanics.quantity import Floats
 from daq.series.weibull import WeibullFit, fit_weibull, log_likelihood, scale_for
 
 CHI_SQUARE = {
@@ -18,8 +20,11 @@ CHI_SQUARE = {
     0.90: 2.705543454095404,
     0.95: 3.841458820694124,
 }  # 1 degree of freedom
-HALVINGS = 80
 REACH = 64.0  # a bound is looked for within this factor of the estimate
+FIRST_STEP = 0.05  # of ln: doubled until the bound is bracketed
+STEPS_MAX = 80
+CLOSE = 1e-9  # of ln bound, and of log-likelihood
+EXACT = 1e-12
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,43 +64,53 @@ def profile_bounds(
 
     return WeibullBounds(
         level,
-        Interval(_crossing(at_modulus, fit.modulus, 1.0 / REACH), _crossing(at_modulus, fit.modulus, REACH)),
-        Interval(_crossing(at_scale, fit.scale_mpa, 0.5), _crossing(at_scale, fit.scale_mpa, 2.0)),
+        Interval(_crossing(at_modulus, fit.modulus, -1.0), _crossing(at_modulus, fit.modulus, 1.0)),
+        Interval(_crossing(at_scale, fit.scale_mpa, -1.0), _crossing(at_scale, fit.scale_mpa, 1.0)),
         "profile likelihood",
     )
 
 
-def _crossing(drop: Callable[[float], float], inside: float, factor: float) -> float | None:
-    """Where `drop` changes sign between the estimate and a factor of it; None where it does not."""
-    outside = inside * factor
-    if not drop(outside) < 0.0:
-        return None
-    for _ in range(HALVINGS):
-        middle = (inside * outside) ** 0.5
-        inside, outside = (middle, outside) if drop(middle) >= 0.0 else (inside, middle)
-    return inside
+def _crossing(drop: Callable[[float], float], estimate: float, side: float) -> float | None:
+    """Where `drop` falls below zero on one side of the estimate; None where it does not within REACH.
 
-
-def _best_at_scale(scale_mpa: float, fit: WeibullFit, failed: np.ndarray, whole: np.ndarray) -> float:
-    """Greatest log-likelihood over the modulus at a fixed scale: golden section, the function has one
-    top in ln m.
+    Steps out until it is bracketed, then regula falsi (Illinois) on the logarithm.
     """
-    ratio = (5.0**0.5 - 1.0) / 2.0
-    low, high = np.log(fit.modulus / REACH), np.log(fit.modulus * REACH)
-    left, right = high - ratio * (high - low), low + ratio * (high - low)
-
-    def value(log_modulus: float) -> float:
-        with np.errstate(over="ignore"):
-            return log_likelihood(float(np.exp(log_modulus)), scale_mpa, failed, whole)
-
-    f_left, f_right = value(left), value(right)
-    for _ in range(60):
-        if f_left >= f_right:
-            high, right, f_right = right, left, f_left
-            left = high - ratio * (high - low)
-            f_left = value(left)
+    inside, at_inside, step = math.log(estimate), drop(estimate), FIRST_STEP
+    while True:
+        outside = math.log(estimate) + side * min(step, math.log(REACH))
+        at_outside = drop(math.exp(outside))
+        if at_outside < 0.0:
+            break
+        if step >= math.log(REACH):
+            return None
+        inside, at_inside, step = outside, at_outside, 2.0 * step
+    for _ in range(STEPS_MAX):
+        middle = outside - at_outside * (outside - inside) / (at_outside - at_inside)
+        at_middle = drop(math.exp(middle))
+        if abs(at_middle) < CLOSE or abs(outside - inside) < CLOSE:
+            return math.exp(middle)
+        if at_middle < 0.0:
+            outside, at_outside, at_inside = middle, at_middle, at_inside / 2.0
         else:
-            low, left, f_left = left, right, f_right
-            right = low + ratio * (high - low)
-            f_right = value(right)
-    return max(f_left, f_right)
+            inside, at_inside, at_outside = middle, at_middle, at_outside / 2.0
+    return math.exp(middle)
+
+
+def _best_at_scale(scale_mpa: float, fit: WeibullFit, failed: Floats, whole: Floats) -> float:
+    """Greatest log-likelihood over the modulus at a fixed scale. Its slope r/m + sum ln(x/s) of the broken -
+    sum (x/s)^m ln(x/s) falls with m: Newton, kept positive.
+    """
+    logs = np.log(whole / scale_mpa)
+    broken = float(np.sum(logs[: failed.size]))
+    modulus = fit.modulus
+    for _ in range(STEPS_MAX):
+        with np.errstate(over="ignore"):
+            weight = np.exp(np.minimum(modulus * logs, 600.0))
+        slope = failed.size / modulus + broken - float(weight @ logs)
+        bend = failed.size / modulus**2 + float(weight @ (logs * logs))
+        after = max(modulus + slope / bend, modulus / 2.0)
+        if abs(after - modulus) <= EXACT * modulus:
+            break
+        modulus = after
+    with np.errstate(over="ignore"):
+        return log_likelihood(modulus, scale_mpa, failed, whole)

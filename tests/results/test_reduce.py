@@ -412,3 +412,40 @@ def test_never_raises_on_whatever_a_run_holds(made, events, rows, ordered, cards
     }
     run = RunData(channels, tuple(events), made.made_cards(made.Bar()) if cards else {})
     json.dumps(reduce(run).as_json(), allow_nan=False)
+
+
+def test_work_is_the_area_under_load_over_displacement(alumina):
+    """An elastic bar: half of load times deflection (toe taken off); job map 2 B2 names 31 mJ for bar and machine."""
+    found = reduce(alumina).as_json()
+    elastic_mj = 0.5 * 460.0 * load_point_deflection_mm(460.0, 380e3, BAR, SPANS)
+    assert found["work_to_break_mj"] == pytest.approx(elastic_mj, rel=0.02)
+    assert 0.0 < found["toe_share_percent"] < 25.0
+
+
+def test_printed_forms_stand_beside_the_strength(made):
+    """Tile of check values 1.1: F 1500 N, L 280, b 300 gives S 1400 N; a rounded factor and a plate's own weight."""
+    asked = {"breaking_strength": True, "printed_factor_mpa_n": 0.8, "density_kg_m3": 2500.0}
+    run = made.made_run(made.Bar(method_changes={"strength": asked}), np.random.default_rng(1))
+    found = reduce(run).as_json()
+    assert found["breaking_strength_n"] == pytest.approx(found["peak_n"] * 40.0 / 4.0)
+    assert found["strength_rounded_factor_mpa"] == pytest.approx(0.8 * found["peak_n"])
+    own_mpa = 3.0 * 2500e-9 * 9.81 * 40.0**2 / (4.0 * 3.0)
+    assert found["strength_plate_mpa"] == pytest.approx(found["strength_mpa"] + own_mpa, rel=1e-9)
+    assert found["strength_mpa"] == pytest.approx(found["peak_n"] / 1.2, rel=1e-9)  # and stays nominal
+
+
+@pytest.mark.parametrize(
+    ("changes", "code"),
+    [
+        ({"validity": {"span_per_thickness": [20.0, 30.0]}}, "slenderness"),
+        ({"validity": {"force_error_percent": 0.1}}, "force reading"),
+        ({"validity": {"force_range_percent": [60.0, 90.0]}}, "load outside the method's range"),
+        ({"validity": {"strain_percent_max": 0.01}}, "strain above the method's"),
+        ({"needs": {"roller_diameter_mm": [9.0, 9.0]}}, "rollers off the method's"),
+        ({"thickness_mm": 4.0}, "size out of tolerance"),
+        ({"readings": 5}, "few readings"),
+    ],
+)
+def test_what_the_method_asks_is_remarked(made, changes, code):
+    found = reduce(made.made_run(made.Bar(method_changes=changes), np.random.default_rng(1)))
+    assert code in codes(found) and found.as_json()["verdict"] == "counted with remark"
