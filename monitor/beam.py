@@ -1,7 +1,7 @@
 """The bar as it stands in its fixture: places, deflected shape, moment, stress where it broke. Pure.
 
 Places are counted in mm from the left support; a break is told from the bar's left end. Bernoulli-Euler beam under
-symmetric loads (textbook; job map 3.0): between support and loading roller v ~ x (3 a (L - a) - x^2), inside
+symmetric loads (textbook): between support and loading roller v ~ x (3 a (L - a) - x^2), inside
 v ~ a (3 x (L - x) - a^2).
 """
 
@@ -148,7 +148,7 @@ def _sensor_at_bar(frame: FrameCard) -> bool:
 
 def _sag_mm(method: MethodCard, height_mm: float, support_mm: float, load_mm: float) -> float:
     """Mid deflection at the expected median: stress = E h v'' / 2 gives sag = 2 s/(E h) (L^2/8 - a^2/6), the
-    four-point formula of job map 3.0 with F replaced by the stress; a = L/2 for three-point.
+    four-point formula with F replaced by the stress; a = L/2 for three-point.
     """
     arm = (support_mm - load_mm) / 2.0
     strain = median_strength_mpa(method) / (1e3 * method.expected.modulus_gpa)

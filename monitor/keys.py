@@ -2,7 +2,7 @@
 is held. Pure: time is an argument.
 
 A gauge or scanner is a keyboard that types faster than any hand. What it sends may stop the frame (a space may), and
-may fill a field; it is never a command, and nothing it sends can be held for 0.3 s (job.md D1, F1).
+may fill a field; it is never a command, and nothing it sends can be held for 0.3 s.
 """
 
 from __future__ import annotations

@@ -19,7 +19,7 @@ from monitor.wording import refusal_lines
 if TYPE_CHECKING:
     from monitor.window import Outside, Window
 
-BACK_OFF_MM = 2.0  # job.md G4
+BACK_OFF_MM = 2.0  # common practice, no source: 1 to 2 mm
 BACK_OFF_MM_MIN = 20.0
 SEAT_AGAIN_S = 2.0
 REQUESTS: Mapping[str, tuple[str, Mapping[str, Any]]] = {

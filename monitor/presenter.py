@@ -23,7 +23,7 @@ from monitor.wording import (
     result_text,
 )
 
-STALE_S = 3.0  # job.md J3: older data are grey and said to be not current
+STALE_S = 3.0  # trade judgement, no source: older data are grey and said to be not current
 NO_CONTACT_S = 10.0
 DATA_OLD_S = 1.0  # of the newest sample: above, its age is a caution
 RESULTS_MAX = 1_000
@@ -127,7 +127,7 @@ class Presenter:
             self._results.append({**result, "specimen": update.body.get("specimen", "")})
 
     def lines(self, now_s: float) -> list[Line]:
-        """The view in the order of job.md 5: state, load, percent, bar, instruction or fault."""
+        """The view in the order in which it is read from 2 m: state, load, percent, bar, instruction or fault."""
         age_s = 0.0 if self.state == ENDED else now_s - self._heard_s
         if age_s > NO_CONTACT_S:
             told = f"NO CONTACT with the station for {age_s:.0f} s" if self.frame else "no contact yet"

@@ -24,7 +24,7 @@ STYLES = {
     Tone.STOP: "bold white on red",
     Tone.OLD: "dim",
 }
-DRAW_EVERY_S = 0.2  # numbers change 4 to 5 times a second: readable (job.md 5)
+DRAW_EVERY_S = 0.2  # numbers change 4 to 5 times a second: readable (trade judgement, no source)
 DRAW_SHARE = 0.2  # of the time
 PIPE_EVERY_S = 0.5
 PIPE_LABELS = ("state", "load", "stress", "expected", "fault", "caution", "recording")

@@ -38,7 +38,7 @@ from monitor.strip import Strip, cells_of
 from monitor.traceplot import TracePlot
 
 TURN_MS = 33  # 30 redraws a second
-NUMBERS_EVERY_S = 0.2  # job.md 5: numbers change four to five times a second
+NUMBERS_EVERY_S = 0.2  # trade judgement, no source: numbers change four to five times a second
 LOOK_EVERY_S = 1.0
 TOLD_S = 8.0  # how long a refusal stays
 PLAIN = Setting()

@@ -54,7 +54,7 @@ class MomentShape:
 
 
 def effective_size(where: Where, section: Section, spans: Spans, modulus: float) -> float:
-    """Length, area or volume that would fail alike under uniform stress (check values 3.3)."""
+    """Length, area or volume that would fail alike under uniform stress."""
     m = modulus
     along_mm = (spans.support_mm + m * spans.load_mm) / (m + 1)
     if isinstance(section, Rectangle):

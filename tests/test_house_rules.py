@@ -187,3 +187,22 @@ def test_every_command_explains_itself() -> None:
         shown = CliRunner().invoke(midspan, [name, "--help"])
         assert shown.exit_code == 0, shown.output
         assert "Example: midspan " + name in shown.output
+
+
+def test_no_paper_outside_the_repository_is_named() -> None:
+    """A reader could not look it up."""
+    papers = re.compile(r"\b(job|design|reliability)[.]md|check-values|[Jj]ob map\b|[Cc]heck values [0-9]")
+    tracked = subprocess.run(
+        ["git", "ls-files", "-z"], cwd=ROOT, capture_output=True, text=True, check=False
+    ).stdout
+    texts = [
+        ROOT / name for name in tracked.split("\0") if name.endswith((".py", ".md", ".toml", ".c", ".conf"))
+    ]
+    named = [
+        f"{path.relative_to(ROOT)}:{number}: {found.group()}"
+        for path in texts
+        if path != Path(__file__).resolve() and path.exists()
+        for number, line in enumerate(path.read_text("utf-8").splitlines(), start=1)
+        if (found := papers.search(line)) is not None
+    ]
+    assert named == []

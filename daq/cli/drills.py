@@ -29,7 +29,7 @@ JOG_OFF_SHARE_MAX = 0.1
 STEADY_S = 0.5
 WAIT_S = 30.0
 DRILL_S = 1.5
-STOP_S_MAX = 0.3  # job.md A6
+STOP_S_MAX = 0.3  # trade judgement, no source
 
 
 class Bench:

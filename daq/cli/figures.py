@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from functools import lru_cache
 
-WEIBULL_BARS_MIN = 5  # job map B5: fewer tell nothing
+WEIBULL_BARS_MIN = 5  # trade judgement, no source: fewer tell nothing
 
 
 def series_words(strengths_mpa: Sequence[float]) -> str:

@@ -1,7 +1,7 @@
 """Keys of the operator's terminal: what was struck becomes a stop at once, or one deliberate key after a short quiet.
 
 A gauge, scanner or paste sends many characters in quick succession: such a burst may stop the frame, never do
-anything else (job.md D1). So a key counts only when nothing came shortly before it and nothing follows.
+anything else. So a key counts only when nothing came shortly before it and nothing follows.
 """
 
 from __future__ import annotations

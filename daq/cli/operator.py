@@ -27,7 +27,7 @@ keys: m call the next bar (tare)      G O start (two keys within 2 s)
       1-9 note   ? these keys   q leave"""
 HINTS = {"G": "G: strike O within 2 s to START", "B": "B: strike O within 2 s to BACK OFF"}
 PUMP_S = 0.05
-BACK_OFF_MM = 2.0  # job.md G4
+BACK_OFF_MM = 2.0  # common practice, no source: 1 to 2 mm
 BACK_OFF_MM_MIN = 20.0
 RETRY_SEAT_S = 2.0
 

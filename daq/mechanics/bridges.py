@@ -1,6 +1,6 @@
 """Gauge bridges: output ratio r = Vo/Vex for strain and back, exact circuit solutions, and the shunt check.
 
-x = GF eps throughout (check values 1.8: circuit solved). Bending half and full bridges cancel axial strain
+x = GF eps throughout (checked against the solved circuit). Bending half and full bridges cancel axial strain
 to first order only.
 """
 

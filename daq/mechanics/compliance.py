@@ -1,6 +1,6 @@
 """What gives besides the bar: a measured table of force against deflection, removed from crosshead travel.
 
-Outside the measured force range there is no answer (NaN), never an extrapolation. Job map 3.8.
+Outside the measured force range there is no answer (NaN), never an extrapolation.
 """
 
 from __future__ import annotations

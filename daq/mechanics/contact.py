@@ -1,7 +1,7 @@
 """The rollers' own local stress at the opposite face, where beam theory is not the whole truth.
 
 Source: the exact plane-elastic strip under a line load (Filon; von Karman and Seewald), computed for this
-project by Fourier integral and confirmed by finite elements (check values 1.5). The textbook's k = 0.1773
+project by Fourier integral and confirmed by finite elements. The textbook's k = 0.1773
 comes from 1927 numerics and differs by 0.003 h/L. Never applied by default: the nominal stress stays
 nominal.
 """

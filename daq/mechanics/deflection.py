@@ -3,8 +3,7 @@ up.
 
 A deflection sensor under the bar sees mid-span; the crosshead sees the load rollers. In three-point the two
 are one. In four-point the same reading means 1.375 (quarter-point) or 1.150 (third-point) times more or less
-strain, so each function names its place. Sources: elementary beam theory, exact rationals (check values
-1.2).
+strain, so each function names its place. Sources: elementary beam theory, exact rationals.
 """
 
 from __future__ import annotations

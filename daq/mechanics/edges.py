@@ -18,8 +18,7 @@ _FILLET_MOMENT = (
 
 
 def chamfer_factor(section: Rectangle, chamfer_mm: float) -> float:
-    """Four 45-degree chamfers of leg c: I = bh^3/12 - 4[c^4/36 + (c^2/2)(h/2 - c/3)^2] (geometry; job map
-    3.9).
+    """Four 45-degree chamfers of leg c: I = bh^3/12 - 4[c^4/36 + (c^2/2)(h/2 - c/3)^2] (geometry).
 
     4 x 3 mm: 1.006871 at 0.12 mm, 1.010631 at 0.15 mm (ASTM C1161's "1 % at 0.15 mm", from memory).
     """

@@ -1,7 +1,7 @@
 """Rollers that do not roll: how much lower the true stress may be. One-sided, so never part of a +-
 uncertainty.
 
-First principles (job map 3.13): friction forces mu F/2 at each roller act h/2 from the axis. The full
+First principles: friction forces mu F/2 at each roller act h/2 from the axis. The full
 coefficient is the worst case; rollers that roll freely have none. Wedging, twist and tangency are not
 estimated here.
 """
@@ -10,7 +10,7 @@ from __future__ import annotations
 
 from daq.mechanics.sections import Section, Spans
 
-FIXED_ROLLER_FRICTION = 0.3  # common practice for ceramic on steel, no source; the job map's example value
+FIXED_ROLLER_FRICTION = 0.3  # common practice for ceramic on steel, no source
 
 
 def friction_share_max(section: Section, spans: Spans, friction: float = FIXED_ROLLER_FRICTION) -> float:

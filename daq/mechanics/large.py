@@ -3,7 +3,7 @@ it.
 
 None is applied by default and two standards differ (-4 against -3 in the thickness term), so a caller names
 one. All printed coefficients are from memory; the strain series and 1+6(s/L)^2 were checked against the
-elastica with frictionless supports (check values 1.6: series good to 0.25 % up to s/L = 0.17).
+elastica with frictionless supports (checked by integration: series good to 0.25 % up to s/L = 0.17).
 """
 
 from __future__ import annotations

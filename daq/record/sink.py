@@ -1,6 +1,6 @@
 """Sink: the file HDF5 writes a sealed record into, which never tells HDF5 that the disk refused.
 
-A failed write inside HDF5 ends the process by SIGSEGV when its objects are released (reliability figures:
+A failed write inside HDF5 ends the process by SIGSEGV when its objects are released (measured:
 6 of 6), and no `except` catches that. So the sink remembers the first error, keeps what could not be
 written in memory until HDF5 has closed in peace, and the sealer, who asks after every piece, throws the
 file away.

@@ -125,7 +125,7 @@ def _last_below_s(samples: Samples, level_n: float, end_s: float) -> float:
 
 
 def fall_time_constant_s(loading: Loading) -> float | None:
-    """Time constant of the fall after a sudden break, where it looks like one exponential; job map 3.7."""
+    """Time constant of the fall after a sudden break, where it looks like one exponential."""
     if loading.onset is None or loading.gradual:
         return None
     after = loading.samples.time_s >= loading.onset.first_dropped_s

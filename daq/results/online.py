@@ -32,7 +32,7 @@ from daq.stream.block import Floats
 
 CONTACT_SIGMAS = 10.0
 CONTACT_SHARE = 0.003  # of the median expected break load
-STIFFNESS_FROM_SHARE = 0.15  # of the median expected break load, job map 3.8
+STIFFNESS_FROM_SHARE = 0.15  # of the median expected break load; trade judgement, no source
 QUIET_UNTIL_SHARE = 0.05  # the stiffness is not shown before its own 2 sigma is below this
 
 

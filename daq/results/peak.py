@@ -1,4 +1,4 @@
-"""The load at the instant of the break, from the samples before it: job map 3.7.
+"""The load at the instant of the break, from the samples before it.
 
 Sudden break: a line (a parabola where its bend is significant at 3 sigma) over the last W of screened
 samples, carried to the middle of the interval in which the break lies, plus the lag of a declared filter.

@@ -1,6 +1,6 @@
 """The quiet record: noise, hum, drift and resolution of a force signal at rest. Pure.
 
-The reference for every later check (job.md A8). It judges nothing; it says what is there.
+The reference for every later check. It judges nothing; it says what is there.
 """
 
 from __future__ import annotations

@@ -16,8 +16,8 @@ from daq.results.story import Story
 from daq.results.uncertainty import Uncertainty
 from daq.results.zero import AfterZero
 
-RAW_DIFFERENCE_MAX = 0.005  # job map 3.7
-SAMPLING_MAX = 0.005  # (Ts/2 + tau)/t_break, job map B4
+RAW_DIFFERENCE_MAX = 0.005  # trade judgement, no source
+SAMPLING_MAX = 0.005  # (Ts/2 + tau)/t_break; trade judgement, no source
 TOE_SHARE_MAX = 0.25  # of the expected break load
 GLITCHES_MAX = 3
 SLIPS_MAX = 3

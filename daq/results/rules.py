@@ -73,8 +73,8 @@ class PlaceRule:
         }[self.region]
 
 
-# What each remark and finding leads to where the method card says nothing. Common practice, no source, unless job map
-# 3.14 names it. "nothing": a property of the set-up that the report states anyway.
+# What each remark and finding leads to where the method card says nothing. Common practice, no source.
+# "nothing": a property of the set-up that the report states anyway.
 DEFAULTS: Mapping[str, Consequence] = MappingProxyType({
     "fixed rollers": Consequence.NOTHING,
     "displacement aligned": Consequence.NOTHING,

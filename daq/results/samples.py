@@ -16,7 +16,7 @@ from daq.results.fits import robust_spread
 from daq.stream.block import Floats
 from daq.stream.rundata import ChannelData, RunData
 
-SCREEN_SIGMAS = 6.0  # job map 3.4
+SCREEN_SIGMAS = 6.0  # trade judgement, no source
 SCREEN_SHARE = 0.02  # of the forecast; carries the load where noise has tails
 MEDIAN_SAMPLES = 5  # outlives glitches of two samples
 

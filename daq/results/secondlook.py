@@ -1,4 +1,4 @@
-"""Second look: what may be wrong with a bar whose stiffness is off - the ranked explanations of job map F5.
+"""Second look: what may be wrong with a bar whose stiffness is off - the ranked explanations.
 
 Each slip changes the modulus by a factor that elementary beam theory gives; the one nearest to what was seen comes
 first. It explains and asks; it never corrects.
@@ -12,8 +12,8 @@ from dataclasses import dataclass
 
 from daq.mechanics.sections import Rectangle, Section, Spans
 
-BAND = 0.15  # of the series' median, job map 3.14
-SIGMAS = 4.0  # or so many robust standard deviations of the series, whichever is wider, job map F5
+BAND = 0.15  # of the series' median; trade judgement, no source
+SIGMAS = 4.0  # or so many robust standard deviations of the series, whichever is wider
 BARS_MIN = 3  # fewer have no median worth the name
 NEAR = 0.12  # of ln ratio: an explanation further off is none
 

@@ -1,4 +1,4 @@
-"""Toe, stiffness and Young's modulus from load and displacement; job map 3.1 and 3.8.
+"""Toe, stiffness and Young's modulus from load and displacement.
 
 The modulus is shown only where it means something: a sensor at the bar, or crosshead travel whose machine
 part is measured, inside its table, and less than half of the travel. Otherwise the reason is the answer.

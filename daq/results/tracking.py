@@ -1,6 +1,6 @@
 """Achieved rates: slopes over 0.5 s between seated and 95 % of the peak, and whether the drive hesitated.
 
-Job map 3.10. The nominal rate is what was asked for; strength depends on the rate that was there.
+The nominal rate is what was asked for; strength depends on the rate that was there.
 """
 
 from __future__ import annotations

@@ -1,4 +1,4 @@
-"""What one strength is worth: GUM, first order, per bar; k = 2. Job map 3.13, check values 4.
+"""What one strength is worth: GUM, first order, per bar; k = 2.
 
 Every contributor is listed, every one that is not known is listed too, and one-sided terms stay apart: a
 friction that can only lower the true stress is no +-. Scatter between bars is not an uncertainty of

@@ -1,4 +1,4 @@
-"""After-zero: does the cell come back to where it was tared? Job map 3.2 and E6. Both values are always kept.
+"""After-zero: does the cell come back to where it was tared? Both values are always kept.
 
 The watch measures the shift; a run without its event is measured here from the tail. A corrected load is
 offered, with the cause it assumes: drift grows with time, a tare under load is there from the start.

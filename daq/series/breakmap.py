@@ -29,7 +29,7 @@ class BreakMap:
 
     @property
     def caution(self) -> bool:
-        """At least ten bars and p < 0.01 (job map G7)."""
+        """At least ten bars and p < 0.01 (trade judgement, no source)."""
         return self.left + self.right >= CAUTION_BARS and self.p_one_sided < CAUTION_P
 
     @property

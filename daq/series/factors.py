@@ -1,7 +1,7 @@
 """Unbiasing factors and pivotal bounds of maximum-likelihood Weibull estimates from complete samples.
 
 Source: our own simulation (1,000,000 samples a row, 400,000 from n = 40 on; three million for the unbiasing
-factors of n = 5, 10, 20, 30), in agreement with check values 3.1 within their noise. The table printed in
+factors of n = 5, 10, 20, 30), in agreement with an independent simulation within its noise. The table printed in
 ASTM C1239 comes from a smaller, older simulation and lies 0.002 to 0.007 above these factors. Not for
 suspended bars: use `profile`. Between rows: (value - 1) sqrt(n), t sqrt(n) and (1 - factor) n go straight in
 1/n; beyond n = 120 they stay.
@@ -17,7 +17,7 @@ import numpy as np
 from daq.series.profile import Interval, WeibullBounds
 from daq.series.weibull import WeibullFit
 
-N_MIN = 5  # fewer bars: no Weibull at all, the mean only (job map I1)
+N_MIN = 5  # fewer bars: no Weibull at all, the mean only (trade judgement, no source)
 # n: (unbiasing factor of m, quantiles of m_hat/m, quantiles of m_hat ln(s_hat/s)); quantiles at QUANTILES
 QUANTILES = (0.025, 0.05, 0.10, 0.90, 0.95, 0.975)
 TABLE = MappingProxyType({

@@ -1,4 +1,4 @@
-"""Competing flaw populations: one fit per coded origin, every other bar suspended at its stress; job map I2.
+"""Competing flaw populations: one fit per coded origin, every other bar suspended at its stress.
 
 No bar is left out. One uncoded bar makes the separation a guess, so it is then not made.
 """

@@ -1,6 +1,6 @@
 """Gates of a plan: what would go wrong, said before a bar is cut. Each gate is one line with its figures.
 
-Sources: job map B2 to B5, E3 and 3.6; the limits are judgement of the trade unless a line says otherwise.
+The limits are judgement of the trade unless a line says otherwise.
 """
 
 from __future__ import annotations
@@ -16,7 +16,7 @@ from daq.series.plan import Plan
 SAMPLING_GREEN, SAMPLING_CAUTION = 1e-3, 5e-3  # (sample interval/2 + lag) over time to break
 WORKING_SHARE = 0.8  # of capacity and fixture rating
 SLENDERNESS_REFUSED, SLENDERNESS_LOW, SLENDERNESS_HIGH = 5.0, 10.0, 60.0
-NOISE_RATIO_MIN, SAMPLES_MIN, LAG_SHARE_MAX = 100.0, 50.0, 0.02  # break detection (job map 3.6)
+NOISE_RATIO_MIN, SAMPLES_MIN, LAG_SHARE_MAX = 100.0, 50.0, 0.02  # break detection
 MACHINE_SHARE_MAX = 0.5  # a modulus from the crosshead needs the bar to be the larger part
 PRELOAD_SHARE_MAX = 0.1  # of P1
 TIME_SHARE_MAX = 0.05  # bars that may break outside the method's time window
@@ -137,7 +137,7 @@ def sampling(plan: Plan) -> Iterator[Finding]:
 
 
 def detection(plan: Plan) -> Iterator[Finding]:
-    """Whether noise, rate and lag let the fracture watch work as measured (job map 3.6)."""
+    """Whether noise, rate and lag let the fracture watch work as measured."""
     bench, typical = plan.bench, plan.mean
     weak: list[str] = []
     if bench.noise_n is not None and bench.noise_n > 0:

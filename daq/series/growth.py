@@ -67,7 +67,7 @@ def strength_at_rate_mpa(growth: CrackGrowth, rate_mpa_s: float) -> float:
 
 
 def strength_change_per_decade(n: float) -> float:
-    """Relative rise of strength for ten times the rate: 10^(1/(n+1)) - 1 (job map 3.10)."""
+    """Relative rise of strength for ten times the rate: 10^(1/(n+1)) - 1 (constant stress rate, power law)."""
     return float(10.0 ** (1.0 / (n + 1.0)) - 1.0)
 
 

@@ -1,6 +1,6 @@
 """The plan: what a method, a material and a frame will do before a bar is cut. Numbers only; gates judge them.
 
-Two-parameter Weibull on the mean strength of the card (job map B2). Beam and frame are two springs in series; the toe
+Two-parameter Weibull on the mean strength of the card. Beam and frame are two springs in series; the toe
 is not planned. Corrections are separate numbers beside the nominal beam stress.
 """
 

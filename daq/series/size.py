@@ -1,6 +1,6 @@
 """Effective volume and surface of a flexure bar, and what a change of size or loading does to strength.
 
-Source: job map 3.12 and check values 3.3, closed forms of the Weibull integral over the beam stress (first
+Source: closed forms of the Weibull integral over the beam stress (first
 principles). Volume integrates the tension half only; surface is the tension face and the two sides.
 """
 

@@ -14,7 +14,7 @@ from daq.series.plan import FILTER_SHARE, Plan
 
 BARS_SHOWN = (5, 10, 15, 20, 30, 50, 100)
 BARS_MAX = 500
-RATE_HZ_MIN = 10.0  # the slowest stream that the fracture watch was measured with (job map 3.5)
+RATE_HZ_MIN = 10.0  # the slowest stream that the fracture watch was measured with
 
 
 @dataclass(frozen=True, slots=True)

@@ -1,7 +1,7 @@
 """Two-parameter Weibull by maximum likelihood, with suspended bars kept in: P = 1 - exp(-(s/s0)^m).
 
-Source: job map 3.12 and check values 3 (the equations of ASTM C1239 and ISO 20501, from memory; no value is
-copied). Suspended = survived to this stress, or broke from another flaw: never thrown away. Three parameters
+Source: the equations of ASTM C1239 and ISO 20501, from memory; no value is
+copied. Suspended = survived to this stress, or broke from another flaw: never thrown away. Three parameters
 are not fitted.
 """
 

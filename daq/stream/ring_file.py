@@ -38,7 +38,7 @@ from daq.errors import RecordingError
 
 PAGE_BYTES = 4096
 RING_BYTES_MIN = PAGE_BYTES
-RING_SECONDS = 60.0  # design.md 4: survives a disc that stalls for 10 s six times over
+RING_SECONDS = 60.0  # survives a disc that stalls for 10 s six times over
 _MIB = 1 << 20
 _JOURNAL_AT = 1024
 JOURNAL_NAME_BYTES_MAX = PAGE_BYTES - _JOURNAL_AT

@@ -1,8 +1,7 @@
 """The tail of a loading: standstill, residual load, second break, zero after, and the close that always comes.
 
-Reference: job map 3.5 step 8, G2 to G5, E6, E7. Works on the bin means of the fracture watch's level, so it
-sees what the watch accepted; commands only the back-off after a clean break, and only where the card and G4
-allow it.
+Works on the bin means of the fracture watch's level, so it sees what the watch accepted; commands only the back-off
+after a clean break, and only where the card and the state of the bar allow it.
 """
 
 from __future__ import annotations

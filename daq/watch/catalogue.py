@@ -35,7 +35,7 @@ EVENTS: Mapping[str, str] = {
     "rate_interrupted": "The loading rate changed by a step of more than a quarter: duration_s.",
     # states, stops, limits
     "state": "The state word changed: from, to, reason.",
-    "limit": "A limit of job map section 4: row, value, limit, unit, what, did, do_now, first (cause).",
+    "limit": "A limit (its row in daq.watch.limits.ROWS): row, value, limit, unit, what, did, do_now, first (cause).",
     "limit_outlier": "One single sample outside a limit: counted, not obeyed.",
     "limit_tightened": "A limit was lowered: key, value, before.",
     "stop_sent": "A stop was commanded: reason, attempt.",

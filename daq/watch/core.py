@@ -40,7 +40,7 @@ from daq.watch.values import (
 ANVIL_CLEAR_MM = 0.5
 AGE_BINS, AGE_LAGS = 2.0, 3.0
 RUN_TOO_LONG_ROW = 33
-UNKNOWN_SAMPLES = 50  # reliability F9
+UNKNOWN_SAMPLES = 50
 STOP_BY_HAND = "midspan cannot stop this machine: STOP IT BY ITS OWN CONTROLS"
 
 

@@ -1,6 +1,6 @@
 """Slip or pop-in: what a partial drop was, told by the stiffness before and after it. Never stops anything.
 
-Reference: job map 3.5 step 3. The crosshead keeps its speed, so force slope stands for force over travel; the
+The crosshead keeps its speed, so force slope stands for force over travel; the
 machine's compliance is taken out before the two are compared, because a 5 % loss in the bar shows as 3.3 %
 only in series with an equally stiff machine. Window for three sigma on a relative change e of the slope
 (least squares, two windows): T = (216 s^2/(fs (e F')^2))^(1/3).

@@ -1,7 +1,7 @@
 """Usable envelope: can a break be seen with this noise, rate and lag, and its peak measured. Tells only.
 
-Reference: job map 3.6 (peak/noise >= 100, >= 50 samples before the break, lag < 2 % of the time to break) and
-the sampling gate B4: (sample interval/2 + lag)/time to break below 0.1 % green, below 0.5 % caution, else
+Trade judgement, no source (peak/noise >= 100, >= 50 samples before the break, lag < 2 % of the time to break) and
+the sampling gate: (sample interval/2 + lag)/time to break below 0.1 % green, below 0.5 % caution, else
 block.
 """
 

@@ -1,7 +1,7 @@
 """What follows from a finding of the fracture watch: a stop, a verdict, an event, or an operator's unloading.
 
 The fracture watch knows force only. Before a fall is believed, the crosshead is asked whether it went back
-far enough to have taken the load off itself (job map 3.5 step 7).
+far enough to have taken the load off itself.
 """
 
 from __future__ import annotations

@@ -2,7 +2,7 @@
 
 Every sample that lies further from the forecast than the threshold opens a *candidate*; while one is open,
 forecast, noise and envelope stand still. A candidate ends as sudden break, gradual failure, lasting drop,
-partial drop, glitch, silent re-baseline, or signal lost (job map 3.5). The scalar `feed` is the definition;
+partial drop, glitch, silent re-baseline, or signal lost. The scalar `feed` is the definition;
 `quiet`/`take` prove for a whole stretch that nothing happens in it and give the very same state after. It
 knows force only: whether the crosshead went back, and so took the load off, is asked by the pipeline before
 it believes anything found here.

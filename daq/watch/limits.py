@@ -1,4 +1,4 @@
-"""Force limits on gross force: rows 1 to 5 of job map section 4, and what every row tells the operator. Pure.
+"""Force limits on gross force: rows 1 to 5, and what every row tells the operator. Pure.
 
 Prove the safe side: everything not shown to be inside is outside, NaN included. A limit is passed when two
 consecutive samples lie outside; NaN, a rail, or one sample at 100 % of the cell's capacity passes at once; a

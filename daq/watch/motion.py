@@ -1,4 +1,4 @@
-"""Motion supervision: rows 7 to 14 of job map section 4 as small pure judges. Commands nothing itself."""
+"""Motion supervision: rows 7 to 14 of the limits as small pure judges. Commands nothing itself."""
 
 from __future__ import annotations
 

@@ -2,8 +2,8 @@
 
 The line is fitted to the last 0.1 s (at least 8 samples) and held constant for a bin of samples, so that the
 scalar and the vectorised path compare the very same numbers: neither accumulates anything inside a bin. Sigma
-is max(1.4826 median|r| over 0.5 s, sigma at rest, step/sqrt 12) with r the residuals of the forecast (job map
-3.3: hum and drift end in r too, second differences would miss them). The reference takes at most 200 samples
+is max(1.4826 median|r| over 0.5 s, sigma at rest, step/sqrt 12) with r the residuals of the forecast
+(hum and drift end in r too, second differences would miss them). The reference takes at most 200 samples
 into the line; here they are binned instead, so that 0.1 s stays 0.1 s at 50 kS/s, where 200 samples would
 follow the mains hum.
 """

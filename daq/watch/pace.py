@@ -1,6 +1,6 @@
 """Pace: the loading rate while loading: out of its band, interrupted, or not what the plan says.
 
-Reference: job map 3.10, rows 23 and 24 of section 4. Tells, and, where the method lets midspan close the loop,
+Rows 23 and 24 of the limits. Tells, and, where the method lets midspan close the loop,
 says which speed would give the wanted rate. Slopes are taken over half a second, ten times a second at most.
 """
 

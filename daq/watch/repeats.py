@@ -8,7 +8,7 @@ import numpy as np
 
 from daq.stream.block import Floats
 
-FROZEN_PROBABILITY = 1e-6  # job map 3.5 step 6
+FROZEN_PROBABILITY = 1e-6  # trade judgement, no source
 ALWAYS_STILL = 0.999
 
 

@@ -1,6 +1,6 @@
 """Seating: when the stiffness has become steady, and how long the toe was. Tells; stops nothing.
 
-Reference: job map 3.1. Slopes over windows of max(0.2 s, 20 samples, 2 % of the time to the median break load,
+Slopes over windows of max(0.2 s, 20 samples, 2 % of the time to the median break load,
 and as long as the noise needs for a slope good to 5 % at two sigma): in noise a shorter window would never
 look steady.
 """

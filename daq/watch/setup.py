@@ -215,7 +215,7 @@ def _rate_problems(setup: WatchSetup, method: MethodCard) -> list[str]:
 
 
 def capacity_problems(setup: WatchSetup, method: MethodCard, fixture: Fixture, plan: Expected) -> list[str]:
-    """Limits that could not be kept, or a bar that could not be broken inside them (reliability F30)."""
+    """Limits that could not be kept, or a bar that could not be broken inside them."""
     ceiling = working_limit_n(setup.frame, fixture)
     found = []
     if not plan.load_p50_n < ceiling:

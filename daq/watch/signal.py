@@ -18,7 +18,7 @@ from daq.watch.values import Severity, State
 GAP_SAMPLES_MAX = 5
 FROZEN_S = 0.05
 BACK_S = 0.5
-UNKNOWN_S = 0.5  # reliability F9
+UNKNOWN_S = 0.5
 NAN = float("nan")
 
 

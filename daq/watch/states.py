@@ -2,8 +2,7 @@
 
 Three promises hold by construction and are checked by tests/watch/test_states.py: a stop cause never leads to
 a moving state, a reset only ever leads to rest, and nothing leads from rest to motion but a deliberate start,
-jog or return (IEC 60204-1 as publicly summarised: stop overrides start, a reset must not restart; job map
-S13).
+jog or return (IEC 60204-1 as publicly summarised: stop overrides start, a reset must not restart).
 """
 
 from __future__ import annotations

@@ -1,6 +1,6 @@
 """StopCheck: a stop is not believed until the crosshead stands. Repeats at 10 Hz, says when it failed.
 
-Row 26 and row 12 of job map section 4: displacement still changing 0.3 s after the stop (or half again the
+Rows 26 and 12 of the limits: displacement still changing 0.3 s after the stop (or half again the
 measured stop latency), a run-on of ten times what was expected, or a force that still rises, is a failed
 stop.
 

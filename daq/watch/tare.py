@@ -1,6 +1,6 @@
 """Tare: a zero taken at rest over whole mains periods, with noise, drift and uncertainty, or refused.
 
-Reference: job map 3.2 and E4. A second is 50 periods of 50 Hz and 60 of 60 Hz, and each of its ten blocks is 5
+A second is 50 periods of 50 Hz and 60 of 60 Hz, and each of its ten blocks is 5
 and 6: hum leaves the block means, aliased or not, and their median survives a knock. Nothing is ever
 subtracted from the recorded force: limits go on seeing gross.
 """

@@ -1,6 +1,6 @@
 """The zero of an open run: collect at rest, judge, accept or refuse, and say what the watch will see.
 
-Reference: job map 3.2, 3.6, E4; rows 17, 19, 20 and 21 of section 4. Tried again for as long as the run is
+Rows 17, 19, 20 and 21 of the limits (daq.watch.limits.ROWS has the numbers). Tried again for as long as the run is
 open.
 """
 

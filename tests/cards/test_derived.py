@@ -147,7 +147,7 @@ def test_compliance_holds_for_its_own_fixture_and_cell(frames):
 @pytest.mark.parametrize(
     ("stress", "size", "spans", "load"),
     [
-        # 3FL/(2bh^2), 3F(L-Li)/(2bh^2), FL/(bh^2), 8FL/(pi d^3), 8FLD/(pi(D^4-d^4)): published check values
+        # 3FL/(2bh^2), 3F(L-Li)/(2bh^2), FL/(bh^2), 8FL/(pi d^3), 8FLD/(pi(D^4-d^4)): textbook, exact
         (166.66666666666666, ("rectangle", 4, 3), (40, 0), 100),
         (83.33333333333333, ("rectangle", 4, 3), (40, 20), 100),
         (1.875, ("rectangle", 40, 40), (120, 40), 1000),

@@ -1,4 +1,4 @@
-"""The shipped method cards against check-values' catalogue of standards, and own cards that come before them.
+"""The shipped method cards against a catalogue of standards, and own cards that come before them.
 
 Marks: C confirmed on a public page, K computed with an independent general library, M from memory.
 """

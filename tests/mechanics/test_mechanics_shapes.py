@@ -56,7 +56,7 @@ def test_machine_part_is_removed_and_never_extrapolated():
 
 
 def test_mortar_prism_on_a_soft_frame():
-    """Job map 3.8: the bar is 9.7 of 159 um at 20 kN/mm, so 94 % of the travel is the machine's."""
+    """Springs in series: the bar is 9.7 of 159 um at 20 kN/mm, so 94 % of the travel is the machine's."""
     force_n = 2987.0
     table = ComplianceTable(np.array([0.0, 5000.0]), np.array([0.0, 5000.0 / 20e3]))
     assert machine_share(table, 0.0, force_n, 0.0097) == pytest.approx(0.939, abs=1e-3)

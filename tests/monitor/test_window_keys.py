@@ -1,4 +1,4 @@
-"""Keys: stop on key-down in every state, start only by holding, bursts of devices never a command (job.md D1, F1)."""
+"""Keys: stop on key-down in every state, start only by holding, bursts of devices never a command."""
 
 from __future__ import annotations
 

@@ -1,4 +1,4 @@
-"""Shear, roller stress, large deflection, place, gauges, edges, bridges: check values 1.4 to 1.8.
+"""Shear, roller stress, large deflection, place, gauges, edges, bridges.
 
 Marks: C confirmed on a public page, K computed with an independent general library, M from memory.
 """
@@ -179,7 +179,7 @@ def test_chamfer_factor(chamfer_mm: float, factor: float):
 
 
 def test_friction_is_one_sided_and_as_the_job_map_says():
-    """mu 0.3, h 3: 9 % in four-point with a = 10, 3 % in three-point on 40 (job map 3.13)."""
+    """mu 0.3, h 3: 9 % in four-point with a = 10, 3 % in three-point on 40 (first principles)."""
     assert friction_share_max(BAR, Spans(40.0, 20.0)) == pytest.approx(0.09, rel=1e-12)
     assert friction_share_max(BAR, Spans(40.0)) == pytest.approx(0.03, rel=1e-12)
 

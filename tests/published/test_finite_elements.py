@@ -1,6 +1,6 @@
 """Beam formulae against plane-stress finite elements solved here (scikit-fem, quadratic, coarse graded mesh).
 
-Reference: check values 1.4 and 1.5, which used 44,000 unknowns; here about 3,000, so tolerances are wider.
+Reference: finite elements solved beforehand, which used 44,000 unknowns; here about 3,000, so tolerances are wider.
 """
 
 import numpy as np

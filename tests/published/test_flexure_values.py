@@ -1,4 +1,4 @@
-"""Flexure formulae against values from outside: check values 1.1 to 1.3.
+"""Flexure formulae against values from outside, exact rationals.
 
 Marks: C confirmed on a public page, K computed with an independent general library, M from memory.
 """
@@ -108,7 +108,7 @@ def test_offcentre_break_of_a_beam():
     assert offcentre_stress_mpa(30000.0, 150.0, beam) == pytest.approx(
         beam_stress_mpa(30000.0, beam, Spans(450.0, 150.0)), rel=EXACT
     )
-    # job map scenario 6: 100 x 100 on 300, 15.0 kN, 12 mm outside the middle third
+    # acceptance scenario 6: 100 x 100 on 300, 15.0 kN, 12 mm outside the middle third
     assert offcentre_stress_mpa(15000.0, 88.0, Rectangle(100.0, 100.0)) == pytest.approx(3.96, rel=EXACT)
 
 
@@ -233,7 +233,7 @@ def test_stress_rate_and_force_rate(
 
 
 def test_real_frame_slows_the_stress_rate():
-    """Job map B2: alumina 380 GPa, 4 x 3 on 40/20, 0.5 mm/min, 10 kN/mm: 23.6 MPa/s against 36 on a rigid
+    """Worked out beforehand: alumina 380 GPa, 4 x 3 on 40/20, 0.5 mm/min, 10 kN/mm: 23.6 MPa/s against 36 on a rigid
     one.
     """
     bar_n_mm = load_point_stiffness_n_mm(380e3, BAR, QUARTER)

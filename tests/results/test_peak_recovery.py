@@ -1,4 +1,4 @@
-"""Recovered peak against the truth of made-up breaks: the table of job map 3.7, within its own scatter."""
+"""Recovered peak against the truth of made-up breaks: a table simulated beforehand, within its own scatter."""
 
 import math
 
@@ -24,7 +24,7 @@ def errors_percent(made, bar, runs: int, seed: int = 20):
 
 @pytest.mark.parametrize(
     ("rate_hz", "break_s", "sigma_n", "lag_s", "raw", "raw_sd", "scatter"),
-    [  # percent: raw maximum and its scatter, and the recovered value's scatter [Calc], 480 N
+    [  # percent: raw maximum and its scatter, and the recovered value's scatter; simulated, 480 N
         (10.0, 15.0, 0.3, 0.0, -0.33, 0.20, 0.20),
         (10.0, 1.0, 0.3, 0.0, -4.9, 2.9, 2.9),
         (100.0, 15.0, 0.3, 0.0, -0.02, 0.06, 0.03),
@@ -63,7 +63,7 @@ def test_noisy_row_of_the_table(made):
 
 @pytest.mark.slow
 def test_clean_alumina_is_within_a_tenth_of_a_percent(made):
-    """Job map scenario 1: |mean bias| <= 0.02 %, each <= 0.1 %."""
+    """Acceptance scenario 1: |mean bias| <= 0.02 %, each <= 0.1 %."""
     bar = made.Bar(peak_n=460.0, time_to_break_s=16.0, sigma_n=0.15, quantum_n=0.016, ring_hz=250.0)
     recovered, _, _ = errors_percent(made, bar, 15)
     assert np.max(np.abs(recovered)) <= 0.1
@@ -71,7 +71,7 @@ def test_clean_alumina_is_within_a_tenth_of_a_percent(made):
 
 
 def test_slow_filter_not_declared_is_never_silently_recovered(made):
-    """Job map scenario 2: glass in one second through 2 Hz; with no lag declared the value stays 8 %
+    """Acceptance scenario 2: glass in one second through 2 Hz; with no lag declared the value stays 8 %
     low and says so.
     """
     shape = {"peak_n": 108.0, "time_to_break_s": 1.0, "toe_s": 0.1, "sigma_n": 0.15, "lag_s": LAG_2_HZ}
@@ -96,7 +96,7 @@ def test_declared_lag_that_is_wrong_is_seen_in_the_fall(made):
 
 @pytest.mark.parametrize("rate_hz", [100.0, 1000.0])
 def test_gradual_failure_takes_the_top_and_never_more(made, rate_hz):
-    """Job map scenario 5: softening 15 % before the peak, fall with 80 ms: top within 0.2 %, no
+    """Acceptance scenario 5: softening 15 % before the peak, fall with 80 ms: top within 0.2 %, no
     overshoot above 0.2 %.
     """
     bar = made.Bar(

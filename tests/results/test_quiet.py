@@ -23,7 +23,7 @@ def test_noise_and_drift() -> None:
 
 @pytest.mark.parametrize(("rate_hz", "seen_hz"), [(1000.0, 50.0), (80.0, 30.0)])
 def test_hum_is_named_with_true_and_seen_frequency(rate_hz: float, seen_hz: float) -> None:
-    """job.md 6, scenario 4: 2 N of 50 Hz at 80 S/s shows as 30 Hz."""
+    """Acceptance scenario 4: 2 N of 50 Hz at 80 S/s shows as 30 Hz."""
     quiet = quiet_record(*signal(rate_hz, 5.0, sigma=0.4, hum=2.0))
     line = next(line for line in quiet.hum if line.true_hz == 50.0)
     assert line.seen_hz == pytest.approx(seen_hz, abs=0.1)
@@ -34,7 +34,7 @@ def test_hum_is_named_with_true_and_seen_frequency(rate_hz: float, seen_hz: floa
     ("true", "rate", "seen"), [(50, 80, 30), (60, 100, 40), (50, 49.5, 0.5), (50, 1000, 50)]
 )
 def test_alias(true: float, rate: float, seen: float) -> None:
-    """Values of job.md 3.3."""
+    """|f - fs round(f/fs)|, worked out by hand."""
     assert alias_hz(true, rate) == pytest.approx(seen)
 
 

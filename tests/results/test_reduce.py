@@ -30,7 +30,7 @@ def codes(result) -> set[str]:
 
 @pytest.fixture(scope="module")
 def alumina(made):
-    """One clean bar of job map scenario 1."""
+    """One clean bar of acceptance scenario 1."""
     return made.made_run(made.Bar(quantum_n=0.016), np.random.default_rng(1))
 
 
@@ -186,7 +186,7 @@ def test_sensor_at_the_bar_is_read_at_its_own_place(made, kind):
 
 
 def test_modulus_from_the_crosshead_is_refused_on_a_stiff_bar(made):
-    """Job map 3.8 and scenario 4: a bar ten times stiffer than the frame."""
+    """Acceptance scenario 4: a bar ten times stiffer than the frame."""
     run = made.made_run(made.Bar(modulus_gpa=3800.0), np.random.default_rng(1))
     result = reduce(run)
     assert isinstance(result.modulus, str) and "machine's own part is 8" in result.modulus
@@ -207,7 +207,7 @@ def test_modulus_outside_the_compliance_table_is_refused(made):
 
 
 def test_tare_under_load_is_found_after_the_break(made):
-    """Job map scenario 8: 30 N tared away; indicated -6.5 %, corrected within 0.1 %, both kept and
+    """Acceptance scenario 8: 30 N tared away; indicated -6.5 %, corrected within 0.1 %, both kept and
     flagged.
     """
     true_n = 460.0
@@ -415,7 +415,7 @@ def test_never_raises_on_whatever_a_run_holds(made, events, rows, ordered, cards
 
 
 def test_work_is_the_area_under_load_over_displacement(alumina):
-    """An elastic bar: half of load times deflection (toe taken off); job map 2 B2 names 31 mJ for bar and machine."""
+    """An elastic bar: half of load times deflection (toe taken off); a worked example has 31 mJ for bar and machine."""
     found = reduce(alumina).as_json()
     elastic_mj = 0.5 * 460.0 * load_point_deflection_mm(460.0, 380e3, BAR, SPANS)
     assert found["work_to_break_mj"] == pytest.approx(elastic_mj, rel=0.02)
@@ -423,7 +423,7 @@ def test_work_is_the_area_under_load_over_displacement(alumina):
 
 
 def test_printed_forms_stand_beside_the_strength(made):
-    """Tile of check values 1.1: F 1500 N, L 280, b 300 gives S 1400 N; a rounded factor and a plate's own weight."""
+    """A tile: F 1500 N, L 280, b 300 gives S 1400 N; a rounded factor and a plate's own weight."""
     asked = {"breaking_strength": True, "printed_factor_mpa_n": 0.8, "density_kg_m3": 2500.0}
     run = made.made_run(made.Bar(method_changes={"strength": asked}), np.random.default_rng(1))
     found = reduce(run).as_json()

@@ -72,7 +72,7 @@ def test_a_method_may_make_any_remark_heavier() -> None:
     ],
 )
 def test_scenario_6_concrete_positions(at_mm, counting) -> None:
-    """Job map 6.6: inside; 4 % of the span outside the middle third; 6.7 %: not counted."""
+    """Acceptance scenario 6: inside; 4 % of the span outside the middle third; 6.7 %: not counted."""
     assert judge(evidence(from_mid_mm=at_mm), Rules(place=FIVE_PERCENT)).counting is counting
 
 

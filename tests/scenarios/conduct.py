@@ -250,7 +250,7 @@ def _moves(done: Done) -> bool:
 
 
 def arm_n(plan: Plan) -> float:
-    """From here on the fracture watch must be awake: job map 3.5, with a margin for the forecast's lag."""
+    """From here on the fracture watch must be awake (daq.watch.fracture), with a margin for the forecast's lag."""
     expected, cell = plan.expected, plan.frame.cell
     low = min(0.02 * cell.capacity_n, 0.1 * expected.load_p50_n)
     awake_n = max(low, 20.0 * (cell.noise_quiet_n or 0.0))

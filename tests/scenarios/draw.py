@@ -23,7 +23,7 @@ from simulator.card import SimulatorCard
 from tests.scenarios.world import bar, bars_of, frame_of, method_of
 
 RATES_HZ = (10.0, 20.0, 20.0, 25.0, 50.0, 50.0, 80.0, 100.0, 100.0, 125.0, 200.0, 200.0, 500.0, 1000.0)
-SAMPLES_TO_BREAK_MIN = 65.0  # the usable envelope asks for 50 (job map 3.6)
+SAMPLES_TO_BREAK_MIN = 65.0  # the usable envelope asks for 50
 # mean strength; the size effect of m = 12 makes the shorter loaded length stronger
 STRENGTH_MPA = {"quarter-40-20": 383.0, "three-40": 452.0}
 HUM_HZ = 50.0

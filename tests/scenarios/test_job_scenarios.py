@@ -1,4 +1,4 @@
-"""Acceptance scenarios of the job map (section 6), by number, on the virtual clock with the real wire bytes."""
+"""Acceptance scenarios, by number, on the virtual clock with the real wire bytes."""
 
 from __future__ import annotations
 

@@ -1,4 +1,4 @@
-"""What the plan says of the acceptance scenarios of the job map (section 6), by number."""
+"""What the plan says of the acceptance scenarios, by number."""
 
 from __future__ import annotations
 

@@ -112,7 +112,7 @@ def test_a_mixed_series_is_told_and_the_rest_is_reduced(other) -> None:
 
 
 def test_scaling_between_loadings() -> None:
-    """Check values 3.3: at equal bar and span sigma_3pt/sigma_1/4pt = ((m+2)/2)^(1/m), the same for volume and surface;
+    """At equal bar and span sigma_3pt/sigma_1/4pt = ((m+2)/2)^(1/m), the same for volume and surface;
     in tension 1/1.447326 at m = 10."""
     found = analyse(bars_of(400.0 * np.random.default_rng(4).weibull(10.0, 30)))
     m, scale = found.weibull.fit.modulus, found.weibull.fit.scale_mpa

@@ -1,4 +1,4 @@
-"""The planner against the job map's worked example, beam theory by hand, drawn bars, and published Weibull factors."""
+"""The planner against a worked example, beam theory by hand, drawn bars, and published Weibull factors."""
 
 from __future__ import annotations
 
@@ -77,7 +77,7 @@ def test_quantiles_are_those_of_drawn_bars():
 
 
 def test_springs_in_series_and_a_rigid_frame():
-    """300 GPa, 4 x 3 on 40/20: 4050 N/mm; on 10 kN/mm the rate is 0.71174 of the rigid one (check values 1.3, K)."""
+    """300 GPa, 4 x 3 on 40/20: 4050 N/mm; on 10 kN/mm the rate is 0.71174 of the rigid one."""
     method = changed_method(ALUMINA, {"expected.modulus_gpa": 300.0})
     rigid, real = make_plan(method), make_plan(method, Bench(stiffness_n_mm=10e3))
     assert rigid.bar_n_mm == pytest.approx(4050.0, rel=1e-12)
@@ -108,7 +108,7 @@ def test_force_and_stress_rates(name: str, load_n: float, time_s: float):
 
 
 def test_the_pane_s_own_weight_stands_beside():
-    """EN 1288-3: 3.065625 MPa for 6 mm on 1000 mm, 2500 kg/m3 (check values 1.1)."""
+    """EN 1288-3: 3.065625 MPa for 6 mm on 1000 mm, 2500 kg/m3."""
     assert make_plan(find_method("EN-1288-3").card).corrections.own_weight_mpa == pytest.approx(
         3.065625, rel=1e-9
     )
@@ -223,14 +223,14 @@ def test_bench_from_a_frame_card():
 
 
 def test_lag_of_a_filter():
-    """First-order filter: 0.15915/fc (check values 4); a declared constant comes first."""
+    """First-order filter: 0.15915/fc; a declared constant comes first."""
     assert lag_of(None, 2.0)[0] == pytest.approx(0.15915 / 2.0, rel=1e-4)
     assert lag_of(0.01, 2.0) == (0.01, "declared")
     assert lag_of(None, None) == (None, "not known")
 
 
 def test_sample_rates():
-    """q 0.1 %: 3 s -> 333.3 Hz; 400 MPa, 300 GPa at 9.375e-5/s: 14.22 s, 70.3 Hz (check values 4, K)."""
+    """q 0.1 %: 3 s -> 333.3 Hz; 400 MPa, 300 GPa at 9.375e-5/s: 14.22 s, 70.3 Hz."""
     assert last_sample_rate_hz(3.0, 1e-3) == pytest.approx(333.3, abs=0.05)
     time_s = 400.0 / (300e3 * 9.375e-5)
     assert time_s == pytest.approx(14.22, abs=0.005)
@@ -275,7 +275,7 @@ def test_the_ladder(value: float, step: float):
 
 @pytest.mark.parametrize(
     ("bars", "low", "high"),
-    [  # m_hat/m at 2.5 and 97.5 % of the job map's table (3.12, 40,000 samples a row, error about 0.5 %)
+    [  # m_hat/m at 2.5 and 97.5 % of a simulated table (40,000 samples a row, error about 0.5 %)
         (5, 1 / 3.42, 1 / 0.619),
         (10, 1 / 2.04, 1 / 0.690),
         (15, 1 / 1.70, 1 / 0.726),

@@ -55,7 +55,7 @@ def test_effective_sizes_agree_with_quadrature(spans: Spans, modulus: float):
 
 
 def test_break_map_counts_and_cautions():
-    """Job map scenario 12: 24 of 30 break left: caution with p = 0.0014."""
+    """Acceptance scenario 12: 24 of 30 break left: caution with p = 0.0014."""
     positions = [-3.0] * 23 + [-14.0] + [2.0] * 6
     found = break_map(positions, Spans(40.0, 20.0), roller_diameter_mm=4.5)
     assert (found.left, found.right, found.outside_load_span, found.near_roller) == (24, 6, 1, 1)

@@ -196,7 +196,7 @@ def test_percentage_points_by_simulation():
 
 @pytest.mark.slow
 def test_competing_flaws_keep_every_bar():
-    """Job map scenario 12: A m 12, s0 420; B m 6, s0 520: medians over seeds near the truth, the
+    """Acceptance scenario 12: A m 12, s0 420; B m 6, s0 520: medians over seeds near the truth, the
     pooled fit far off.
     """
     found = []

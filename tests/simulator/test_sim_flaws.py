@@ -39,7 +39,7 @@ def broken(populations, section, shape, bars, seed):
     ],
 )
 def test_effective_sizes_are_the_tabulated_ones(spans, m, volume, surface):
-    """Check values 3.3; our volume counts the tensile half only, exactly as theirs."""
+    """Closed forms worked out by others of the project; our volume counts the tensile half only, exactly as theirs."""
     assert effective_size("volume", RECTANGLE, spans, m) == pytest.approx(volume, rel=1e-6)
     assert effective_size("surface", RECTANGLE, spans, m) == pytest.approx(surface, rel=1e-6)
 

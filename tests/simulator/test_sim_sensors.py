@@ -49,7 +49,7 @@ def test_noise_has_its_sigma_and_no_memory():
 
 
 def test_hum_is_seen_at_its_alias():
-    """50 Hz at 80 samples/s shows at 30 Hz (job map 3.3)."""
+    """50 Hz at 80 samples/s shows at 30 Hz."""
     at_s = np.arange(800) / 80
     values = sensor(ForceSensor(hum=2.0, hum_hz=50.0), scale=1e-6).counts(0, at_s, np.zeros(800))
     spectrum = np.abs(np.fft.rfft(values * 1e-6)) / 400

@@ -23,7 +23,7 @@ def bar_of(card: SimulatorCard, fixture: Fixture, contact: Contact | None = None
 
 @pytest.mark.parametrize(("fixture", "bending"), [(THREE, 2025.0), (QUARTER, 4050.0)])
 def test_stiffness_is_the_tabulated_one_less_shear(make_card, fixture, bending):
-    """E 300, 4 x 3 x 40 (check values 1.3); shear share 2.4 (1+nu)(h/L)^2 for both (1.4)."""
+    """E 300, 4 x 3 x 40, exact rationals; shear share 2.4 (1+nu)(h/L)^2 for both."""
     bar = bar_of(make_card(), fixture)
     shear = 2.4 * 1.25 * (3 / 40) ** 2
     assert bar.stiffness_n_mm == pytest.approx(bending / (1 + shear), rel=1e-12)
@@ -31,7 +31,7 @@ def test_stiffness_is_the_tabulated_one_less_shear(make_card, fixture, bending):
 
 @pytest.mark.parametrize(("fixture", "ratio"), [(THREE, 0.83160), (QUARTER, 0.71174)])
 def test_a_soft_frame_lowers_the_slope_by_the_tabulated_ratio(make_card, fixture, ratio):
-    """10 kN/mm frame (check values 1.3), shear taken off by a very slender bar's formula."""
+    """10 kN/mm frame, shear taken off by a very slender bar's formula."""
     bar = bar_of(make_card(), fixture)
     bending = bar.stiffness_n_mm * (1 + 2.4 * 1.25 * (3 / 40) ** 2)
     assert in_series(10_000.0, bending) / bending == pytest.approx(ratio, abs=5e-6)
@@ -39,14 +39,14 @@ def test_a_soft_frame_lowers_the_slope_by_the_tabulated_ratio(make_card, fixture
 
 @pytest.mark.parametrize(("fixture", "stress"), [(THREE, 166.6666667), (QUARTER, 83.3333333)])
 def test_stress_per_newton(make_card, fixture, stress):
-    """F 100 N on 4 x 3 (check values 1.1); a 0.12 mm chamfer adds 0.6871 % (1.7)."""
+    """F 100 N on 4 x 3, exact rationals; a 0.12 mm chamfer adds 0.6871 %."""
     assert 100 * bar_of(make_card(), fixture).stress_per_n == pytest.approx(stress, rel=1e-9)
     chamfered = bar_of(make_card(), fixture, chamfer_mm=0.12)
     assert 100 * chamfered.stress_per_n == pytest.approx(stress * 1.006871, rel=1e-6)
 
 
 def test_fixed_rollers_carry_a_share_of_the_moment(make_card):
-    """mu h/a: 9 % at 0.3 on 40/20 (job map 3.13): the bar breaks at a higher force."""
+    """mu h/a: 9 % at 0.3 on 40/20 (first principles): the bar breaks at a higher force."""
     free = bar_of(make_card(), QUARTER, strength_mpa=400.0)
     fixed = bar_of(make_card(), QUARTER, Contact(friction=0.3), strength_mpa=400.0)
     assert free.break_n / fixed.break_n == pytest.approx(0.91, rel=1e-12)

@@ -1,4 +1,4 @@
-"""Cards for the tests of the watch: the bench of job map section 6, at any sample rate."""
+"""Cards for the tests of the watch: the bench of the acceptance scenarios, at any sample rate."""
 
 from __future__ import annotations
 

@@ -189,7 +189,7 @@ STRATA = (
 
 
 def draw(seed: int, stratum: str, rate_hz: float, *, brief: bool = False) -> Case:
-    """A case of that stratum at that rate, inside the usable envelope of job map 3.6. brief: short ramps."""
+    """A case of that stratum at that rate, inside the usable envelope (daq.watch.envelope). brief: short ramps."""
     rng = np.random.default_rng([seed, STRATA.index(stratum), round(rate_hz)])
     peak = rng.uniform(280.0, 560.0)
     shortest = max(2.5, 60.0 / rate_hz) if brief or rate_hz > 5000 else max(5.0, 60.0 / rate_hz)

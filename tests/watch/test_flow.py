@@ -196,7 +196,7 @@ def test_a_bar_that_breaks_while_the_machine_stops_is_a_break() -> None:
 
 @pytest.mark.slow
 def test_a_machine_that_does_not_stop_is_told_within_half_a_second() -> None:
-    """job map scenario 13: stop accepted, motion goes on at 8.3 um/s."""
+    """Acceptance scenario 13: stop accepted, motion goes on at 8.3 um/s."""
     for speed_mm_s in (0.0083, 5.0 / 60.0):
         rig = quick().loading(method(rate__speed_mm_min=60 * speed_mm_s), load_n=80.0)
         rig.machine.deaf = True
@@ -249,7 +249,7 @@ def test_what_the_position_cannot_show_is_said_and_not_taken_for_a_standstill() 
 
 @pytest.mark.slow
 def test_an_operators_unloading_is_not_a_break() -> None:
-    """job map scenario 19: at 60 % the operator drives the crosshead back within half a second."""
+    """Acceptance scenario 19: at 60 % the operator drives the crosshead back within half a second."""
     rig = quick()
     rig.loading(method(**FAST), load_n=276.0)
     rig.machine.speed_mm_s = -0.16
@@ -275,7 +275,7 @@ def test_a_piece_left_on_the_rollers_is_told_until_it_is_gone() -> None:
 
 @pytest.mark.slow
 def test_a_second_break_after_a_reload_is_told_once() -> None:
-    """job map scenario 14: first break to 40 %, reload, second break; the strength is from the first."""
+    """Acceptance scenario 14: first break to 40 %, reload, second break; the strength is from the first."""
     rig = quick()
     rig.started(method(**FAST))
     rig.run_until(lambda: rig.machine.broken)
@@ -298,7 +298,7 @@ def test_a_second_break_after_a_reload_is_told_once() -> None:
 
 @pytest.mark.slow
 def test_a_tare_taken_under_load_shows_in_the_zero_after() -> None:
-    """job map scenario 8: 30 N at the tare, with override: after-zero -30 N, flagged."""
+    """Acceptance scenario 8: 30 N at the tare, with override: after-zero -30 N, flagged."""
     rig = quick()
     rig.disturb = lambda t, f: f if rig.machine.broken else f + 30.0
     rig.ready(method(**FAST), override="told to")
@@ -312,7 +312,7 @@ def test_a_tare_taken_under_load_shows_in_the_zero_after() -> None:
 
 @pytest.mark.slow
 def test_something_left_on_a_cell_under_the_supports_is_told_and_the_unseen_is_not_claimed() -> None:
-    """job map scenario 4: half a mortar prism, 2.6 N; with sigma 3 N it cannot be seen, and that is said."""
+    """Acceptance scenario 4: half a mortar prism, 2.6 N; with sigma 3 N it cannot be seen, and that is said."""
     for sigma, told in ((0.4, True), (3.0, False)):
         rig = quick(rate_hz=80.0, cell__position="supports", cell__noise_quiet_n=sigma)
         rig.noise_n = sigma
@@ -347,7 +347,7 @@ LOSSES = {
 @pytest.mark.slow
 @pytest.mark.parametrize("how", [*LOSSES, "silent"])
 def test_a_lost_signal_is_never_a_break(how: str) -> None:
-    """job map scenario 9: at 276 N the signal goes; stop within 100 ms, nothing driven back."""
+    """Acceptance scenario 9: at 276 N the signal goes; stop within 100 ms, nothing driven back."""
     rig = quick().loading(load_n=276.0)
     lost_s = rig.now_s
     if how == "silent":
@@ -454,7 +454,7 @@ def test_a_jog_with_a_dead_cell_is_stopped() -> None:
 
 @pytest.mark.slow
 def test_reversed_wires_are_stopped_and_lock_the_frame() -> None:
-    """job map scenario 10: approach at 5 mm/min onto a bar with the sign reversed: |F| <= 65 N."""
+    """Acceptance scenario 10: approach at 5 mm/min onto a bar with the sign reversed: |F| <= 65 N."""
     rig = Rig(frame(), Machine(gap_mm=0.05, reversed_force=True, strength_n=1e9))
     rig.started()
     rig.run_until(lambda: rig.pipe.run is None, 10.0)
@@ -471,7 +471,7 @@ def test_reversed_wires_are_stopped_and_lock_the_frame() -> None:
 
 @pytest.mark.slow
 def test_a_blocked_fixture_is_met_with_less_than_half_the_cell() -> None:
-    """job map scenario 10: empty blocked fixture, 20 kN/mm, jog 50 mm/min asked."""
+    """Acceptance scenario 10: empty blocked fixture, 20 kN/mm, jog 50 mm/min asked."""
     card = frame(motion__blocked_stiffness_n_mm=20_000.0)
     rig = Rig(card, Machine(gap_mm=0.3, stiffness_n_mm=20_000.0, toe_mm=1e-6, strength_n=1e9)).run_for(0.3)
     rig.samples_per_block = 1
@@ -486,7 +486,7 @@ def test_a_blocked_fixture_is_met_with_less_than_half_the_cell() -> None:
 
 @pytest.mark.slow
 def test_a_wrong_speed_unit_is_stopped_before_15_percent() -> None:
-    """job map scenario 10: mm/s taken for mm/min; the stop is commanded before 15 % of the median load."""
+    """Acceptance scenario 10: mm/s taken for mm/min; the stop is commanded before 15 % of the median load."""
     rig = quick()
     rig.samples_per_block = 1
     rig.machine.strength_n = 1e9

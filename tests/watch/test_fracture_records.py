@@ -37,7 +37,7 @@ def test_the_delay_of_the_call(rate_hz: float, median_s: float) -> None:
     assert min(delays) > 0
 
 
-# --- job map scenario 11: everything in one run
+# --- acceptance scenario 11: everything in one run
 
 
 def mix(rate_hz: float, negative_samples: int, seed: int) -> Case:

@@ -268,7 +268,7 @@ def test_limits_are_judged_on_gross_and_no_tare_moves_them() -> None:
 
 
 def test_the_way_to_the_bar_is_slowed_where_it_could_crush_the_cell() -> None:
-    """Row 7, job map scenario 10: 1 kN, 20 kN/mm, 150 ms, 3 N touch: at most 9.95 mm/min."""
+    """Row 7, acceptance scenario 10: 1 kN, 20 kN/mm, 150 ms, 3 N touch: at most 9.95 mm/min."""
     card = frame(motion__approach_mm_min=50.0, motion__blocked_stiffness_n_mm=20_000.0)
     rig = Rig(card).ready()
     rig.ask(StartRun())

@@ -25,7 +25,7 @@ from tests.watch.frames import frame, method, open_run
 
 
 def test_the_plan_of_the_alumina_bar() -> None:
-    """job map B2 [Calc]: 460 N mean, P0.1 270 and P99.9 564 N, 23.6 MPa/s, 16.3 s, 136 um of travel."""
+    """Worked example: 460 N mean, P0.1 270 and P99.9 564 N, 23.6 MPa/s, 16.3 s, 136 um of travel."""
     plan = run_setup(setup_from_card(frame()), open_run())
     assert not isinstance(plan, tuple)
     expected = plan.expected
@@ -49,7 +49,7 @@ def test_spans_agree_within_the_one_per_cent_of_the_cards(span_mm: float, fits: 
 def test_a_rate_that_the_drive_cannot_hold_on_this_bar_is_refused_with_the_sum(
     speed_max: float, fits: bool
 ) -> None:
-    """23.57 MPa/s on the 4 x 3 bar is 0.5 mm/min against a frame of 10 kN/mm (job map B2 [Calc])."""
+    """23.57 MPa/s on the 4 x 3 bar is 0.5 mm/min against a frame of 10 kN/mm."""
     stress = method(rate={"mode": "stress", "rate_mpa_s": 23.57, "loop": "midspan"})
     plan = run_setup(
         setup_from_card(frame(motion__speed_mm_min_max=speed_max, motion__approach_mm_min=0.4)),
@@ -62,7 +62,7 @@ def test_a_rate_that_the_drive_cannot_hold_on_this_bar_is_refused_with_the_sum(
 
 @pytest.mark.parametrize(("m", "ratio"), [(5, 1.60), (8, 1.35), (10, 1.28), (12, 1.23), (15, 1.18)])
 def test_the_highest_of_a_thousand(m: float, ratio: float) -> None:
-    """job map section 4, row 4 [Calc]."""
+    """Ratios of row 4 (no break where expected), computed beforehand from the Weibull distribution."""
     assert weibull_quantile(1.0, m, 0.999) == pytest.approx(ratio, abs=0.005)
 
 
@@ -156,7 +156,7 @@ def test_a_break_before_the_window_is_over_leaves_it_unclear() -> None:
 
 
 def test_the_machine_is_taken_out_of_the_stiffness() -> None:
-    """job map 3.5 step 3 [FP]: 5 % of the bar shows as 3.3 % in series of 5.1 and 10 kN/mm."""
+    """First principles: 5 % of the bar shows as 3.3 % in series of 5.1 and 10 kN/mm."""
     speed = 0.5 / 60.0
     before, after = (speed * in_series(k, 10_000.0) for k in (5100.0, 0.95 * 5100.0))
     assert after / before == pytest.approx(1 - 0.033, abs=0.002)
@@ -219,7 +219,7 @@ def test_the_sampling_gate(changes: dict[str, float | None], gate: Gate) -> None
 
 
 def test_the_approach_limit_of_the_reference() -> None:
-    """job map E2 [Calc]: 1 kN, 20 kN/mm, 150 ms, touch 3 N: 9.9 mm/min."""
+    """Computed beforehand: 1 kN, 20 kN/mm, 150 ms, touch 3 N: 9.9 mm/min."""
     motion = frame(motion__blocked_stiffness_n_mm=20_000.0).motion
     assert motion is not None
     assert touch_n(1000.0, 0.15) == 3.0
@@ -312,7 +312,7 @@ def test_a_stop_is_seen_and_never_doubted(speed_mm_min: float, resolution_mm: fl
 def test_a_crosshead_that_creeps_on_is_never_said_to_stand(
     speed_mm_min: float, share: float, resolution_mm: float
 ) -> None:
-    """At the set speed or a third of it: failed where the position can show it, else not seen. Job map row 26."""
+    """At the set speed or a third of it: failed where the position can show it, else not seen. Row 26."""
     speed_mm_s = speed_mm_min / 60.0
     travel, seen = Travel(1000.0, resolution_mm), []
     check: StopCheck | None = None
@@ -404,7 +404,7 @@ def test_the_noise_is_what_it_is_and_never_below_the_one_at_rest() -> None:
 
 
 def test_hum_is_part_of_the_noise() -> None:
-    """job map 3.3: second differences saw the white noise only, and called the hum partial drops."""
+    """Second differences saw the white noise only, and called the hum partial drops."""
     level = Level(1000.0, 0.05)
     for n in range(2000):
         t = n / 1000.0

@@ -49,7 +49,7 @@ def test_a_quiet_zero_is_taken_with_its_uncertainty() -> None:
 @pytest.mark.parametrize("hum_hz", [50.0, 60.0])
 @pytest.mark.parametrize("rate_hz", [80.0, 100.0, 1000.0, 1600.0])
 def test_hum_leaves_the_zero_even_where_it_is_aliased(hum_hz: float, rate_hz: float) -> None:
-    """job map scenario 4: 2 N of hum at 80 S/s, error below 0.1 N; the noise it makes does not refuse the zero."""
+    """Acceptance scenario 4: 2 N of hum at 80 S/s, error below 0.1 N; the noise it makes does not refuse the zero."""
     rules = replace(RULES, capacity_n=10_000.0, quiet_n=0.4)
     for seed in range(5):
         times, gross = rest(rate_hz, sigma=0.4, level=7.0, hum_hz=hum_hz, hum_n=2.0, seed=seed)
@@ -66,7 +66,7 @@ def test_load_on_the_fixture_is_refused_with_the_measured_force() -> None:
 
 
 def test_drift_is_refused_once_it_is_sure() -> None:
-    """job map scenario 8: 0.05 N/s is 3 N/min, 1 N/min is allowed."""
+    """Acceptance scenario 8: 0.05 N/s is 3 N/min, 1 N/min is allowed."""
     sure = take(*rest(drift_n_s=0.05, seconds=3.0), RULES)
     assert any("drift" in reason for reason in sure.reasons)
     assert sure.note.drift_n_min == pytest.approx(3.0, abs=0.8)
