@@ -85,3 +85,22 @@ def shunt_output_ratio(gauge_ohm: float, shunt_ohm: float) -> float:
 def lead_wire_factor(gauge_ohm: float, lead_ohm: float) -> float:
     """Three-wire connection: loss of sensitivity Rg/(Rg+RL)."""
     return gauge_ohm / (gauge_ohm + lead_ohm)
+
+
+def two_wire_factor(gauge_ohm: float, lead_ohm: float) -> float:
+    """Two-wire connection: both leads lie in the gauge's arm, Rg/(Rg+2RL)."""
+    return gauge_ohm / (gauge_ohm + 2.0 * lead_ohm)
+
+
+def two_wire_offset(gauge_ohm: float, lead_ohm: float, gauge_factor: float) -> float:
+    """Apparent strain of a two-wire quarter bridge at rest: 2RL/(Rg GF); drifts with the leads' temperature."""
+    return 2.0 * lead_ohm / (gauge_ohm * gauge_factor)
+
+
+def shunt_gain(measured_ratio: float, gauge_ohm: float, shunt_ohm: float) -> float:
+    """Shunt check: measured change of the output over the computed one; 1 is a chain without error.
+
+    With the shunt at the amplifier and three wires, the loss of the leads shows here as it does in the strain
+    (to first order); divide the indicated strain by it.
+    """
+    return measured_ratio / shunt_output_ratio(gauge_ohm, shunt_ohm)

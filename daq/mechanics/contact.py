@@ -12,15 +12,12 @@ import numpy as np
 
 from daq.mechanics.quantity import Floats
 from daq.mechanics.sections import Rectangle, Spans
+from daq.mechanics.strip import local_beta
 
 WEDGE_POINT = 0.1742553  # k of a line load
 WEDGE_PATCH = 0.30  # added times (w/h)^2 for contact width w; finite-element fit, w/h <= 0.3
 INBOARD_PEAK = 0.06791  # four-point: highest stress, 0.375 h inboard of each load roller
 UNDER_LOAD_ROLLER = -0.08713  # four-point: directly opposite a load roller
-
-# beta along x/c (c = h/2) at the bottom fibre: local stress = beam stress + beta F_roller/(b c)
-_BETA_X = np.array([0.0, 0.25, 0.5, 0.75, 1.0, 1.5, 2.0, 3.0, 4.0])
-_BETA = np.array([-0.13069, 0.01484, 0.08517, 0.10187, 0.08922, 0.04357, 0.01413, -0.00009, 0.0])
 
 
 def wedge_coefficient(depth_mm: float, contact_width_mm: float = 0.0) -> float:
@@ -47,15 +44,18 @@ def four_point_roller_ratio(depth_mm: float, spans: Spans) -> float:
 
 
 def roller_stress_mpa(
-    from_mid_mm: float | Floats, force_n: float, section: Rectangle, spans: Spans
+    from_mid_mm: float | Floats, force_n: float, section: Rectangle, spans: Spans, from_face_mm: float = 0.0
 ) -> Floats:
-    """What the load roller(s) add at the bottom fibre; straight lines between the tabulated beta (+-0.01)."""
+    """What the load roller(s) add to the beam stress along the bar, at a depth below the tension face.
+
+    Line loads; 1e-5 of F/(b c) or better, down from the tension face to three quarters of the depth.
+    """
     half_mm = section.thickness_mm / 2.0
+    across = from_face_mm / half_mm - 1.0
     x_mm = np.asarray(from_mid_mm, dtype=np.float64)
     places_mm = (-spans.load_mm / 2.0, spans.load_mm / 2.0) if spans.load_mm > 0 else (0.0,)
     roller_n = force_n / len(places_mm)
-    total = np.zeros_like(x_mm)
-    for place_mm in places_mm:
-        beta = np.interp(np.abs(x_mm - place_mm) / half_mm, _BETA_X, _BETA)
-        total = total + beta * roller_n / (section.width_mm * half_mm)
-    return total
+    beta = sum(
+        (local_beta((x_mm - place_mm) / half_mm, across) for place_mm in places_mm), np.zeros_like(x_mm)
+    )
+    return np.asarray(beta * roller_n / (section.width_mm * half_mm), dtype=np.float64)

@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
-from daq.mechanics.sections import Spans
-from daq.mechanics.stress import moment_share_integral_mm
+import numpy as np
+
+from daq.mechanics.contact import roller_stress_mpa
+from daq.mechanics.sections import Rectangle, Spans
+from daq.mechanics.stress import beam_stress_mpa, moment_share_integral_mm
 
 
 def gauge_mean_share(length_mm: float, from_mid_mm: float, spans: Spans) -> float:
@@ -16,6 +19,18 @@ def gauge_mean_share(length_mm: float, from_mid_mm: float, spans: Spans) -> floa
     upper = moment_share_integral_mm(from_mid_mm + length_mm / 2.0, spans)
     lower = moment_share_integral_mm(from_mid_mm - length_mm / 2.0, spans)
     return (upper - lower) / length_mm
+
+
+def gauge_roller_share(length_mm: float, from_mid_mm: float, section: Rectangle, spans: Spans) -> float:
+    """What the load rollers' own stress adds to the gauge's mean, over the nominal stress (tension face).
+
+    Mean of the strip solution over the gauge, Gauss-Legendre; 0 far from the rollers.
+    """
+    assert length_mm > 0
+    node, weight = np.polynomial.legendre.leggauss(32)
+    x_mm = from_mid_mm + length_mm / 2.0 * node
+    local_mpa = roller_stress_mpa(x_mm, 1.0, section, spans)
+    return float(weight @ local_mpa) / 2.0 / beam_stress_mpa(1.0, section, spans)
 
 
 def transverse_factor(

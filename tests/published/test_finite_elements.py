@@ -8,6 +8,7 @@ import pytest
 
 from daq.mechanics.contact import four_point_peak_ratio, four_point_roller_ratio, three_point_ratio
 from daq.mechanics.deflection import mid_deflection_mm, shear_share_mid
+from daq.mechanics.gauges import gauge_mean_share, gauge_roller_share
 from daq.mechanics.sections import Rectangle, Spans
 from daq.mechanics.stress import beam_stress_mpa
 
@@ -107,3 +108,16 @@ def test_four_point_needs_no_correction_at_mid_span():
     assert below == pytest.approx(four_point_roller_ratio(1.0, bar.spans), abs=4e-4)
     inboard = max(bar.bottom_stress_mpa(x) for x in np.linspace(roller - 0.6, roller, 40)) / nominal_mpa
     assert inboard == pytest.approx(four_point_peak_ratio(1.0, bar.spans), abs=4e-4)
+
+
+def test_gauge_of_finite_length_sees_gradient_and_roller():
+    """Mean strain of the finite-element bottom fibre over gauges in three-point, against beam plus strip."""
+    bar = HalfBar(10.0, 0.0, 0.02)
+    nominal_mpa = beam_stress_mpa(1.0, BAR, bar.spans)
+    for length, place in ((0.6, 0.3), (0.5, 1.2), (1.0, 2.5)):
+        x = place + length * ((np.arange(200) + 0.5) / 200 - 0.5)
+        mean = np.mean([bar.bottom_stress_mpa(float(p)) for p in x]) / nominal_mpa
+        expected = gauge_mean_share(length, place, bar.spans) + gauge_roller_share(
+            length, place, BAR, bar.spans
+        )
+        assert mean == pytest.approx(expected, abs=1e-3)
