@@ -85,7 +85,7 @@ class Ending:
         lines.append(Line("class", self._class()))
         lines.append(self._residual())
         lines.append(self._standstill())
-        lines.append(Line("verdict", self.verdict or "not given yet"))
+        lines.append(self._verdict())
         lines += [Line("remark", text, Tone.CAUTION) for text in self._remarks()]
         return tuple(lines)
 
@@ -121,6 +121,16 @@ class Ending:
         after = number(self.stopped.get("after_s"), 2, "s")
         return Line("crosshead", f"stands still, after {after}", Tone.GOOD)
 
+    def _verdict(self) -> Line:
+        """A person's, else what the method's rules say so far."""
+        if self.verdict:
+            tone = Tone.CAUTION if self.verdict in ("not counted", "interrupted") else Tone.GOOD
+            return Line("verdict", self.verdict, tone)
+        rules = str((self.result or {}).get("verdict") or "")
+        return Line("verdict", f"by the rules: {rules}" if rules else "not given yet")
+
     def _remarks(self) -> list[str]:
-        remarks = (self.result or {}).get("remarks") or ()
-        return [str(remark["text"]) for remark in remarks if remark.get("text")][:3]
+        result = self.result or {}
+        why = [str(result["verdict_reason"])] if result.get("verdict_reason") and not self.verdict else []
+        told = [str(remark["text"]) for remark in result.get("remarks") or () if remark.get("text")]
+        return [text for text in dict.fromkeys([*why, *told]) if text][:3]

@@ -9,7 +9,7 @@ from __future__ import annotations
 import queue
 import threading
 from collections.abc import Callable, Iterator, Mapping
-from contextlib import AbstractContextManager
+from contextlib import AbstractContextManager, contextmanager
 from dataclasses import dataclass, field
 from typing import Any, Protocol, TypeVar
 
@@ -20,6 +20,7 @@ Item = TypeVar("Item")
 
 ERRANDS_MAX = 32
 ANSWERS_MAX = 128
+NO_FRAME = "a record is being played: no frame listens to this window"
 
 
 class Feed(Protocol):
@@ -42,6 +43,25 @@ class Desk(Protocol):
 
     def look(self) -> dict[str, Any]:
         """Everything a late joiner needs."""
+
+
+class NoDesk:
+    """Where a replay's commands go: nowhere."""
+
+    def do(self, command: str, **words: Any) -> dict[str, Any]:
+        raise Refused(command, (NO_FRAME,))
+
+    def sit(self, operator: str, *, instead: bool = False) -> None:
+        raise Refused("sit", (NO_FRAME,))
+
+    def look(self) -> dict[str, Any]:
+        raise Refused("look", (NO_FRAME,))
+
+
+@contextmanager
+def no_desk() -> Iterator[NoDesk]:
+    """For threads that ask no station."""
+    yield NoDesk()
 
 
 @dataclass(frozen=True, slots=True)

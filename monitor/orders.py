@@ -4,16 +4,11 @@ from __future__ import annotations
 
 import time
 from collections.abc import Mapping
-from functools import partial
-from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from daq.errors import MidspanError
-from daq.record.read import read_trace
 from monitor.errands import Answer, Desk
+from monitor.notebook import Notebook
 from monitor.presenter import Tone
-from monitor.tracebuffer import thin_xy
-from monitor.traceplot import GHOST_POINTS, Ghost
 from monitor.wording import refusal_lines
 
 if TYPE_CHECKING:
@@ -30,6 +25,7 @@ REQUESTS: Mapping[str, tuple[str, Mapping[str, Any]]] = {
     "start": ("start", {}),
     "return": ("return", {"distance_mm": BACK_OFF_MM, "speed_mm_min": BACK_OFF_MM_MIN}),
 }
+QUESTION = "Is all of this as it should be? y: yes, open the series. "
 WATCHING = (
     "watching only: this window can stop the frame, never move it; the operator's window has --operator"
 )
@@ -41,10 +37,8 @@ class Orders:
     def __init__(self, window: Window, outside: Outside) -> None:
         self._window, self._outside = window, outside
         self._seated_s = float("-inf")
-        self._ghosts_of: set[str] = set()
-        self.verdicts: dict[str, str] = {}
-        self.may_mark = True
-        self.questions: tuple[str, ...] = ()
+        self.notebook = Notebook(window, outside)
+        self._questions: tuple[str, ...] = ()
 
     def begin(self) -> None:
         self.look()
@@ -72,6 +66,7 @@ class Orders:
                 self._window.tell("STOP sent", Tone.STOP, 2.0)
         for answer in self._window.errands.answers():
             self._hear(answer)
+        self.notebook.turn()
         presenter = self._window.scene.presenter
         nobody = presenter.frame and not presenter.state_body.get("operator")
         if self._outside.operator and nobody and now_s - self._seated_s > SEAT_AGAIN_S:
@@ -86,6 +81,8 @@ class Orders:
             "t": window.trace.turn,
             "d": window.swap_theme,
             "q": self._leave,
+            "n": self.notebook.open,
+            "y": self._confirm,
         }
         if key in plain:
             plain[key]()
@@ -124,22 +121,28 @@ class Orders:
 
         self._window.errands.ask("sit", work)
 
+    def _confirm(self) -> None:
+        """The questions about cards and bench sheet have been looked at."""
+        if self._questions:
+            self._questions = ()
+            self._window.be_quiet()
+            self.sit(instead=True, sure=True)
+
     def look(self) -> None:
         self._window.errands.ask("look", lambda desk: desk.look())
 
     def _hear(self, answer: Answer) -> None:
         if answer.name == "look" and answer.good:
             self._window.take_look(answer.body)
-        elif answer.name == "ghost" and answer.good:
-            self._window.trace.add_ghost(answer.body["ghost"])
-        elif answer.name in ("look", "ghost"):
+        elif answer.name == "look":
             return  # the foot and the state say how old everything is
         elif not answer.good:
             self._refused(answer)
         elif answer.name == "sit":
             self.look()
-            if answer.body.get("questions"):
-                self._window.tell("; ".join(answer.body["questions"]), Tone.CAUTION, 60.0)
+            self._questions = tuple(answer.body.get("questions") or ())
+            if self._questions:
+                self._window.tell(QUESTION + "; ".join(self._questions), Tone.CAUTION, 600.0)
         else:
             self._window.be_quiet()
             self._window.scene.wants_look |= answer.name in ("mount", "series")
@@ -149,40 +152,3 @@ class Orders:
             self._window.tell(answer.trouble, Tone.STOP)
         else:
             self._window.tell("  ".join(refusal_lines(answer.name, answer.missing)))
-
-    # --- the bars before
-    def read_ghosts(self, sitting: Mapping[str, Any] | None) -> None:
-        """Traces of the series' sealed records, read outside the window's own thread, each once."""
-        for bar in (sitting or {}).get("bars", ()):
-            path = str(bar.get("record") or "")
-            on_screen = bar["number"] == self._window.scene.ending.specimen
-            if path and bar["state"] == "broken" and path not in self._ghosts_of and not on_screen:
-                self._ghosts_of.add(path)
-                self._window.errands.ask("ghost", partial(ghost_answer, Path(path)))
-
-    def mark_break(self, end_mm: float) -> None:
-        """Clicked on the drawing."""
-        self._window.scene.breaks_mm = (end_mm,)
-
-
-def ghost_answer(path: Path, desk: Desk) -> Mapping[str, Any]:
-    """Needs no station; only its thread."""
-    del desk
-    return {"ghost": ghost_of(path)}
-
-
-def ghost_of(path: Path) -> Ghost:
-    """A sealed record's trace, thinned. Raises MidspanError where it does not read."""
-    columns = read_trace(path)
-    if not columns:
-        raise MidspanError(f"{path}: holds no trace")
-    until = (
-        int(columns["force_net_n"].argmax()) + 1
-    )  # what comes after the highest load belongs to no other bar
-    time_s, load_n = columns["time_s"][:until], columns["force_net_n"][:until]
-    nothing = time_s * float("nan")
-    along = columns.get("strain", columns.get("deflection_mm", nothing))[:until]
-    stress = columns.get("stress_mpa", nothing)[:until]
-    thin_along, thin_stress = thin_xy(along, stress, GHOST_POINTS)
-    thin_time, thin_load = thin_xy(time_s - time_s[0], load_n, GHOST_POINTS)
-    return Ghost(thin_along, thin_stress, thin_time, thin_load)

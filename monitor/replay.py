@@ -4,12 +4,11 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from contextlib import contextmanager
 from typing import Any
 
-from daq.errors import Refused
 from daq.stream.updates import Update
 from monitor.board import board_of
+from monitor.errands import NO_FRAME, no_desk
 from monitor.orders import Orders
 from monitor.pages import REPLAY_KEYS, KeysPage
 from monitor.playback import Player, Recording
@@ -17,21 +16,7 @@ from monitor.presenter import Line, Tone
 from monitor.setting import Setting
 from monitor.window import Outside, Window
 
-NO_FRAME = "a record is being played: no frame listens to this window"
 REPLAY_MARK = "REPLAY OF A RECORD"
-
-
-class NoDesk:
-    """Where a replay's commands go: nowhere."""
-
-    def do(self, command: str, **words: Any) -> dict[str, Any]:
-        raise Refused(command, (NO_FRAME,))
-
-    def sit(self, operator: str, *, instead: bool = False) -> None:
-        raise Refused("sit", (NO_FRAME,))
-
-    def look(self) -> dict[str, Any]:
-        raise Refused("look", (NO_FRAME,))
 
 
 class NoFeed:
@@ -42,11 +27,6 @@ class NoFeed:
     def updates(self, timeout_s: float) -> Iterator[Update]:
         del timeout_s
         return iter(())
-
-
-@contextmanager
-def no_desk() -> Iterator[NoDesk]:
-    yield NoDesk()
 
 
 class ReplayOrders(Orders):

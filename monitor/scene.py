@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Container, Mapping
 from typing import Any
 
 from daq.errors import MidspanError
@@ -124,12 +124,14 @@ class Scene:
             stress_first=stress_first,
         )
 
-    def strengths_mpa(self) -> tuple[float, ...]:
-        """Of the broken bars in their order; one that waits for its verdict is not among them."""
+    def strengths_mpa(self, not_counted: Container[str] = ()) -> tuple[float, ...]:
+        """Of the broken bars in their order; without those not counted, and one that waits for its verdict."""
         found = []
         for bar in (self.sitting or {}).get("bars", ()):
             strength = (bar.get("result") or {}).get("strength_mpa")
-            if bar["state"] == "broken" and strength is not None and bar["number"] != self.hidden:
+            if bar["number"] == self.hidden:
+                continue
+            if bar["state"] == "broken" and strength is not None and bar["number"] not in not_counted:
                 found.append(float(strength))
         return tuple(found)
 

@@ -17,12 +17,13 @@ from monitor.presenter import Tone
 
 BARS_SHOWN_MAX = 60
 WORDS_SHARE = 0.27
+KINDS = {"provisional": "provisional", "counted with remark": "remark", "not counted": "not counted"}
 FLOOR_SHARE = 0.55  # of the lowest strength: where the columns begin
 
 
 @dataclass(frozen=True, slots=True)
 class Cell:
-    """One bar. kind: waiting, open, broken, interrupted, not counted, remark."""
+    """One bar. kind: waiting, open, broken, interrupted; of a broken one also provisional, remark, not counted."""
 
     number: str
     kind: str
@@ -32,7 +33,7 @@ class Cell:
 def cells_of(
     sitting: Mapping[str, Any] | None, verdicts: Mapping[str, str], *, hide: str = ""
 ) -> tuple[Cell, ...]:
-    """From the station's sitting; hide: a bar whose strength waits for its verdict."""
+    """From the station's sitting. verdicts: as they stand, by bar; hide: a bar whose strength waits for its verdict."""
     cells = []
     for bar in (sitting or {}).get("bars", ()):
         number, result = str(bar["number"]), bar.get("result") or {}
@@ -40,12 +41,14 @@ def cells_of(
             str(bar["state"]), "waiting"
         )
         strength = result.get("strength_mpa") if kind == "broken" and number != hide else None
-        cells.append(Cell(number, verdicts.get(number, kind), strength))
+        if kind == "broken":
+            kind = KINDS.get(verdicts.get(number) or str(result.get("verdict")), "broken")
+        cells.append(Cell(number, kind, strength))
     return tuple(cells)
 
 
 class Strip(Band):
-    """Columns as high as the strengths; shape and hatch tell the verdict."""
+    """Columns as high as the strengths. Full: counted; hatched: provisional; empty with a cross: not counted."""
 
     def __init__(self) -> None:
         super().__init__()
@@ -96,8 +99,10 @@ class Strip(Band):
             bar = QRectF(room)
             bar.setTop(room.bottom() - max(4.0, 0.72 * room.height() * share))
             painter.setPen(QPen(ink, 1.5))
-            counted = cell.kind in ("broken", "remark")
-            painter.setBrush(ink if counted else QBrush(ink, Qt.BrushStyle.BDiagPattern))
+            pattern = {"not counted": Qt.BrushStyle.NoBrush, "provisional": Qt.BrushStyle.BDiagPattern}.get(
+                cell.kind
+            )
+            painter.setBrush(ink if pattern is None else QBrush(ink, pattern))
             painter.drawRect(bar)
             if box.width() > 2.6 * small:
                 over = QRectF(box.left(), bar.top() - 1.25 * small, box.width(), 1.2 * small)

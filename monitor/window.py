@@ -22,10 +22,11 @@ from monitor.bands import Foot, Gauge, Headline, Told
 from monitor.board import Board, board_of
 from monitor.columns import columns_of
 from monitor.drawing import Drawing
-from monitor.errands import Desk, Errands, Feed, StopLine
+from monitor.errands import Desk, Errands, Feed, StopLine, no_desk
 from monitor.inset import Inset
 from monitor.keyfilter import KeyFilter
 from monitor.keys import KeyJudge
+from monitor.notes import NoteForm, Notes
 from monitor.orders import Orders
 from monitor.pages import KeysPage
 from monitor.palette import DARK, THEMES, Theme
@@ -58,6 +59,7 @@ class Outside:
     operator: str = ""
     series: Path | None = None
     instead: bool = False
+    notes: Notes | None = None
 
 
 class Window(QWidget):
@@ -75,6 +77,7 @@ class Window(QWidget):
         self.judge = KeyJudge(setting.pedal_stop, setting.pedal_start)
         self.stop_line = StopLine(outside.stop)
         self.errands = Errands(outside.open_desk)
+        self.reader = Errands(no_desk)  # what is read and kept on disk; no command waits behind it
         self.orders = self.make_orders(outside)
         self._build()
         self.filter = KeyFilter(
@@ -102,6 +105,8 @@ class Window(QWidget):
         self.keys_page = self.make_keys_page()
         self.column = QStackedWidget()
         self.column.addWidget(self.side)
+        self.note_form = NoteForm()
+        self.column.addWidget(self.note_form)
         running = QWidget()
         across = QHBoxLayout(running)
         across.setContentsMargins(0, 0, 0, 0)
@@ -123,7 +128,9 @@ class Window(QWidget):
         layout.addWidget(self.strip)
         layout.addWidget(self.told)
         layout.addWidget(self.foot)
-        self.drawing.marked.connect(self.orders.mark_break)
+        self.drawing.marked.connect(self.orders.notebook.mark)
+        self.note_form.changed.connect(self.orders.notebook.typed)
+        self.note_form.filled.connect(self.orders.notebook.filled)
         self.dress()
 
     # --- life
@@ -134,6 +141,7 @@ class Window(QWidget):
         application.installEventFilter(self.filter)
         self.stop_line.start()
         self.errands.start()
+        self.reader.start()
         self.orders.begin()
         self._timer.start(TURN_MS)
 
@@ -147,6 +155,7 @@ class Window(QWidget):
             application.removeEventFilter(self.filter)
         self.orders.end()
         self.errands.end()
+        self.reader.end()
         self.closed.emit()
         super().closeEvent(event)
 
@@ -188,14 +197,16 @@ class Window(QWidget):
             self.trace.take(look.get("columns") or columns_of(look.get("trace") or {}))
             for event in look.get("events") or ():
                 self.trace.take_event(event)
-        self.orders.read_ghosts(self.scene.sitting)
+        self.orders.notebook.read(self.scene.sitting)
 
     def show_now(self, now_s: float) -> None:
         """Trace at every turn, numbers when they are due."""
         presenter = self.scene.presenter
         self.trace.age(current=presenter.is_current(now_s) or self.scene.ending.is_over)
         self.trace.redraw()
-        self.drawing.pose(self.scene.posture(stress_first=self.stress_first, may_mark=self.orders.may_mark))
+        self.drawing.pose(
+            self.scene.posture(stress_first=self.stress_first, may_mark=self.orders.notebook.is_kept)
+        )
         self._show_told(now_s)
         if now_s - self._numbers_s < NUMBERS_EVERY_S:
             return
@@ -212,8 +223,8 @@ class Window(QWidget):
         gross = Line("gross load", board.gross)
         self.side.say(ending or (gross, *board.facts), chief=bool(ending))
         self.strip.say(
-            cells_of(scene.sitting, self.orders.verdicts, hide=scene.hidden),
-            self._outside.figures(scene.strengths_mpa()),
+            cells_of(scene.sitting, self.orders.notebook.verdicts, hide=scene.hidden),
+            self.orders.notebook.figures(),
         )
         self.foot.say(board.mark, self._foot_words(board))
         self._show_break()
@@ -300,7 +311,7 @@ class Window(QWidget):
         self.drawing.sizes = sizes
         for widget in (self.headline, self.gauge, self.told, self.foot, self.strip, self.drawing):
             widget.dress(self.theme, sizes)
-        for panel in (self.trace, self.side, self.inset, self.keys_page):
+        for panel in (self.trace, self.side, self.inset, self.keys_page, self.note_form):
             panel.dress(self.theme, sizes)
 
     def resizeEvent(self, event: QResizeEvent) -> None:

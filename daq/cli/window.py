@@ -8,7 +8,7 @@ from collections.abc import Callable, Iterator
 from contextlib import AbstractContextManager, contextmanager
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from daq.cli.figures import series_words
 from daq.errors import MidspanError
@@ -20,7 +20,9 @@ from monitor.qtlibs import check_window, here
 if TYPE_CHECKING:
     from PySide6.QtWidgets import QApplication
 
+    from daq.station.notebook import Page
     from monitor.errands import Desk
+    from monitor.notes import Said
     from monitor.setting import Setting
     from monitor.window import Window
 
@@ -70,8 +72,38 @@ def watch_frame(places: Places, person: Person, setting: Setting, seconds: float
             operator=person.operator,
             series=person.series.absolute() if person.series else None,
             instead=person.instead,
+            notes=Keeper(),
         )
         show(app, Window(outside, setting), seconds)
+
+
+class Keeper:
+    """Break notes and verdicts of the window, in the one place where notes are taken down."""
+
+    def read(self, record: Path) -> Said:
+        from daq.station.notebook import read_page
+
+        return said_of(read_page(record))
+
+    def take(self, record: Path, said: list[dict[str, Any]]) -> Said:
+        from daq.station.notebook import take_notes
+
+        return said_of(take_notes(record, said))
+
+
+def said_of(page: Page) -> Said:
+    """What the window shows of a page."""
+    from monitor.notes import Said
+
+    standing, note = page.standing, page.standing.break_note
+    return Said(
+        verdict=standing.verdict.counting.value,
+        reason=standing.verdict.reason,
+        by=standing.verdict.by,
+        strength_mpa=standing.strength_mpa,
+        from_mid_mm=tuple(note.from_mid_mm or ()) if note is not None else (),
+        notes=len(page.kept.notes),
+    )
 
 
 def desk_of(places: Places) -> Callable[[], AbstractContextManager[Desk]]:
@@ -109,7 +141,7 @@ def picture(path: Path, target: Path, setting: Setting, size: tuple[int, int], a
     """The view of a record as a PNG, rendered off-screen; at_s: seconds since the run was opened, None: its end."""
     app = application(offscreen=True)
     from daq.cli.recording import recording_of
-    from monitor.orders import ghost_of
+    from monitor.notebook import ghost_of
     from monitor.replay import ReplayWindow
 
     window = ReplayWindow(recording_of(path), series_words, setting)

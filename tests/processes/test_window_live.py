@@ -18,7 +18,7 @@ from PySide6.QtCore import Qt
 from PySide6.QtTest import QTest
 
 from daq.cli.figures import series_words
-from daq.cli.window import desk_of
+from daq.cli.window import Keeper, desk_of
 from daq.station.client import Client
 from daq.station.stopline import stop_frame
 from monitor.setting import Setting
@@ -42,6 +42,7 @@ def window_of(rig: Rig, operator: str) -> Iterator[Window]:
             figures=series_words,
             operator=operator,
             series=rig_series() if operator else None,
+            notes=Keeper(),
         )
         window = Window(outside, Setting(pixel_mm=0.277))
         window.resize(1366, 768)
@@ -81,6 +82,7 @@ def test_a_bar_by_keys_and_a_stop_past_a_frozen_station(qtbot: QtBot, tmp_path: 
         rig.lay(bars[0].model_dump(mode="json"))
         wait_for(qtbot, rig, lambda: bool(window.scene.sitting) and word(window) == "at rest")
         break_a_bar(qtbot, rig, window)
+        note_the_break(qtbot, rig, window)
         rig.lay(bars[1].model_dump(mode="json"))
         stop_past_a_frozen_station(qtbot, rig, window)
 
@@ -102,6 +104,29 @@ def break_a_bar(qtbot: QtBot, rig: Rig, window: Window) -> None:
     peak = window.trace.column_max()
     assert peak == pytest.approx(result["peak_raw_n"], abs=1e-6)  # the highest sample is in the drawn trace
     assert window.scene.presenter.lost_updates == 0
+
+
+def note_the_break(qtbot: QtBot, rig: Rig, window: Window) -> None:
+    """By keys alone, comma or point; kept beside the sealed record, which stays as it was."""
+    from daq.station.notebook import read_page
+
+    record = Path(window.scene.ending.record)
+    sealed = record.read_bytes()
+    QTest.keyClicks(window, "n")
+    qtbot.waitUntil(lambda: window.column.currentWidget() is window.note_form, timeout=2000)
+    beam = window.scene.beam
+    assert beam is not None
+    wanted = beam.from_left_end(beam.support_mm / 2.0 + 2.5)
+    for text in (f"{wanted:g}".replace(".", ","), "2", "P", "3", "chip seen before"):
+        QTest.keyClicks(window.focusWidget(), text)
+        QTest.keyClick(window.focusWidget(), Qt.Key.Key_Return)
+    wait_for(qtbot, rig, lambda: window.scene.ending.verdict == "counted with remark")
+    page = read_page(record)
+    assert page.kept.problems == () and page.standing.place is not None
+    assert page.standing.place.from_mid_mm == pytest.approx(2.5, abs=1e-3)
+    assert [note.name for note in page.kept.notes] == ["A. Person", "A. Person"]
+    assert record.read_bytes() == sealed
+    assert window.column.currentWidget() is window.side
 
 
 def stop_past_a_frozen_station(qtbot: QtBot, rig: Rig, window: Window) -> None:

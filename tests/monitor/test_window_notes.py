@@ -1,0 +1,62 @@
+"""Break notes as typed: places on the bar, verdict and reason, and what of it becomes a note."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import pytest
+
+from daq.cards.notes import read_note
+from monitor.form import number_in
+from monitor.notes import check_pieces, check_verdict, places_of, said_of, told_place
+from tests.monitor.test_beam import demo_beam
+
+BEAM = replace(demo_beam(), length_mm=50.0, length_known=True)
+EMPTY = {"at": "", "pieces": "", "origin": "", "verdict": "", "reason": ""}
+
+
+@pytest.mark.parametrize(
+    ("text", "value"), [("12.03", 12.03), ("12,03", 12.03), (" 12,03 mm", 12.03), ("0", 0.0)]
+)
+def test_comma_point_and_unit_are_taken(text: str, value: float) -> None:
+    assert number_in(text, 0.0, 50.0) == value
+
+
+@pytest.mark.parametrize("text", ["", "x", "1e3", "nan", "inf", "-1", "51", "1.2.3", "12 03", "1_0"])
+def test_anything_else_is_refused(text: str) -> None:
+    assert number_in(text, 0.0, 50.0) is None
+
+
+def test_places_are_on_the_bar_or_none_at_all() -> None:
+    assert places_of("12.5 31,25", BEAM) == (12.5, 31.25)
+    assert places_of("12.5; 31", BEAM) == (12.5, 31.0)
+    assert places_of("12.5 60", BEAM) == () and places_of("12.5 x", BEAM) == ()
+
+
+def test_what_is_typed_becomes_notes_that_the_store_reads() -> None:
+    said = said_of(
+        {**EMPTY, "at": "27,5", "pieces": "2", "verdict": "4", "reason": "chip"}, BEAM, "A. Person"
+    )
+    notes = [read_note({**one, "utc": "2026-01-01T00:00:00Z", **old(one)}) for one in said]
+    assert notes[0].break_note is not None and notes[0].break_note.from_mid_mm == (2.5,)
+    assert (
+        notes[1].verdict is not None and notes[1].verdict.new == "not counted" and notes[1].reason == "chip"
+    )
+
+
+def old(one: dict[str, object]) -> dict[str, object]:
+    return {"verdict": {"new": "not counted", "old": "provisional"}} if "verdict" in one else {}
+
+
+def test_an_empty_form_says_nothing() -> None:
+    assert said_of(EMPTY, BEAM, "A. Person") == []
+
+
+def test_a_place_is_told_with_its_share_of_the_stress() -> None:
+    assert told_place(BEAM, 25.0) == "25 mm: inside the inner span, 100 % of the highest stress"
+    assert told_place(BEAM, 10.0) == "10 mm: OUTSIDE the inner span, 50 % of the highest stress"
+
+
+def test_checks_say_what_is_allowed() -> None:
+    assert check_pieces("2") == "" and "1 to 1000" in check_pieces("0") and "1 to 1000" in check_pieces("two")
+    assert check_verdict("3") == "" and "2 counted" in check_verdict("7")
