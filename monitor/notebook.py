@@ -60,6 +60,8 @@ class Notebook:
         for answer in self._window.reader.answers():
             if answer.name == "page":
                 self._hear_page(answer)
+            elif answer.name == "sheet":
+                self._window.orders.hear_sheet(answer)
             elif answer.good:
                 self._stands(answer.body["number"], answer.body["said"])
                 self._window.leave_page()

@@ -6,9 +6,11 @@ import time
 from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
+from daq.errors import MidspanError
 from monitor.errands import Answer, Desk
 from monitor.notebook import Notebook
 from monitor.presenter import Tone
+from monitor.sheet import Sheet
 from monitor.wording import refusal_lines
 
 if TYPE_CHECKING:
@@ -39,6 +41,7 @@ class Orders:
         self._seated_s = float("-inf")
         self.notebook = Notebook(window, outside)
         self._questions: tuple[str, ...] = ()
+        self._sheet: Sheet | None = None
 
     def begin(self) -> None:
         self.look()
@@ -82,6 +85,7 @@ class Orders:
             "d": window.swap_theme,
             "q": self._leave,
             "n": self.notebook.open,
+            "e": self._open_sheet,
             "y": self._confirm,
         }
         if key in plain:
@@ -102,6 +106,48 @@ class Orders:
     def _ask(self, name: str, fields: Mapping[str, Any]) -> None:
         if not self._window.errands.do(name, **fields):
             self._window.tell("the station has not answered yet; wait a moment")
+
+    # --- bench sheet
+    def _open_sheet(self) -> None:
+        """The page of the bench sheet, at the next bar."""
+        outside, window = self._outside, self._window
+        if outside.open_sheet is None or outside.series is None:
+            window.tell("no bench sheet here: open the window with --operator and --series", Tone.PLAIN, 4.0)
+            return
+        sitting = window.scene.sitting or {}
+        broken = {str(bar["number"]) for bar in sitting.get("bars", ()) if bar["state"] == "broken"}
+        try:
+            self._sheet = outside.open_sheet(outside.series)
+            window.pages.setCurrentWidget(window.sheet_form)
+            window.sheet_form.open_for(self._sheet, broken, str(sitting.get("next") or ""))
+        except (MidspanError, OSError) as error:
+            window.leave_page()
+            window.tell(str(error).replace("\n", "; "))
+
+    def keep_bar(self, number: str) -> None:
+        """Write a bar down, away from the window's own thread."""
+        sheet, cells = self._sheet, self._window.sheet_form.values()
+        assert sheet is not None
+
+        def work(desk: Desk) -> Mapping[str, Any]:
+            del desk
+            try:
+                sheet.write(cells)
+            except OSError as error:
+                raise MidspanError(f"the bench sheet cannot be written: {error}") from error
+            return {"number": number}
+
+        self._window.reader.ask("sheet", work)
+
+    def hear_sheet(self, answer: Answer) -> None:
+        """Kept, and then the station reads the sheet again; or why not."""
+        form = self._window.sheet_form
+        if not answer.good:
+            form.say("not kept: " + ("; ".join(answer.missing) or answer.trouble).replace("\n", "; "))
+            return
+        form.next_after(str(answer.body["number"]))
+        sitting, series = self._window.scene.sitting, self._outside.series
+        self._ask("series", {"path": str(series), "sure": bool(sitting)})
 
     def _leave(self) -> None:
         if self._outside.operator and self._window.scene.presenter.moving:
@@ -138,14 +184,14 @@ class Orders:
             return  # the foot and the state say how old everything is
         elif not answer.good:
             self._refused(answer)
-        elif answer.name == "sit":
+        elif answer.name in ("sit", "series"):
             self.look()
             self._questions = tuple(answer.body.get("questions") or ())
             if self._questions:
                 self._window.tell(QUESTION + "; ".join(self._questions), Tone.CAUTION, 600.0)
         else:
             self._window.be_quiet()
-            self._window.scene.wants_look |= answer.name in ("mount", "series")
+            self._window.scene.wants_look |= answer.name == "mount"
 
     def _refused(self, answer: Answer) -> None:
         if answer.trouble:

@@ -33,6 +33,7 @@ from monitor.palette import DARK, THEMES, Theme
 from monitor.presenter import Line, Tone
 from monitor.scene import Scene
 from monitor.setting import Setting
+from monitor.sheet import Sheet, SheetForm
 from monitor.side import Side
 from monitor.sizes import Sizes, sizes_for
 from monitor.strip import Strip, cells_of
@@ -60,6 +61,7 @@ class Outside:
     series: Path | None = None
     instead: bool = False
     notes: Notes | None = None
+    open_sheet: Callable[[Path], Sheet] | None = None
 
 
 class Window(QWidget):
@@ -118,6 +120,8 @@ class Window(QWidget):
         self.pages = QStackedWidget()
         self.pages.addWidget(running)
         self.pages.addWidget(self.keys_page)
+        self.sheet_form = SheetForm()
+        self.pages.addWidget(self.sheet_form)
         layout = QVBoxLayout(self)
         layout.setContentsMargins(0, 0, 0, 0)
         layout.setSpacing(3)
@@ -129,6 +133,7 @@ class Window(QWidget):
         layout.addWidget(self.told)
         layout.addWidget(self.foot)
         self.drawing.marked.connect(self.orders.notebook.mark)
+        self.sheet_form.kept.connect(self.orders.keep_bar)
         self.note_form.changed.connect(self.orders.notebook.typed)
         self.note_form.filled.connect(self.orders.notebook.filled)
         self.dress()
@@ -311,7 +316,7 @@ class Window(QWidget):
         self.drawing.sizes = sizes
         for widget in (self.headline, self.gauge, self.told, self.foot, self.strip, self.drawing):
             widget.dress(self.theme, sizes)
-        for panel in (self.trace, self.side, self.inset, self.keys_page, self.note_form):
+        for panel in (self.trace, self.side, self.inset, self.keys_page, self.note_form, self.sheet_form):
             panel.dress(self.theme, sizes)
 
     def resizeEvent(self, event: QResizeEvent) -> None:

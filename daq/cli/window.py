@@ -10,6 +10,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from daq.cli.benchsheet import BenchSheet
 from daq.cli.figures import series_words
 from daq.errors import MidspanError
 from daq.station.client import Client
@@ -73,6 +74,7 @@ def watch_frame(places: Places, person: Person, setting: Setting, seconds: float
             series=person.series.absolute() if person.series else None,
             instead=person.instead,
             notes=Keeper(),
+            open_sheet=BenchSheet,
         )
         show(app, Window(outside, setting), seconds)
 
