@@ -70,19 +70,22 @@ class Form(QWidget):
     filled = Signal(dict)
     changed = Signal(dict)
 
-    def __init__(self, title: str, columns: int = 1) -> None:
+    def __init__(self, title: str, columns: int = 1, scale: float = 1.35) -> None:
         super().__init__()
         self.theme: Theme = DARK
         self.sizes: Sizes = sizes_for(1080, 0.277)
         self.title, self.wrong = QLabel(title), QLabel("")
         self.fields: list[Field] = []
         self._labels: list[QLabel] = []
-        self._columns = columns
+        self._columns, self._scale = columns, scale
         self.wrong.setWordWrap(True)
         self.title.setWordWrap(True)
         self._grid = QGridLayout()
         self._grid.setContentsMargins(0, 0, 0, 0)
+        self._grid.setVerticalSpacing(3)
         layout = QVBoxLayout(self)
+        layout.setContentsMargins(8, 4, 8, 4)
+        layout.setSpacing(3)
         layout.addWidget(self.title)
         layout.addLayout(self._grid)
         layout.addWidget(self.wrong, 1)
@@ -105,6 +108,10 @@ class Form(QWidget):
             self.fields.append(field)
             self._labels.append(label)
         self.dress(self.theme, self.sizes)
+
+    def hasHeightForWidth(self) -> bool:
+        """A sentence that wraps must not take room from the drawing."""
+        return False
 
     def values(self) -> dict[str, str]:
         return {field.words.name: field.text().strip() for field in self.fields}
@@ -150,10 +157,10 @@ class Form(QWidget):
 
     def dress(self, theme: Theme, sizes: Sizes) -> None:
         self.theme, self.sizes = theme, sizes
-        size = round(min(1.35 * sizes.small_px, 0.6 * sizes.chief_px))
+        size = round(min(self._scale * sizes.small_px, 0.6 * sizes.chief_px))
         self.setStyleSheet(
             f"QWidget {{ background: {theme.panel}; color: {theme.ink}; font: {size}px '{FAMILY}'; }}"
-            f"QLineEdit {{ background: {theme.ground}; border: 2px solid {theme.edge}; padding: 2px 6px; }}"
+            f"QLineEdit {{ background: {theme.ground}; border: 2px solid {theme.edge}; padding: 1px 4px; }}"
             f"QLineEdit:focus {{ border: 3px solid {theme.trace}; }}"
         )
 

@@ -13,8 +13,9 @@ from typing import TYPE_CHECKING, Any
 from daq.errors import MidspanError
 from daq.record.read import read_trace
 from monitor.errands import Answer, Desk
-from monitor.notes import AT, Notes, Said, places_of, said_of, told_place
+from monitor.notes import AT, Notes, places_of, said_of, told_place
 from monitor.presenter import Tone
+from monitor.said import Said
 from monitor.tracebuffer import thin_xy
 from monitor.traceplot import GHOST_POINTS, Ghost
 
@@ -63,7 +64,7 @@ class Notebook:
             elif answer.name == "sheet":
                 self._window.orders.hear_sheet(answer)
             elif answer.good:
-                self._stands(answer.body["number"], answer.body["said"])
+                self.stands(answer.body["number"], answer.body["said"])
                 self._window.leave_page()
                 self._window.tell(
                     f"{answer.body['number']}: kept; verdict {answer.body['said'].verdict}", Tone.GOOD, 4.0
@@ -81,9 +82,9 @@ class Notebook:
         if said is not None:
             self.verdicts[number] = said.verdict
             if said.notes:
-                self._stands(number, said)
+                self.stands(number, said)
 
-    def _stands(self, number: str, said: Said) -> None:
+    def stands(self, number: str, said: Said) -> None:
         scene = self._window.scene
         self.verdicts[number] = said.verdict
         if number == scene.ending.specimen:

@@ -6,30 +6,18 @@ Kept by whoever keeps notes outside (append-only, beside the sealed record); the
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Protocol
 
 from monitor.beam import Beam
 from monitor.form import FieldWords, Form, number_in
+from monitor.said import Said
 from monitor.wording import number
 
 PLACES_MAX = 8
 VERDICTS = {"": "", "1": "", "2": "counted", "3": "counted with remark", "4": "not counted"}
 VERDICT_TOLD = "1 by the rules, 2 counted, 3 with remark, 4 not counted"
 AT, PIECES, ORIGIN, VERDICT, REASON = "at", "pieces", "origin", "verdict", "reason"
-
-
-@dataclass(frozen=True, slots=True)
-class Said:
-    """What stands for one loading: verdict with its reason, strength that stands, breaks in mm from mid-span."""
-
-    verdict: str
-    reason: str = ""
-    by: str = ""
-    strength_mpa: float | None = None
-    from_mid_mm: tuple[float, ...] = ()
-    notes: int = 0
 
 
 class Notes(Protocol):
@@ -52,21 +40,22 @@ class NoteForm(Form):
     def open_for(self, specimen: str, beam: Beam | None, breaks_mm: tuple[float, ...], verdict: str) -> None:
         """breaks_mm: marked already, from the bar's left end."""
         self.beam = beam
-        self.title.setText(f"{specimen}: break note and verdict ({verdict or 'none yet'})   Esc leaves")
+        self.title.setText(f"{specimen}: {verdict or 'no verdict yet'}   Esc leaves")
         self.lay(self._words())
         self.fill({AT: " ".join(f"{place:g}" for place in breaks_mm)})
+        self.say(f"verdict: {VERDICT_TOLD}")
         self.begin()
 
     def _words(self) -> tuple[FieldWords, ...]:
-        end = "left end" if self.beam is None or self.beam.length_known else "left end (length assumed)"
+        end = "left end" if self.beam is None or self.beam.length_known else "left end, length assumed"
         return (
-            FieldWords(AT, f"break, mm from {end}", self._check_at, "12.5; the first one is the primary"),
+            FieldWords(AT, f"break, mm from {end}", self._check_at, "12.5"),
             FieldWords(PIECES, "pieces", check_pieces, "2"),
             FieldWords(
                 ORIGIN, "origin code", lambda text: "" if len(text) <= 60 else "at most 60 characters", "-"
             ),
-            FieldWords(VERDICT, "verdict", check_verdict, VERDICT_TOLD),
-            FieldWords(REASON, "reason", self._check_reason, "needed for 2, 3, 4"),
+            FieldWords(VERDICT, "verdict, 1 to 4", check_verdict, "1"),
+            FieldWords(REASON, "reason", self._check_reason, "for 2, 3, 4"),
         )
 
     def _check_at(self, text: str) -> str:

@@ -13,6 +13,7 @@ import numpy as np
 
 from daq.stream.block import Floats
 from daq.stream.updates import Update
+from monitor.said import Said
 
 SPEEDS = (0.1, 0.2, 0.5, 1.0, 2.0, 5.0, 10.0)
 STEP_SHARE = 0.05
@@ -35,6 +36,7 @@ class Recording:
     expected_n: float | None = None
     band_n: tuple[float, float] | None = None
     sitting: Mapping[str, Any] | None = None
+    said: Said | None = None  # what stands by the notes beside the record
 
     @property
     def begin_s(self) -> float:

@@ -97,6 +97,9 @@ class ReplayWindow(Window):
         self._inset_run = ""
         if self.player.at_s >= self.player.recording.end_s:
             self.scene.ending.take_result(self.player.sealed())
+            said = self.player.recording.said
+            if said is not None and said.notes:
+                self.orders.notebook.stands(self.scene.ending.specimen, said)
         self._numbers_s = float("-inf")
 
     def to_break(self) -> None:

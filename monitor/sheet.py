@@ -54,7 +54,7 @@ class SheetForm(Form):
     kept = Signal(str)
 
     def __init__(self) -> None:
-        super().__init__("bench sheet", columns=3)
+        super().__init__("bench sheet", columns=3, scale=1.8)
         self._sheet: Sheet | None = None
         self._asked: tuple[str, ...] = ()
         self._broken: Container[str] = ()

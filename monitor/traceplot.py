@@ -197,6 +197,8 @@ class TracePlot(QWidget):
             axis.setTextPen(QColor(theme.faint))
             axis.setStyle(tickFont=font_of(sizes.small_px), tickTextOffset=6)
             axis.enableAutoSIPrefix(False)
+        margin = 0.7 * sizes.small_px  # half a figure of the topmost tick
+        self.plot.getPlotItem().layout.setContentsMargins(0, margin, margin, 0)
         self._drawn_rows = -1
         self.redraw()
 

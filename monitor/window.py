@@ -118,6 +118,8 @@ class Window(QWidget):
         self.inset.hide()
         across.addWidget(self.column, 30)
         self.pages = QStackedWidget()
+        for stack in (self.pages, self.column):
+            stack.setMinimumSize(10, 10)  # a form never takes room from the drawing
         self.pages.addWidget(running)
         self.pages.addWidget(self.keys_page)
         self.sheet_form = SheetForm()
@@ -212,11 +214,10 @@ class Window(QWidget):
         self.drawing.pose(
             self.scene.posture(stress_first=self.stress_first, may_mark=self.orders.notebook.is_kept)
         )
+        if now_s - self._numbers_s >= NUMBERS_EVERY_S:
+            self._numbers_s = now_s
+            self.show_numbers(board_of(presenter, now_s))
         self._show_told(now_s)
-        if now_s - self._numbers_s < NUMBERS_EVERY_S:
-            return
-        self._numbers_s = now_s
-        self.show_numbers(board_of(presenter, now_s))
 
     def show_numbers(self, board: Board) -> None:
         """Everything that changes a few times a second."""
@@ -225,8 +226,8 @@ class Window(QWidget):
             band.show_board(board)
         self.drawing.fit(scene.beam, scene.beam_note)
         ending = scene.ending.lines()
-        gross = Line("gross load", board.gross)
-        self.side.say(ending or (gross, *board.facts), chief=bool(ending))
+        facts = (Line("gross load", board.gross), *board.facts)
+        self.side.say(ending or [fact for fact in facts if fact.text != "-"], chief=bool(ending))
         self.strip.say(
             cells_of(scene.sitting, self.orders.notebook.verdicts, hide=scene.hidden),
             self.orders.notebook.figures(),

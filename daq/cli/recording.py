@@ -12,10 +12,12 @@ from daq.cards.derived import fixture_by_name, load_for_stress_n, section_of, sp
 from daq.cards.frame import FrameCard
 from daq.cards.method import MethodCard
 from daq.cards.series import Specimen
+from daq.cli.keeper import said_of
 from daq.errors import MidspanError
 from daq.record.read import read_meta, read_run, read_trace
 from daq.results.expected import band_of
 from daq.station.found import found_records
+from daq.station.notebook import read_page
 from monitor.playback import Recording
 
 STORED = {"net_n": "force_net_n"}  # columns that a record names otherwise than the feed
@@ -40,6 +42,7 @@ def recording_of(path: Path) -> Recording:
         expected_n=expected_n,
         band_n=band_n,
         sitting=sitting_of(path, meta),
+        said=said_of(read_page(path)),
     )
 
 

@@ -8,10 +8,11 @@ from collections.abc import Callable, Iterator
 from contextlib import AbstractContextManager, contextmanager
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 from daq.cli.benchsheet import BenchSheet
 from daq.cli.figures import series_words
+from daq.cli.keeper import Keeper
 from daq.errors import MidspanError
 from daq.station.client import Client
 from daq.station.places import Places
@@ -21,9 +22,7 @@ from monitor.qtlibs import check_window, here
 if TYPE_CHECKING:
     from PySide6.QtWidgets import QApplication
 
-    from daq.station.notebook import Page
     from monitor.errands import Desk
-    from monitor.notes import Said
     from monitor.setting import Setting
     from monitor.window import Window
 
@@ -77,35 +76,6 @@ def watch_frame(places: Places, person: Person, setting: Setting, seconds: float
             open_sheet=BenchSheet,
         )
         show(app, Window(outside, setting), seconds)
-
-
-class Keeper:
-    """Break notes and verdicts of the window, in the one place where notes are taken down."""
-
-    def read(self, record: Path) -> Said:
-        from daq.station.notebook import read_page
-
-        return said_of(read_page(record))
-
-    def take(self, record: Path, said: list[dict[str, Any]]) -> Said:
-        from daq.station.notebook import take_notes
-
-        return said_of(take_notes(record, said))
-
-
-def said_of(page: Page) -> Said:
-    """What the window shows of a page."""
-    from monitor.notes import Said
-
-    standing, note = page.standing, page.standing.break_note
-    return Said(
-        verdict=standing.verdict.counting.value,
-        reason=standing.verdict.reason,
-        by=standing.verdict.by,
-        strength_mpa=standing.strength_mpa,
-        from_mid_mm=tuple(note.from_mid_mm or ()) if note is not None else (),
-        notes=len(page.kept.notes),
-    )
 
 
 def desk_of(places: Places) -> Callable[[], AbstractContextManager[Desk]]:

@@ -18,7 +18,8 @@ from PySide6.QtCore import Qt
 from PySide6.QtTest import QTest
 
 from daq.cli.figures import series_words
-from daq.cli.window import Keeper, desk_of
+from daq.cli.keeper import Keeper
+from daq.cli.window import desk_of
 from daq.station.client import Client
 from daq.station.stopline import stop_frame
 from monitor.setting import Setting
@@ -112,6 +113,8 @@ def note_the_break(qtbot: QtBot, rig: Rig, window: Window) -> None:
 
     record = Path(window.scene.ending.record)
     sealed = record.read_bytes()
+    window.activateWindow()  # the watcher's window had the focus
+    qtbot.waitUntil(window.isActiveWindow, timeout=5000)
     QTest.keyClicks(window, "n")
     qtbot.waitUntil(lambda: window.column.currentWidget() is window.note_form, timeout=2000)
     beam = window.scene.beam
