@@ -12,7 +12,17 @@ from pathlib import Path
 
 from benchmarks.harness import Report, line_of, processor_ticks, shares_since
 
-NAMES = ("startup", "decoding", "watching", "fracture", "response", "stops", "footprint", "recording")
+NAMES = (
+    "startup",
+    "decoding",
+    "watching",
+    "fracture",
+    "response",
+    "stops",
+    "footprint",
+    "recording",
+    "window",
+)
 
 
 def main() -> None:

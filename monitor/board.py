@@ -14,7 +14,6 @@ from monitor.presenter import Line, Presenter, Tone
 from monitor.wording import number
 
 NO_CONTACT = "no contact"
-MOVING_WORDS = frozenset({"approaching", "seating", "loading", "unloading", "returning"})
 DECIMALS_MAX = 3
 
 

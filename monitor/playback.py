@@ -17,7 +17,7 @@ from monitor.said import Said
 
 SPEEDS = (0.1, 0.2, 0.5, 1.0, 2.0, 5.0, 10.0)
 STEP_SHARE = 0.05
-ROWS_PER_LOOK_MAX = 20_000
+MOVING_WORDS = frozenset({"approaching", "seating", "loading", "unloading", "returning"})
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -101,7 +101,7 @@ class Player:
             "frame": recording.cards["frame"],
             "state": self._state(),
             "summary": self._summary(rows),
-            "sitting": recording.sitting,
+            "sitting": self._sitting(),
             "opened": self._opened(),
             "events": [event for event in recording.events if self._is_past(event)],
             "columns": {name: column[:rows] for name, column in recording.columns.items()},
@@ -119,6 +119,20 @@ class Player:
             "fixture": fixture,
             "frame": cards["frame"],
         }
+
+    def _sitting(self) -> dict[str, Any] | None:
+        """The series as it stood: what was broken later is not known yet, this bar's number only at the end."""
+        if self.recording.sitting is None:
+            return None
+        bars, past = [], True
+        for bar in self.recording.sitting["bars"]:
+            if bar["number"] == self.recording.meta["specimen"]:
+                past = False
+                over = self.at_s >= self.recording.end_s
+                bars.append(bar if over else {**bar, "state": "open", "result": {}})
+            else:
+                bars.append(bar if past else {**bar, "state": "waiting", "result": {}, "record": ""})
+        return {**self.recording.sitting, "bars": bars}
 
     def _is_past(self, event: Mapping[str, Any]) -> bool:
         return float(event.get("time_s") or 0.0) <= self.at_s and event.get("event") not in (
@@ -166,7 +180,7 @@ class Player:
             summary["expected_percent"] = None if net_n is None else 100.0 * net_n / expected_n
         if recording.band_n is not None:
             summary["band_low_n"], summary["band_high_n"] = recording.band_n
-        return {**summary, "data_age_s": 0.0}
+        return {**summary, "data_age_s": 0.0, "moving": self._state()["state"] in MOVING_WORDS}
 
     def _rate(self, rows: int) -> float | None:
         """Stress rate over the last half second; none after the break."""

@@ -66,6 +66,7 @@ class ReplayWindow(Window):
         self, recording: Recording, figures: Callable[[Sequence[float]], str], setting: Setting
     ) -> None:
         self.player = Player(recording)
+        self._at_end = False
         super().__init__(Outside(NoFeed(), lambda who: NO_FRAME, no_desk, figures), setting)
         self.setWindowTitle("midspan watch - replay")
         self._turned_s = time.monotonic()
@@ -86,6 +87,10 @@ class ReplayWindow(Window):
         for update in self.player.advance(passed_s):
             self.take(update, now_s)
         self.scene.wants_look = False
+        at_end = self.player.at_s >= self.player.recording.end_s
+        if at_end and not self._at_end:
+            self._at_end = True
+            self.scene.sitting = self.player.look()["sitting"]
         self.orders.turn(now_s)
         self.show_now(now_s)
 
@@ -93,6 +98,7 @@ class ReplayWindow(Window):
         """Show another moment."""
         self.scene.run_id = ""
         self.take_look(look)
+        self._at_end = False
         self.inset.hide()
         self._inset_run = ""
         if self.player.at_s >= self.player.recording.end_s:

@@ -13,6 +13,7 @@ import tempfile
 import time
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
+from functools import partial
 from importlib import resources
 from pathlib import Path
 from typing import Any
@@ -32,6 +33,7 @@ from daq.station.places import places_for
 from daq.station.supervisor import Outfit, Supervisor
 from daq.stream.updates import Update
 from monitor.presenter import Presenter
+from monitor.qtlibs import check_window, here
 from monitor.terminal import TerminalView
 from monitor.wording import number
 
@@ -68,7 +70,6 @@ def command(out: Path, bars: int, seed: int, no_window: bool) -> None:
 
     Example: midspan demo --out demo-out --bars 3
     """
-    del no_window
     console = Console()
     out = out.absolute()
     series = "demo-" + dt.datetime.now(dt.UTC).strftime("%Y%m%d-%H%M%S")
@@ -77,9 +78,37 @@ def command(out: Path, bars: int, seed: int, no_window: bool) -> None:
         frame = with_port(load_frame(cards / "kiln-lane-demo.toml"), Path(scratch))
         with virtual_frame(cards, Path(scratch), seed) as hands:
             outfit = Outfit(frame, places_for(frame.name, out), own_machine=True)
-            with Supervisor(outfit, lambda text: console.print(text, markup=False)) as supervisor:
+            said = partial(console.print, markup=False)
+            with (
+                Supervisor(outfit, said) as supervisor,
+                window_beside(console, frame.name, wanted=not no_window),
+            ):
                 reports = break_bars(console, supervisor, outfit, cards / f"{series}.toml", hands)
     finish(console, out / series, series, reports)
+
+
+@contextmanager
+def window_beside(console: Console, frame: str, *, wanted: bool) -> Iterator[None]:
+    """A watching window as a process of its own, where there is a display and Qt; gone with the demo."""
+    if not wanted:
+        yield
+        return
+    try:
+        check_window(here())
+    except MidspanError as error:
+        console.print(
+            f"no window: {str(error).splitlines()[0].partition(': ')[2]}", markup=False, soft_wrap=True
+        )
+        yield
+        return
+    process = subprocess.Popen(
+        [sys.executable, "-m", "daq.cli.entry", "watch", "--frame", frame], stdin=subprocess.DEVNULL
+    )
+    try:
+        yield
+    finally:
+        process.terminate()
+        process.wait(5)
 
 
 # --- cards and the virtual frame
