@@ -106,7 +106,7 @@ class ReplayWindow(Window):
             said = self.player.recording.said
             if said is not None and said.notes:
                 self.orders.notebook.stands(self.scene.ending.specimen, said)
-        self._numbers_s = float("-inf")
+        self._numbers_s = self._posed_s = float("-inf")
 
     def to_break(self) -> None:
         """To where the tail is in and the result stands."""
@@ -138,6 +138,7 @@ class ReplayWindow(Window):
         """Everything of this moment on the glass, for a picture."""
         now_s = time.monotonic()
         self.scene.presenter.lost_updates = 0
+        self.pose()
         self.trace.redraw()
         self.show_numbers(board_of(self.scene.presenter, now_s))
         self.show_now(now_s)

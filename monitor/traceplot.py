@@ -32,6 +32,8 @@ GHOST_POINTS = 300
 RATES_MAX = 36_000  # an hour at ten a second
 MARKS_MAX = 24
 HEADROOM = 1.06
+MARK_ROWS_S = 0.2
+GROWTH = 1.2  # of the axes while a run grows: they move seldom, because axes cost more than the trace
 RIGHT_SHARE = 0.75  # of the axis: beyond, a word stands left of its mark
 DROP_S = 0.005  # of the fall after a break that a stress-strain trace still shows
 LOADED_SHARE = 0.02  # of the highest stress: below, a bar is being approached
@@ -108,7 +110,9 @@ class TracePlot(QWidget):
         self._break_s: float | None = None
         self._drawn_rows = -1
         self._current = True
-        self._right = 1.0
+        self._right, self._along = 1.0, TIME
+        self._marks_s = float("-inf")  # until then the row a mark belongs to may still be coming
+        self._shown: tuple[float, float, float, float] | None = None
         self._build()
 
     def _build(self) -> None:
@@ -135,6 +139,7 @@ class TracePlot(QWidget):
             self.add_ghost(self.as_ghost())
         self.buffer.clear()
         self._marks.clear()
+        self._marks_s = float("-inf")
         self._rates.clear()
         self._break_s = None
         self._drawn_rows = -1
@@ -176,6 +181,7 @@ class TracePlot(QWidget):
             self._break_s = mark.time_s
         if len(self._marks) < MARKS_MAX or mark.tone is Tone.STOP:
             self._marks.append(mark)
+            self._marks_s = max(self._marks_s, mark.time_s + MARK_ROWS_S)
         self._drawn_rows = -1
 
     def column_max(self) -> float:
@@ -217,9 +223,11 @@ class TracePlot(QWidget):
     def redraw(self) -> None:
         """Draw what is new; nothing when nothing is."""
         rows = self.buffer.seen + len(self._rates) * (self.kind is Kind.RATE_TIME)
-        if rows == self._drawn_rows:
+        along = self.buffer.along()
+        if rows == self._drawn_rows and along == self._along:
             return
-        whole = self._drawn_rows < 0
+        whole = self._drawn_rows < 0 or along != self._along
+        self._along = along
         self._drawn_rows = rows
         x, y = self.xy()
         pen = pg.mkPen(
@@ -236,8 +244,11 @@ class TracePlot(QWidget):
         if whole:
             self._label_axes()
             self._draw_ghosts()
+            self._shown = None
         self._reach(x, y)
-        self._draw_marks()
+        times = self.buffer.column(TIME)
+        if whole or (len(times) and float(times[-1]) < self._marks_s):
+            self._draw_marks()
 
     def xy(self) -> tuple[Floats, Floats]:
         """What is drawn now, thinned, in the units of the axes."""
@@ -346,11 +357,22 @@ class TracePlot(QWidget):
         spans = [span for one in parts if (span := span_of(*one)) is not None]
         if not spans:
             return
-        low, high = np.min(spans, axis=0)[:2], np.max(spans, axis=0)[2:]
-        self._right = float(high[0])
-        wide, tall = (max(1e-9, float(size)) for size in high - low)
-        self.plot.setXRange(low[0] - 0.01 * wide, low[0] + wide * HEADROOM, padding=0)
-        self.plot.setYRange(low[1] - 0.02 * tall, low[1] + tall * (HEADROOM + 0.03), padding=0)
+        left, bottom = (float(one) for one in np.min(spans, axis=0)[:2])
+        right, top = (float(one) for one in np.max(spans, axis=0)[2:])
+        shown = self._shown
+        if shown and left >= shown[0] and bottom >= shown[1] and right <= shown[2] and top <= shown[3]:
+            return
+        self._right = right
+        growth = HEADROOM if self._break_s is not None else GROWTH
+        wide, tall = max(1e-9, right - left), max(1e-9, top - bottom)
+        self._shown = (
+            left - 0.02 * wide,
+            bottom - 0.02 * tall,
+            left + wide * growth,
+            bottom + tall * (growth + 0.03),
+        )
+        self.plot.setXRange(self._shown[0], self._shown[2], padding=0)
+        self.plot.setYRange(self._shown[1], self._shown[3], padding=0)
 
     def _until(self, row: int) -> tuple[Floats, Floats]:
         buffer, along = self.buffer, self.buffer.along()

@@ -41,6 +41,7 @@ from monitor.traceplot import TracePlot
 
 TURN_MS = 33  # 30 redraws a second
 NUMBERS_EVERY_S = 0.2  # trade judgement, no source: numbers change four to five times a second
+POSE_EVERY_S = 0.1
 LOOK_EVERY_S = 1.0
 TOLD_S = 8.0  # how long a refusal stays
 PLAIN = Setting()
@@ -87,7 +88,7 @@ class Window(QWidget):
         )
         self._timer = QTimer(self)
         self._timer.timeout.connect(self.turn)
-        self._numbers_s = self._look_s = float("-inf")
+        self._numbers_s = self._look_s = self._posed_s = float("-inf")
         self._told: Line | None = None
         self._told_until_s = 0.0
         self._inset_run = ""
@@ -211,13 +212,18 @@ class Window(QWidget):
         presenter = self.scene.presenter
         self.trace.age(current=presenter.is_current(now_s) or self.scene.ending.is_over)
         self.trace.redraw()
-        self.drawing.pose(
-            self.scene.posture(stress_first=self.stress_first, may_mark=self.orders.notebook.is_kept)
-        )
+        if now_s - self._posed_s >= POSE_EVERY_S:
+            self._posed_s = now_s
+            self.pose()
         if now_s - self._numbers_s >= NUMBERS_EVERY_S:
             self._numbers_s = now_s
             self.show_numbers(board_of(presenter, now_s))
         self._show_told(now_s)
+
+    def pose(self) -> None:
+        """The bar as it stands now."""
+        may_mark = self.orders.notebook.is_kept
+        self.drawing.pose(self.scene.posture(stress_first=self.stress_first, may_mark=may_mark))
 
     def show_numbers(self, board: Board) -> None:
         """Everything that changes a few times a second."""

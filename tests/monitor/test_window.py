@@ -135,7 +135,7 @@ def test_a_stop_that_does_not_leave_says_so(rig: WindowRig, qtbot: QtBot) -> Non
 def test_the_trace_fills_and_the_break_is_looked_at_whole(rig: WindowRig, qtbot: QtBot) -> None:
     rig.break_bar(460.0)
     window = rig.window
-    window._numbers_s = float("-inf")
+    window._numbers_s = window._posed_s = float("-inf")
     window.turn()
     assert window.trace.buffer.seen == 3500 and window.trace.buffer.column(LOAD).max() == 460.0
     assert window.inset.isVisible() and window.inset.samples == 501  # both ends
