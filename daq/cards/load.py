@@ -63,7 +63,7 @@ def load_series(path: FilePath | str) -> LoadedSeries:
     method_name, sheet_name = tree.get("method"), tree.get("sheet")
     method = None
     if _is_series(tree) and isinstance(method_name, str) and method_name:
-        method = _collected(problems, lambda: load_method(path.parent / method_name))
+        method = _collected(problems, lambda: _method_of(path, method_name, card))
     specimens: tuple[Specimen, ...] = ()
     if method is not None and isinstance(sheet_name, str) and sheet_name:
         found = method
@@ -71,6 +71,28 @@ def load_series(path: FilePath | str) -> LoadedSeries:
     raise_faults(problems)
     assert card is not None and method is not None and specimens
     return LoadedSeries(card, method, specimens, card.fixture)
+
+
+def _method_of(path: FilePath, name: str, card: SeriesCard | None) -> MethodCard:
+    """The method of a series with the material of the series; a shipped method has only an example of one."""
+    shipped = not name.endswith(".toml") and not (path.parent / name).exists()
+    if shipped:
+        from daq.cards.library import find_method  # reads with this module
+
+        method = find_method(name).card
+    else:
+        method = load_method(path.parent / name)
+    if card is None:
+        return method
+    if card.expected is None:
+        if shipped:
+            allowed = (
+                f"a table of this material, because the shipped method {method.name} has an example only"
+            )
+            fault = Fault(("expected",), allowed, "add [expected] with strength_mpa and modulus_gpa")
+            raise CardError((fault.line(str(path), {}),))
+        return method
+    return check_method(method.model_copy(update={"expected": card.expected}), str(path))
 
 
 def load_sheet(path: FilePath | str, method: MethodCard) -> tuple[Specimen, ...]:

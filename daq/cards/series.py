@@ -7,6 +7,7 @@ from typing import Annotated, Literal
 from pydantic import Field
 
 from daq.cards.base import Card, FileName, NotNegative, Positive, about
+from daq.cards.method import Expected
 
 Readings = Annotated[tuple[Positive, ...], Field(max_length=10)]
 
@@ -34,8 +35,14 @@ class SeriesCard(Card):
     operator: Annotated[str, Field(min_length=1, max_length=80), about("", "who breaks the bars")]
     material: Annotated[str, Field(max_length=120), about("", "material, in words")] = ""
     method: Annotated[
-        str, Field(min_length=1, max_length=255), about("", "file of the method card, relative to this card")
+        str,
+        Field(min_length=1, max_length=255),
+        about("", "file of the method card, relative to this card, or a name of `midspan methods`"),
     ]
+    expected: Annotated[
+        Expected | None,
+        about("", "table: this material, instead of the method's; needed with a shipped method"),
+    ] = None
     fixture: Annotated[str, Field(min_length=1, max_length=32), about("", "name of the fixture as fitted")]
     sheet: Annotated[
         str,

@@ -302,6 +302,32 @@ def test_a_series_brings_method_bars_and_fixture(tmp_path):
     assert loaded.fixture == "quarter-40-20"
 
 
+MATERIAL = "[expected]\nstrength_mpa = 310.0\nweibull_modulus = 9.0\nmodulus_gpa = 300.0\n"
+HUMID = "humidity_percent = 45.0"
+
+
+def test_a_series_may_name_a_shipped_method_and_brings_its_own_material(tmp_path):
+    path = series_folder(tmp_path, ('"alumina-demo.toml"', '"C1161-B"'), (HUMID, HUMID + "\n\n" + MATERIAL))
+    loaded = load_series(path)
+    assert (loaded.method.name, loaded.method.rate.speed_mm_min) == ("C1161-B", 0.5)
+    assert (loaded.method.expected.strength_mpa, loaded.method.expected.modulus_gpa) == (310.0, 300.0)
+
+
+def test_a_shipped_method_without_a_material_is_refused(tmp_path):
+    (line,) = faults(load_series, series_folder(tmp_path, ('"alumina-demo.toml"', '"C1161-B"')))
+    assert line.startswith(
+        "expected = (missing): a table of this material, because the shipped method C1161-B"
+    )
+
+
+def test_the_material_of_a_series_comes_before_the_method_s_and_is_checked_with_it(tmp_path):
+    path = series_folder(tmp_path, (HUMID, HUMID + "\n\n" + MATERIAL))
+    assert load_series(path).method.expected.weibull_modulus == 9.0
+    soft = series_folder(tmp_path, (HUMID, HUMID + "\n\n" + MATERIAL.replace("300.0", "0.3")))
+    (line,) = faults(load_series, soft)
+    assert line.startswith("expected.strength_mpa = 310.0: at most 15 MPa")
+
+
 def test_faults_of_series_method_and_sheet_together(tmp_path):
     path = series_folder(
         tmp_path,
@@ -332,6 +358,11 @@ def test_a_faulty_method_is_told_with_the_series(tmp_path):
     ("old", "new", "part"),
     [
         ('"alumina-demo.toml"', '"none.toml"', "none.toml: file = cannot be read"),
+        (
+            '"alumina-demo.toml"',
+            '"C1161"',
+            "method = 'C1161': the name or the file of a method card: choose one of",
+        ),
         ('"demo-series.csv"', '"none.csv"', "none.csv: file = cannot be read"),
         ('"demo-series.csv"', '"alumina-demo.toml"', "alumina-demo.toml: column 1 = "),
         (

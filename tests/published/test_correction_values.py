@@ -22,7 +22,7 @@ from daq.mechanics.contact import (
     roller_stress_mpa,
     three_point_ratio,
 )
-from daq.mechanics.deflection import shear_share_mid
+from daq.mechanics.deflection import shear_share_mid, shear_share_plane_stress
 from daq.mechanics.edges import chamfer_factor
 from daq.mechanics.friction import friction_share_max
 from daq.mechanics.gauges import gauge_mean_share, transverse_factor, transverse_strain
@@ -64,6 +64,17 @@ def test_shear_term_against_measured_finite_elements(slenderness: float):
     coefficient = shear_share_mid(BAR, spans, 0.3, 5.0 / 6.0) * slenderness**2
     assert coefficient == pytest.approx(3.12, rel=1e-12)
     assert abs(coefficient - neutral_axis) < (0.35 if slenderness >= 10 else 0.55) + 0.05
+
+
+@pytest.mark.parametrize(
+    ("slenderness", "coefficient"), [(5.0, 2.598), (10.0, 2.724), (13.33, 2.755), (20.0, 2.785)]
+)
+def test_shear_term_of_plane_elasticity(slenderness: float, coefficient: float):
+    """FE, neutral axis, nu 0.3: 2.85 - 1.26 h/L (K); printed 2.85 - 0.84 h/L (M)."""
+    leading = shear_share_plane_stress(3.0, 3.0 * slenderness, 0.3) * slenderness**2
+    assert leading == pytest.approx(2.85, rel=1e-12)
+    assert leading - 1.26 / slenderness == pytest.approx(coefficient, abs=2.5e-3)
+    assert abs(leading - 0.84 / slenderness - coefficient) < 0.42 / slenderness + 3e-3
 
 
 @pytest.mark.parametrize(
@@ -201,6 +212,17 @@ def test_bridge_output_and_its_inverse(bridge: Bridge, strain: float, poisson_ra
     value = output_ratio(bridge, strain, 2.0, poisson_ratio)
     assert value == pytest.approx(ratio, rel=1e-6)
     assert strain_from_ratio(bridge, value, 2.0, poisson_ratio) == pytest.approx(strain, rel=1e-12)
+
+
+def test_bending_bridges_cancel_axial_strain_to_first_order():
+    """The circuit with resistors: two arms that bend against each other and stretch together (K: 2nd order only)."""
+    bend, stretch = 2.0 * 1000e-6, 2.0 * 200e-6
+    half = (1.0 + bend + stretch) / (2.0 + 2.0 * stretch) - 0.5
+    alone = output_ratio(Bridge.HALF_BENDING, 1000e-6, 2.0)
+    assert half / alone == pytest.approx(1.0 / (1.0 + stretch), rel=1e-12)
+    assert abs(half / alone - 1.0) < 1.01 * stretch
+    only_stretch = (1.0 + stretch) / (2.0 + 2.0 * stretch) - 0.5
+    assert abs(only_stretch) < 1e-16
 
 
 def test_apparent_strain_of_a_quarter_bridge():

@@ -172,6 +172,13 @@ def test_third_point_large_deflection_against_the_elastica(load: float):
         assert (moment / (load * 2.0 / 3.0) - 1.0) / x**2 == pytest.approx(8.785, abs=0.05)
 
 
+@pytest.mark.slow
+def test_quarter_point_moment_coefficient():
+    """Moment 1 + 10.72 (s/L)^2 at the quarter points (K); D6272 prints a thickness term only (M)."""
+    sag, moment = half_bar(0.15, 0.5)
+    assert (moment / 0.075 - 1.0) / (sag / 2.0) ** 2 == pytest.approx(10.72, abs=0.08)
+
+
 def test_the_elastica_of_a_small_load_is_the_beam():
     """s = F L^3/(48 EI) with F = 2 load, L = 2: load/3 x 1."""
     sag, moment = half_bar(1e-3, 1.0)
