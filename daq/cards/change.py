@@ -2,14 +2,16 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import Final
 
 from pydantic import ValidationError
 
+from daq.cards.derived import mean_mm, section_of
 from daq.cards.faults import faults_of, raise_faults
 from daq.cards.load import check_method
 from daq.cards.method import MethodCard
+from daq.cards.series import Specimen
 
 SHARES: Final[Mapping[str, float]] = {"3-point": 0.0, "4-point-quarter": 0.5, "4-point-third": 1.0 / 3.0}
 RATE_KEYS: Final[Mapping[str, tuple[str, str]]] = {
@@ -51,6 +53,17 @@ def changed_method(card: MethodCard, changes: Mapping[str, float], name: str = "
         raise_faults(fault.line(name, tree) for fault in faults_of(error, MethodCard))
         raise AssertionError("a faulty card has been refused already") from error
     return check_method(changed, name)
+
+
+def measured_method(card: MethodCard, bars: Sequence[Specimen]) -> MethodCard:
+    """The card with the mean sizes of measured bars, to 1 um, in place of the nominal ones; the rules stay."""
+    sizes = [section_of(bar, card) for bar in bars]
+    thickness_mm = round(mean_mm(tuple(size.thickness_mm for size in sizes)), 3)
+    if card.section != "rectangle":
+        inner_mm = round(mean_mm(tuple(size.inner_diameter_mm for size in sizes)), 3)
+        return card.model_copy(update={"diameter_mm": thickness_mm, "inner_diameter_mm": inner_mm})
+    width_mm = round(mean_mm(tuple(size.width_mm for size in sizes)), 3)
+    return card.model_copy(update={"width_mm": width_mm, "thickness_mm": thickness_mm})
 
 
 def _set_rate(tree: dict[str, object], mode: str, key: str, value: float) -> None:

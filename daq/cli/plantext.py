@@ -114,9 +114,14 @@ def advice_lines(plan: Plan, advice: Suggestion) -> Iterator[str]:
     if advice.sample_rate_hz is None:
         yield f"suggested sampling: none mends this lag; the amplifier needs {figure(advice.bandwidth_hz)} Hz or more"
     else:
-        yield f"suggested sampling: {advice.sample_rate_hz:g} samples/s or more at this rate"
+        yield (
+            f"suggested sampling: {advice.sample_rate_hz:g} samples/s or more at this rate; "
+            f"{figure(advice.raw_rate_hz)} where the highest raw sample is to be within 0.1 %"
+        )
     yield "what bars buy (true m over estimated m, 95 %, maximum likelihood):"
     yield "  " + "   ".join(f"{row.bars}: {row.low:.2f} to {row.high:.2f}" for row in advice.bars)
+    widths = "   ".join(f"{100 * width:.0f} %: {bars}" for width, bars in advice.widths)
+    yield f"bars for a range of m no wider than   {widths}   of the estimate"
 
 
 def order_lines(turns: Sequence[Turn], seed: int) -> Iterator[str]:
@@ -171,6 +176,8 @@ def plan_data(plan: Plan, found: Sequence[Finding], advice: Suggestion) -> dict[
             "speed_window_mm_min": advice.speed_window_mm_min,
             "sample_rate_hz": advice.sample_rate_hz,
             "bandwidth_hz": advice.bandwidth_hz,
+            "raw_rate_hz": advice.raw_rate_hz,
+            "bars_for_width": [{"width": width, "bars": bars} for width, bars in advice.widths],
             "bars": [{"bars": row.bars, "m_low": row.low, "m_high": row.high} for row in advice.bars],
         },
     }

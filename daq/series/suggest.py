@@ -14,6 +14,8 @@ from daq.series.plan import FILTER_SHARE, Plan
 
 BARS_SHOWN = (5, 10, 15, 20, 30, 50, 100)
 BARS_MAX = 500
+WIDTHS = (1.0, 0.6, 0.4, 0.3)  # of the 95 % range of m, as shares of the estimate
+RAW_LOSS = 1e-3  # of an indicated maximum that is to stand for the break
 RATE_HZ_MIN = 10.0  # the slowest stream that the fracture watch was measured with
 
 
@@ -33,7 +35,8 @@ class Suggestion:
     speed_window_mm_min: speeds that keep the mean bar inside the windows of time, strain rate and speed; None where
     there are no windows. speed_mm_min: the planned speed where it lies inside, else the middle; None where the windows
     exclude each other. sample_rate_hz: None where the lag alone is too much; bandwidth_hz is the least first-order
-    bandwidth that would do.
+    bandwidth that would do. raw_rate_hz: where the highest raw sample itself is to be within 0.1 %. widths: (width of
+    the 95 % range of m over its estimate, bars).
     """
 
     cell_n: float
@@ -41,7 +44,9 @@ class Suggestion:
     speed_window_mm_min: tuple[float, float] | None
     sample_rate_hz: float | None
     bandwidth_hz: float
+    raw_rate_hz: float
     bars: tuple[BarsRow, ...]
+    widths: tuple[tuple[float, int], ...]
 
 
 def suggest(plan: Plan) -> Suggestion:
@@ -56,7 +61,9 @@ def suggest(plan: Plan) -> Suggestion:
         speed_window_mm_min=window,
         sample_rate_hz=sample_rate_hz(plan.mean.time_s, plan.bench.time_constant_s or 0.0),
         bandwidth_hz=2.0 * FILTER_SHARE / (SAMPLING_GREEN * plan.mean.time_s),
+        raw_rate_hz=last_sample_rate_hz(plan.mean.time_s, RAW_LOSS),
         bars=tuple(row for n in BARS_SHOWN if (row := bars_row(n)) is not None),
+        widths=tuple((width, n) for width in WIDTHS if (n := bars_for(width)) is not None),
     )
 
 

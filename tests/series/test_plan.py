@@ -7,9 +7,9 @@ import math
 import numpy as np
 import pytest
 
-from daq.cards.change import changed_method
+from daq.cards.change import changed_method, measured_method
 from daq.cards.library import find_method, read_library
-from daq.cards.load import example_path, load_frame, load_method
+from daq.cards.load import example_path, load_frame, load_method, load_series
 from daq.errors import CardError
 from daq.mechanics.sections import Rectangle, Spans
 from daq.series.gates import Finding, Gate, findings, refusal
@@ -212,6 +212,22 @@ def test_a_changed_method_keeps_its_shape_and_loses_the_name_of_the_standard():
     assert (three.geometry, three.rate.mode, three.preload.seating_mm_min) == ("3-point", "stress", 0.5)
 
 
+def test_measured_bars_stand_in_for_nominal_ones():
+    """Means of the bench sheet, by numpy; the method's rules and its standard stay."""
+    loaded = load_series(example_path("alumina-series.toml"))
+    found = measured_method(loaded.method, loaded.specimens)
+    wide = np.mean([np.mean(bar.width_mm) for bar in loaded.specimens])
+    thick = np.mean([np.mean(bar.thickness_mm) for bar in loaded.specimens])
+    assert (found.width_mm, found.thickness_mm) == (
+        pytest.approx(wide, abs=6e-4),
+        pytest.approx(thick, abs=6e-4),
+    )
+    assert found.rate == loaded.method.rate and found.clauses == loaded.method.clauses
+    rod = find_method("C1684-4pt").card
+    bars = [bar.model_copy(update={"thickness_mm": (3.1, 3.2), "width_mm": ()}) for bar in loaded.specimens]
+    assert measured_method(rod, bars).diameter_mm == pytest.approx(3.15)
+
+
 def test_bench_from_a_frame_card():
     """Compliance table: 10 kN/mm. Without it the blocked stiffness stands in, and a modulus is not promised."""
     bench, spans = bench_of(LANE_A, "quarter-40-20")
@@ -314,6 +330,9 @@ def test_bars_for_a_width():
     assert row is not None and fewer is not None
     assert row.high - row.low <= 0.6 < fewer.high - fewer.low
     assert bars_for(0.01) is None
+    advice = suggest(make_plan(ALUMINA))
+    assert dict(advice.widths)[0.6] == bars
+    assert advice.raw_rate_hz == pytest.approx(1e3 / make_plan(ALUMINA).mean.time_s, rel=1e-12)
 
 
 # --- firing order ---

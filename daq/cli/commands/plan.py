@@ -12,7 +12,7 @@ from typing import Any
 
 import click
 
-from daq.cards.change import changed_method
+from daq.cards.change import changed_method, measured_method
 from daq.cards.faults import raise_faults
 from daq.cards.frame import FrameCard
 from daq.cards.library import find_method
@@ -101,8 +101,9 @@ class Subject:
 def command(ctx: click.Context, /, **given: object) -> None:
     """Plan a series: break loads, deflection, achieved rate, time, energy, gates, and what could be better.
 
-    METHOD is a name of `midspan methods` or the file of a method or series card. Values that are left out come from
-    the cards; those of a shipped card's material are examples. Exit code 1: a gate is blocked and nobody accepted it.
+    METHOD is a name of `midspan methods` or the file of a method or series card (then with the mean sizes of its bars).
+    Values that are left out come from the cards; those of a shipped card's material are examples. Exit code 1: a gate
+    is blocked and nobody accepted it.
 
     \b
     Example: midspan plan C1161-B --frame frame.toml --strength 383 --weibull 12 --modulus 380 --bars 30
@@ -149,7 +150,8 @@ def _subject(params: dict[str, object]) -> Subject:
             raise click.UsageError("--bars is for a method; a series card has its bars in the bench sheet")
         loaded = load_series(name)
         bars = tuple((bar.number, bar.batch) for bar in loaded.specimens)
-        return Subject(changed_method(loaded.method, changes), loaded.fixture, bars)
+        method = measured_method(loaded.method, loaded.specimens)
+        return Subject(changed_method(method, changes), loaded.fixture, bars)
     folders = params["methods"]
     assert isinstance(folders, tuple)
     method = find_method(name, method_folders(folders)).card
