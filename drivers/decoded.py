@@ -92,6 +92,12 @@ class ShowsRows(Protocol):
         """
         ...
 
+    def peek(self, data: bytes) -> list[tuple[float, ...]] | None:
+        """The rows of these bytes, where they would be nothing but whole rows of the usual form and no status input
+        moves in them; None otherwise. Changes nothing.
+        """
+        ...
+
 
 def add_counts(into: dict[str, int], more: Mapping[str, int]) -> None:
     """Add the counts of `more` to `into`."""

@@ -61,6 +61,19 @@ class LinesDecoder:
         """See ShowsRows."""
         self._numbering.look = look
 
+    def peek(self, data: bytes) -> list[tuple[float, ...]] | None:
+        """See ShowsRows."""
+        end = self._line_end
+        if self._first_line or self._broken or self._framer.buffered_bytes or not data.endswith(end):
+            return None
+        rows = []
+        for line in data[: -len(end)].split(end):
+            row = self._grammar.plain(line)
+            if row is None or not self._numbering.unmoved(row):
+                return None
+            rows.append(row)
+        return rows
+
     def feed(self, data: bytes, arrival_s: float) -> Decoded:
         """Decode what arrived at arrival_s; never raises on bytes."""
         if self._fresh_from_s is None:

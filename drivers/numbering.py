@@ -103,12 +103,18 @@ class Numbering:
                 inputs.append(InputSample(self._plan.inputs[rule].name, active, float(block.time_s[offset])))
         return Numbered(tuple(blocks), tuple(inputs), self._rejected or NO_REJECTS)
 
+    def unmoved(self, row: tuple[float, ...]) -> bool:
+        """No status input moves in this row."""
+        return not self._places or all(
+            row[at] == held for held, at in zip(self._status, self._places, strict=True)
+        )
+
     def one(self, row: tuple[float, ...], arrival_s: float) -> Block | None:
         """The block of a single row that simply counts on; None: use `number`, nothing has changed."""
         plan = self._plan
         if plan.time is not None or self._lost:
             return None
-        if self._places and any(row[at] != held for held, at in zip(self._status, self._places, strict=True)):
+        if not self.unmoved(row):
             return None
         if self._counter is not None and not self._counter.counts_on(row[plan.counter or 0]):
             return None

@@ -86,6 +86,20 @@ class PacketsDecoder:
         """See ShowsRows."""
         self._numbering.look = look
 
+    def peek(self, data: bytes) -> list[tuple[float, ...]] | None:
+        """See ShowsRows."""
+        form, rows = self._form, []
+        if self._data or not self._locked or self._broken or len(data) % form.bytes:
+            return None
+        for at in range(0, len(data), form.bytes):
+            if not data.startswith(self._sync, at) or not form.passes(data, at):
+                return None
+            row = form.row(data, at)
+            if not self._numbering.unmoved(row):
+                return None
+            rows.append(row)
+        return rows
+
     def feed(self, data: bytes, arrival_s: float) -> Decoded:
         """Decode what arrived at arrival_s; never raises on bytes."""
         if self._fresh_from_s is None:

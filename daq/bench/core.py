@@ -13,6 +13,7 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field, replace
 from typing import TypeAlias
 
+from daq.bench.holding import Holding
 from daq.cards.derived import motion_link, silence_s
 from daq.cards.frame import FrameCard
 from daq.errors import Refused
@@ -116,9 +117,11 @@ class BenchCore:
         self._at_once = at_once
         self._stop_write = stop_write(frame)
         self._stops_left = 0
+        self._calm: tuple[float, float] | None = None
+        self._holding = Holding(frame, pipeline.setup.force.column)
+        self._look_at_rows()
         if at_once is not None:
             pipeline.tell_stops(self._write_stop)
-            self._look_early()
 
     def seconds(self, now_ns: int) -> float:
         """Stream time of a monotonic instant, s."""
@@ -127,6 +130,19 @@ class BenchCore:
     # --- what happens
     def received(self, link: int, data: bytes, now_ns: int) -> list[Write]:
         """Bytes arrived on a link. Returns what must be written now."""
+        if self._calm is not None and self._holding.keeps(data, now_ns, self._calm):
+            return []
+        if self._holding.waits:
+            data = self._holding.take()[0] + data
+        return self._feed(link, data, now_ns)
+
+    def _release(self) -> None:
+        """Judge what waits, before anything else happens."""
+        if self._holding.waits:
+            data, then_ns = self._holding.take()
+            self._writes = self._feed(0, data, then_ns)
+
+    def _feed(self, link: int, data: bytes, now_ns: int) -> list[Write]:
         now_s = self.seconds(now_ns)
         decoded = self._decoders[link].feed(data, now_s)
         if self._after_loss and link in self._after_loss and decoded.blocks:
@@ -149,6 +165,7 @@ class BenchCore:
 
     def tick(self, now_ns: int, health: Health) -> list[Write]:
         """Time passed. Judges silence, asks for the status word, and sends the keep-alive where it is earned."""
+        self._release()
         now_s = self.seconds(now_ns)
         self._obey(self.pipeline.advance(None, now_s), now_ns)
         if self._motion is not None:
@@ -160,6 +177,7 @@ class BenchCore:
 
     def request(self, request: Request, now_ns: int) -> list[Write]:
         """The operator asks. Raises Refused with the missing conditions."""
+        self._release()
         self._obey(self.pipeline.request(request, self.seconds(now_ns)), now_ns)
         return self._take_writes()
 
@@ -169,6 +187,7 @@ class BenchCore:
 
     def fault(self, name: str, detail: str, now_ns: int) -> list[Write]:
         """Something around the watch broke: station silent, recorder behind, ring full."""
+        self._release()
         self._obey(self.pipeline.fault(name, detail, self.seconds(now_ns)), now_ns)
         return self._take_writes()
 
@@ -201,13 +220,15 @@ class BenchCore:
     def sent(self, link: int, data: bytes, now_ns: int) -> None:
         """These bytes have left: the shell's word, so that the record holds nothing that the machine never got."""
         if data:
+            self._release()
             self._sent.append((now_ns, link, data))
 
     def reopened(self, link: int, decoder: Decoder, now_ns: int) -> list[Write]:
         """A lost link is back. Nothing resumes by itself, and its first block follows a gap of unknown size."""
+        self._release()
         self._decoders[link] = decoder
         self._after_loss.add(link)
-        self._look_early()
+        self._look_at_rows()
         self._health[link] = LinkHealth(self._frame.links[link])
         now_s = self.seconds(now_ns)
         if (
@@ -219,11 +240,13 @@ class BenchCore:
 
     def modem(self, inputs: dict[str, bool | None], now_ns: int) -> list[Write]:
         """Status inputs read from modem lines."""
+        self._release()
         self._obey(self.pipeline.inputs(inputs, self.seconds(now_ns)), now_ns)
         return self._take_writes()
 
     def note(self, name: str, now_ns: int, severity: Severity = Severity.REMARK, **fields: object) -> None:
         """An event of the shell's own: ports opened, scheduling granted, stopper acted."""
+        self._release()
         event = Event(name, self.seconds(now_ns), severity, fields)  # type: ignore[arg-type]
         self._steps.append((now_ns, Step(events=(event,))))
 
@@ -234,6 +257,8 @@ class BenchCore:
         """
         out: list[NewEntry] = []
         self._offered.clear()
+        if self._holding.waits:
+            return out
         for now_ns, link, data in self._received:
             out.append((Kind.RAW, now_ns, pack_raw(link, False, data)))
         for now_ns, link, decoded in self._decoded:
@@ -279,11 +304,13 @@ class BenchCore:
             elif isinstance(action, Move):
                 self._move(action, now_ns)
 
-    def _look_early(self) -> None:
-        """Have the decoder of the force's link show its rows as soon as they are read."""
+    def _look_at_rows(self) -> None:
+        """Have the decoder of the force's link show its rows before it works on them."""
         decoder = self._decoders[self.pipeline.setup.force.source]
-        if self._at_once is not None and isinstance(decoder, ShowsRows):
-            decoder.show_rows(self._look)
+        shows = decoder if isinstance(decoder, ShowsRows) else None
+        self._holding.decoder = shows
+        if self._at_once is not None and shows is not None:
+            shows.show_rows(self._look)
 
     def _look(self, row: tuple[float, ...]) -> None:
         """A row that will be judged in a moment: where it ends in a Stop, the Stop is written now."""
@@ -371,6 +398,7 @@ class BenchCore:
 
     def _take_writes(self) -> list[Write]:
         assert self._stops_left == 0, "a STOP was written that no step contains"
+        self._calm = self.pipeline.calm_counts() if self._holding.able else None
         writes, self._writes = self._writes, []
         return writes
 

@@ -29,6 +29,8 @@ SCALAR_SAMPLES_MAX = 64
 STRETCH_MIN = 24
 TICK_BEATS = 2.0
 BEAT_S_MIN = 0.01
+CALM = frozenset({State.AT_REST, State.READY, State.LOADING, State.HOLDING})
+CALM_SIGMA = 4.0  # below the threshold of the fracture watch (6 by default): a drop is judged as it comes
 SIGN_BLANKING_S = 0.9
 OUTLIERS_TOLD, OUTLIERS_EVERY = 3, 100
 NAN = float("nan")
@@ -120,6 +122,26 @@ class Pipeline:
             return False
         passed = core.judge.next_passes(gross_n)
         return passed is not None and passed not in core.tripped_rows and not core.monitor_only
+
+    def calm_counts(self) -> tuple[float, float] | None:
+        """Device numbers of the force between which the next rows can wait some milliseconds to be judged; None where
+        each row is to be judged as it comes: on the way to the bar, in seating, stopping, after a break, or while a
+        drop or a limit is being looked at.
+        """
+        core, force = self._core, self._force
+        watch, judge = core.watch, core.judge
+        if (
+            core.state not in CALM
+            or core.stopping is not None
+            or judge.outside
+            or watch.candidate is not None
+        ):
+            return None
+        low_n = max(judge.low_n, core.gross_n - CALM_SIGMA * watch.level.sigma_n)
+        first, last = (
+            (limit_n * force.sign - force.offset) / force.scale for limit_n in (low_n, judge.high_n)
+        )
+        return (first, last) if first <= last else (last, first)
 
     def inputs(self, values: Mapping[str, bool | None], now_s: float) -> Step:
         """Status inputs as the machine tells them; None is not known, and counts as a fault where it matters."""
