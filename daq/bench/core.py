@@ -117,7 +117,7 @@ class BenchCore:
         self._at_once = at_once
         self._stop_write = stop_write(frame)
         self._stops_left = 0
-        self._calm: tuple[float, float] | None = None
+        self._calm: tuple[float, float, bool] | None = None
         self._holding = Holding(frame, pipeline.setup.force.column)
         self._look_at_rows()
         if at_once is not None:

@@ -123,25 +123,21 @@ class Pipeline:
         passed = core.judge.next_passes(gross_n)
         return passed is not None and passed not in core.tripped_rows and not core.monitor_only
 
-    def calm_counts(self) -> tuple[float, float] | None:
-        """Device numbers of the force between which the next rows can wait some milliseconds to be judged; None where
-        each row is to be judged as it comes: on the way to the bar, in seating, stopping, after a break, or while a
-        drop or a limit is being looked at.
+    def calm_counts(self) -> tuple[float, float, bool] | None:
+        """Device numbers of the force between which the next rows can wait to be judged, and whether all is calm: some
+        milliseconds then, else (on the way to the bar, seating, stopping, after a break, while a drop is looked at)
+        one at most. None: a limit is being looked at, each row is to be judged as it comes.
         """
         core, force = self._core, self._force
         watch, judge = core.watch, core.judge
-        if (
-            core.state not in CALM
-            or core.stopping is not None
-            or judge.outside
-            or watch.candidate is not None
-        ):
+        if judge.outside:
             return None
-        low_n = max(judge.low_n, core.gross_n - CALM_SIGMA * watch.level.sigma_n)
+        calm = core.state in CALM and core.stopping is None and watch.candidate is None
+        low_n = max(judge.low_n, core.gross_n - CALM_SIGMA * watch.level.sigma_n) if calm else judge.low_n
         first, last = (
             (limit_n * force.sign - force.offset) / force.scale for limit_n in (low_n, judge.high_n)
         )
-        return (first, last) if first <= last else (last, first)
+        return (first, last, calm) if first <= last else (last, first, calm)
 
     def inputs(self, values: Mapping[str, bool | None], now_s: float) -> Step:
         """Status inputs as the machine tells them; None is not known, and counts as a fault where it matters."""
