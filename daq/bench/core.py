@@ -193,6 +193,7 @@ class BenchCore:
 
     def lost(self, link: int, detail: str, now_ns: int) -> list[Write]:
         """A link broke. Each blocks the start until it is back itself."""
+        self._release()
         name = self._frame.links[link].name
         self._obey(self.pipeline.fault("link_lost", detail, self.seconds(now_ns), where=name), now_ns)
         return self._take_writes()
