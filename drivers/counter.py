@@ -60,6 +60,15 @@ class Counter:
         self._last = expected
         return True
 
+    def follows(self, value: float, ahead: int) -> bool:
+        """This would simply be the next one after `ahead` others."""
+        if self._last is None or self._suspect is not None:
+            return False
+        expected = self._last + 1 + ahead
+        if self._modulus:
+            expected %= self._modulus
+        return value == expected and expected < WHOLE_MAX
+
     def take_run(self, column: Floats) -> int:
         """How many, from the first on, simply count on: these are taken."""
         if self._last is None or self._suspect is not None:

@@ -3,10 +3,10 @@ only."""
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from enum import StrEnum
-from typing import Protocol, TypeAlias, runtime_checkable
+from typing import Protocol, runtime_checkable
 
 from daq.cards.frame import InputName
 from daq.stream.block import Block
@@ -79,22 +79,14 @@ class Decoder(Protocol):
         ...
 
 
-Look: TypeAlias = Callable[[tuple[float, ...]], None]
-
-
 @runtime_checkable
-class ShowsRows(Protocol):
-    """A decoder that can show a row before it is numbered, timed and made into a block."""
+class Peeks(Protocol):
+    """A decoder that can read rows before it takes them: numbering, timing and making a block take longer."""
 
-    def show_rows(self, look: Look) -> None:
-        """From now on call look(row) with each row that comes alone and simply counts on, channels first. What is shown
-        is always among the blocks of the same feed.
-        """
-        ...
-
-    def peek(self, data: bytes) -> list[tuple[float, ...]] | None:
-        """The rows of these bytes, where they would be nothing but whole rows of the usual form and no status input
-        moves in them; None otherwise. Changes nothing.
+    def peek(self, data: bytes, ahead: int) -> list[tuple[float, ...]] | None:
+        """The rows of these bytes, channels first, were they to come after `ahead` rows that have not been fed yet;
+        None where they are not just whole rows that simply follow, without a gap or an input that moves. Changes
+        nothing; what is returned is what `feed` will make of them.
         """
         ...
 

@@ -15,7 +15,7 @@ from daq.cards.frame import FrameCard
 from daq.stream.block import Floats
 from daq.stream.clock import ClockModel
 from drivers.checks import check_value
-from drivers.decoded import STALE_S, Decoded, Look, Reason
+from drivers.decoded import STALE_S, Decoded, Reason
 from drivers.framing import LineFramer
 from drivers.numbering import Numbering
 from drivers.plan import link_of, transmission_s
@@ -57,19 +57,15 @@ class LinesDecoder:
         """Drift and jitter of the device's counter, where it has one."""
         return self._numbering.clock
 
-    def show_rows(self, look: Look) -> None:
-        """See ShowsRows."""
-        self._numbering.look = look
-
-    def peek(self, data: bytes) -> list[tuple[float, ...]] | None:
-        """See ShowsRows."""
+    def peek(self, data: bytes, ahead: int) -> list[tuple[float, ...]] | None:
+        """See Peeks."""
         end = self._line_end
         if self._first_line or self._broken or self._framer.buffered_bytes or not data.endswith(end):
             return None
-        rows = []
+        rows: list[tuple[float, ...]] = []
         for line in data[: -len(end)].split(end):
             row = self._grammar.plain(line)
-            if row is None or not self._numbering.unmoved(row):
+            if row is None or not self._numbering.follows(row, ahead + len(rows)):
                 return None
             rows.append(row)
         return rows

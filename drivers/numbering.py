@@ -13,7 +13,7 @@ import numpy as np
 from daq.stream.block import GAP_UNKNOWN, Block, Floats
 from daq.stream.clock import ClockModel
 from drivers.counter import WHOLE_MAX, Counter
-from drivers.decoded import NO_REJECTS, InputSample, Look, Reason
+from drivers.decoded import NO_REJECTS, InputSample, Reason
 from drivers.plan import RowPlan
 from drivers.timing import CounterTiming, Timing
 
@@ -70,7 +70,6 @@ class Numbering:
         self._lost = False  # without a counter: something was thrown away since the last accepted row
         self._segments: list[_Segment] = []
         self._rejected: dict[str, int] = {}
-        self.look: Look | None = None  # sees a row of `one` before its time and block are worked out
 
     @property
     def clock(self) -> ClockModel | None:
@@ -103,7 +102,14 @@ class Numbering:
                 inputs.append(InputSample(self._plan.inputs[rule].name, active, float(block.time_s[offset])))
         return Numbered(tuple(blocks), tuple(inputs), self._rejected or NO_REJECTS)
 
-    def unmoved(self, row: tuple[float, ...]) -> bool:
+    def follows(self, row: tuple[float, ...], ahead: int) -> bool:
+        """After `ahead` more rows that simply count on, this one would too. Changes nothing."""
+        plan = self._plan
+        if plan.time is not None or self._lost or not self._unmoved(row):
+            return False
+        return self._counter is None or self._counter.follows(row[plan.counter or 0], ahead)
+
+    def _unmoved(self, row: tuple[float, ...]) -> bool:
         """No status input moves in this row."""
         return not self._places or all(
             row[at] == held for held, at in zip(self._status, self._places, strict=True)
@@ -114,12 +120,10 @@ class Numbering:
         plan = self._plan
         if plan.time is not None or self._lost:
             return None
-        if not self.unmoved(row):
+        if not self._unmoved(row):
             return None
         if self._counter is not None and not self._counter.counts_on(row[plan.counter or 0]):
             return None
-        if self.look is not None:
-            self.look(row)
         index = self._next_index
         self._next_index = index + 1
         time_s = self._timing.feed(index, None, 1, arrival_s)

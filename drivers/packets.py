@@ -19,7 +19,7 @@ from daq.errors import CardError
 from daq.stream.block import Block, Floats
 from daq.stream.clock import ClockModel
 from drivers.checks import WEAK
-from drivers.decoded import STALE_S, Decoded, Look, Reason
+from drivers.decoded import STALE_S, Decoded, Reason
 from drivers.numbering import Numbering
 from drivers.packetform import PacketForm
 from drivers.plan import link_of, transmission_s
@@ -82,20 +82,17 @@ class PacketsDecoder:
         """Drift and jitter of the device's counter, where it has one."""
         return self._numbering.clock
 
-    def show_rows(self, look: Look) -> None:
-        """See ShowsRows."""
-        self._numbering.look = look
-
-    def peek(self, data: bytes) -> list[tuple[float, ...]] | None:
-        """See ShowsRows."""
-        form, rows = self._form, []
+    def peek(self, data: bytes, ahead: int) -> list[tuple[float, ...]] | None:
+        """See Peeks."""
+        form = self._form
+        rows: list[tuple[float, ...]] = []
         if self._data or not self._locked or self._broken or len(data) % form.bytes:
             return None
         for at in range(0, len(data), form.bytes):
             if not data.startswith(self._sync, at) or not form.passes(data, at):
                 return None
             row = form.row(data, at)
-            if not self._numbering.unmoved(row):
+            if not self._numbering.follows(row, ahead + len(rows)):
                 return None
             rows.append(row)
         return rows

@@ -23,7 +23,7 @@ from daq.stream.payloads import pack_block, pack_event, pack_raw
 from daq.watch.pipeline import Pipeline
 from daq.watch.requests import Request, StopRequest
 from daq.watch.values import Event, Json, Move, Severity, State, Step, Stop
-from drivers.decoded import Decoded, Decoder, ShowsRows
+from drivers.decoded import Decoded, Decoder, Peeks
 from drivers.health import LinkFault, LinkHealth
 from drivers.motion import (
     Acknowledged,
@@ -117,9 +117,9 @@ class BenchCore:
         self._at_once = at_once
         self._stop_write = stop_write(frame)
         self._stops_left = 0
-        self._calm: tuple[float, float, bool] | None = None
-        self._holding = Holding(frame, pipeline.setup.force.column)
-        self._look_at_rows()
+        self._band: tuple[float, float, bool] | None = None
+        self._holding = Holding(frame, pipeline.setup.force)
+        self._peek_with(self._decoders[0])
         if at_once is not None:
             pipeline.tell_stops(self._write_stop)
 
@@ -130,17 +130,34 @@ class BenchCore:
     # --- what happens
     def received(self, link: int, data: bytes, now_ns: int) -> list[Write]:
         """Bytes arrived on a link. Returns what must be written now."""
-        if self._calm is not None and self._holding.keeps(data, now_ns, self._calm):
-            return []
-        if self._holding.waits:
-            data = self._holding.take()[0] + data
+        holding = self._holding
+        forces_n = holding.forces_n(data) if holding.able else None
+        if forces_n is not None:
+            stops = max(forces_n) > self.pipeline.limit_n and self._stop_early(forces_n)
+            if not stops and self._band is not None and holding.keeps(data, forces_n, now_ns, self._band):
+                return []
+        if holding.waits:
+            data = holding.take()[0] + data
         return self._feed(link, data, now_ns)
+
+    def _stop_early(self, forces_n: list[float]) -> bool:
+        """Rows just read, one at least beyond a limit: where that will stop the machine, STOP leaves now."""
+        beyond = self._holding.beyond
+        for force_n in forces_n:
+            if self.pipeline.would_stop(force_n, beyond):
+                self._write_stop()
+                return True
+            beyond = beyond + 1 if force_n > self.pipeline.limit_n else 0
+        return False
 
     def _release(self) -> None:
         """Judge what waits, before anything else happens."""
         if self._holding.waits:
             data, then_ns = self._holding.take()
             self._writes = self._feed(0, data, then_ns)
+
+    def _peek_with(self, decoder: Decoder) -> None:
+        self._holding.decoder = decoder if isinstance(decoder, Peeks) else None
 
     def _feed(self, link: int, data: bytes, now_ns: int) -> list[Write]:
         now_s = self.seconds(now_ns)
@@ -229,7 +246,7 @@ class BenchCore:
         self._release()
         self._decoders[link] = decoder
         self._after_loss.add(link)
-        self._look_at_rows()
+        self._peek_with(self._decoders[0])
         self._health[link] = LinkHealth(self._frame.links[link])
         now_s = self.seconds(now_ns)
         if (
@@ -304,19 +321,6 @@ class BenchCore:
                 self._send_stop(now_ns)
             elif isinstance(action, Move):
                 self._move(action, now_ns)
-
-    def _look_at_rows(self) -> None:
-        """Have the decoder of the force's link show its rows before it works on them."""
-        decoder = self._decoders[self.pipeline.setup.force.source]
-        shows = decoder if isinstance(decoder, ShowsRows) else None
-        self._holding.decoder = shows
-        if self._at_once is not None and shows is not None:
-            shows.show_rows(self._look)
-
-    def _look(self, row: tuple[float, ...]) -> None:
-        """A row that will be judged in a moment: where it ends in a Stop, the Stop is written now."""
-        if self.pipeline.would_stop(row):
-            self._write_stop()
 
     def _write_stop(self, _: Stop | None = None) -> None:
         """A Stop was decided this moment. It must not overtake what was to be written before it."""
@@ -399,7 +403,7 @@ class BenchCore:
 
     def _take_writes(self) -> list[Write]:
         assert self._stops_left == 0, "a STOP was written that no step contains"
-        self._calm = self.pipeline.calm_counts() if self._holding.able else None
+        self._band = self.pipeline.calm_band_n() if self._holding.able else None
         writes, self._writes = self._writes, []
         return writes
 

@@ -163,10 +163,10 @@ class ForceJudge:
         self.outside.clear()
         self.outliers += 1
 
-    def next_passes(self, gross_n: float) -> int | None:
-        """The row that `judge` would find passed by this number as the next sample; changes nothing."""
+    def next_passes(self, gross_n: float, beyond: int) -> int | None:
+        """The row that `judge` would find passed by this number after so many more that lie beyond; changes nothing."""
         for place, (row, low_n, high_n, samples, _) in enumerate(self._rows):
-            if not low_n <= gross_n <= high_n and self.outside.get(place, 0) + 1 >= samples:
+            if not low_n <= gross_n <= high_n and self.outside.get(place, 0) + beyond + 1 >= samples:
                 return row
         return None
 

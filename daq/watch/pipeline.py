@@ -8,7 +8,7 @@ scalar definition decides. Both give the same answer, and so does any cut of the
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Mapping
 from math import isfinite
 
 from daq.cards.frame import FrameCard
@@ -111,33 +111,33 @@ class Pipeline:
         self._tick(now_s)
         return core.take_step()
 
-    def would_stop(self, row: Sequence[float]) -> bool:
-        """Would this row of the force's link, taken next, stop a loading at a limit? Changes nothing: the bench asks
-        it of a row that has been read and not yet numbered or timed, so that STOP need not wait for that work. Only for
-        force above the limits: below zero a ring-down has to be told from a wrong sign, which needs the time.
+    @property
+    def limit_n(self) -> float:
+        """The lowest force limit of the moment, gross."""
+        return self._core.judge.high_n
+
+    def would_stop(self, gross_n: float, beyond: int) -> bool:
+        """Would this force, after so many beyond a limit that have not been judged yet, stop a loading? Changes
+        nothing: the bench asks it of a row that has been read and not yet numbered or timed, so that STOP need not
+        wait for that work. Only above the limits: below zero a ring-down has to be told from a wrong sign, in time.
         """
-        force, core = self._force, self._core
-        gross_n = force.sign * (row[force.column] * force.scale + force.offset)
+        core = self._core
         if not gross_n > core.judge.high_n or not core.watched or core.stopping is not None:
             return False
-        passed = core.judge.next_passes(gross_n)
+        passed = core.judge.next_passes(gross_n, beyond)
         return passed is not None and passed not in core.tripped_rows and not core.monitor_only
 
-    def calm_counts(self) -> tuple[float, float, bool] | None:
-        """Device numbers of the force between which the next rows can wait to be judged, and whether all is calm: some
-        milliseconds then, else (on the way to the bar, seating, stopping, after a break, while a drop is looked at)
-        one at most. None: a limit is being looked at, each row is to be judged as it comes.
+    def calm_band_n(self) -> tuple[float, float, bool] | None:
+        """Gross force, N, between which the next rows can wait to be judged, and whether all is calm: some milliseconds
+        then, else (on the way to the bar, seating, stopping, after a break, while a drop is looked at) one at most.
+        None: a limit is being looked at, each row is to be judged as it comes.
         """
-        core, force = self._core, self._force
-        watch, judge = core.watch, core.judge
+        core, watch, judge = self._core, self._core.watch, self._core.judge
         if judge.outside:
             return None
         calm = core.state in CALM and core.stopping is None and watch.candidate is None
         low_n = max(judge.low_n, core.gross_n - CALM_SIGMA * watch.level.sigma_n) if calm else judge.low_n
-        first, last = (
-            (limit_n * force.sign - force.offset) / force.scale for limit_n in (low_n, judge.high_n)
-        )
-        return (first, last, calm) if first <= last else (last, first, calm)
+        return low_n, judge.high_n, calm
 
     def inputs(self, values: Mapping[str, bool | None], now_s: float) -> Step:
         """Status inputs as the machine tells them; None is not known, and counts as a fault where it matters."""
