@@ -275,7 +275,7 @@ class BenchCore:
         """
         out: list[NewEntry] = []
         self._offered.clear()
-        if self._holding.waits:
+        if not (self._received or self._steps or self._sent):
             return out
         for now_ns, link, data in self._received:
             out.append((Kind.RAW, now_ns, pack_raw(link, False, data)))

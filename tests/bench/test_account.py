@@ -72,7 +72,9 @@ def test_rows_that_found_no_room_are_rejected_by_name(tmp_path: Path) -> None:
             recorded += sum(unpack_block(e.payload).count for e in reader.read_new() if e.kind is Kind.BLOCK)
             reader.acknowledge(reader.last_sequence, 1)
     bench.core.request(CloseRun("tried"), bench.now_ns)
-    (account,) = [e for e in events_of(offer(bench, ring)) if e["event"] == "accounting"]
+    last = offer(bench, ring)
+    offered += rows_of(last)
+    (account,) = [e for e in events_of(last) if e["event"] == "accounting"]
     (link,) = account["links"]
     lost = link["rejected"][RING_FULL]
     recorded += sum(unpack_block(e.payload).count for e in reader.read_new() if e.kind is Kind.BLOCK)
