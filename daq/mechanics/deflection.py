@@ -116,7 +116,7 @@ def shear_share_plane_stress(depth_mm: float, support_span_mm: float, poisson_ra
     """Three-point rectangle by plane elasticity, leading term: (24 + 15 nu)/10 (h/L)^2 of the bending deflection.
 
     Timoshenko prints 2.85 (h/L)^2 - 0.84 (h/L)^3 at nu = 0.3 (from memory); finite elements confirm 2.85 in the limit
-    and fall by 1.26 h/L with the support rollers' own effect (check values 1.4). A reference beside the beam term.
+    and fall by 1.26 h/L with the support rollers' own effect. A reference beside the beam term.
     """
     return (24.0 + 15.0 * poisson_ratio) / 10.0 * (depth_mm / support_span_mm) ** 2
 

@@ -165,7 +165,7 @@ def test_hooke():
 
 
 def test_a_gauge_in_the_middle_of_four_point_sees_the_nominal_stress():
-    """2 mm in the middle of 40/20: 1.000000 in the plane-stress model (check values 1.5)."""
+    """2 mm in the middle of 40/20: 1.000000 in the plane-stress model."""
     nominal = beam_stress_mpa(300.0, BAR, QUARTER)
     found = compare(nominal, 300.0, BAR, QUARTER, from_mid_mm=0.0, gauge_length_mm=2.0)
     assert found.expected_mpa == pytest.approx(nominal, rel=1e-5)
