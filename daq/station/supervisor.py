@@ -11,6 +11,7 @@ import json
 import os
 import secrets
 import select
+import shutil
 import signal
 import socket
 import subprocess
@@ -140,7 +141,11 @@ class Supervisor:
             raise
 
     def _sweep(self) -> None:
-        """Sockets of a dead daemon go; its ring stays until the archivist's start has drained it."""
+        """Sockets of a dead daemon go, and scratch whose run stands in the journal; its ring stays until the archivist
+        has drained it at its start.
+        """
+        for scratch in self._places.spool.glob("run-*"):
+            shutil.rmtree(scratch, ignore_errors=True)
         for name in ("stop", "bench", "station", "control", "feed"):
             (self._places.runtime / name).unlink(missing_ok=True)
 

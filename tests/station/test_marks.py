@@ -6,8 +6,10 @@ from pathlib import Path
 
 import pytest
 
+from daq.cards.load import example_path, load_frame
 from daq.station.marks import RunningMarks
 from daq.station.places import Places, places_for
+from daq.station.supervisor import Outfit, Supervisor
 
 
 @pytest.fixture
@@ -56,3 +58,15 @@ def test_the_twin_outlives_a_reboot_and_is_this_computers(
     monkeypatch.setenv("XDG_STATE_HOME", str(tmp_path))
     twin = Places("lane", Path("/run/user/1/midspan/lane"), tmp_path / "data").frame_mark
     assert twin.parent == tmp_path / "midspan" and twin.name.startswith("lane@")
+
+
+def test_scratch_of_a_dead_archivist_goes_at_the_next_start_and_nothing_else(root: Path) -> None:
+    places = made("kiln-lane-demo", root / "a")
+    for name in ("run-0001", "journal-0000000000000001"):
+        (places.spool / name).mkdir()
+        (places.spool / name / "file").write_bytes(b"x")
+    ring = places.ring(1)
+    ring.write_bytes(b"x")
+    outfit = Outfit(load_frame(example_path("kiln-lane-demo.toml")), places)
+    Supervisor(outfit, lambda _: None)._sweep()
+    assert [path.name for path in places.spool.iterdir()] == ["journal-0000000000000001"] and ring.exists()
