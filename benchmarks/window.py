@@ -11,10 +11,14 @@ from __future__ import annotations
 import os
 import time
 from collections.abc import Callable
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from benchmarks.harness import Report, high_water_kb
+
+if TYPE_CHECKING:
+    from tests.monitor.window_rig import WindowRig
 
 NAME = "window"
 RATE_HZ = 5_000
@@ -64,7 +68,32 @@ def run(report: Report) -> None:
     report.add(
         NAME, "memory of the window's process (VmHWM)", high_water_kb() / MIB, "MiB", goal="<= 300 MiB"
     )
+    stops(report, rig)
     window.close()
+
+
+def stops(report: Report, rig: WindowRig) -> None:
+    """Key-down in the busy window until the stop line is at work, in its own thread."""
+    from PySide6.QtCore import Qt
+    from PySide6.QtTest import QTest
+    from PySide6.QtWidgets import QApplication
+
+    from tests.monitor.window_rig import summary_body
+
+    window, waits = rig.window, []
+    window.begin()
+    for press in range(50 if report.quick else 300):
+        rig.feed.lay("trace", {"run_id": "run-DEMO-01"}, columns(press * BLOCK_ROWS, BLOCK_ROWS))
+        rig.feed.lay("summary", summary_body(300.0, moving=True, data_age_s=0.0))
+        QApplication.processEvents()
+        struck_s = time.monotonic()
+        QTest.keyPress(window, Qt.Key.Key_Space)
+        while len(rig.stops) <= press:
+            QApplication.processEvents()
+        waits.append(1e3 * (rig.stops[press][1] - struck_s))
+    report.quantiles(
+        NAME, "key-down to the stop line", waits, "ms", goals={"p99": "<= 50 ms with its datagram"}
+    )
 
 
 class BareCurve:

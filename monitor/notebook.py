@@ -87,6 +87,7 @@ class Notebook:
     def stands(self, number: str, said: Said) -> None:
         scene = self._window.scene
         self.verdicts[number] = said.verdict
+        scene.judged(number)
         if number == scene.ending.specimen:
             scene.ending.verdict = said.verdict
             if scene.beam is not None and said.from_mid_mm:

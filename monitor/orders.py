@@ -181,6 +181,7 @@ class Orders:
         if answer.name == "look" and answer.good:
             self._window.take_look(answer.body)
         elif answer.name == "look":
+            self._window.scene.wants_look = True  # once more, in a second
             return  # the foot and the state say how old everything is
         elif not answer.good:
             self._refused(answer)

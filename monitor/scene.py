@@ -29,6 +29,7 @@ class Scene:
         self.breaks_mm: tuple[float, ...] = ()
         self._specimen: Mapping[str, Any] | None = None
         self.wants_look = False  # something has come that only a look can tell
+        self._unjudged: frozenset[str] = frozenset()
         self._number = -1
 
     # --- in
@@ -77,6 +78,7 @@ class Scene:
         run = opened["run"]
         if str(run["run_id"]) != self.run_id:
             self.breaks_mm = ()
+            self._unjudged = self.unjudged()
             self.ending.begin(str(run["run_id"]), str(run["specimen"]))
         self.run_id = str(run["run_id"])
         self.method, self.fixture = opened["method"], str(opened["fixture"])
@@ -129,14 +131,17 @@ class Scene:
         found = []
         for bar in (self.sitting or {}).get("bars", ()):
             strength = (bar.get("result") or {}).get("strength_mpa")
-            if bar["number"] == self.hidden:
+            if bar["number"] in self.unjudged():
                 continue
             if bar["state"] == "broken" and strength is not None and bar["number"] not in not_counted:
                 found.append(float(strength))
         return tuple(found)
 
-    @property
-    def hidden(self) -> str:
-        """The bar whose strength waits for its verdict."""
-        waits = self.ending.is_over and not self.ending.may_show_strength
-        return self.ending.specimen if waits else ""
+    def unjudged(self) -> frozenset[str]:
+        """With verdict first: bars that ended here and have no verdict yet; their strength is not shown."""
+        waits = self.ending.is_over and not self.ending.may_show_strength and self.ending.specimen
+        return self._unjudged | {self.ending.specimen} if waits else self._unjudged
+
+    def judged(self, number: str) -> None:
+        """A verdict has been given."""
+        self._unjudged -= {number}

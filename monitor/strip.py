@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Container, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -31,16 +31,16 @@ class Cell:
 
 
 def cells_of(
-    sitting: Mapping[str, Any] | None, verdicts: Mapping[str, str], *, hide: str = ""
+    sitting: Mapping[str, Any] | None, verdicts: Mapping[str, str], *, hide: Container[str] = ()
 ) -> tuple[Cell, ...]:
-    """From the station's sitting. verdicts: as they stand, by bar; hide: a bar whose strength waits for its verdict."""
+    """From the station's sitting. verdicts: as they stand, by bar; hide: bars whose strength waits for a verdict."""
     cells = []
     for bar in (sitting or {}).get("bars", ()):
         number, result = str(bar["number"]), bar.get("result") or {}
         kind = {"broken": "broken", "interrupted": "interrupted", "open": "open", "sealing": "open"}.get(
             str(bar["state"]), "waiting"
         )
-        strength = result.get("strength_mpa") if kind == "broken" and number != hide else None
+        strength = result.get("strength_mpa") if kind == "broken" and number not in hide else None
         if kind == "broken":
             kind = KINDS.get(verdicts.get(number) or str(result.get("verdict")), "broken")
         cells.append(Cell(number, kind, strength))

@@ -43,6 +43,7 @@ TURN_MS = 33  # 30 redraws a second
 NUMBERS_EVERY_S = 0.2  # trade judgement, no source: numbers change four to five times a second
 POSE_EVERY_S = 0.1
 LOOK_EVERY_S = 1.0
+FAREWELL_S = 1.0  # for the seat to be freed and a note to be kept
 TOLD_S = 8.0  # how long a refusal stays
 PLAIN = Setting()
 
@@ -156,14 +157,16 @@ class Window(QWidget):
     def closeEvent(self, event: QCloseEvent) -> None:
         """A window that is closed while the frame moves stops it, as a terminal that goes away does."""
         if self._outside.operator and self.scene.presenter.moving:
-            self.stop_line.stop("operator's window closed")
+            self._outside.stop("operator's window closed")  # not by its thread: the process may end first
         self._timer.stop()
         application = QApplication.instance()
         if application is not None:
             application.removeEventFilter(self.filter)
         self.orders.end()
-        self.errands.end()
-        self.reader.end()
+        for thread in (self.errands, self.reader):
+            thread.end()
+            if thread.is_alive():
+                thread.join(FAREWELL_S)
         self.closed.emit()
         super().closeEvent(event)
 
@@ -235,7 +238,7 @@ class Window(QWidget):
         facts = (Line("gross load", board.gross), *board.facts)
         self.side.say(ending or [fact for fact in facts if fact.text != "-"], chief=bool(ending))
         self.strip.say(
-            cells_of(scene.sitting, self.orders.notebook.verdicts, hide=scene.hidden),
+            cells_of(scene.sitting, self.orders.notebook.verdicts, hide=scene.unjudged()),
             self.orders.notebook.figures(),
         )
         self.foot.say(board.mark, self._foot_words(board))

@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import os
+import signal
 import sys
 from collections.abc import Callable, Iterator
 from contextlib import AbstractContextManager, contextmanager
 from dataclasses import dataclass
 from pathlib import Path
+from types import TracebackType
 from typing import TYPE_CHECKING
 
 from daq.cli.benchsheet import BenchSheet
@@ -101,12 +103,27 @@ def replay(path: Path, setting: Setting, seconds: float | None) -> None:
 def show(app: QApplication, window: Window, seconds: float | None) -> None:
     from PySide6.QtCore import QTimer
 
+    def leave(*_: object) -> None:
+        window.close()
+
+    def fail(kind: type[BaseException], error: BaseException, trace: TracebackType | None) -> None:
+        """A window that is broken goes away; it must not go on showing old numbers."""
+        sys.__excepthook__(kind, error, trace)
+        window.close()
+        app.exit(1)
+
+    for kind in (signal.SIGHUP, signal.SIGINT, signal.SIGTERM):
+        signal.signal(kind, leave)  # heard within one turn of the window
+    sys.excepthook = fail
     window.resize(1600, 900)
     window.begin()
     window.showMaximized()
     if seconds is not None:
         QTimer.singleShot(round(1000 * seconds), window.close)
-    app.exec()
+    if app.exec():
+        raise MidspanError(
+            "the window broke and was closed; the frame and its record are not touched by that"
+        )
 
 
 def picture(path: Path, target: Path, setting: Setting, size: tuple[int, int], at_s: float | None) -> None:

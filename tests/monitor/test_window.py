@@ -266,3 +266,23 @@ def test_a_window_that_closes_while_the_frame_moves_stops_it(qtbot: QtBot) -> No
     rig.window.close()
     qtbot.waitUntil(lambda: len(rig.stops) == 1, timeout=2000)
     assert QApplication.instance() is not None
+
+
+def test_with_verdict_first_no_strength_is_shown_before_it(qtbot: QtBot) -> None:
+    from monitor.setting import Setting
+    from tests.monitor.window_rig import WindowRig, opened
+
+    rig = WindowRig(setting=Setting(pixel_mm=0.277, verdict_first=True))
+    window = rig.window
+    rig.break_bar(460.0)
+    bars = [{"number": "DEMO-01", "state": "broken", "record": "", "result": {"strength_mpa": 383.3}}]
+    window.scene.sitting = {"bars": bars}
+    window._numbers_s = float("-inf")
+    window.turn()
+    assert window.side.rows[0].text == "waits for the verdict"
+    assert window.strip.cells[0].strength_mpa is None and window.scene.strengths_mpa() == ()
+    rig.feed.lay("event", opened("DEMO-02"))  # the next bar does not give it away
+    window.turn()
+    assert window.scene.strengths_mpa() == ()
+    window.scene.judged("DEMO-01")
+    assert window.scene.strengths_mpa() == (383.3,)
