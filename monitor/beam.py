@@ -24,7 +24,8 @@ from daq.stream.block import Floats
 
 OVERHANG_SHARE = 0.1  # of the support span on either side, where the length was not measured
 EXAGGERATIONS = (1, 2, 5, 10, 20, 50, 100, 200, 500, 1000)
-SAG_SHARE = 0.5  # of the height: how far the bar is drawn to sag at the expected break
+SAG_SHARE = 0.5  # of the height: how far the bar is drawn to sag at the expected break,
+SAG_SPAN_SHARE = 0.04  # and at most so much of the span
 SHAPE_POINTS = 61
 
 
@@ -60,7 +61,8 @@ class Beam:
     @property
     def exaggeration(self) -> int:
         """A round factor that makes the sag at the expected break about half the bar's height."""
-        wanted = SAG_SHARE * self.height_mm / self.sag_mm if self.sag_mm > 0 else 1.0
+        drawn_mm = min(SAG_SHARE * self.height_mm, SAG_SPAN_SHARE * self.support_mm)
+        wanted = drawn_mm / self.sag_mm if self.sag_mm > 0 else 1.0
         return max((factor for factor in EXAGGERATIONS if factor <= wanted), default=1)
 
     @property

@@ -76,13 +76,18 @@ class Drawing(Band):
             self.marked.emit(round(end_mm, 1))
 
     def scale(self) -> Scale | None:
-        """The largest scale at which fixture, moment and words fit."""
+        """The largest scale at which fixture, moment and words fit; the facts stand beside the span where they can."""
         beam = self.beam
         if beam is None:
             return None
+        small = self.sizes.small_px
+        scale = self._scale(beam, 2.0 * small)
+        needed = width_px(facts_of(beam), small) + 2.5 * small
+        return scale if scale.left_px >= needed else self._scale(beam, 3.4 * small)
+
+    def _scale(self, beam: Beam, bottom_px: float) -> Scale:
         sizes = self.sizes
         top_px = 1.1 * sizes.small_px + 8.0
-        bottom_px = 2.0 * sizes.small_px
         rest_px = max(40.0, self.height() - top_px - bottom_px)
         number_px = (1.0 if self.posture.stress_first else 0.8) * sizes.chief_px
         across = self.width() * WIDE_SHARE / max(beam.length_mm, beam.support_mm + beam.roller_mm)
@@ -276,13 +281,17 @@ class _Sketch:
         radius = max(ROLLER_PX_MIN, beam.roller_mm * scale.px_mm) / 2.0
         right = scale.x(beam.loads_mm[0]) - radius - 0.35 * sizes.small_px
         high = 1.2 * fitting_px(board.load, load_px, right - box.left() - sizes.small_px, bold=True)
-        top = max(0.0, self._top_px - max(high, radius * 2.0))
+        raised = min(0.0, self._sag_at(-beam.overhang_mm))  # the bar's ends rise when it bends
+        top = max(0.0, self._top_px + raised - max(high, radius * 2.0 + raised))
+        if top + high > self._top_px + raised + 0.2 * high:  # no room above the bar: beside it
+            right = scale.x(-beam.overhang_mm) - 0.5 * sizes.small_px
         room = QRectF(box.left() + sizes.small_px, top, right - box.left() - sizes.small_px, high)
         write(self.painter, room, board.load, load_px, ink, align=RIGHT, bold=True)
         if self.posture.broken:
             return
         wide = beam.support_mm * scale.px_mm - 2.4 * radius
-        stress_px = min(fitting_px(board.stress, stress_px, wide, bold=True), scale.moment_px)
+        free_px = max(0.5 * scale.moment_px, scale.moment_px - self.sag_px - 4.0)
+        stress_px = min(fitting_px(board.stress, stress_px, wide, bold=True), free_px)
         text_px = width_px(board.stress, stress_px, bold=True)
         middle = scale.x(beam.support_mm / 2.0)
         patch = QRectF(
@@ -294,18 +303,20 @@ class _Sketch:
     def _facts(self, box: QRectF) -> None:
         """Small, at the lower edge: what is drawn."""
         beam, small = self.beam, self.sizes.small_px
-        guessed = "" if beam.length_known else ", length assumed"
-        sides = " x ".join(f"{side:.3f}" for side in (beam.width_mm, beam.height_mm))
-        left = f"{beam.fixture}: {sides} x {beam.length_mm:g} mm{guessed}"
         if self.posture.sag_mm is None:
             right = "to scale; deflection not measured, not drawn"
         else:
-            right = "to scale" + (
-                f"; deflection drawn x{self.factor}" if self.factor > 1 else "; deflection x1"
-            )
+            right = f"to scale; deflection drawn x{self.factor}"
         room = QRectF(box.left() + small, box.bottom() - 1.5 * small, box.width() - 2.0 * small, 1.4 * small)
         half = QRectF(room)
-        half.setWidth(max(0.0, self.scale.x(0.0) - 2.0 * small))
-        write(self.painter, half, left, small, self.theme.faint, align=LEFT)
+        half.setWidth(0.49 * room.width())
+        write(self.painter, half, facts_of(beam), small, self.theme.faint, align=LEFT)
         half.moveLeft(room.right() - half.width())
         write(self.painter, half, right, small, self.theme.faint, align=RIGHT)
+
+
+def facts_of(beam: Beam) -> str:
+    """Fixture and bar in a line."""
+    guessed = "" if beam.length_known else ", length assumed"
+    sides = " x ".join(f"{side:.3f}" for side in (beam.width_mm, beam.height_mm))
+    return f"{beam.fixture}: {sides} x {beam.length_mm:g} mm{guessed}"
