@@ -128,7 +128,7 @@ def carry(name: str, work: Work, desk: Desk) -> Answer:
         return Answer(name, work(desk) or {})
     except Refused as error:
         return Answer(name, missing=error.missing)
-    except MidspanError as error:
+    except (MidspanError, OSError) as error:
         return Answer(name, trouble=str(error))
 
 

@@ -39,10 +39,12 @@ class KeyFilter(QObject):
         stop: Callable[[str], None],
         leave: Callable[[], None],
         at_rest: Callable[[], bool],
+        clock: Callable[[], float] = time.monotonic,
     ) -> None:
         super().__init__()
         self._judge = judge
         self._stop, self._leave, self._at_rest = stop, leave, at_rest
+        self.clock = clock
 
     def eventFilter(self, watched: QObject, event: QEvent) -> bool:
         """True: nobody else sees it."""
@@ -50,7 +52,7 @@ class KeyFilter(QObject):
         if kind == QEvent.Type.KeyPress and isinstance(event, QKeyEvent):
             return self._down(event)
         if kind == QEvent.Type.KeyRelease and isinstance(event, QKeyEvent):
-            self._judge.up(key_name(event), time.monotonic(), repeat=event.isAutoRepeat())
+            self._judge.up(key_name(event), self.clock(), repeat=event.isAutoRepeat())
             return False
         if kind in (QEvent.Type.ApplicationDeactivate, QEvent.Type.WindowDeactivate):
             self._judge.forget()
@@ -60,7 +62,7 @@ class KeyFilter(QObject):
         name, typing = key_name(event), self._is_typing()
         deed = self._judge.down(
             name,
-            time.monotonic(),
+            self.clock(),
             repeat=event.isAutoRepeat(),
             typing=typing or self._in_dialog(),
             at_rest=self._at_rest(),

@@ -27,6 +27,7 @@ REQUESTS: Mapping[str, tuple[str, Mapping[str, Any]]] = {
     "start": ("start", {}),
     "return": ("return", {"distance_mm": BACK_OFF_MM, "speed_mm_min": BACK_OFF_MM_MIN}),
 }
+BROKEN = "this window carries no commands any more: close it, open it again; midspan stop works meanwhile"
 QUESTION = "Is all of this as it should be? y: yes, open the series. "
 WATCHING = (
     "watching only: this window can stop the frame, never move it; the operator's window has --operator"
@@ -42,8 +43,10 @@ class Orders:
         self.notebook = Notebook(window, outside)
         self._questions: tuple[str, ...] = ()
         self._sheet: Sheet | None = None
+        self._begun = False
 
     def begin(self) -> None:
+        self._begun = True
         self.look()
         if self._outside.operator:
             self.sit(instead=self._outside.instead)
@@ -69,6 +72,8 @@ class Orders:
                 self._window.tell("STOP sent", Tone.STOP, 2.0)
         for answer in self._window.errands.answers():
             self._hear(answer)
+        if self._begun and not (self._window.errands.is_alive() and self._window.stop_line.is_alive()):
+            self._window.tell(BROKEN, Tone.STOP)
         self.notebook.turn()
         presenter = self._window.scene.presenter
         nobody = presenter.frame and not presenter.state_body.get("operator")
