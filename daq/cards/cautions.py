@@ -23,6 +23,7 @@ from daq.cards.method import MethodCard
 # Elementary flexure is trusted between these (common practice, no source).
 SLENDERNESS_MIN, SLENDERNESS_MAX = 10.0, 60.0
 WEIBULL_BARS_MIN, MEAN_BARS_MIN = 10, 5
+KEYS_SHOWN_MAX = 5  # a card of the library has some twenty; `midspan methods show` tells them all
 
 
 def cautions(
@@ -116,7 +117,8 @@ def _method_cautions(frame: FrameCard, method: MethodCard, fixture: str | None) 
         yield f"method {method.name}: no compliance table for fixture {fitted or '?'}, so no modulus is shown"
     unchecked = [clause.key for clause in method.clauses if clause.mark not in ("checked", "own choice")]
     if unchecked:
-        keys = ", ".join(unchecked)
+        more = len(unchecked) - KEYS_SHOWN_MAX
+        keys = ", ".join(unchecked[:KEYS_SHOWN_MAX]) + (f" and {more} more" if more > 0 else "")
         yield f"method {method.name}: values not checked against the standard: {keys}"
 
 
