@@ -22,6 +22,7 @@ NAMES = (
     "footprint",
     "recording",
     "window",
+    "series",
 )
 
 

@@ -25,6 +25,7 @@ COMMANDS = {
     "verify": "Check sealed records and journals; name the first damaged block.",
     "recover": "Rebuild records from journals that a crash left behind.",
     "note": "Break note, correction, verdict or remark beside a sealed record.",
+    "report": "Report a series: HTML, PDF, CSV, JSON.",
     "export": "Write sealed records as CSV, units in the column names.",
 }
 FAILED, BAD_WORDS = 1, 2  # exit codes: it could not be done; the command line was not understood

@@ -247,7 +247,7 @@ def _growth(counted: Sequence[Bar], reasons: list[str]) -> CrackGrowth | None:
 def _cautions(found: Analysis) -> Iterator[str]:
     for name, trend in found.trends.items():
         if trend.caution:
-            text = f"strength goes with {name}: rank correlation {trend.rho:+.2f}, N = {trend.n}, p = {trend.p:.2g}"
+            text = f"strength goes with {name}: rank correlation {trend.rho:+.2f}, N = {trend.n}, p = {trend.p:.1g}"
             yield f"{text}; {len(found.trends)} such tests were made"
     if found.map is not None and found.map.caution:
         text = f"breaks are one-sided: {found.map.left} left, {found.map.right} right of mid-span"

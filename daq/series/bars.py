@@ -44,7 +44,6 @@ class Bar:
 
 TREND_KEYS = {  # against what strength is correlated: name in words, key of the result
     "stress rate, MPa/s": "stress_rate_mean_mpa_s",
-    "time to break, s": "time_to_break_s",
     "modulus, GPa": "modulus_gpa",
     "zero shift, N": "after_zero_n",
 }
