@@ -23,7 +23,7 @@ def bars_section(series: Series) -> Section:
         frozenset({0, 1, 9}),
     )  # fmt: skip
     courses = Grid(
-        ("bar", "break", "to break s", "MPa/s mean", "MPa/s least", "MPa/s most", "E GPa", "± (1 s)", "work mJ",
+        ("bar", "break", "to break s", "MPa/s mean", "MPa/s least", "MPa/s most", "E GPa", "u(E) GPa", "work mJ",
          "toe %", "zero shift N"),
         tuple(_course_row(leaf) for leaf in leaves),
         (1.1, 1.5, 0.85, 0.9, 0.9, 0.9, 0.8, 0.75, 0.8, 0.65, 0.95),
@@ -138,7 +138,8 @@ def _findings(leaf: Leaf) -> list[str]:
     found = []
     for finding in leaf.standing.verdict.findings:
         heavy = finding.consequence in (Consequence.NOT_COUNTED, Consequence.PROVISIONAL)
-        found.append(f"{finding.text} [{finding.consequence.value}]" if heavy else finding.text)
+        text = finding.text if finding.code in finding.text else f"{finding.code}: {finding.text}"
+        found.append(f"{text} [{finding.consequence.value}]" if heavy else text)
     return found
 
 

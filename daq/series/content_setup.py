@@ -95,13 +95,17 @@ def _method_facts(method: MethodCard) -> Iterator[tuple[str, str]]:
         "stress": (rate.rate_mpa_s, "MPa/s"),
     }
     value, unit = wanted[rate.mode]
-    yield "rate", f"{rate.mode} {digits(value, 4)} {unit}, held by the {rate.loop}"
+    yield (
+        "rate",
+        f"{rate.mode} {NONE if value is None else format(value, 'g')} {unit}, held by the {rate.loop}",
+    )
     if method.time_to_break_s is not None:
         yield "time to break", f"{method.time_to_break_s[0]:g} to {method.time_to_break_s[1]:g} s"
     place = method.validity.break_place
+    near = f"near (up to {place.near_percent:g} %): {place.near}; beyond: {place.beyond}"
     yield (
         "break counts",
-        f"{place.region}; near (up to {place.near_percent:g} %): {place.near}; beyond: {place.beyond}",
+        "anywhere: the card has no rule" if place.region == "anywhere" else f"{place.region}; {near}",
     )
     yield "reported peak", method.peak
     yield "chamfer", f"{method.chamfer_mm:g} mm"
@@ -172,7 +176,7 @@ def seal_section(series: Series) -> Section:
         (
             leaf.name,
             str(leaf.meta.get("sha256", NONE)),
-            f"{leaf.notes}  {leaf.head[:16]}" if leaf.notes else "0",
+            f"{leaf.notes}  {leaf.head[:12]}" if leaf.notes else "0",
         )
         for leaf in series.leaves
     )
@@ -186,7 +190,7 @@ def seal_section(series: Series) -> Section:
                 ("sealed by midspan", versions),
                 ("samples", f"{number(float(samples), 0)} in all, {gaps} gaps listed in the records"),
             )),
-            Grid(("record", "SHA-256 of the file", "notes, chain head"), rows, (1.5, 3.6, 1.1), frozenset({0, 1, 2})),
+            Grid(("record", "SHA-256 of the file", "notes, chain head"), rows, (1.3, 4.2, 1.15), frozenset({0, 1, 2})),
             Lines(("midspan verify checks a record and its notes; sha256sum -c SHA256SUMS does without midspan.",)),
         ),
     )  # fmt: skip

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import io
 from collections.abc import Callable, Iterator, Mapping
-from functools import partial
 from pathlib import Path
 from typing import Any
 from xml.sax.saxutils import escape
@@ -22,7 +21,6 @@ def pdf_of(report: Report, figures: Mapping[str, bytes]) -> bytes:
     """figures: PNG bytes by name."""
     try:
         from reportlab.lib.pagesizes import A4
-        from reportlab.pdfgen.canvas import Canvas
         from reportlab.platypus import SimpleDocTemplate
     except ImportError as error:
         raise MidspanError("the report needs reportlab: install midspan with the extra 'report'") from error
@@ -30,7 +28,7 @@ def pdf_of(report: Report, figures: Mapping[str, bytes]) -> bytes:
     out = io.BytesIO()
     document = SimpleDocTemplate(
         out, pagesize=A4, leftMargin=MARGIN_PT, rightMargin=MARGIN_PT, topMargin=54.0, bottomMargin=46.0,
-        title=report.title, author="midspan", subject=", ".join(report.marks), creator="midspan",
+        title=report.title, author="midspan", subject=", ".join(report.marks), creator="midspan", invariant=1,
     )  # fmt: skip
     paint = _Painter(float(document.width) - FRAME_PT, figures)
     foot = _page(report)
@@ -38,7 +36,6 @@ def pdf_of(report: Report, figures: Mapping[str, bytes]) -> bytes:
         list(paint.story(report)),
         onFirstPage=foot,
         onLaterPages=foot,
-        canvasmaker=partial(Canvas, invariant=1),
     )
     return out.getvalue()
 
@@ -126,16 +123,24 @@ class _Painter:
             yield from self._section(section)
 
     def _section(self, section: Section) -> Iterator[Any]:
-        from reportlab.platypus import CondPageBreak, HRFlowable, Paragraph
+        from reportlab.platypus import CondPageBreak, HRFlowable, KeepTogether, Paragraph
 
-        yield CondPageBreak(90.0)
-        yield Paragraph(escape(section.title), self._head)
-        yield HRFlowable(width="100%", thickness=1.0, color=INK, spaceBefore=0.0, spaceAfter=5.0)
-        for block in section.blocks:
+        head = [
+            Paragraph(escape(section.title), self._head),
+            HRFlowable(width="100%", thickness=1.0, color=INK, spaceBefore=0.0, spaceAfter=5.0),
+        ]
+        first, *rest = section.blocks
+        if isinstance(first, Picture):  # a heading never stands alone at the foot of a page
+            yield KeepTogether([*head, *self._picture(first)])
+        else:
+            yield CondPageBreak(90.0)
+            yield from head
+            yield from self._block(first)
+        for block in rest:
             yield from self._block(block)
 
     def _block(self, block: Block) -> Iterator[Any]:
-        from reportlab.platypus import Paragraph
+        from reportlab.platypus import KeepTogether, Paragraph
 
         match block:
             case Lines(lines, tone):
@@ -145,7 +150,7 @@ class _Painter:
             case Grid():
                 yield self._grid(block)
             case Picture():
-                yield from self._picture(block)
+                yield KeepTogether(list(self._picture(block)))
 
     def _facts(self, rows: tuple[tuple[str, str], ...]) -> Any:
         from reportlab.platypus import Paragraph, Table
@@ -185,14 +190,15 @@ class _Painter:
 
     def _picture(self, picture: Picture) -> Iterator[Any]:
         from reportlab.lib.utils import ImageReader
-        from reportlab.platypus import Image, KeepTogether, Paragraph
+        from reportlab.platypus import Image, Paragraph
 
         data = self._figures.get(picture.name)
         if data is None:
             return
         wide, high = ImageReader(io.BytesIO(data)).getSize()
         image = Image(io.BytesIO(data), width=self._width, height=self._width * high / wide)
-        yield KeepTogether([image, Paragraph(escape(picture.caption), self._caption)])
+        yield image
+        yield Paragraph(escape(picture.caption), self._caption)
 
 
 _PADDING = [

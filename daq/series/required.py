@@ -8,7 +8,7 @@ from typing import Any
 from daq.cards.validity import ReportField
 from daq.series.leaf import Series
 
-# Where the card names nothing: what every catalogue of flexure standards asks for (check values 2, from memory).
+# Where the card names nothing: what every catalogue of flexure standards asks for (from memory).
 ALWAYS: tuple[ReportField, ...] = (
     "material", "operator", "day", "frame", "fixture", "spans", "bars", "dimensions", "rate", "strengths",
 )  # fmt: skip

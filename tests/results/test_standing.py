@@ -78,7 +78,7 @@ def test_a_record_without_a_result_is_provisional_and_says_why(made) -> None:
 
 
 def test_stiffness_off_the_series_stays_provisional_until_a_person_says_otherwise(made) -> None:
-    """Job map 6.7: the result cannot count without a correction or a word with a name."""
+    """The result cannot count without a correction, or a word with a name."""
     run = made.made_run(made.Bar(), np.random.default_rng(1))
     sealed = reduce(run).as_json()
     found = standing_of(run.cards, sealed, series_ratio=8.0)

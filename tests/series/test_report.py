@@ -16,6 +16,7 @@ from daq.cli.root import midspan
 from daq.series.content import report_of
 from daq.station.notebook import take_notes
 from tests.made_series import made_series
+from tests.scenarios.world import method_of
 
 pytest.importorskip("matplotlib")
 pytest.importorskip("reportlab")
@@ -31,7 +32,7 @@ def folder(tmp_path_factory: pytest.TempPathFactory) -> Path:
     """Seven bars: one stopped on the way, one not counted, one corrected."""
     out = tmp_path_factory.mktemp("made")
     run = {"material": "alumina, invented", "temperature_c": 21.5, "humidity_percent": 45.0}
-    paths = made_series(out, BARS, interrupt=frozenset({"A-03"}), run=run)
+    paths = made_series(out, BARS, interrupt=frozenset({"A-03"}), run=run, method=method_of(speed_mm_min=1.5))
     utc = "2031-05-06T07:08:09+00:00"
     take_notes(paths[0], [{**ME, "verdict": {"new": "not counted"}}], utc=utc)
     take_notes(

@@ -229,7 +229,8 @@ def look_and_reset(session: Session, client: Client, hands: Path) -> None:
 
 # --- what is left
 def finish(console: Console, folder: Path, series: str, reports: Sequence[Mapping[str, Any]]) -> None:
-    """Summary table on screen and as CSV, picture of the series."""
+    """Summary table on screen and as CSV, picture and report of the series."""
+    from daq.cli.reporting import gather, write_report
     from daq.record.read import read_meta, read_run
     from daq.series.picture import series_picture
 
@@ -260,3 +261,5 @@ def finish(console: Console, folder: Path, series: str, reports: Sequence[Mappin
         f"records  {folder}{os.sep}*.h5\npicture  {picture}\ntable    {folder / f'{series}.csv'}",
         soft_wrap=True,
     )
+    written = list(write_report(gather(folder), folder))
+    console.print(f"report   {written[0].with_suffix('')}.html .pdf .csv .json", soft_wrap=True)
