@@ -294,3 +294,15 @@ def test_one_sided_breaks(more: int, p: float):
 
 def test_table_is_whole():
     assert list(TABLE) == list(CHECK_TABLE)
+
+
+@pytest.mark.slow
+def test_bofors_steel_as_packaged():
+    """The packaged data of an independent library, fitted by it and by us."""
+    surpyval = pytest.importorskip("surpyval")
+    data = surpyval.datasets.load_bofors_steel()
+    stresses = [float(x) for x, n in zip(data["x"], data["n"], strict=True) for _ in range(int(n))]
+    fit = fit_weibull(stresses)
+    scale, shape = surpyval.Weibull.fit(x=data["x"].to_numpy(), n=data["n"].to_numpy()).params
+    assert (fit.modulus, fit.scale_mpa) == (pytest.approx(shape, rel=1e-6), pytest.approx(scale, rel=1e-6))
+    assert sorted(set(stresses)) == sorted(BOFORS)

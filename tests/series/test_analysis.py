@@ -221,3 +221,11 @@ def test_bounds_cover_the_truth_in_nine_of_ten_of_a_thousand_series(n: int) -> N
 def test_analysis_is_a_value() -> None:
     bars = scenario_12(1)
     assert analyse(bars) == analyse(list(bars)) and isinstance(analyse([]), Analysis)
+
+
+def test_scenario_1_modulus_of_thirty_bars() -> None:
+    """Estimates of m = 12 from 30 bars lie within 9.4 to 16.8 in at least 89 of 100 series; unbiased: times 0.954."""
+    modulus, _ = fit_many(np.log(400.0 * np.random.default_rng(101).weibull(12.0, (100, 30))))
+    assert np.sum((modulus >= 9.4) & (modulus <= 16.8)) >= 89
+    found = analyse(bars_of(400.0 * np.random.default_rng(1).weibull(12.0, 30)))
+    assert found.weibull.unbiased / found.weibull.fit.modulus == pytest.approx(0.954, abs=0.001)

@@ -109,9 +109,12 @@ def test_damaged_records_and_bad_words_are_one_line_each(folder: Path, tmp_path:
     data[len(data) // 2] ^= 0x01
     victim.write_bytes(data)
     (copied / "stranger.h5").write_bytes(b"not a record")
+    notes = next(copied.glob("*A-01*.notes"))
+    notes.write_bytes(notes.read_bytes().replace(b"dropped", b"stepped"))
     done = shell.invoke(midspan, ["report", str(copied), "--out", str(tmp_path / "out")])
-    assert done.exit_code == 1 and len(done.stderr.strip().splitlines()) == 2, done.stderr
-    assert "altered" in done.stderr and "stranger.h5" in done.stderr
+    assert done.exit_code == 1 and len(done.stderr.strip().splitlines()) == 3, done.stderr
+    assert "altered after it was sealed" in done.stderr and "stranger.h5" in done.stderr
+    assert "altered after it was written" in done.stderr
     page = next((tmp_path / "out").glob("*.html")).read_text("utf-8")
     assert page.count("Left out:") == 2 and "A-04" in page
     again = shell.invoke(midspan, ["report", str(folder), "--out", str(tmp_path / "out")])

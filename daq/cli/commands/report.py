@@ -22,7 +22,7 @@ def command(series: str, data: Path, out: Path, beside: str | None, force: bool)
 
     SERIES is a folder of sealed records, or the name of a series below --data. Writes <series>-report.html, .pdf, .csv
     (units in the column names) and .json. The same records and notes give the same bytes. A damaged record is named and
-    left out, the rest is reported; exit code 1 then.
+    left out, notes that are not as written are named, the rest is reported; exit code 1 then.
 
     Example: midspan report demo-out/demo-20260101-120000 --out reports
     """
@@ -32,9 +32,10 @@ def command(series: str, data: Path, out: Path, beside: str | None, force: bool)
     against = None if beside is None else compared(found, gather(folder_of(beside, data)))
     for path in write_report(found, out, against, force=force):
         click.echo(str(path))
-    for line in found.left_out:
+    bad = [*found.left_out, *(problem for leaf in found.leaves for problem in leaf.problems)]
+    for line in bad:
         click.echo(f"midspan report: {line}", err=True)
-    raise SystemExit(1 if found.left_out else 0)
+    raise SystemExit(1 if bad else 0)
 
 
 def folder_of(series: str, data: Path) -> Path:
