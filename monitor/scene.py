@@ -32,6 +32,11 @@ class Scene:
         self._unjudged: frozenset[str] = frozenset()
         self._number = -1
 
+    @property
+    def heard(self) -> int:
+        """Number of the newest update; a station that was started again counts from one."""
+        return self._number
+
     # --- in
     def take_look(self, look: Mapping[str, Any], now_s: float) -> None:
         """A late joiner's start, and what a station that was started again knows."""

@@ -13,5 +13,6 @@ class Setting:
     pixel_mm: float | None = None
     stress_first: bool = False
     verdict_first: bool = False
+    tones: bool = False
     pedal_stop: str = ""
     pedal_start: str = ""

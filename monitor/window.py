@@ -37,8 +37,10 @@ from monitor.sheet import Sheet, SheetForm
 from monitor.side import Side
 from monitor.sizes import Sizes, sizes_for
 from monitor.strip import Strip, cells_of
+from monitor.tones import Tones
 from monitor.traceplot import TracePlot
 
+BEEP_MS = 180
 TURN_MS = 33  # 30 redraws a second
 NUMBERS_EVERY_S = 0.2  # trade judgement, no source: numbers change four to five times a second
 POSE_EVERY_S = 0.1
@@ -78,6 +80,7 @@ class Window(QWidget):
         self.theme: Theme = THEMES.get(setting.theme, DARK)
         self._outside, self._setting = outside, setting
         self.stress_first = setting.stress_first
+        self.tones = Tones()
         self.judge = KeyJudge(setting.pedal_stop, setting.pedal_start)
         self.stop_line = StopLine(outside.stop)
         self.errands = Errands(outside.open_desk)
@@ -198,6 +201,7 @@ class Window(QWidget):
             self.trace.take_rate(update.body.get("time_s"), update.body.get("stress_rate_mpa_s"))
         elif update.kind == "event":
             self.trace.take_event(update.body)
+            self.sound(self.tones.of_event(update.body))
 
     def take_look(self, look: Mapping[str, Any]) -> None:
         """Everything at once: at the start, and after the station was away."""
@@ -220,8 +224,15 @@ class Window(QWidget):
             self.pose()
         if now_s - self._numbers_s >= NUMBERS_EVERY_S:
             self._numbers_s = now_s
-            self.show_numbers(board_of(presenter, now_s))
+            board = board_of(presenter, now_s)
+            self.show_numbers(board)
+            self.sound(self.tones.of_state(board.tone, now_s))
         self._show_told(now_s)
+
+    def sound(self, beeps: int) -> None:
+        """One after the other, where tones were asked for."""
+        for beep in range(beeps if self._setting.tones else 0):
+            QTimer.singleShot(beep * BEEP_MS, QApplication.beep)
 
     def pose(self) -> None:
         """The bar as it stands now."""

@@ -3,13 +3,20 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import TYPE_CHECKING
 
 import pytest
+from PySide6.QtCore import QPoint, Qt
+from PySide6.QtTest import QTest
 
 from daq.cards.notes import read_note
+from daq.cli.keeper import Keeper
 from monitor.form import number_in
 from monitor.notes import check_pieces, check_verdict, places_of, said_of, told_place
 from tests.monitor.test_beam import demo_beam
+
+if TYPE_CHECKING:
+    from pytestqt.qtbot import QtBot
 
 BEAM = replace(demo_beam(), length_mm=50.0, length_known=True)
 EMPTY = {"at": "", "pieces": "", "origin": "", "verdict": "", "reason": ""}
@@ -60,3 +67,35 @@ def test_a_place_is_told_with_its_share_of_the_stress() -> None:
 def test_checks_say_what_is_allowed() -> None:
     assert check_pieces("2") == "" and "1 to 1000" in check_pieces("0") and "1 to 1000" in check_pieces("two")
     assert check_verdict("3") == "" and "2 counted" in check_verdict("7")
+
+
+def test_a_click_on_the_drawing_marks_the_break_and_opens_the_note(qtbot: QtBot) -> None:
+    from tests.monitor.window_rig import WindowRig
+
+    rig = WindowRig(notes=Keeper())
+    window = rig.window
+    window.resize(1366, 768)
+    window.show()
+    rig.load(300.0)
+    window._posed_s = float("-inf")
+    window.turn()
+    click(rig, 10.0)
+    assert window.scene.breaks_mm == ()  # nothing is marked on a bar that is whole
+    rig.break_bar(452.0)
+    window._posed_s = window._numbers_s = float("-inf")
+    window.turn()
+    click(rig, 10.0)
+    beam = window.scene.beam
+    assert beam is not None
+    assert window.scene.breaks_mm == pytest.approx((beam.from_left_end(10.0),), abs=0.1)
+    assert window.note_form.values()["at"] == f"{window.scene.breaks_mm[0]:g}"
+    assert window.column.currentWidget() is window.note_form
+    window.close()
+
+
+def click(rig: object, place_mm: float) -> None:
+    drawing = rig.window.drawing  # type: ignore[attr-defined]
+    scale = drawing.scale()
+    QTest.mouseClick(
+        drawing, Qt.MouseButton.LeftButton, pos=QPoint(round(scale.x(place_mm)), round(scale.face_px - 5))
+    )

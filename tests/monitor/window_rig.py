@@ -5,7 +5,6 @@ from __future__ import annotations
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
-from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -14,6 +13,7 @@ from daq.cards.load import example_path, load_frame, load_series
 from daq.cli.figures import series_words
 from daq.errors import Refused
 from daq.stream.updates import Update
+from monitor.notes import Notes
 from monitor.setting import Setting
 from monitor.window import Outside, Window
 
@@ -140,7 +140,7 @@ class WindowRig:
     """Everything a test touches."""
 
     def __init__(
-        self, *, operator: str = "A. Person", setting: Setting | None = None, series: Path | None = None
+        self, *, operator: str = "A. Person", setting: Setting | None = None, notes: Notes | None = None
     ) -> None:
         self.feed, self.desk = MadeFeed(), HeardDesk(look_of())
         self.stops: list[tuple[str, float]] = []
@@ -150,7 +150,7 @@ class WindowRig:
         def open_desk() -> Iterator[HeardDesk]:
             yield self.desk
 
-        outside = Outside(self.feed, self.stop, open_desk, series_words, operator, series)
+        outside = Outside(self.feed, self.stop, open_desk, series_words, operator, notes=notes)
         self.window = Window(outside, setting or Setting(pixel_mm=0.277))
 
     def stop(self, who: str) -> str:

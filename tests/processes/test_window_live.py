@@ -86,6 +86,7 @@ def test_a_bar_by_keys_and_a_stop_past_a_frozen_station(qtbot: QtBot, tmp_path: 
         note_the_break(qtbot, rig, window)
         rig.lay(bars[1].model_dump(mode="json"))
         stop_past_a_frozen_station(qtbot, rig, window)
+        come_back_after_the_station_was_killed(qtbot, rig, window)
 
 
 def break_a_bar(qtbot: QtBot, rig: Rig, window: Window) -> None:
@@ -151,3 +152,12 @@ def stop_past_a_frozen_station(qtbot: QtBot, rig: Rig, window: Window) -> None:
         qtbot.waitUntil(lambda: "STOP sent" in window.told.line.text, timeout=2000)
     finally:
         os.kill(station, signal.SIGCONT)
+
+
+def come_back_after_the_station_was_killed(qtbot: QtBot, rig: Rig, window: Window) -> None:
+    """No restart of the window: it takes seat and series again, and looks anew."""
+    before = window.scene.heard
+    rig.kill("station")
+    wait_for(qtbot, rig, lambda: window.scene.heard < before)  # the new station counts from one
+    wait_for(qtbot, rig, lambda: window.scene.presenter.state_body.get("operator") == "A. Person")
+    wait_for(qtbot, rig, lambda: window.scene.presenter.state_body.get("series") == "demo-series")

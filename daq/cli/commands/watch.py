@@ -49,6 +49,9 @@ def size_of(context: click.Context, option: click.Parameter, text: str) -> tuple
 @click.option(
     "--verdict-first", is_flag=True, help="No strength on this screen before the bar's verdict is given."
 )
+@click.option(
+    "--tones", is_flag=True, help="Beeps: 1 seated, 2 caution, 3 break, again and again at a fault."
+)
 @click.option("--pedal-stop", default="", help="Key that a pedal sends for STOP, such as F9.")
 @click.option("--pedal-start", default="", help="Key that a pedal sends for start, held 0.3 s, such as F10.")
 @click.option(
@@ -72,6 +75,7 @@ def command(
     pixel_mm: float | None,
     stress_first: bool,
     verdict_first: bool,
+    tones: bool,
     pedal_stop: str,
     pedal_start: str,
     picture: Path | None,
@@ -104,6 +108,7 @@ def command(
         pixel_mm=pixel_mm,
         stress_first=stress_first,
         verdict_first=verdict_first,
+        tones=tones,
         pedal_stop=pedal_stop,
         pedal_start=pedal_start,
     )
