@@ -8,6 +8,7 @@ within 100 ms.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from enum import StrEnum
 
 from daq.cards.derived import silence_s
@@ -39,12 +40,22 @@ class LinkHealth:
 
     def judge(self, decoded: Decoded, now_s: float) -> tuple[LinkFault, ...]:
         """After every feed. A fault is returned as long as it lasts."""
+        self._take(decoded.rows + sum(decoded.rejected.values()), decoded.discarded_bytes, now_s)
+        return self._faults()
+
+    def judge_many(self, rows: Sequence[int], moments_s: Sequence[float]) -> tuple[LinkFault, ...]:
+        """The same for reads of plain rows, one after the other: what the last of them is judged as."""
+        for count, now_s in zip(rows, moments_s, strict=True):
+            self._take(count, 0, now_s)
+        return self._faults()
+
+    def _take(self, rows: int, garbage_bytes: int, now_s: float) -> None:
         passed_s = 0.0 if self._last_s is None else max(now_s - self._last_s, 0.0)
         self._last_s = now_s
-        self._rows = max(self._rows - passed_s * self._rate_hz * RATE_FACTOR, 0.0)
-        self._garbage_bytes = max(self._garbage_bytes - passed_s * GARBAGE_BYTES_S, 0.0)
-        self._rows += decoded.rows + sum(decoded.rejected.values())
-        self._garbage_bytes += decoded.discarded_bytes
+        self._rows = max(self._rows - passed_s * self._rate_hz * RATE_FACTOR, 0.0) + rows
+        self._garbage_bytes = max(self._garbage_bytes - passed_s * GARBAGE_BYTES_S, 0.0) + garbage_bytes
+
+    def _faults(self) -> tuple[LinkFault, ...]:
         faults = []
         if self._rows > self._rows_max + self._rate_hz * RATE_FACTOR * BURST_S:
             faults.append(LinkFault.TOO_FAST)

@@ -10,10 +10,12 @@ the block) takes longer than all that came before it.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field, replace
-from typing import TypeAlias
+from dataclasses import dataclass, replace
+from typing import Any, TypeAlias
 
+from daq.bench.account import Account, flat
 from daq.bench.holding import Holding
+from daq.bench.memory import NotKept, keep
 from daq.cards.derived import motion_link, silence_s
 from daq.cards.frame import FrameCard
 from daq.errors import Refused
@@ -21,7 +23,7 @@ from daq.stream.block import after_loss
 from daq.stream.entry import Kind
 from daq.stream.payloads import pack_block, pack_event, pack_raw
 from daq.watch.pipeline import Pipeline
-from daq.watch.requests import Request, StopRequest
+from daq.watch.requests import OpenRun, Request, StopRequest
 from daq.watch.values import Event, Json, Move, Severity, State, Step, Stop
 from drivers.decoded import Decoded, Decoder, Peeks
 from drivers.health import LinkFault, LinkHealth
@@ -39,8 +41,21 @@ NewEntry: TypeAlias = tuple[Kind, int, bytes]
 
 RING_FULL = "ring_full"  # reason for rows that were decoded and found no room in the ring
 LINK_FAULTS = {LinkFault.TOO_FAST: "too_fast", LinkFault.GARBAGE: "protocol"}
+TICKS_MAX = 100  # a second of silence
 RECORDER_CAUTION_S = 10.0
 RECORDER_STOP_S = 45.0  # the ring holds 60 s
+REMEMBERED = (
+    "pipeline",
+    "_decoders",
+    "_motion",
+    "_health",
+    "_link_faults",
+    "_heard_s",
+    "_kept_s",
+    "_asked_s",
+    "_recorder_word",
+    "_after_loss",
+)
 KEPT_ALIVE = frozenset(
     {
         State.APPROACHING,
@@ -104,6 +119,7 @@ class BenchCore:
         self._decoded: list[tuple[int, int, Decoded]] = []
         self._steps: list[tuple[int, Step]] = []
         self._sent: list[tuple[int, int, bytes]] = []
+        self._ticks: list[int] = []
         self._opened: set[int] = set()
         self._after_loss: set[int] = set()
         self.discarded_bytes = 0
@@ -184,7 +200,10 @@ class BenchCore:
         """Time passed. Judges silence, asks for the status word, and sends the keep-alive where it is earned."""
         self._release()
         now_s = self.seconds(now_ns)
+        run = self.pipeline.run
         self._obey(self.pipeline.advance(None, now_s), now_ns)
+        if self.pipeline.ticked and run is not None:
+            self._ticks.append(now_ns - self._origin_ns)
         if self._motion is not None:
             for fact in self._motion.expire(now_s):
                 self._heed(fact, now_ns)
@@ -195,8 +214,19 @@ class BenchCore:
     def request(self, request: Request, now_ns: int) -> list[Write]:
         """The operator asks. Raises Refused with the missing conditions."""
         self._release()
-        self._obey(self.pipeline.request(request, self.seconds(now_ns)), now_ns)
+        memory = self._remember() if isinstance(request, OpenRun) else None
+        step = self.pipeline.request(request, self.seconds(now_ns))
+        if memory is not None:
+            self.note("bench_memory", now_ns, Severity.REMARK, origin_ns=self._origin_ns, **memory)
+        self._obey(step, now_ns)
         return self._take_writes()
+
+    def _remember(self) -> dict[str, Any]:
+        """memory: everything that came before and still counts; None where it cannot be written down, and why."""
+        try:
+            return {"memory": {name: keep(getattr(self, name)) for name in REMEMBERED}, "why": ""}
+        except NotKept as error:
+            return {"memory": None, "why": str(error)}
 
     def stop(self, who: str, now_ns: int) -> list[Write]:
         """A stop request: never refused."""
@@ -275,20 +305,30 @@ class BenchCore:
         """
         out: list[NewEntry] = []
         self._offered.clear()
-        if not (self._received or self._steps or self._sent):
+        if not (self._received or self._steps or self._sent or len(self._ticks) >= TICKS_MAX):
             return out
+        self._book_ticks(out, self._received[0][0] if self._received else None)
         for now_ns, link, data in self._received:
             out.append((Kind.RAW, now_ns, pack_raw(link, False, data)))
         for now_ns, link, decoded in self._decoded:
             self._count(decoded, link, now_ns, out)
         self._received.clear()
         self._decoded.clear()
+        self._book_ticks(out, None)
         if not self._book_steps(out):
             return out
         for now_ns, link, data in self._sent:
             out.append((Kind.RAW, now_ns, pack_raw(link, True, data)))
         self._sent.clear()
         return out
+
+    def _book_ticks(self, out: list[NewEntry], before_ns: int | None) -> None:
+        """Moments at which time alone moved the run on, where they belong among the bytes."""
+        due = [at for at in self._ticks if before_ns is None or at + self._origin_ns <= before_ns]
+        if due:
+            told = Event("ticks", due[-1] * 1e-9, fields={"after_origin_ns": tuple(due)})
+            out.append((Kind.EVENT, self._origin_ns + due[-1], pack_event(flat(told))))
+            del self._ticks[: len(due)]
 
     def _book_steps(self, out: list[NewEntry]) -> bool:
         """The events so far; False where the end of a run has to wait for the rows of this batch."""
@@ -373,8 +413,10 @@ class BenchCore:
             assert isinstance(fact, Acknowledged)
 
     def _judge_link(self, link: int, decoded: Decoded, now_ns: int) -> None:
+        self._tell_faults(link, self._health[link].judge(decoded, self.seconds(now_ns)), now_ns)
+
+    def _tell_faults(self, link: int, faults: tuple[LinkFault, ...], now_ns: int) -> None:
         """A flood or garbage is told once, as it begins."""
-        faults = self._health[link].judge(decoded, self.seconds(now_ns))
         for fault in faults:
             if fault not in self._link_faults[link]:
                 detail = self._frame.links[link].name
@@ -444,23 +486,3 @@ def stop_write(frame: FrameCard) -> Write | None:
     """The STOP of a frame, ready to be written; None where it has no motion."""
     number = motion_link(frame)
     return None if number is None else Write(number, MotionPort(frame).encode_stop(0.0), urgent=True)
-
-
-@dataclass(slots=True)
-class Account:
-    """Rows of one link since the run was opened."""
-
-    recorded: int = 0
-    rejected: dict[str, int] = field(default_factory=dict)
-
-    def reject(self, reason: str, rows: int) -> None:
-        self.rejected[reason] = self.rejected.get(reason, 0) + rows
-
-    def as_json(self) -> dict[str, Json]:
-        received = self.recorded + sum(self.rejected.values())
-        return {"received": received, "recorded": self.recorded, "rejected": dict(self.rejected)}
-
-
-def flat(event: Event) -> dict[str, object]:
-    """An event as the record and the feed carry it."""
-    return {"event": event.name, "time_s": event.time_s, "severity": event.severity.value, **event.fields}

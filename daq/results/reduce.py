@@ -35,7 +35,7 @@ from daq.stream.rundata import ChannelData, RunData
 
 EVENTS_MAX = 200
 EVENT_TEXT_MAX = 200
-LEFT_OUT = frozenset({"state", "run_opened", "envelope", "proven"})
+LEFT_OUT = frozenset({"state", "run_opened", "envelope", "proven", "ticks"})
 
 
 def reduce(run: RunData) -> Result:

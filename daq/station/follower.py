@@ -24,6 +24,7 @@ from daq.stream.thin import thin_minmax
 
 TRACE_SO_FAR_ROWS_MAX = 4_000
 TURNS = frozenset({"run_opened", "tared", "seated", "fracture", "run_closed"})  # what changes the reduction
+FOR_RECOMPUTATION = frozenset({"bench_memory", "ticks"})  # kilobytes that no viewer wants
 SO_FAR_PIECES_MAX = 200
 EVENTS_OF_RUN_MAX = 64  # for late joiners
 TRACE_ROWS_PER_UPDATE_MAX = 1_000  # 20 updates/s: 20,000 rows/s leave unthinned
@@ -69,6 +70,8 @@ class Follower:
                 self._on_block(unpack_block(entry.payload), blocks)
             elif entry.kind is Kind.EVENT:
                 event = {**unpack_event(entry.payload), "sequence": entry.sequence}
+                if event["event"] in FOR_RECOMPUTATION:
+                    continue
                 if event["event"] in TURNS:
                     self._reduce(blocks, tells)
                 tells.append(self._on_event(event))

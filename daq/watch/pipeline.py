@@ -51,8 +51,16 @@ class Pipeline:
         self._beat_samples = self._core.watch.level.bin_samples
         self._beat_left, self._beat_s = self._beat_samples, 0.0
         self._beat_period_s = max(self._beat_samples / self.setup.rate_hz, BEAT_S_MIN)
+        self.ticked = (
+            False  # the last advance changed something by time alone: a silence, a beat without samples
+        )
 
     # --- public
+
+    @property
+    def plain_lag_s(self) -> float:
+        """Samples not older than this when they come leave no beat to time alone."""
+        return TICK_BEATS * self._beat_period_s
 
     @property
     def state(self) -> State:
@@ -355,7 +363,7 @@ class Pipeline:
     def _tick(self, now_s: float) -> None:
         """Silence, and the beats that samples do not give: while samples flow, their own times decide alone."""
         core = self._core
-        self._silence.judge(core, now_s)
+        self.ticked = self._silence.judge(core, now_s)
         if now_s - max(self._beat_s, core.clock_s) > TICK_BEATS * self._beat_period_s:
-            core.clock_s = now_s
+            core.clock_s, self.ticked = now_s, True
             self._beat(now_s, None)

@@ -39,8 +39,9 @@ class Silence:
         if block.gap_samples != 0 and heard_s is not None:
             _gap(core, block, float(block.time_s[0]) - heard_s)
 
-    def judge(self, core: Core, now_s: float) -> None:
-        """Every link that was ever heard must be heard again in time."""
+    def judge(self, core: Core, now_s: float) -> bool:
+        """Every link that was ever heard must be heard again in time. Whether one fell silent, or is heard again."""
+        before = len(self._lost)
         for place, source in enumerate(core.setup.sources):
             heard_s = self._heard_s[place]
             if heard_s is None:
@@ -53,6 +54,7 @@ class Silence:
                 _silent(core, place, now_s - heard_s)
         if core.lost_at_rest:
             self._back(core, now_s)
+        return len(self._lost) != before
 
     def _back(self, core: Core, now_s: float) -> None:
         if core.state is not State.SIGNAL_LOST:  # a person was quicker
