@@ -82,6 +82,14 @@ class Counter:
             self._last = int(expected[run - 1])
         return run
 
+    def takes_all(self, column: Floats) -> bool:
+        """Whether all of them simply count on, and then they are taken; otherwise nothing has changed."""
+        before = self._last
+        if self.take_run(column) == len(column):
+            return True
+        self._last = before
+        return False
+
     def _step(self, before: int, after: int) -> int:
         return after - before if self._modulus is None else (after - before) % self._modulus
 

@@ -3,7 +3,7 @@ only."""
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from enum import StrEnum
 from typing import Protocol, runtime_checkable
@@ -69,6 +69,16 @@ class Decoded:
     @property
     def rows(self) -> int:
         return sum(block.count for block in self.blocks)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class PlainReads:
+    """Several reads that were nothing but rows which count on: one block of them all, and how many rows each read
+    completed. Cut at the reads it is what feeding them one by one gives.
+    """
+
+    block: Block
+    rows: Sequence[int]
 
 
 class Decoder(Protocol):

@@ -33,6 +33,15 @@ class LineFramer:
     def buffered_bytes(self) -> int:
         return len(self._rest)
 
+    @property
+    def rest(self) -> bytes | None:
+        """What has come of the line that is not ended yet; None while an overlong one is passed over."""
+        return None if self._skipping else self._rest
+
+    def go_on_from(self, rest: bytes) -> None:
+        """All before this rest was taken elsewhere."""
+        self._rest = rest
+
     def take_one(self, data: bytes) -> bytes | None:
         """The one line, without its end, that these bytes complete exactly; None: use `take`, nothing has
         changed."""

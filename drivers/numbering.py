@@ -129,6 +129,29 @@ class Numbering:
         time_s = self._timing.feed(index, None, 1, arrival_s)
         return Block(self._source, index, time_s, np.array((row[: plan.channels],), dtype=np.float64))
 
+    def plain_reads(
+        self, values: Floats, rows: Sequence[int], last_arrivals_s: Sequence[float]
+    ) -> Block | None:
+        """Rows of several reads that simply count on, as one block with the times they have read by read. rows: how
+        many each read completed; last_arrivals_s: of the last row of each. None: feed them one by one, nothing has
+        changed."""
+        plan = self._plan
+        if plan.time is not None or self._lost or not len(values):
+            return None
+        for held, place in zip(self._status, self._places, strict=True):
+            if not (values[:, place] == held).all():
+                return None
+        if self._counter is not None and not self._counter.takes_all(values[:, plan.counter]):
+            return None
+        first = index = self._next_index
+        feed, times = self._timing.feed, []
+        for count, arrival_s in zip(rows, last_arrivals_s, strict=True):
+            if count:
+                times.append(feed(index, None, count, arrival_s))
+                index += count
+        self._next_index = index
+        return Block(self._source, first, np.concatenate(times), values[:, : plan.channels])
+
     # -- the usual case: rows that count on, no status input moved
 
     def _take_run(self, values: Floats, at: int, breaks: Sequence[int]) -> int:

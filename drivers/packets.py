@@ -9,7 +9,7 @@ behind it. So the first packet under a weak check comes out one packet late, onc
 from __future__ import annotations
 
 import re
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from enum import Enum, auto
 
 import numpy as np
@@ -19,7 +19,7 @@ from daq.errors import CardError
 from daq.stream.block import Block, Floats
 from daq.stream.clock import ClockModel
 from drivers.checks import WEAK
-from drivers.decoded import STALE_S, Decoded, Reason
+from drivers.decoded import STALE_S, Decoded, PlainReads, Reason
 from drivers.numbering import Numbering
 from drivers.packetform import PacketForm
 from drivers.plan import link_of, transmission_s
@@ -118,6 +118,44 @@ class PacketsDecoder:
         self._data = self._data[self._at :]
         self._broken = sorting.broken
         return sorting.decoded(self._numbering, arrival_s, self._transmission_s, self._fresh_from_s)
+
+    def feed_many(
+        self, pieces: Sequence[bytes], arrivals_s: Sequence[float]
+    ) -> Iterator[Decoded | PlainReads]:
+        """The same as feeding every piece, with runs of reads that are nothing but good packets taken at once."""
+        at = 0
+        while at < len(pieces):
+            found = self._plain_reads(pieces[at:], arrivals_s[at:])
+            if found is None:
+                yield self.feed(pieces[at], arrivals_s[at])
+                at += 1
+            else:
+                yield found
+                at += len(found.rows)
+
+    def _plain_reads(self, pieces: Sequence[bytes], arrivals_s: Sequence[float]) -> PlainReads | None:
+        """From the first read on, up to the first that is anything else; None: none, nothing has changed."""
+        if not self._locked or self._broken or self._fresh_from_s is None:
+            return None
+        size, held = self._form.bytes, len(self._data)
+        data = self._data + b"".join(pieces)
+        packets = np.frombuffer(data, np.uint8, len(data) // size * size).reshape(-1, size)
+        good = self._form.good_rows(packets) if len(packets) else 0
+        ends = held + np.cumsum([len(piece) for piece in pieces])
+        done = ends // size  # packets that are whole by then, if all are good
+        begun = data[good * size : (good + 1) * size]
+        odd = good < len(packets) or not begun.startswith(self._sync[: len(begun)])
+        reads = int(np.searchsorted(ends, good * size, side="right")) if odd else len(pieces)
+        whole = int(done[reads - 1]) if reads else 0
+        if not whole:
+            return None
+        rows = np.diff(done[:reads], prepend=0).tolist()
+        arrived_s = [arrival_s - self._transmission_s for arrival_s in arrivals_s[:reads]]
+        block = self._numbering.plain_reads(self._form.rows(packets[:whole]), rows, arrived_s)
+        if block is None:
+            return None
+        self._data = data[whole * size : int(ends[reads - 1])]
+        return PlainReads(block, rows)
 
     def _plain_packet(self, data: bytes, arrival_s: float) -> Block | None:
         """Exactly one good packet where one was expected, quickly; None: look closer, nothing has changed."""

@@ -14,18 +14,22 @@ from __future__ import annotations
 import json
 import math
 import struct
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from enum import Enum
+from itertools import groupby
 from typing import Any
 
 import numpy as np
+import numpy.typing as npt
 
-from daq.stream.block import Block
+from daq.stream.block import Block, Floats
 from daq.stream.entry import EntryDamaged
 
 _RAW = struct.Struct("<HBB")
 _BLOCK = struct.Struct("<HHIqq")
+_SHAPE = struct.Struct("<HHI")
+_SHAPE_BYTES = _SHAPE.size
 
 
 @dataclass(frozen=True, slots=True)
@@ -76,6 +80,40 @@ def unpack_block(payload: bytes) -> Block:
         counts=numbers[rows:].reshape(columns, rows).T,
         gap_samples=gap_samples,
     )
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Run:
+    """Consecutive blocks of one source that have the same shape. first_index, gap_samples: (blocks,); time_s (n,) and
+    counts (n, k) of all their rows."""
+
+    source: int
+    rows: int
+    first_index: npt.NDArray[np.int64]
+    gap_samples: npt.NDArray[np.int64]
+    time_s: Floats
+    counts: Floats
+
+
+def unpack_runs(payloads: Sequence[bytes]) -> Iterator[Run]:
+    """Many blocks at once, the same numbers as `unpack_block` gives one by one."""
+    for (head, length), run in groupby(payloads, lambda payload: (payload[:_SHAPE_BYTES], len(payload))):
+        if length < _BLOCK.size:
+            raise EntryDamaged(f"BLOCK payload of {length} bytes")
+        source, columns, rows = _SHAPE.unpack(head)
+        if length != _BLOCK.size + 8 * rows * (columns + 1):
+            raise EntryDamaged(f"BLOCK payload of {length} bytes for {rows} rows of {columns} columns")
+        table = np.frombuffer(b"".join(run), dtype=np.uint8).reshape(-1, length)
+        whole = np.ascontiguousarray(table[:, _SHAPE_BYTES : _BLOCK.size]).view("<i8")
+        numbers = np.ascontiguousarray(table[:, _BLOCK.size :]).view("<f8").reshape(-1, columns + 1, rows)
+        yield Run(
+            source,
+            rows,
+            whole[:, 0],
+            whole[:, 1],
+            numbers[:, 0, :].reshape(-1),
+            numbers[:, 1:, :].transpose(0, 2, 1).reshape(-1, columns),
+        )
 
 
 def pack_event(event: Mapping[str, object]) -> bytes:
