@@ -26,6 +26,8 @@ COMMANDS = {
     "recover": "Rebuild records from journals that a crash left behind.",
     "note": "Break note, correction, verdict or remark beside a sealed record.",
     "report": "Report a series: HTML, PDF, CSV, JSON.",
+    "reduce": "Recompute sealed records from their raw bytes; list every difference.",
+    "find": "Find sealed records by material, method, date, strength, modulus.",
     "export": "Write sealed records as CSV, units in the column names.",
 }
 FAILED, BAD_WORDS = 1, 2  # exit codes: it could not be done; the command line was not understood

@@ -31,13 +31,7 @@ _SLAB_BYTES = 4 * ENTRY_BYTES_MAX
 
 def check_bytes(path: Path) -> str:
     """SHA-256 of the HDF5 part if the front promises the same; RecordDamaged if not. Opens no HDF5."""
-    try:
-        with open(path, "rb") as file:
-            front = file.read(FRONT_BYTES)
-        size_bytes = path.stat().st_size - FRONT_BYTES
-    except OSError as error:
-        raise RecordDamaged(f"{path} cannot be read ({error.strerror})", first_bad="file") from error
-    promised, promised_bytes = parse_front(front, path)
+    promised, promised_bytes, size_bytes = _front(path)
     if size_bytes != promised_bytes:
         word = "truncated" if size_bytes < promised_bytes else "longer than sealed"
         raise RecordDamaged(
@@ -49,6 +43,22 @@ def check_bytes(path: Path) -> str:
             f"{path} was altered after it was sealed (midspan verify names the place)", first_bad="bytes"
         )
     return found
+
+
+def promised_digest(path: Path) -> str:
+    """What the front says of the bytes behind it: enough to see whether a record is one that was read before."""
+    return _front(path)[0]
+
+
+def _front(path: Path) -> tuple[str, int, int]:
+    """Promised digest, promised bytes, and how many there are."""
+    try:
+        with open(path, "rb") as file:
+            front = file.read(FRONT_BYTES)
+        size_bytes = path.stat().st_size - FRONT_BYTES
+    except OSError as error:
+        raise RecordDamaged(f"{path} cannot be read ({error.strerror})", first_bad="file") from error
+    return *parse_front(front, path), size_bytes
 
 
 @contextmanager

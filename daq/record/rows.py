@@ -86,13 +86,14 @@ class RunRows:
             self.gaps.append(Gap(GapKind.ENTRIES, -1, entry.sequence, -1, missing, time_s))
         self._next_sequence = entry.sequence + 1
         if entry.kind is Kind.BLOCK:
-            self._feed_block(unpack_block(entry.payload), entry.sequence)
+            self.feed_block(unpack_block(entry.payload), entry.sequence)
         elif entry.kind is Kind.EVENT:
             self.events.append(run_event(unpack_event(entry.payload), entry.sequence, self.head.opened_s))
             if self.events[-1].get("event") == CLOSED:
                 self.closing = self.events[-1]
 
-    def _feed_block(self, block: Block, sequence: int) -> None:
+    def feed_block(self, block: Block, sequence: int) -> None:
+        """A block by itself, as `feed` takes it out of its entry."""
         if not self._fits(block):
             self.blocks_misfit += 1
             return

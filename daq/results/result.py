@@ -20,7 +20,9 @@ from daq.results.uncertainty import COVERAGE, Contributor, Uncertainty
 from daq.results.verdict import Verdict
 from daq.results.zero import AfterZero
 
-SCHEMA_VERSION = 1
+SCHEMA_VERSION = 2
+"""Raised whenever words of a result change their meaning; numbers never do. 2: the verdict is judged by the method's
+rules, where 1 said only provisional or interrupted."""
 
 
 @dataclass(frozen=True, slots=True)
