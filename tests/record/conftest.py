@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import shutil
 from collections.abc import Callable
 from pathlib import Path
 
@@ -43,7 +44,11 @@ def journal(tmp_path_factory: pytest.TempPathFactory, two_runs: list[Entry]) -> 
 @pytest.fixture(scope="session")
 def records(tmp_path_factory: pytest.TempPathFactory, journal: Path) -> tuple[Path, ...]:
     """Both runs of that journal as nobody has disturbed their making."""
-    return recover(journal, tmp_path_factory.mktemp("out"), reduce=demo_reduce, keep=True, afresh=True)
+    mine = (
+        tmp_path_factory.mktemp("out") / "journal-of-records"
+    )  # a mark in the journal of all would be seen by all
+    shutil.copytree(journal, mine)
+    return recover(mine, mine.parent, reduce=demo_reduce, keep=True, afresh=True)
 
 
 @pytest.fixture(scope="session")
