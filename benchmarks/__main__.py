@@ -23,6 +23,7 @@ NAMES = (
     "recording",
     "window",
     "series",
+    "recomputing",
 )
 
 
