@@ -9,8 +9,10 @@ from pathlib import Path
 
 import pytest
 
+from daq.cli.commands.demo import clear_the_way
 from daq.record.read import read_meta, read_run
 from daq.record.verify import verify
+from daq.station.stopline import send_stop
 from tests.processes.rig import rig_of, truths
 
 
@@ -61,3 +63,20 @@ def reads_without_midspan(record: Path) -> None:
     )
     highest_n, simulated, kind, rows = json.loads(done.stdout)
     assert highest_n > 250 and simulated == 1 and kind == "NXdata" and rows > 1000
+
+
+def test_the_demonstration_goes_on_after_a_stop_that_came_when_the_bar_was_done(tmp_path: Path) -> None:
+    with rig_of(data=tmp_path) as rig:
+        rig.begin()
+        rig.start_bar()
+        rig.wait("motion", lambda: rig.session.state == "approaching")
+        assert send_stop(rig.frame.name, "test")
+        rig.wait(
+            "the end of the run",
+            lambda: rig.session.state == "stopped" and bool(rig.events("run_closed")),
+            20.0,
+        )
+        clear_the_way(rig.session, rig.client, rig.hands_path)
+        assert rig.session.state == "at rest"
+        clear_the_way(rig.session, rig.client, rig.hands_path)  # nothing to clear: nothing is done
+        assert len(rig.events("reset")) == 1

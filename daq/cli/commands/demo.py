@@ -32,12 +32,14 @@ from daq.station.client import Client
 from daq.station.places import places_for
 from daq.station.supervisor import Outfit, Supervisor
 from daq.stream.updates import Update
+from daq.watch.states import LATCHED as LATCHED_STATES
 from monitor.presenter import Presenter
 from monitor.qtlibs import check_window, here
 from monitor.terminal import TerminalView
 from monitor.wording import number
 
 BARS_MAX = 100
+LATCHED = frozenset(state.value for state in LATCHED_STATES)
 COLUMNS = {
     "peak_n": "load N",
     "strength_mpa": "strength MPa",
@@ -212,10 +214,18 @@ def break_bars(
                 look_and_reset(session, client, hands)
                 report = session.break_bar(specimen.number, timeout_s=BAR_TIMEOUT_S)
             reports.append(report)
+            clear_the_way(session, client, hands)
         client.rise()
         session.pump(LAST_LOOK_S)
         view.show(presenter.lines(time.monotonic()), time.monotonic(), last=True)
     return reports
+
+
+def clear_the_way(session: Session, client: Client, hands: Path) -> None:
+    """A stop may also come after the break, on a busy computer: it is latched, and no bar is called before a reset."""
+    session.wait_for("standstill", lambda: not session.moving, BAR_TIMEOUT_S)
+    if session.state in LATCHED:
+        look_and_reset(session, client, hands)
 
 
 def look_and_reset(session: Session, client: Client, hands: Path) -> None:
