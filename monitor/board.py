@@ -97,7 +97,7 @@ def _told(lines: Mapping[str, Line]) -> Line:
     for label in ("recording", "caution"):
         if label in lines:
             return Line(label, f"{lines[label].text}   -   {do_now.text}", lines[label].tone)
-    return do_now
+    return Line("do now", do_now.text, Tone.STOP) if lines["state"].tone is Tone.STOP else do_now
 
 
 def _bar(state: Mapping[str, Any]) -> str:

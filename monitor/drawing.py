@@ -118,6 +118,7 @@ class _Sketch:
         self.factor = beam.exaggeration
         sag_mm = self.posture.sag_mm
         self.sag_px = 0.0
+        self.thin_px = max(1.2, self.sizes.px(0.35))
         if sag_mm is not None and not self.posture.broken:
             limit = 0.9 * beam.height_mm
             self.sag_px = scale.px_mm * max(-0.2 * limit, min(limit, sag_mm * self.factor))
@@ -194,7 +195,7 @@ class _Sketch:
         painter.drawPolygon(outline(min(share, 1.0)))
         painter.setOpacity(1.0)
         painter.setBrush(Qt.BrushStyle.NoBrush)
-        painter.setPen(QPen(QColor(self.theme.edge), 1.5, Qt.PenStyle.DashLine))
+        painter.setPen(QPen(QColor(self.theme.edge), self.thin_px, Qt.PenStyle.DashLine))
         painter.drawPolyline(outline(1.0))
 
     # --- load and spans
@@ -226,7 +227,7 @@ class _Sketch:
     def _span(self, first_mm: float, last_mm: float, y: float, text: str) -> None:
         painter, small = self.painter, self.sizes.small_px
         left, right = self.scale.x(first_mm), self.scale.x(last_mm)
-        painter.setPen(QPen(QColor(self.theme.edge), 1.2))
+        painter.setPen(QPen(QColor(self.theme.edge), self.thin_px))
         painter.drawLine(QPointF(left, y), QPointF(right, y))
         for x in (left, right):
             painter.drawLine(QPointF(x, y - 0.35 * small), QPointF(x, y + 0.35 * small))

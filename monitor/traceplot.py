@@ -199,7 +199,7 @@ class TracePlot(QWidget):
         self.plot.setBackground(QColor(theme.ground))
         for side in ("left", "bottom"):
             axis = self.plot.getAxis(side)
-            axis.setPen(QColor(theme.edge))
+            axis.setPen(pg.mkPen(theme.edge, width=max(1.0, sizes.px(0.3))))
             axis.setTextPen(QColor(theme.faint))
             axis.setStyle(tickFont=font_of(sizes.small_px), tickTextOffset=6)
             axis.enableAutoSIPrefix(False)
@@ -238,6 +238,7 @@ class TracePlot(QWidget):
         self.curve.setData(x, y, pen=pen, connect="finite")
         newest = np.flatnonzero(np.isfinite(x) & np.isfinite(y))[-1:]
         shown = self._break_s is None
+        self.head.setSize(max(9.0, self.sizes.px(2.2)))
         self.head.setData(
             x[newest] if shown else [], y[newest] if shown else [], brush=pg.mkBrush(self.theme.ink), pen=None
         )

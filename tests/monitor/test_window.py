@@ -297,3 +297,11 @@ def test_with_verdict_first_no_strength_is_shown_before_it(qtbot: QtBot) -> None
     assert window.scene.strengths_mpa() == ()
     window.scene.judged("DEMO-01")
     assert window.scene.strengths_mpa() == (383.3,)
+
+
+@pytest.mark.parametrize("state", ["unknown - look at the frame", "signal lost", "broken? - still loaded"])
+def test_a_grave_state_makes_the_one_line_loud_without_a_fault(rig: WindowRig, state: str) -> None:
+    rig.be(state, 100.0)
+    rig.window._numbers_s = float("-inf")
+    rig.window.turn()
+    assert rig.window.told.line.tone is Tone.STOP and rig.window.told.line.text
