@@ -45,18 +45,20 @@ def _below(folder: Path) -> list[Path]:
     return sorted(found)
 
 
-def recompute_all(paths: Sequence[Path], *, jobs: int, relative: float = 0.0) -> Iterator[Recomputed]:
+def recompute_all(
+    paths: Sequence[Path], *, jobs: int, relative: float = 0.0, watch: bool = True
+) -> Iterator[Recomputed]:
     """Each record's numbers, in the order of `paths`. jobs = 1: in this process."""
     if jobs == 1 or len(paths) < 2:
         for path in paths:
-            yield recompute(path, relative)
+            yield recompute(path, relative, watch)
         return
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")  # the records are what runs in parallel
     context = multiprocessing.get_context("spawn")
     with ProcessPoolExecutor(min(jobs, len(paths)), mp_context=context) as pool:
         try:
             yield from _in_order(
-                lambda path: pool.submit(recompute, path, relative), paths, jobs * AHEAD_PER_JOB
+                lambda path: pool.submit(recompute, path, relative, watch), paths, jobs * AHEAD_PER_JOB
             )
         except BrokenProcessPool:
             raise MidspanError(
@@ -65,7 +67,7 @@ def recompute_all(paths: Sequence[Path], *, jobs: int, relative: float = 0.0) ->
 
 
 def recompute_on_cluster(
-    paths: Sequence[Path], address: str, *, relative: float = 0.0
+    paths: Sequence[Path], address: str, *, relative: float = 0.0, watch: bool = True
 ) -> Iterator[Recomputed]:
     """The same on the workers of a Dask cluster; they must see the files under the same paths and have midspan."""
     try:
@@ -79,7 +81,7 @@ def recompute_on_cluster(
     with client:
         whole = [path.absolute() for path in paths]
         yield from _in_order(
-            lambda path: client.submit(recompute, path, relative, pure=False), whole, CLUSTER_AHEAD
+            lambda path: client.submit(recompute, path, relative, watch, pure=False), whole, CLUSTER_AHEAD
         )
 
 

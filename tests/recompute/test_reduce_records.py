@@ -92,6 +92,16 @@ def test_what_an_old_record_does_not_tell_is_said() -> None:
     assert "taken as recorded" in found.notes[0]
 
 
+def test_numbers_only_leaves_the_decisions_and_says_so() -> None:
+    whole, numbers = (
+        recompute(DATA / "record-1-memory.h5"),
+        recompute(DATA / "record-1-memory.h5", watch=False),
+    )
+    assert numbers.result == whole.result
+    assert numbers.decisions == 0
+    assert any("decisions are taken as recorded" in note for note in numbers.notes)
+
+
 # -- not the same
 
 
