@@ -18,6 +18,8 @@ from monitor.setting import Setting
 from monitor.tracebuffer import LOAD, TIME, TraceBuffer
 from tests.made_series import made_series
 
+pytestmark = pytest.mark.slow  # the records take seconds to be made
+
 
 @pytest.fixture(scope="module")
 def paths(tmp_path_factory: pytest.TempPathFactory) -> list[Path]:
@@ -76,7 +78,6 @@ def test_speeds_stay_between_a_tenth_and_ten(recording: Recording) -> None:
     assert player.speed == 10.0
 
 
-@pytest.mark.slow
 @pytest.mark.parametrize(("size", "theme"), [((1366, 768), "dark"), ((1920, 1080), "bright")])
 def test_a_picture_is_rendered_without_a_screen(
     paths: list[Path], tmp_path: Path, qtbot: QtBot, size: tuple[int, int], theme: str
@@ -92,7 +93,6 @@ def test_a_picture_is_rendered_without_a_screen(
     assert THEMES[theme].bar in colours and THEMES[theme].trace in colours and len(colours) > 20
 
 
-@pytest.mark.slow
 def test_the_replay_shows_the_sealed_strength_and_obeys_its_keys(
     paths: list[Path], recording: Recording, qtbot: QtBot
 ) -> None:
