@@ -128,10 +128,11 @@ def refusal_lines(command: str, missing: Sequence[str]) -> list[str]:
 
 
 def sealed_lines(report: Numbers) -> list[str]:
-    """A sealed record as it is told to the operator: outcome, uncertainty, remarks, where it lies."""
+    """A sealed record as it is told to the operator: verdict first, then outcome, uncertainty, remarks, place."""
     result = {**(report.get("result") or {}), "specimen": report.get("specimen", "")}
     outcome = result_text(result)
     if result.get("strength_u_k2_mpa") is not None:
         outcome += f"   U(k=2) {number(result['strength_u_k2_mpa'], 1, 'MPa')}"
     remarks = [f"  remark: {remark['text']}" for remark in result.get("remarks") or () if remark.get("text")]
-    return [outcome, *remarks, f"  record: {report.get('path', '')}"]
+    judged = [f"{result['specimen']}: {result['verdict']} by the rules"] if result.get("verdict_by") else []
+    return [*judged, outcome, *remarks, f"  record: {report.get('path', '')}"]

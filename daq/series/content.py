@@ -56,7 +56,7 @@ def _identity(series: Series, missing: tuple[str, ...]) -> Iterator[Lines | Fact
         yield Lines(("These numbers come from a virtual frame, not from specimens.",), Tone.LOUD)
     if missing:
         yield Lines(
-            (f"Incomplete: not recorded, though the method asks for it: {'; '.join(missing)}.",), Tone.LOUD
+            (f"Incomplete: not recorded, though a report must hold it: {'; '.join(missing)}.",), Tone.LOUD
         )
     if series.left_out:
         yield Lines(tuple(f"Left out: {line}" for line in series.left_out), Tone.LOUD)
@@ -94,10 +94,12 @@ def _strength(series: Series) -> Iterator[Lines | Facts | Grid | Picture]:
         yield Lines(tuple(found.reasons), Tone.CAUTION)
     if found.summary is not None:
         s = found.summary
+        spread = stress(s.spread_mpa, method)
+        scatter = NONE if s.spread_mpa is None else f"{spread} MPa (N - 1), scatter of the bars"
         rows = [
             ("bars in the statistics", _in_statistics(series)),
             ("mean", f"{stress(s.mean_mpa, method)} MPa, N = {s.n}"),
-            ("standard deviation", f"{stress(s.spread_mpa, method)} MPa (N - 1), scatter of the bars"),
+            ("standard deviation", scatter),
             ("median, lowest, highest",
              ", ".join(stress(v, method) for v in (s.median_mpa, s.min_mpa, s.max_mpa)) + " MPa"),
         ]  # fmt: skip
@@ -113,11 +115,12 @@ def _strength(series: Series) -> Iterator[Lines | Facts | Grid | Picture]:
             (1.2, 0.6, 1.2, 1.2, 0.9, 0.8, 1.4, 1.4),
         )  # fmt: skip
         yield Lines(tuple(_estimate_words(one) for one in estimates))
-    yield Picture("weibull", "Points at (i - 0.5)/n; line by maximum likelihood; bars that did not break or do not "
+    if estimates:
+        yield Picture("weibull", "Points at (i - 0.5)/n; line by maximum likelihood; bars that did not break or do not "
                              "count stay in as suspended, open triangles.")  # fmt: skip
     if found.sizes is not None:
         yield from _scaling(series)
-    if found.more:
+    if found.weibull is not None and found.more:
         ranges = [
             f"{n} bars more: {100 * low:.0f} to {100 * high:.0f} % of the estimate"
             for n, (low, high) in found.more.items()
@@ -127,14 +130,14 @@ def _strength(series: Series) -> Iterator[Lines | Facts | Grid | Picture]:
 
 def _in_statistics(series: Series) -> str:
     found = series.analysis
-    text = f"{len(found.counted)} breaks"
+    text = f"{len(found.counted)} that broke and count"
     kinds = Counter(bar.counting for bar in found.suspended)
     if kinds:
         text += ", suspended at their highest stress: " + ", ".join(
             f"{n} {kind.value}" for kind, n in kinds.items()
         )
     open_ = sum(bar.counting is Counting.PROVISIONAL for bar in found.counted)
-    return text + (f"; {open_} of the breaks are provisional" if open_ else "")
+    return text + (f"; {open_} of these are provisional" if open_ else "")
 
 
 def _of_mean(series: Series) -> str:

@@ -16,7 +16,7 @@ from daq.errors import MidspanError
 from daq.mechanics.quantity import Floats
 from daq.results.rules import Counting
 from daq.series.leaf import Leaf, Series
-from daq.series.panels import BLUE, GREEN, GREY, INK, ORANGE, VERMILION, draw_few, draw_order, draw_weibull
+from daq.series.panels import BLUE, GREEN, GREY, INK, ORANGE, SURVIVED, VERMILION, draw_order, draw_weibull
 from daq.series.picture import LOOK
 from daq.series.ranks import suspended_positions
 from daq.series.sheet import LEVEL, BarRow, SeriesSheet
@@ -29,6 +29,7 @@ if TYPE_CHECKING:
 DPI = 150
 WIDTH_IN = 7.4
 CELLS_ACROSS = 6
+SUSPENDED = "suspended"
 TRACE_ROWS_MAX = 160
 POPULATION_STYLES = ((ORANGE, "--", "s"), (GREEN, "-.", "D"), (GREY, (0, (1, 1)), "v"))
 MARKS = {
@@ -49,10 +50,11 @@ def figures_of(series: Series) -> dict[str, bytes]:
     sheet = sheet_from(series)
     rows = max(1, math.ceil(len(series.leaves) / CELLS_ACROSS))
     made: dict[str, tuple[float, Callable[[Figure], None]]] = {
-        "weibull": (3.4, lambda figure: _weibull(figure, series, sheet)),
         "order": (2.6, lambda figure: _order(figure, sheet)),
         "traces": (0.45 + 1.02 * rows, lambda figure: _traces(figure, series, rows)),
     }
+    if series.analysis.weibull is not None:
+        made["weibull"] = (3.4, lambda figure: _weibull(figure, series, sheet))
     if series.analysis.map is not None:
         made["breakmap"] = (2.3, lambda figure: _breakmap(figure, series))
     look: dict[str, Any] = {**LOOK, "font.size": 8.5, "axes.titlesize": 9.0}
@@ -102,12 +104,11 @@ def sheet_from(series: Series) -> SeriesSheet:
 
 def _weibull(figure: Figure, series: Series, sheet: SeriesSheet) -> None:
     axes = figure.add_axes((0.085, 0.115, 0.9, 0.825))
-    if sheet.fit is None:
-        draw_few(axes, sheet)
-        return
     draw_weibull(axes, sheet)
     for text in axes.texts:
         text.set_fontsize(8.5)
+        text.set_text(text.get_text().replace(SURVIVED, SUSPENDED))
+    _relabel(axes)
     _populations(axes, series)
     axes.legend(loc="upper left", bbox_to_anchor=(0.0, 0.68), frameon=False, fontsize=7.5)
 
@@ -132,7 +133,17 @@ def _populations(axes: Axes, series: Series) -> None:
 
 
 def _order(figure: Figure, sheet: SeriesSheet) -> None:
-    draw_order(figure.add_axes((0.085, 0.19, 0.9, 0.70)), sheet)
+    axes = figure.add_axes((0.085, 0.15, 0.9, 0.75))
+    draw_order(axes, sheet)
+    _relabel(axes)
+    axes.legend(loc="upper center", ncol=4, frameon=False, fontsize=8.5)
+
+
+def _relabel(axes: Axes) -> None:
+    """In a report a bar may be suspended because it does not count, not only because it did not break."""
+    for line in axes.get_lines():
+        if line.get_label() == SURVIVED:
+            line.set_label(SUSPENDED)
 
 
 def _breakmap(figure: Figure, series: Series) -> None:

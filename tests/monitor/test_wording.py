@@ -123,3 +123,9 @@ def test_what_to_do_depends_on_more_than_the_state() -> None:
     assert "can NOT stop" in instruction("ready", run_open=True, monitor_only=True)
     for state in INSTRUCTIONS:
         assert instruction(state, run_open=False, monitor_only=False)
+
+
+def test_a_verdict_by_the_rules_stands_before_the_strength():
+    result = {"strength_mpa": 385.0, "verdict": "counted with remark", "verdict_by": "rules of method x"}
+    first, second, _ = sealed_lines({"specimen": "A-1", "result": result, "path": "a.h5"})
+    assert first == "A-1: counted with remark by the rules" and "385.0 MPa" in second
