@@ -151,10 +151,7 @@ def recorded_rows(payloads: Sequence[bytes], links: int) -> Mapping[int, Rows]:
 def _rows_of_runs(runs: Sequence[Run]) -> Rows:
     if not runs:
         return rows_of(())
-    index = [
-        np.repeat(run.first_index, run.rows) + np.tile(np.arange(run.rows), len(run.first_index))
-        for run in runs
-    ]
+    index = [(run.first_index[:, np.newaxis] + np.arange(run.rows)).reshape(-1) for run in runs]
     gaps, at = [], 0
     for run in runs:
         gaps += [(at + int(n) * run.rows, int(run.gap_samples[n])) for n in np.flatnonzero(run.gap_samples)]
