@@ -44,11 +44,9 @@ def journal(tmp_path_factory: pytest.TempPathFactory, two_runs: list[Entry]) -> 
 @pytest.fixture(scope="session")
 def records(tmp_path_factory: pytest.TempPathFactory, journal: Path) -> tuple[Path, ...]:
     """Both runs of that journal as nobody has disturbed their making."""
-    mine = (
-        tmp_path_factory.mktemp("out") / "journal-of-records"
-    )  # a mark in the journal of all would be seen by all
+    mine = tmp_path_factory.mktemp("own") / "j"  # a mark in the journal of all would be seen by all
     shutil.copytree(journal, mine)
-    return recover(mine, mine.parent, reduce=demo_reduce, keep=True, afresh=True)
+    return recover(mine, tmp_path_factory.mktemp("out"), reduce=demo_reduce, keep=True, afresh=True)
 
 
 @pytest.fixture(scope="session")
