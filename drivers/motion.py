@@ -115,16 +115,6 @@ class MotionPort:
         """The question for the status word; nothing where the card has none."""
         return self._encode(CommandName.STATUS, {}, now_s) if self._motion.status else b""
 
-    def can(self, kind: MoveKind, *, by_force_rate: bool = False) -> bool:
-        """The card has a command for this kind of move."""
-        if by_force_rate:
-            return self._motion.force_rate is not None
-        if kind is MoveKind.JOG:
-            return self._motion.jog is not None
-        if kind is MoveKind.RETURN:
-            return self._motion.retreat is not None or self._motion.jog is not None
-        return True
-
     # -- hearing
 
     def reply(self, line: bytes, now_s: float) -> tuple[MotionFact, ...]:

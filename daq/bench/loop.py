@@ -16,10 +16,11 @@ from dataclasses import dataclass
 from typing import Any
 
 from daq.bench import messages
+from daq.bench.clocks import Clocks, reading
 from daq.bench.core import BenchCore, Health, Write
 from daq.bench.ports import Port
 from daq.bench.schedule import hurry, quiet_collector
-from daq.bench.sockets import bind, boot_offset_ns, receive, reply
+from daq.bench.sockets import bind, receive, reply
 from daq.cards.derived import motion_link
 from daq.cards.frame import FrameCard
 from daq.errors import DriverError, LinkLost, MidspanError, Refused
@@ -35,7 +36,6 @@ TICK_NS = 10_000_000  # silence, keep-alive and status are judged at least every
 STOPPER_BEAT_NS = 20_000_000
 ALIVE_NS = 500_000_000
 STATION_SILENT_NS = 1_000_000_000  # a station silent for 1 s means a controlled stop
-SUSPEND_NS = 500_000_000  # boot-time clock ahead of the monotonic clock: the computer slept
 HAND_ON_S = 30e-6  # a pseudo-terminal's bytes are handed on by a kernel worker, which must not wait for all we do next
 REQUEST_AGE_NS_MAX = 1_000_000_000  # the station gives up an answer after 1 s; nothing may move after that
 MOVING_REQUESTS = (OpenRun, StartRun, Jog, ReturnCrosshead)
@@ -99,7 +99,7 @@ class BenchProcess:
         self._stopper.setblocking(False)
         self._stopper_alive = True
         self._station_heard_ns = 0
-        self._boot_offset_ns = boot_offset_ns()
+        self._clocks = Clocks(reading())
         self._due_ns = self._beat_ns = self._alive_ns = 0
         self._ring_lost = False
         self._done = False
@@ -325,10 +325,9 @@ class BenchProcess:
         self._write(self._core.recorder_silence(recorder_silent_s, now_ns))
         if (pipeline.armed or pipeline.moving) and now_ns - self._station_heard_ns > STATION_SILENT_NS:
             self._fault("station_silent", "the station has been silent for 1 s")
-        offset_ns = boot_offset_ns()
-        if offset_ns - self._boot_offset_ns > SUSPEND_NS:
-            self._boot_offset_ns = offset_ns
-            self._fault("suspended", "the computer slept; whatever happened meanwhile was not seen")
+        told = self._clocks.judge(reading())
+        if told is not None:
+            self._fault(*told)
 
     def _snapshot(self) -> Mapping[str, Any]:
         return {

@@ -1,11 +1,10 @@
-"""The bench process's datagram sockets, and the clock that tells that the computer slept. Nothing here waits."""
+"""The bench process's datagram sockets. Nothing here waits."""
 
 from __future__ import annotations
 
 import json
 import os
 import socket
-import time
 from collections.abc import Mapping
 from typing import Any
 
@@ -33,8 +32,3 @@ def reply(server: socket.socket, address: Any, answer: Mapping[str, Any]) -> Non
             server.sendto(json.dumps(answer, separators=(",", ":")).encode(), socket.MSG_DONTWAIT, address)
         except OSError:
             pass
-
-
-def boot_offset_ns() -> int:
-    """Boot-time clock minus monotonic clock: grows only while the computer sleeps."""
-    return time.clock_gettime_ns(time.CLOCK_BOOTTIME) - time.monotonic_ns()

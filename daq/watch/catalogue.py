@@ -54,6 +54,7 @@ EVENTS: Mapping[str, str] = {
     "displacement_lost": "The position signal is lost; the run goes on by force alone, as its method allows.",
     "gap": "Samples are missing: source, missing (None: unknown), span_s.",
     "sample_rate_off": "The measured sample rate is not the declared one: declared_hz, measured_hz.",
+    "hum": "A mains line is too strong in the force: true_hz, seen_hz (its alias at this rate), amplitude_n.",
     "noise_high": "The noise is above three times the quiet record: sigma_n, quiet_n.",
     # what the bar did
     "glitch": "Samples off for a moment and back again; left out of all screened numbers: off_n, samples.",

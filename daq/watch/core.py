@@ -14,6 +14,7 @@ from daq.watch.catalogue import EVENTS
 from daq.watch.drops import Drop
 from daq.watch.expected import SECONDS_PER_MINUTE
 from daq.watch.fracture import Finding, FractureWatch
+from daq.watch.hum import HumWatch
 from daq.watch.limits import ROWS, ForceJudge, ForceLimits, Reaction, Trip, frame_limits, run_limits
 from daq.watch.motion import Flat, PositionJudge, Runaway, SpeedWatch, soft_ends, touch_n
 from daq.watch.pace import Pace
@@ -30,6 +31,7 @@ from daq.watch.values import (
     Event,
     Json,
     Move,
+    MoveKind,
     Severity,
     State,
     Step,
@@ -75,12 +77,14 @@ class Run:
         "back_mm_max",
         "contact_mm",
         "contact_s",
+        "contact_way_mm",
         "drop",
         "ended_reason",
         "ended_s",
         "finding",
         "flat",
         "held_since_s",
+        "hum",
         "no_back_off",
         "noisy_since_s",
         "note",
@@ -112,6 +116,8 @@ class Run:
         self.contact_mm: float | None = None
         self.back_mm_max = float("inf")
         self.contact_s: float | None = None
+        self.contact_way_mm = 0.0
+        self.hum: HumWatch | None = None
         self.held_since_s: float | None = None
         self.noisy_since_s: float | None = None
         self.seating: Seating | None = None
@@ -164,6 +170,7 @@ class Core:
         self.move_now: Move | None = None
         self.move_s = 0.0
         self.move_from_mm: float | None = None
+        self.gone_mm = 0.0  # reckoned way of all moves that are over
         self.stopping: StopCheck | None = None
         self.jog_base_n = 0.0
         self.inputs: dict[str, bool | None] = {status.name: None for status in setup.frame.inputs}
@@ -237,6 +244,7 @@ class Core:
             )
         else:
             before.attempt = attempt
+        self.gone_mm = self.way_mm
         self.move_now, self.speed_watch, self.runaway = None, None, None
         if cause is not None:
             if self.run is not None and self.run.ended:
@@ -268,15 +276,30 @@ class Core:
         if self.monitor_only:
             return
         self.actions.append(move)
+        before, self.gone_mm = self.move_now, self.way_mm
         self.move_now, self.move_s = move, self.clock_s
         self.move_from_mm = self.travel.at_mm if self.travel else None
         if self.travel is not None and self.travel.at_mm is not None:
             self.travel.begin_move()
             # a machine that closes its own force loop chooses its speed itself
             if move.rate_n_s is None:
-                latency_s = self.setup.stop_latency_s
-                self.speed_watch = SpeedWatch(self.set_speed_mm_s, self.clock_s, latency_s, self.travel)
+                self._watch_speed(before, move)
         self.set_bands()
+
+    def _watch_speed(self, before: Move | None, move: Move) -> None:
+        assert self.travel is not None
+        if self.speed_watch is not None and before is not None and before.kind is move.kind is MoveKind.LOAD:
+            self.speed_watch.retune(
+                self.set_speed_mm_s, self.clock_s
+            )  # a force loop must not restart the look
+            return
+        latency_s = self.setup.stop_latency_s
+        self.speed_watch = SpeedWatch(self.set_speed_mm_s, self.clock_s, latency_s, self.travel)
+
+    @property
+    def way_mm(self) -> float:
+        """Way of all moves as reckoned from the set speeds; counts on through corrections of the speed."""
+        return self.gone_mm + self.reckoned_mm()
 
     def moved_mm(self) -> float:
         """Way since the move was commanded: measured where there is a position, else reckoned."""

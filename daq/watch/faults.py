@@ -45,9 +45,6 @@ FAULTS: Mapping[str, Reaction] = {
         _STOP, Cause.FAULT, False, "the stopper had to act: the bench was late", "look for what held it up"
     ),
     "stopper_lost": Reaction(_STOP, Cause.FAULT, True, "the stopper process is gone", "restart midspan"),
-    "recorder_lost": Reaction(
-        _STOP, Cause.FAULT, True, "the recorder does not acknowledge", "look at the disk"
-    ),
     "recorder_lag": Reaction(
         _STOP, Cause.FAULT, False, "the recorder is more than 45 s behind", "look at the disk"
     ),
@@ -55,16 +52,11 @@ FAULTS: Mapping[str, Reaction] = {
         _CAUTION, None, False, "the recorder is more than 10 s behind", "look at the disk"
     ),
     "ring_full": Reaction(_STOP, Cause.FAULT, False, "the ring is full", "look at disk and recorder"),
-    "ring_loss": Reaction(_STOP, Cause.FAULT, False, "entries were lost", "look at disk and recorder"),
     "disk_low": Reaction(_CAUTION, None, True, "too little room on the disk for a series", "make room"),
-    "disk_full": Reaction(_STOP, Cause.FAULT, True, "the disk is full", "make room"),
     "station_silent": Reaction(
         _STOP, Cause.FAULT, False, "the operator's seat is silent", "look at the station"
     ),
     "suspended": Reaction(_STOP, Cause.SIGNAL_LOST, False, "the computer slept", "switch its sleep mode off"),
     "clock_step": Reaction(_REMARK, None, False, "the wall clock was set by more than 0.5 s", "nothing"),
-    "core_failed": Reaction(
-        _STOP, Cause.FAULT, True, "a programming error in the watch", "restart midspan, report it"
-    ),
 }
 UNLISTED = Reaction(_STOP, Cause.FAULT, False, "a fault without an entry in the table", "look at the frame")

@@ -54,6 +54,7 @@ ROWS: Mapping[int, Words] = {
     17: Words("noise above the quiet record", "look for a loose cable or a running motor"),
     25: Words("shield, emergency stop, drive or end switch", "clear it, reset, and start anew"),
     26: Words("the machine does not stop", "PRESS THE EMERGENCY STOP"),
+    18: Words("mains hum in the force signal", "look at earth, screen and cable of the cell"),
     30: Words("bar left standing under load", "go on or take the bar off"),
     33: Words("the run has lasted too long", "look at bar and drive"),
 }

@@ -25,6 +25,7 @@ CONTACT_SLACK_MM = 1.0
 RECKONED_TIMES = 2.0
 FLAT_TRAVEL_SHARE, FLAT_SLOPE_SHARE, FLAT_SIGMA = 0.05, 0.10, 8.0
 FLAT_WINDOWS = 2
+STALLED_SHARE = 0.5
 FLAT_TOE_TIMES = 4.0  # a padded fixture's toe begins at about a tenth of the final slope
 CEILING_TIMES, CEILING_MM_MIN = 2.5, 0.2
 SOFT_END_MM = 2.0
@@ -123,7 +124,15 @@ class Flat:
     that hides in the noise, or a glitch at the edge of a window, makes one window flat and not the next.
     """
 
-    __slots__ = ("_flat_windows", "_from_mm", "_from_n", "_stiffness_n_mm", "_toe_n", "_travel_mm")
+    __slots__ = (
+        "_flat_windows",
+        "_from_mm",
+        "_from_n",
+        "_from_way_mm",
+        "_stiffness_n_mm",
+        "_toe_n",
+        "_travel_mm",
+    )
 
     def __init__(self, stiffness_n_mm: float, deflection_mm: float, level: Level) -> None:
         samples = max(8.0, 0.1 / level.period_s)
@@ -131,7 +140,7 @@ class Flat:
         self._stiffness_n_mm = stiffness_n_mm
         self._toe_n = RUNAWAY_FROM_SHARE * stiffness_n_mm * deflection_mm
         self._travel_mm = max(FLAT_TRAVEL_SHARE * deflection_mm, FLAT_SIGMA * sigma_gain / stiffness_n_mm)
-        self._from_mm, self._from_n = INFINITE, 0.0
+        self._from_mm, self._from_way_mm, self._from_n = INFINITE, 0.0, 0.0
         self._flat_windows = 0
 
     def restart(self) -> None:
@@ -139,14 +148,18 @@ class Flat:
         self._from_mm = INFINITE
         self._flat_windows = 0
 
-    def judge(self, at_mm: float, net_n: float) -> Trip | None:
+    def judge(self, at_mm: float, way_mm: float, net_n: float) -> Trip | None:
+        """at_mm: as measured. way_mm: reckoned from the set speeds; half of it counts, because a drive that stands still
+        must not hide a force that stands still.
+        """
         if self._from_mm == INFINITE:
-            self._from_mm, self._from_n = at_mm, net_n
-        travel_mm, gain_n = at_mm - self._from_mm, net_n - self._from_n
+            self._from_mm, self._from_way_mm, self._from_n = at_mm, way_mm, net_n
+        gain_n = net_n - self._from_n
+        travel_mm = max(at_mm - self._from_mm, STALLED_SHARE * (way_mm - self._from_way_mm))
         if travel_mm < self._travel_mm * (FLAT_TOE_TIMES if net_n < self._toe_n else 1.0):
             return None
         needed_n = FLAT_SLOPE_SHARE * self._stiffness_n_mm * travel_mm
-        self._from_mm, self._from_n = at_mm, net_n
+        self._from_mm, self._from_way_mm, self._from_n = at_mm, way_mm, net_n
         self._flat_windows = 0 if gain_n >= needed_n else self._flat_windows + 1
         if self._flat_windows < FLAT_WINDOWS:
             return None
@@ -196,14 +209,38 @@ def soft_ends(motion: Motion, speed_mm_s: float, towards: int) -> tuple[int, flo
 class SpeedWatch:
     """Row 14: off by a fifth of the set speed for half a second: caution. The other way at once: stop."""
 
-    __slots__ = ("_due_s", "_off_since_s", "_set_mm_s", "_told", "_window_s", "stands")
+    __slots__ = (
+        "_due_s",
+        "_high_mm_s",
+        "_low_mm_s",
+        "_off_since_s",
+        "_set_mm_s",
+        "_settle_s",
+        "_settled_s",
+        "_told",
+        "_window_s",
+        "stands",
+    )
 
     def __init__(self, set_mm_s: float, begun_s: float, latency_s: float, travel: Travel) -> None:
         self._set_mm_s, self._told, self.stands = set_mm_s, False, False
         needed_s = 10.0 * travel.resolution_mm / abs(set_mm_s)
         self._window_s = min(max(SPEED_S, needed_s, 5.0 * travel.spacing_s), 2.0)
-        self._due_s = begun_s + 2.0 * latency_s + self._window_s
+        self._settle_s = 2.0 * latency_s + self._window_s
+        self._due_s = begun_s + self._settle_s
         self._off_since_s: float | None = None
+        self._low_mm_s = self._high_mm_s = set_mm_s
+        self._settled_s = begun_s
+
+    def retune(self, set_mm_s: float, now_s: float) -> None:
+        """The set speed has changed on the way: until that shows, any speed between the old one and it is right."""
+        self._settle(now_s)
+        self._set_mm_s, self._settled_s = set_mm_s, now_s + self._settle_s
+        self._low_mm_s, self._high_mm_s = min(self._low_mm_s, set_mm_s), max(self._high_mm_s, set_mm_s)
+
+    def _settle(self, now_s: float) -> None:
+        if now_s >= self._settled_s:
+            self._low_mm_s = self._high_mm_s = self._set_mm_s
 
     def judge(self, now_s: float, travel: Travel) -> Trip | None:
         if self._told or now_s < self._due_s:
@@ -217,7 +254,8 @@ class SpeedWatch:
             self._told = True
             minutes = SECONDS_PER_MINUTE
             return Trip(14, speed * minutes, self._set_mm_s * minutes, "mm/min", Reaction.STOP)
-        if abs(speed - self._set_mm_s) <= seen:
+        self._settle(now_s)
+        if self._low_mm_s - seen <= speed <= self._high_mm_s + seen:
             self._off_since_s = None
             return None
         if self._off_since_s is None:

@@ -72,12 +72,6 @@ class Level:
         self.limit_n = float("inf")
         self.sigma_rest_n = self.sigma_n = sigma_rest_n
 
-    def begin(self, sigma_rest_n: float) -> None:
-        """A new starting noise (the tare note's); what was seen before does not count any more."""
-        self.sigma_rest_n = self.sigma_n = sigma_rest_n
-        self._kept.clear()
-        self._refresh_left = 1
-
     def forecast(self, time_s: float) -> float:
         return self.at_n + self.slope_n_s * (time_s - self.origin_s)
 

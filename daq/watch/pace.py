@@ -58,10 +58,6 @@ class Pace:
         self._steady_n_s: float | None = None
         self._told: set[str] = set()
 
-    def restart(self) -> None:
-        """After a partial drop."""
-        self._due_s = float("inf")
-
     def judge(self, now_s: float, smooth_since_s: float, history: deque[tuple[float, float]]) -> Told | None:
         """smooth_since_s: nothing before this counts (a drop, or the start of loading)."""
         if now_s < self._due_s or now_s - smooth_since_s < WINDOW_S:

@@ -134,7 +134,7 @@ def _approaching(core: Core) -> None:
 
 def _contact(core: Core, run: Run) -> None:
     expected = run.plan.expected
-    run.contact_mm, run.contact_s = _at_mm(core), core.clock_s
+    run.contact_mm, run.contact_s, run.contact_way_mm = _at_mm(core), core.clock_s, core.way_mm
     derived = max(CEILING_TIMES * expected.deflection_mm, CEILING_MM_MIN)
     ceiling = run.plan.method.limits.travel_mm_max or derived
     run.travel_mm_max = min(ceiling, run.tight.get("travel_mm_max", ceiling))
@@ -293,14 +293,31 @@ def _watched(core: Core, run: Run, net_n: float) -> None:
         _tell_seating(core, run, run.seating.feed(core.clock_s, net_n, at_mm))
     if run.pace is not None:
         _tell_pace(core, run, run.pace, net_n)
-    if run.flat is not None:
-        way_mm = at_mm if at_mm is not None else core.reckoned_mm()
-        trip = run.flat.judge(way_mm, core.watch.level.forecast(core.clock_s))
-        if trip is not None:
-            core.trip(trip)
-            return
+    trip = _way_trip(core, run, at_mm)
+    if trip is not None:
+        core.trip(trip)
+        return
+    if run.hum is not None and run.pace is not None:
+        level = core.watch.level
+        line = run.hum.beat(core.clock_s, run.smooth_since_s, level.sigma_n, reversed(level.history))
+        if line is not None:
+            zero.tell_hum(core, run, line)
     if core.travel is not None and at_mm is not None and core.travel.back_mm > run.back_mm_max:
         load_taken_off(core, run)
+
+
+def _way_trip(core: Core, run: Run, at_mm: float | None) -> Trip | None:
+    """Rows 10 and 11 by the way since contact, reckoned from the set speeds where there is no position."""
+    assert core.move_now is not None
+    way_mm = core.way_mm - run.contact_way_mm
+    if at_mm is None:
+        times = RECKONED_TIMES if core.move_now.rate_n_s is not None else 1.0
+        if way_mm > times * run.travel_mm_max:
+            return Trip(11, way_mm, times * run.travel_mm_max, "mm", Reaction.STOP)
+    if run.flat is None:
+        return None
+    measured_mm = way_mm if at_mm is None else at_mm
+    return run.flat.judge(measured_mm, way_mm, core.watch.level.forecast(core.clock_s))
 
 
 def _tell_seating(core: Core, run: Run, found: Seated | str | None) -> None:

@@ -9,10 +9,13 @@ from __future__ import annotations
 from dataclasses import asdict
 from math import isfinite
 
+from daq.stream.block import Floats
 from daq.watch.candidate import Rest
 from daq.watch.core import Core, Run
 from daq.watch.envelope import usable
 from daq.watch.fracture import FractureWatch
+from daq.watch.hum import HumLine, HumWatch, quiet_amplitudes
+from daq.watch.limits import Reaction, Trip
 from daq.watch.states import Cause
 from daq.watch.tare import CAUTION_SHARE, Collector, TareNote, TareRules, take
 from daq.watch.values import Severity
@@ -21,6 +24,7 @@ ARM_CAPACITY_SHARE, ARM_LOAD_SHARE, ARM_SIGMA = 0.02, 0.10, 20.0
 RATE_OFF_BY = 0.05
 STANDING_MM, STANDING_RESOLUTIONS = 0.002, 6.0
 LEVEL_BINS = 8
+HUM_ROW = 18
 
 
 def beat(core: Core) -> None:
@@ -81,6 +85,7 @@ def _judge(core: Core, run: Run, collector: Collector) -> None:
     run.tare_overridden = bool(override and taken.reasons)
     _tell(core, taken.note, rules, override if taken.reasons else "")
     core.go(Cause.TARED)
+    _watch_hum(core, run, gross_n)
     _say_envelope(core, run, taken.note)
     _say_limits(core)
     core.emit("ready")
@@ -105,6 +110,39 @@ def _accept(core: Core, run: Run, note: TareNote, begun_s: float) -> None:
     core.watch = FractureWatch(core.setup.rate_hz, note.sigma_n, settings, core.setup.lag_s)
     core.watch.rest = Rest(note.low_n - note.tare_n, note.high_n - note.tare_n, note.dull, note.step_n)
     core.limits_for_run()
+
+
+def _watch_hum(core: Core, run: Run, gross_n: Floats) -> None:
+    """From here on; what is too strong at rest is told now."""
+    level = core.watch.level
+    quiet_n = quiet_amplitudes(core.setup.rate_hz, gross_n)
+    run.hum = HumWatch(
+        core.setup.rate_hz,
+        level.bin_samples,
+        sigma_n=core.sigma_n,
+        load_p50_n=run.plan.expected.load_p50_n,
+        quiet_n=quiet_n,
+    )
+    for line in run.hum.at_rest(quiet_n):
+        tell_hum(core, run, line)
+
+
+def tell_hum(core: Core, run: Run, line: HumLine) -> None:
+    """Row 18: each line once a run."""
+    what = f"hum of {line.true_hz:g} Hz"
+    if what in run.told:
+        return
+    run.told.add(what)
+    core.tell_limit(
+        Trip(HUM_ROW, line.amplitude_n, line.limit_n, "N", Reaction.CAUTION), what, Severity.CAUTION
+    )
+    core.emit(
+        "hum",
+        Severity.CAUTION,
+        true_hz=line.true_hz,
+        seen_hz=line.seen_hz,
+        amplitude_n=line.amplitude_n,
+    )
 
 
 def _tell(core: Core, note: TareNote, rules: TareRules, overridden: str) -> None:

@@ -67,13 +67,11 @@ def test_stop_keep_alive_and_query_are_whole_lines():
 
 def test_a_return_without_a_retreat_command_is_a_step_away():
     given = port(retreat=None)
-    assert given.can(MoveKind.RETURN)
     assert given.encode_move(move(MoveKind.RETURN, 20.0, 2.0), 0.0) == b"STEP -2.000 20.000\r\n"
 
 
 def test_the_machines_own_force_loop():
     given = port(force_rate={"send": "RATE {rate_n_s:.1f}", "reply": "ok rate"})
-    assert given.can(MoveKind.LOAD, by_force_rate=True)
     assert given.encode_move(move(MoveKind.LOAD, 0.0, rate=50.0), 0.0) == b"RATE 50.0\r\n"
 
 
@@ -98,7 +96,6 @@ def test_what_the_drive_cannot_do_is_never_sent(action, missing):
 
 def test_without_jog_and_retreat_there_is_no_way_back():
     given = port(jog=None, retreat=None)
-    assert not given.can(MoveKind.RETURN) and not given.can(MoveKind.JOG) and given.can(MoveKind.APPROACH)
     with pytest.raises(Refused, match="no command"):
         given.encode_move(move(MoveKind.RETURN, 20.0, 2.0), 0.0)
 

@@ -68,6 +68,11 @@ class Machine:
             force = self.residual_share * force
         return -force if self.reversed_force else force
 
+    @property
+    def force_n(self) -> float:
+        """On the bar now."""
+        return self._force()
+
     def _force(self) -> float:
         into_mm = self.at_mm - self.gap_mm
         if into_mm <= 0:
@@ -104,6 +109,7 @@ class Rig:
         self.events: list[Event] = []
         self.actions: list[tuple[float, Action]] = []
         self.columns = len(self.card.channels)
+        self._missing = 0
 
     def run_for(self, seconds: float) -> Rig:
         return self.run_until(lambda: False, seconds)
@@ -121,7 +127,8 @@ class Rig:
                 self.index += 1
             block = None
             if not self.silent:
-                block = Block(0, self.index - count, np.array(times), np.array(rows))
+                block = Block(0, self.index - count, np.array(times), np.array(rows), self._missing)
+                self._missing = 0
             self.take(self.pipe.advance(block, self.now_s))
         return self
 
@@ -150,6 +157,14 @@ class Rig:
 
     def ask(self, request: Request) -> Step:
         return self.take(self.pipe.request(request, self.now_s))
+
+    def skip(self, samples: int) -> None:
+        """So many samples never arrive, and the next block says so."""
+        for _ in range(samples):
+            self.index += 1
+            self.now_s = round(self.index / self.rate_hz, 9)
+            self._row(1.0 / self.rate_hz)
+        self._missing = samples
 
     def inputs(self, **values: bool | None) -> Step:
         return self.take(self.pipe.inputs(values, self.now_s))
