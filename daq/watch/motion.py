@@ -149,7 +149,7 @@ class Flat:
         self._flat_windows = 0
 
     def judge(self, at_mm: float, way_mm: float, net_n: float) -> Trip | None:
-        """at_mm: as measured. way_mm: reckoned from the set speeds; half of it counts, because a drive that stands still
+        """at_mm: as measured. way_mm: reckoned from the set speeds; half of it counts, since a drive that stands still
         must not hide a force that stands still.
         """
         if self._from_mm == INFINITE:
