@@ -35,6 +35,7 @@ CLASSES: Mapping[str, type[Any]] = {
         requests.Note,
         requests.TightenLimit,
         requests.Prove,
+        requests.CheckCell,
         requests.TakeSeat,
         requests.TellFault,
         requests.FaultOver,

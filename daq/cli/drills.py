@@ -112,6 +112,18 @@ def polarity(frame: FrameCard) -> None:
         record(bench, "polarity", found)
 
 
+def cell_weight(frame: FrameCard, weight_n: float) -> None:
+    """After an overload: the zero of the bare cell, then a known weight. The bench judges both; nothing moves."""
+    with seated(frame) as bench:
+        confirm("Everything off the cell, as at its last zero?")
+        time.sleep(STEADY_S * 3)
+        bench.client.do("check_cell", weight_n=0.0)
+        confirm(f"Now {weight_n:g} N hang on the cell and stand still?")
+        time.sleep(STEADY_S * 3)
+        bench.client.do("check_cell", weight_n=weight_n)
+        click.echo(f"zero and {weight_n:g} N are right: the cell is free again")
+
+
 def pushed(bench: Bench) -> float:
     rest_n = bench.steady("gross_n")
     push_n = bench.capacity_n * PUSH_PERCENT / 100.0

@@ -20,6 +20,8 @@ def plain_request(command: str, words: Mapping[str, Any], operator: str) -> Requ
         return requests.StartRun()
     if command == "close":
         return requests.CloseRun(str(words.get("reason", "")) or "operator")
+    if command == "check_cell":
+        return requests.CheckCell(operator, float(words["weight_n"]))
     if command == "jog":
         return requests.Jog(float(words["distance_mm"]), float(words["speed_mm_min"]))
     if command == "return":

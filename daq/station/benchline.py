@@ -31,6 +31,7 @@ COMMAND_OF = {
     "Note": "note",
     "TightenLimit": "tighten",
     "Prove": "prove",
+    "CheckCell": "check cell",
     "TakeSeat": "sit",
     "TellFault": "room",
     "FaultOver": "room",

@@ -19,6 +19,7 @@ from daq.cards.frame import FrameCard
 from daq.version import VERSION
 
 KINDS = ("polarity", "stop_drill")
+CELL_LOCK = "cell_lock"
 POLARITY = "polarity"
 
 
@@ -38,11 +39,15 @@ def card_digest(frame: FrameCard) -> str:
 
 
 def read_proofs(path: Path, frame: FrameCard) -> dict[str, bool]:
-    """{"polarity": bool, "stop_drill": bool}; a simulated frame has both."""
+    """{"polarity": bool, "stop_drill": bool, "cell": bool}; a simulated frame has all. cell: no overload waits for its
+    check; a changed card is a cell that was seen to anew.
+    """
     if frame.simulated:
-        return dict.fromkeys(KINDS, True)
+        return dict.fromkeys((*KINDS, "cell"), True)
     stored = _stored(path) or {}
-    return {kind: is_valid(stored.get(kind), frame) for kind in KINDS}
+    lock = stored.get(CELL_LOCK)
+    locked = isinstance(lock, dict) and lock.get("card") == card_digest(frame)
+    return {**{kind: is_valid(stored.get(kind), frame) for kind in KINDS}, "cell": not locked}
 
 
 def is_valid(proof: object, frame: FrameCard) -> bool:
@@ -80,8 +85,32 @@ def void_proof(path: Path, kind: str, why: Void) -> None:
 
 def void_polarity(path: Path, stream_id: int, locked_s: float | None) -> None:
     """The watch has locked the polarity: whoever starts next has to push on the fixture again."""
-    utc = dt.datetime.now(dt.UTC).isoformat(timespec="milliseconds")
-    void_proof(path, POLARITY, Void("the force had the wrong sign", utc, stream_id, locked_s))
+    void_proof(path, POLARITY, Void("the force had the wrong sign", _utc(), stream_id, locked_s))
+
+
+def lock_cell(path: Path, frame: FrameCard, stream_id: int, locked_s: float) -> None:
+    """An overload outlives the daemon. The same one locks once."""
+    stored = _stored(path) or {}
+    locks = stored.get("cell_locks", [])
+    known = any((lock["stream"], lock["locked_s"]) == (stream_id, locked_s) for lock in locks)
+    if known or stored.get(CELL_LOCK, {}).get("card") == card_digest(frame):
+        return
+    lock = {"reason": "overload", "utc": _utc(), "stream": stream_id, "locked_s": locked_s}
+    stored[CELL_LOCK] = {**lock, "card": card_digest(frame)}
+    _write(path, stored)
+
+
+def free_cell(path: Path, checked: dict[str, Any]) -> None:
+    """Zero and weight were right; the lock is kept with what lifted it."""
+    stored = _stored(path) or {}
+    if CELL_LOCK in stored:
+        lock = {**stored.pop(CELL_LOCK), "checked": {**checked, "utc": _utc()}}
+        stored.setdefault("cell_locks", []).append(lock)
+        _write(path, stored)
+
+
+def _utc() -> str:
+    return dt.datetime.now(dt.UTC).isoformat(timespec="milliseconds")
 
 
 def _stored(path: Path) -> dict[str, Any] | None:

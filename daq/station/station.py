@@ -29,9 +29,10 @@ from daq.station.asks import open_run, plain_request, utc_now
 from daq.station.benchline import SILENT_S, BenchLine
 from daq.station.follower import Follower, Tell
 from daq.station.found import found_records, sealed_from_report
+from daq.station.locks import Locks
 from daq.station.places import Places
 from daq.station.processes import Life, ring_is_ready
-from daq.station.proofs import KINDS, POLARITY, read_proofs, void_polarity, write_proof
+from daq.station.proofs import KINDS, write_proof
 from daq.station.room import why_too_little
 from daq.station.seat import Seat
 from daq.station.sitting import Sealed, Sitting, Unsealed
@@ -87,8 +88,7 @@ class Station:
         self._room_word = ""
         self._answering: set[asyncio.Task[None]] = set()
         self._withdrawal: asyncio.Task[None] | None = None
-        self._locked_s: float | None = None  # when the watch last locked the polarity
-        self._voided_s: float | None = None  # the last lock that has reached the file
+        self._locks = Locks(places.proofs, self._frame, int(config["stream_id"]), life.tell)
         self._reports: dict[str, Any] = {}
         self._number = 0
         self._lost_entries = 0
@@ -151,8 +151,8 @@ class Station:
             await asyncio.sleep(FOLLOW_S)
 
     def _notice(self, tell: Tell) -> None:
-        if tell.kind == "event" and tell.body["event"] == "polarity_locked":
-            self._void_polarity(float(tell.body["time_s"]))
+        if tell.kind == "event":
+            self._locks.notice(tell.body)
         if tell.kind == "event" and tell.body["event"] == "run_closed" and self._sitting is not None:
             self._sitting.closed(
                 str(tell.body["run_id"]), interrupted=bool(tell.body.get("interrupted", False))
@@ -178,7 +178,7 @@ class Station:
             self._bench.beat()
             silent = self._bench.silent_s > SILENT_S
             self._snapshot = {"state": "bench process does not answer"} if silent else self._bench.snapshot
-            self._void_polarity(self._snapshot.get("polarity_locked_s"))
+            self._locks.beat(self._snapshot)
             await asyncio.sleep(BEAT_S)
 
     # --- what viewers see
@@ -437,7 +437,7 @@ class Station:
         what was found is written to the file for the served card, and the bench then holds what the file says.
         """
         kind = str(words.get("kind", ""))
-        proven = self._proofs()
+        proven = self._locks.proofs()
         if kind == "pushed":
             await self._bench.ask(requests.Prove(self._seat.operator, True, proven["stop_drill"]))
             self._withdrawal = asyncio.create_task(self._withdraw())
@@ -446,29 +446,11 @@ class Station:
             found = {**dict(words["found"]), "who": self._seat.operator, "utc": utc_now()}
             write_proof(self._places.proofs, self._frame, kind, found)
         await self._hold_proofs()
-        return {"proven": self._proofs()}
-
-    def _proofs(self) -> dict[str, bool]:
-        """What the file says; a lock that could not be written there yet counts all the same."""
-        proven = read_proofs(self._places.proofs, self._frame)
-        return proven if self._locked_s == self._voided_s else {**proven, POLARITY: False}
-
-    def _void_polarity(self, locked_s: float | None) -> None:
-        """Tried again at every beat until it is written; told when it first fails."""
-        if locked_s is None or locked_s == self._voided_s:
-            return
-        told, self._locked_s = self._locked_s == locked_s, locked_s
-        try:
-            void_polarity(self._places.proofs, int(self._config["stream_id"]), locked_s)
-        except OSError as error:
-            if not told:
-                self._life.tell(f"{self._places.proofs}: the polarity proof could not be voided ({error})")
-            return
-        self._voided_s = locked_s
+        return {"proven": self._locks.proofs()}
 
     async def _hold_proofs(self) -> None:
         """The bench takes for proven what the file says, no more."""
-        proven = self._proofs()
+        proven = self._locks.proofs()
         await self._bench.ask(requests.Prove(self._seat.operator, proven["polarity"], proven["stop_drill"]))
 
     async def _withdraw(self) -> None:

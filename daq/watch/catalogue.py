@@ -45,6 +45,9 @@ EVENTS: Mapping[str, str] = {
     "reset": "A latched state was cleared by a person: who, looked.",
     "proven": "Polarity and stop drill were recorded as proven: polarity, stop_drill, who.",
     "polarity_locked": "A wrong sign was seen: the proof is void, nothing moves until the polarity is proven again.",
+    "cell_locked": "The cell was overloaded: no bar and no way towards one until its zero and a weight are checked.",
+    "cell_zero_seen": "The zero of the bare cell was looked at after an overload: who, shift_n.",
+    "cell_checked": "A known weight was right after an overload, the cell is free again: who, weight_n, found_n.",
     "fault": "A fault told by a driver or by another process: name, detail, what, did, do_now, first.",
     "input": "A status input changed: name, active (None: unknown).",
     # the signal

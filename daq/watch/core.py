@@ -191,6 +191,8 @@ class Core:
         self.still_samples = max(by_chance, UNKNOWN_SAMPLES) if by_chance is not None else None
         self.lively = quiet_n is not None and step_n > 0  # known to change by itself
         self.overloaded = False
+        self.cell_locked_s: float | None = None if proven.cell else 0.0
+        self.check_zero_n: float | None = None
 
     @property
     def monitor_only(self) -> bool:
@@ -354,6 +356,7 @@ class Core:
         if self.monitor_only and trip.reaction is not Reaction.SIGNAL_LOST and trip.row != RUN_TOO_LONG_ROW:
             # midspan cannot stop this machine: the person is told, and the recording goes on to the end
             self.tell_limit(trip, what, Severity.STOP)
+            self._heed_overload(trip)
             return
         severity = Severity.CAUTION
         if trip.reaction is not Reaction.CAUTION:
@@ -363,10 +366,19 @@ class Core:
         if trip.row == 5:
             self.polarity_locked_s = self.clock_s
             self.emit("polarity_locked", Severity.STOP)
-        self.overloaded = self.overloaded or trip.reaction is Reaction.OVERLOAD
+        self._heed_overload(trip)
         if severity is Severity.STOP:
             lost = trip.reaction is Reaction.SIGNAL_LOST
             self.end_run(Verdict.SIGNAL_LOST if lost else Verdict.STOPPED, what)
+
+    def _heed_overload(self, trip: Trip) -> None:
+        """K4: no bar and no way towards one until cellcheck.py has seen zero and weight."""
+        if trip.reaction is not Reaction.OVERLOAD:
+            return
+        self.overloaded = True
+        if self.cell_locked_s is None:
+            self.cell_locked_s = self.clock_s
+            self.emit("cell_locked", Severity.STOP)
 
     def tell_limit(self, trip: Trip, what: str, severity: Severity) -> None:
         by_hand = self.monitor_only and severity is not Severity.CAUTION

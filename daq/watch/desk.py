@@ -9,11 +9,12 @@ from __future__ import annotations
 from math import isfinite
 
 from daq.errors import Refused
-from daq.watch import aftermath, outside
+from daq.watch import aftermath, cellcheck, outside
 from daq.watch.core import Core, Run
 from daq.watch.limits import INFINITE
 from daq.watch.motion import approach_mm_min
 from daq.watch.requests import (
+    CheckCell,
     CloseRun,
     FaultOver,
     Jog,
@@ -58,6 +59,8 @@ def handle(core: Core, request: Request) -> None:
         _tighten(core, request)
     elif isinstance(request, TakeSeat):
         core.emit("seat_taken", operator=request.operator, before=request.before)
+    elif isinstance(request, CheckCell):
+        cellcheck.check(core, request)
     elif isinstance(request, TellFault):
         outside.fault(core, request.name, request.detail)
     elif isinstance(request, FaultOver):
@@ -86,6 +89,8 @@ def _stop(core: Core, request: StopRequest) -> None:
 
 def _open(core: Core, request: OpenRun) -> None:
     missing = core.busy_why()
+    if core.cell_locked_s is not None:
+        missing.append(cellcheck.LOCKED)
     if core.run is not None:
         missing.append("a run is open")
     elif core.state is not State.AT_REST:
@@ -180,6 +185,8 @@ def _jog(core: Core, request: Jog) -> None:
         or not abs(core.gross_n - core.setup.frame.cell.zero_balance_n) < 0.1 * core.setup.capacity_n
     ):
         missing.append("the force at rest is not near zero")
+    if core.cell_locked_s is not None:
+        missing.append(cellcheck.LOCKED)
     _require("jog", missing)
     assert level_n is not None
     core.jog_base_n = level_n

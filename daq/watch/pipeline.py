@@ -193,6 +193,7 @@ class Pipeline:
             "moving": core.moving,
             "force_n_max": core.limits.ceiling_n,
             "inputs": dict(core.inputs),
+            "cell_locked_s": core.cell_locked_s,
             "polarity_locked_s": core.polarity_locked_s,
             "missing": tuple(core.busy_why()),
         }

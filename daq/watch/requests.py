@@ -91,6 +91,14 @@ class Prove:
 
 
 @dataclass(frozen=True, slots=True)
+class CheckCell:
+    """After an overload: weight_n 0 looks at the zero of the bare cell, then a known weight lifts the lock."""
+
+    who: str
+    weight_n: float
+
+
+@dataclass(frozen=True, slots=True)
 class TakeSeat:
     """A named person has taken the operator's seat. before: whose it was, "" where it was free."""
 
@@ -124,6 +132,7 @@ Request: TypeAlias = (
     | Note
     | TightenLimit
     | Prove
+    | CheckCell
     | TakeSeat
     | TellFault
     | FaultOver

@@ -29,6 +29,7 @@ class Proven:
 
     polarity: bool
     stop_drill: bool
+    cell: bool = True  # no overload since the cell was last checked
 
 
 @dataclass(frozen=True, slots=True)

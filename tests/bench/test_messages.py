@@ -21,6 +21,7 @@ EXAMPLES = (
     requests.TightenLimit("force_n_max", 300.0),
     requests.Prove("Ines", polarity=True, stop_drill=False),
     requests.TakeSeat("Olaf", "Ines"),
+    requests.CheckCell("A. Tester", 200.0),
     requests.TellFault("disk_low", "3 % free"),
     requests.FaultOver("disk_low"),
 )

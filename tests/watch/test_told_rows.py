@@ -6,6 +6,7 @@ Which test passes each row of job map section 4, and which stays just inside:
 |---|---|---|
 | 1 to 4, 8 to 16, 25, 26, 33 | force, travel, run-on, signal, inputs, failed stop, time | test_limit_rows.ROWS_TRIED |
 | 1, 4 | cautions at 80 % of the cell and at P99.9 | PAIRS here |
+| 2 | cell locked after an overload (K4) | test_cell_check |
 | 5 | wrong sign | test_limit_rows.ROWS_TRIED; blanking: test_flow, ringing bars |
 | 6, 7 | touch; approach speed | PAIRS here; test_limit_rows, slowed way to the bar |
 | 9, 10, 11 | without a position; stalled drive; force loop closed by midspan | PAIRS here |

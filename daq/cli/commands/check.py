@@ -36,6 +36,11 @@ DISK_FREE_GIB_MIN = 10.0
     "--stop-drill", is_flag=True, help="Guided: move without a bar, stop, measure the run-on; recorded."
 )
 @click.option(
+    "--cell-weight",
+    type=click.FloatRange(min=0, min_open=True),
+    help="Guided, after an overload: zero of the cell, then this known weight, N.",
+)
+@click.option(
     "--schema", type=click.Choice(["frame", "method", "series"]), help="Print the card's JSON Schema."
 )
 def command(
@@ -45,6 +50,7 @@ def command(
     seconds: float,
     polarity: bool,
     stop_drill: bool,
+    cell_weight: float | None,
     schema: str | None,
 ) -> None:
     """Check frame, method and series cards (told apart by their `card` key), and on request the live bench.
@@ -68,8 +74,10 @@ def command(
             drills.polarity(frame)
         if stop_drill:
             drills.stop_drill(frame)
-    elif live or polarity or stop_drill:
-        raise click.UsageError("--live, --polarity and --stop-drill need a frame card")
+        if cell_weight is not None:
+            drills.cell_weight(frame, cell_weight)
+    elif live or polarity or stop_drill or cell_weight is not None:
+        raise click.UsageError("--live, --polarity, --stop-drill and --cell-weight need a frame card")
     if must_correct:
         raise MidspanError(f"{must_correct} of the questions must be corrected before a run: see above")
 
