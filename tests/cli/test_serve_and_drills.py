@@ -16,7 +16,7 @@ from daq.cards.load import example_path, load_frame
 from daq.cli.options import running_places
 from daq.errors import Refused
 from daq.station.client import Client
-from daq.station.proofs import POLARITY, write_proof
+from daq.station.proofs import KINDS, POLARITY, write_proof
 from tests.cli.lane import Lane, lane_of
 from tests.cli.typed import typed
 
@@ -182,6 +182,47 @@ def test_a_wrong_sign_voids_the_stored_proof_and_the_next_start_asks_anew(
             client.do("series", path=SERIES, sure=True)
             with pytest.raises(Refused, match="polarity is not proven"):
                 client.do("mount")
+
+
+def test_an_overloaded_cell_takes_no_bar_until_zero_and_weight_are_right(tmp_path: Path) -> None:
+    with lane_of(DEMO, tmp_path / "records", changes=REAL) as lane:
+        proofs = lane.data / ".spool" / "kiln-lane-demo" / "proofs.json"
+        for kind in KINDS:
+            write_proof(proofs, load_frame(lane.card), kind, {})
+        with lane.served():
+            lane.hands(fault={"kind": "halves-left", "force_n": 1050.0})
+            with Client(running_places(None)) as client:
+                while not client.look()["summary"]["cell_locked_s"]:
+                    time.sleep(0.02)
+                lane.hands(clear=True)
+                client.sit("Rig")
+                while client.look()["summary"]["moving"] or not reset(client):
+                    time.sleep(0.1)
+                client.do("series", path=SERIES, sure=True)
+                with pytest.raises(Refused, match="the cell was overloaded"):
+                    client.do("mount")
+        with lane.served():  # the lock outlives the daemon
+            with typed("check", str(lane.card), "--cell-weight", "200", folder=lane.folder) as person:
+                person.wait("Your name")
+                person.type("A. Person\r")
+                person.wait("Everything off the cell")
+                person.type("y\r")
+                person.wait("Now 200 N hang")
+                lane.hands(fault={"kind": "halves-left", "force_n": 200.0})
+                person.type("y\r")
+                person.wait("the cell is free again")
+                assert person.end() == 0
+            while "cell_lock" in json.loads(proofs.read_text("utf-8")):
+                time.sleep(0.02)
+
+
+def reset(client: Client) -> bool:
+    """Once the force is seen to be back."""
+    try:
+        client.do("reset", looked=True)
+    except Refused:
+        return False
+    return True
 
 
 def station_of(pid: int) -> int:

@@ -25,6 +25,7 @@ ENDED_WORDS = LATCHED_WORDS | {state.value for state in BROKEN} | {State.UNLOADI
 ARMED_WORDS = frozenset(state.value for state in ARMED)
 WATCHED_WORDS = frozenset(state.value for state in WATCHED)
 CALLED = (Verdict.SUDDEN_BREAK.value, Verdict.GRADUAL_FAILURE.value)
+HUM_ROW = 18
 FORCE_LIMITS = ("hard_n", "working_n", "fixture_n", "specimen_n", "method_n")
 NS = 1e-9
 MARGIN_S = 0.05
@@ -344,6 +345,7 @@ def calm(story: Story) -> Iterator[str]:
         for event in story.events:
             told = event["event"] == "residual" and wedged
             told |= event["event"] == "fracture" and event["verdict"] in words_for_a_break(plan)
+            told |= plan.card.force.hum > 0 and (event["event"] == "hum" or event.get("row") == HUM_ROW)
             if event["severity"] != "remark" and not told:
                 yield f"{event['time_s']:.3f} s: {event['event']} ({event['severity']}) although nothing was wrong"
 
