@@ -23,6 +23,7 @@ LOAD_SHARE, QUIET_TIMES = 0.001, 5.0
 NOISE_TIMES = 6.0  # of an amplitude's error in white noise: exp(-36/2), 15 in a billion (Rayleigh)
 MAD_OF_SINE = 1.05  # 1.4826 x 0.707: what the robust noise makes of a sine of amplitude 1
 GAIN_MIN = 0.25  # of what the mean over a bin leaves of a line; below it the line is not judged
+BINS_MIN = 64  # in a window: fewer cannot be told from the bend of a rising force (seeds 61 and 158, 20 S/s)
 APART_HZ = 1.5  # of a window of one second: what lies nearer to zero or to another line is not told apart
 
 
@@ -50,6 +51,8 @@ def tones(rate_hz: float, bin_samples: int) -> tuple[Tone, ...]:
     """The lines that can be told at this rate, each place only once: the lower true frequency is named."""
     found: list[Tone] = []
     bins_hz = rate_hz / bin_samples
+    if WINDOW_S * bins_hz < BINS_MIN:
+        return ()
     for true_hz in MAINS_HZ:
         tone = _tone(true_hz, rate_hz, bin_samples)
         place_hz = tone.per_bin * bins_hz
@@ -89,6 +92,7 @@ class HumWatch:
         "_bins",
         "_due_s",
         "_error",
+        "_from_s",
         "_left",
         "_limits_n",
         "_share_n",
@@ -117,14 +121,17 @@ class HumWatch:
         }
         self._values: list[float] = []
         self._left: list[Tone] = []
-        self._due_s = float("-inf")
+        self._due_s, self._from_s = float("-inf"), float("inf")
 
     def beat(
         self, now_s: float, smooth_since_s: float, sigma_n: float, history: Iterable[tuple[float, float]]
     ) -> HumLine | None:
-        """history: (time, mean) of bins, newest first. Nothing before smooth_since_s counts. sigma_n: noise now."""
+        """history: (time, mean) of bins, newest first. sigma_n: noise now. Nothing before smooth_since_s or the first
+        beat counts.
+        """
         if not self._left:
-            if now_s < self._due_s or now_s - smooth_since_s < WINDOW_S:
+            self._from_s = min(self._from_s, now_s)
+            if now_s < self._due_s or now_s - max(smooth_since_s, self._from_s) < WINDOW_S:
                 return None
             self._due_s = now_s + EVERY_S
             self._values = [value for _, value in itertools.islice(history, self._bins)]

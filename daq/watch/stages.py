@@ -297,7 +297,8 @@ def _watched(core: Core, run: Run, net_n: float) -> None:
     if trip is not None:
         core.trip(trip)
         return
-    if run.hum is not None and run.pace is not None:
+    seated = run.seating is not None and run.seating.seated is not None
+    if run.hum is not None and run.pace is not None and seated:
         level = core.watch.level
         line = run.hum.beat(core.clock_s, run.smooth_since_s, level.sigma_n, reversed(level.history))
         if line is not None:

@@ -19,6 +19,7 @@ SEEDS = 200
 CHUNK = 10
 LEARNED = {
     13: "a force loop asked for while a stop was under way never began",
+    61: "the toe of a fast loading at 25 S/s was told as hum",
     64: "noise at 10 S/s was cautioned as uneven seating",
     140: "a force seen late at 10 S/s was a failed stop, and stayed one for ever",
     156: "noise after a hold was cautioned as uneven seating",
