@@ -1,6 +1,6 @@
 """Clocks: has the computer slept, has somebody set its wall clock? Readings in, faults out; pure but for `reading`.
 
-Rows 15 and 28 of job map section 4. Data are timed by the monotonic clock alone, which neither of the two moves.
+Rows 15 and 28 of the limits. Data are timed by the monotonic clock alone, which neither of the two moves.
 """
 
 from __future__ import annotations
@@ -9,7 +9,7 @@ import time
 from dataclasses import dataclass
 
 SUSPEND_NS = 500_000_000
-STEP_NS = 500_000_000  # job map 4, row 28; what a time service slews is a twentieth of it in 50 s
+STEP_NS = 500_000_000  # row 28 of the limits; what a time service slews is a twentieth of it in 50 s
 
 
 @dataclass(frozen=True, slots=True)

@@ -1,7 +1,7 @@
 """The check of the cell after an overload: it is locked until its zero and one weight have been seen to be right.
 
-Job map K4 and C1. A lock forbids bars and ways towards the specimen, not the way back. The zero moves for good where a
-cell was bent (S17): more than 0.1 % of its capacity off the commissioned zero is a case for verification, not for us.
+A lock forbids bars and ways towards the specimen, not the way back. The zero moves for good where a
+cell was bent: more than 0.1 % of its capacity off the commissioned zero is a case for verification, not for us.
 """
 
 from __future__ import annotations
@@ -14,8 +14,11 @@ from daq.watch.requests import CheckCell
 from daq.watch.states import ARMED
 
 LOCKED = "the cell was overloaded: check its zero and one weight (midspan check --cell-weight)"
-SHIFT_SHARE_MAX = 0.001  # of capacity, K4
-WEIGHT_SHARE_MAX, WEIGHT_SIGMA = 0.005, 3.0  # C1
+SHIFT_SHARE_MAX = 0.001  # of capacity; common practice, no source
+WEIGHT_SHARE_MAX, WEIGHT_SIGMA = (
+    0.005,
+    3.0,
+)  # of the weight, or three standard errors; common practice, no source
 WEIGHT_SHARE_MIN = 0.01  # of capacity: less would not show a sensitivity that is off by half a percent
 LOOK_S, BINS_MIN = 1.0, 4
 STEADY_SIGMA = 6.0

@@ -372,7 +372,7 @@ class Core:
             self.end_run(Verdict.SIGNAL_LOST if lost else Verdict.STOPPED, what)
 
     def _heed_overload(self, trip: Trip) -> None:
-        """K4: no bar and no way towards one until cellcheck.py has seen zero and weight."""
+        """No bar and no way towards one until cellcheck.py has seen zero and weight."""
         if trip.reaction is not Reaction.OVERLOAD:
             return
         self.overloaded = True

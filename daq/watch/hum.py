@@ -1,6 +1,6 @@
 """Hum: mains lines in the force while loading, named by their true and their visible frequency. Tells only.
 
-Row 18 of job map section 4: an amplitude above 0.1 % of the expected break load, or above five times that of the zero.
+Row 18 of the limits: an amplitude above 0.1 % of the expected break load, or above five times that of the zero.
 Taken from the bins of the forecast line over the last whole second (whole periods of every line, so that a steady rise
 leaves nothing behind), one line a beat: a line costs about as much as three samples.
 """

@@ -1,4 +1,4 @@
-"""After an overload the cell is locked until its zero and a weight were right. Job map K4, C1, S17."""
+"""After an overload the cell is locked until its zero and a weight were right."""
 
 from __future__ import annotations
 

@@ -1,12 +1,12 @@
 """The rest of the table of limits: rows that tell, refuse or clamp, and rows by another way than the usual one.
 
-Which test passes each row of job map section 4, and which stays just inside:
+Which test passes each row of the limits, and which stays just inside:
 
 | row | limit | tests |
 |---|---|---|
 | 1 to 4, 8 to 16, 25, 26, 33 | force, travel, run-on, signal, inputs, failed stop, time | test_limit_rows.ROWS_TRIED |
 | 1, 4 | cautions at 80 % of the cell and at P99.9 | PAIRS here |
-| 2 | cell locked after an overload (K4) | test_cell_check |
+| 2 | cell locked after an overload | test_cell_check |
 | 5 | wrong sign | test_limit_rows.ROWS_TRIED; blanking: test_flow, ringing bars |
 | 6, 7 | touch; approach speed | PAIRS here; test_limit_rows, slowed way to the bar |
 | 9, 10, 11 | without a position; stalled drive; force loop closed by midspan | PAIRS here |
@@ -118,7 +118,7 @@ def humming(amplitude_n: float, hum_hz: float = 50.0, rate_hz: float = 1000.0, r
 
 
 def hum_at_rest(amplitude_n: float) -> Rig:
-    """80 S/s: 50 Hz shows as 30 Hz, job map scenario 4."""
+    """80 S/s: 50 Hz shows as 30 Hz."""
     rig = Rig(frame(rate_hz=80.0, **QUIET_FRAME), Machine(gap_mm=50.0), noise_n=0.05)  # type: ignore[arg-type]
     rig.disturb = lambda t, force: force + amplitude_n * float(np.sin(2 * np.pi * 50.0 * t))
     return rig.ready()
@@ -365,7 +365,7 @@ def test_just_inside_it_does_not(pair: Pair) -> None:
 
 
 def test_the_table_is_whole() -> None:
-    """Each row of job map section 4 stands in the docstring; what it says is tried here, is."""
+    """Each row of the limits stands in the docstring; what it says is tried here, is."""
     assert __doc__ is not None
     here, there = set(), set()
     for line in __doc__.splitlines():
