@@ -12,9 +12,11 @@ from enum import Enum
 from typing import Any
 
 from daq.stream.updates import Update
+from monitor.standing import Standing
 from monitor.wording import (
     ENDED,
     NOT_CURRENT,
+    REPLAYED,
     expected_text,
     fault_text,
     instruction,
@@ -59,6 +61,7 @@ class Presenter:
         self._results: deque[Mapping[str, Any]] = deque(maxlen=RESULTS_MAX)
         self._heard_s = self._summed_s = float("-inf")
         self._monitor_only = False
+        self._standing, self._towards = Standing(), 1
         self.frame = ""
         self.simulated = False
         self.noise_n: float | None = None  # of the quiet record
@@ -104,6 +107,10 @@ class Presenter:
         if not newer_heard:
             self._state, self._summary = look["state"], look["summary"]
             self._heard_s = self._summed_s = now_s
+            self._standing = Standing()
+            for event in look.get("events") or ():
+                self._standing.take_event(event)
+        self._towards = int((look["frame"].get("motion") or {}).get("position_sign", 1))
         self.frame = str(look["frame"]["name"])
         self.simulated = bool(look["frame"]["simulated"])
         self._monitor_only = look["frame"].get("motion") is None
@@ -122,9 +129,18 @@ class Presenter:
             self._state = update.body
         elif update.kind == "summary":
             self._summary, self._summed_s = update.body, now_s
+            self._stand()
+        elif update.kind == "event":
+            self._standing.take_event(update.body)
         elif update.kind == "result":
             result = dict(update.body.get("result") or {})
             self._results.append({**result, "specimen": update.body.get("specimen", "")})
+
+    def _stand(self) -> None:
+        """Where the crosshead stands between two loadings."""
+        position_mm = self._summary.get("position_mm")
+        if self.state == AT_REST and not self._state.get("run") and position_mm is not None:
+            self._standing.take_position(self._towards * float(position_mm))
 
     def lines(self, now_s: float) -> list[Line]:
         """The view in the order in which it is read from 2 m: state, load, percent, bar, instruction or fault."""
@@ -208,8 +224,16 @@ class Presenter:
 
     def _instruction(self) -> str:
         run_open, bars = bool(self._state.get("run")), self._state.get("bars", 0)
+        if self._state.get("replayed") and self.state == AT_REST and not run_open:
+            return REPLAYED
         all_done = bool(bars) and self._state.get("broken", 0) == bars
-        return instruction(self.state, run_open=run_open, monitor_only=self._monitor_only, all_done=all_done)
+        return instruction(
+            self.state,
+            run_open=run_open,
+            monitor_only=self._monitor_only,
+            all_done=all_done,
+            down=self._standing.is_down,
+        )
 
 
 def counted(faults: list[Mapping[str, Any]]) -> str:

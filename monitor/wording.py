@@ -34,15 +34,21 @@ INSTRUCTIONS: Mapping[str, str] = {
 NOT_CURRENT = "nothing heard from midspan: look at the frame; if it moves, stop it at the machine"
 TARING = "measuring the tare; touch nothing"
 ALL_DONE = "every bar of the series is broken; collect the pieces"
+BACK_OFF_FIRST = "first back the crosshead off (hold b, or B O), then mount the next bar"
+REPLAYED = "the record ends here: bar and frame were at rest"
 READY_MONITOR_ONLY = "start the machine by its own controls; midspan can NOT stop it"
 
 Numbers = Mapping[str, Any]
 
 
-def instruction(state: str, *, run_open: bool, monitor_only: bool, all_done: bool = False) -> str:
-    """What the person at the frame does now."""
+def instruction(
+    state: str, *, run_open: bool, monitor_only: bool, all_done: bool = False, down: bool = False
+) -> str:
+    """What the person at the frame does now. down: the crosshead stands where the last loading left it."""
     if state == "at rest" and (run_open or all_done):
         return TARING if run_open else ALL_DONE
+    if state == "at rest" and down:
+        return BACK_OFF_FIRST
     if monitor_only and state == "ready":
         return READY_MONITOR_ONLY
     return INSTRUCTIONS.get(state, "")

@@ -7,7 +7,7 @@ from typing import Any
 from daq.stream.updates import Update
 from daq.watch.values import State
 from monitor.presenter import Presenter, Tone
-from monitor.wording import INSTRUCTIONS, fault_text
+from monitor.wording import BACK_OFF_FIRST, INSTRUCTIONS, fault_text
 
 
 def update(kind: str, body: dict[str, Any], *, simulated: bool = True) -> Update:
@@ -156,3 +156,47 @@ def test_trouble_with_the_recording_is_a_caution_of_its_own() -> None:
     presenter.take(update("state", {"state": "loading", "reports": {"recorder": {"lag_s": 11.0}}}), 0.0)
     text, tone = text_of(presenter, "recording", 0.0)
     assert "11 s behind" in text and tone is Tone.CAUTION
+
+
+def closed(presenter: Presenter, *events: str) -> None:
+    """A loading of which nothing is open any more; the crosshead stands at 2.1 mm."""
+    for name in ("started", "fracture", *events, "run_closed"):
+        presenter.take(update("event", {"event": name}), 0.0)
+    presenter.take(update("state", {"state": "at rest", "bars": 6, "broken": 1}), 0.0)
+    presenter.take(update("summary", {"position_mm": 2.1}), 0.0)
+
+
+def test_a_crosshead_left_at_the_break_is_sent_back_before_the_next_bar() -> None:
+    """Without a back-off of its own the next approach begins at the break and finds no bar (limit 9)."""
+    presenter = Presenter()
+    closed(presenter)
+    told, _ = text_of(presenter, "do now", 0.0)
+    assert told == BACK_OFF_FIRST
+    presenter.take(update("summary", {"position_mm": 1.9}), 0.0)
+    assert text_of(presenter, "do now", 0.0)[0] == BACK_OFF_FIRST
+    presenter.take(update("summary", {"position_mm": 0.1}), 0.0)  # by hand, at the machine
+    assert text_of(presenter, "do now", 0.0)[0] == INSTRUCTIONS["at rest"]
+
+
+def test_a_back_off_by_command_or_by_itself_is_enough() -> None:
+    by_itself, by_command = Presenter(), Presenter()
+    closed(by_itself, "returned")
+    closed(by_command)
+    by_command.take(update("event", {"event": "returned"}), 0.0)
+    for presenter in (by_itself, by_command):
+        assert text_of(presenter, "do now", 0.0)[0] == INSTRUCTIONS["at rest"]
+
+
+def test_a_late_joiner_is_told_to_back_off_also_where_the_position_falls_towards_the_bar() -> None:
+    presenter = Presenter()
+    look = {
+        "frame": {"name": "lane", "simulated": True, "motion": {"position_sign": -1}},
+        "state": {"state": "at rest"},
+        "summary": {},
+        "events": [{"event": "started"}, {"event": "fracture"}, {"event": "run_closed"}],
+    }
+    presenter.take_look(look, 0.0)
+    presenter.take(update("summary", {"position_mm": -2.1}), 0.0)
+    assert text_of(presenter, "do now", 0.0)[0] == BACK_OFF_FIRST
+    presenter.take(update("summary", {"position_mm": -0.1}), 0.0)
+    assert text_of(presenter, "do now", 0.0)[0] == INSTRUCTIONS["at rest"]
