@@ -157,6 +157,7 @@ class Player:
         return {
             "state": word,
             "run": None if word == "at rest" and over else self._opened()["run"],
+            "replayed": True,
             "shown": meta["specimen"],
             "bar": place,
             "bars": len(bars),
