@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from pathlib import Path
+from tempfile import TemporaryDirectory
 
 import pytest
 
@@ -13,9 +15,11 @@ from daq.station.supervisor import Outfit, Supervisor
 
 
 @pytest.fixture
-def root(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
-    monkeypatch.setenv("MIDSPAN_RUNTIME", str(tmp_path))
-    return tmp_path
+def root(monkeypatch: pytest.MonkeyPatch) -> Iterator[Path]:
+    """A short path, since a socket's path has room for 107 bytes."""
+    with TemporaryDirectory(prefix="ms-") as short:
+        monkeypatch.setenv("MIDSPAN_RUNTIME", short)
+        yield Path(short)
 
 
 def made(name: str, data: Path) -> Places:
