@@ -86,7 +86,9 @@ WORDS: Mapping[str, tuple[str, Tone, str]] = {
 def mark_of(event: Mapping[str, object]) -> Mark | None:
     """The mark an event leaves on the trace, or None."""
     found = WORDS.get(str(event.get("event")))
-    at_s = event.get("onset_s", event.get("time_s"))
+    at_s = event.get(
+        "last_good_s", event.get("onset_s", event.get("time_s"))
+    )  # the sample after is not the bar's
     if found is None or not isinstance(at_s, int | float):
         return None
     word, tone, symbol = found
@@ -178,7 +180,8 @@ class TracePlot(QWidget):
         if mark is None:
             return
         if event.get("event") == "fracture":
-            self._break_s = mark.time_s
+            onset_s = event.get("onset_s")
+            self._break_s = float(onset_s) if isinstance(onset_s, int | float) else mark.time_s
         if len(self._marks) < MARKS_MAX or mark.tone is Tone.STOP:
             self._marks.append(mark)
             self._marks_s = max(self._marks_s, mark.time_s + MARK_ROWS_S)
@@ -274,7 +277,7 @@ class TracePlot(QWidget):
 
     def _label_axes(self) -> None:
         along = self.buffer.along()
-        bottom = {TIME: "time  s", STRAIN: "strain  mm/m"}.get(along, "deflection  um")
+        bottom = {TIME: "time  s", STRAIN: "strain  mm/m"}.get(along, "deflection  µm")
         left = "stress  MPa"
         if self.kind is not Kind.STRESS_STRAIN:
             bottom, left = "time  s", "load  N" if self.kind is Kind.LOAD_TIME else "stress rate  MPa/s"
