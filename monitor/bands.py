@@ -120,7 +120,7 @@ class Gauge(Band):
             filled = QRectF(groove)
             filled.setWidth(groove.width() * min(1.0, max(0.0, board.percent / GAUGE_FULL_PERCENT)))
             filled.adjust(0.0, 0.16 * groove.height(), 0.0, -0.16 * groove.height())
-            painter.fillRect(filled, QColor(theme.trace if board.current else theme.ghost))
+            painter.fillRect(filled, QColor(theme.trace if board.believed else theme.ghost))
         painter.setPen(QPen(QColor(theme.edge), 1.0))
         painter.setBrush(Qt.BrushStyle.NoBrush)
         painter.drawRect(groove)
@@ -136,7 +136,7 @@ class Gauge(Band):
             number_box,
             said,
             sizes.chief_px,
-            theme.ink if board.current else theme.faint,
+            theme.ink if board.believed else theme.faint,
             align=RIGHT,
             bold=True,
         )

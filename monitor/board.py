@@ -14,6 +14,8 @@ from monitor.presenter import Line, Presenter, Tone
 from monitor.wording import number
 
 NO_CONTACT = "no contact"
+SIGNAL_LOST = "signal lost"
+UNBELIEVED = "do not trust the numbers"
 DECIMALS_MAX = 3
 
 
@@ -25,6 +27,7 @@ class Board:
     word_rest: str
     tone: Tone
     current: bool
+    believed: bool  # False: fresh, but the signal itself is lost
     load: str
     stress: str
     gross: str
@@ -50,12 +53,15 @@ def board_of(presenter: Presenter, now_s: float) -> Board:
     if "load" not in lines:
         rest = lines["state"].text.removeprefix("NO CONTACT ").removeprefix("no contact yet")
     tone = lines["state"].tone
+    current = tone is not Tone.OLD and "load" in lines
+    lost = current and word == SIGNAL_LOST
     places = decimals_of(presenter.noise_n)
     return Board(
         word=word,
-        word_rest=rest,
+        word_rest=UNBELIEVED if lost else rest,
         tone=tone,
-        current=tone is not Tone.OLD and "load" in lines,
+        current=current,
+        believed=current and not lost,
         load=number(summary.get("net_n"), places, "N"),
         stress=number(summary.get("stress_mpa"), 1, "MPa"),
         gross=number(summary.get("gross_n"), places, "N"),
@@ -141,7 +147,7 @@ def _facts(summary: Mapping[str, Any], lines: Mapping[str, Line]) -> tuple[Line,
     facts = [
         Line("rate", number(value("stress_rate_mpa_s"), 1, "MPa/s")),
         Line("strain", number(_times(value("strain"), 1e3), 3, "mm/m")),
-        Line("deflection", number(_times(value("deflection_mm"), 1e3), 1, "um")),
+        Line("deflection", number(_times(value("deflection_mm"), 1e3), 1, "µm")),
         Line("highest", number(value("highest_n"), 1, "N")),
     ]
     if value("position_mm") is not None:

@@ -276,7 +276,7 @@ class _Sketch:
     def _numbers(self, box: QRectF) -> None:
         """Load at the left loading roller, stress under the tension face."""
         board, beam, scale, sizes = self.board, self.beam, self.scale, self.sizes
-        ink = self.theme.ink if board.current else self.theme.faint
+        ink = self.theme.ink if board.believed else self.theme.faint
         chief_px, other_px = sizes.state_px, 0.8 * sizes.chief_px
         load_px, stress_px = (other_px, chief_px) if self.posture.stress_first else (chief_px, other_px)
         radius = max(ROLLER_PX_MIN, beam.roller_mm * scale.px_mm) / 2.0

@@ -24,17 +24,17 @@ class Side(QWidget):
         self.theme: Theme = DARK
         self.sizes: Sizes = sizes_for(1080, 0.277)
         self.rows: tuple[Line, ...] = ()
-        self.chief = False
+        self.chief = self.faint = False
         self.setFocusPolicy(Qt.FocusPolicy.NoFocus)
 
     def dress(self, theme: Theme, sizes: Sizes) -> None:
         self.theme, self.sizes = theme, sizes
         self.update()
 
-    def say(self, rows: Sequence[Line], *, chief: bool) -> None:
-        """chief: the first row is the number of the bar."""
-        if (tuple(rows), chief) != (self.rows, self.chief):
-            self.rows, self.chief = tuple(rows), chief
+    def say(self, rows: Sequence[Line], *, chief: bool, faint: bool = False) -> None:
+        """chief: the first row is the number of the bar. faint: the numbers are old or not to be believed."""
+        if (tuple(rows), chief, faint) != (self.rows, self.chief, self.faint):
+            self.rows, self.chief, self.faint = tuple(rows), chief, faint
             self.update()
 
     def paintEvent(self, event: QPaintEvent) -> None:
@@ -87,4 +87,4 @@ class Side(QWidget):
         if row.label == "remark":
             write_block(painter, text, row.text, small, theme.ink)
         else:
-            write(painter, text, row.text, size, theme.ink, align=LEFT)
+            write(painter, text, row.text, size, theme.faint if self.faint else theme.ink, align=LEFT)

@@ -247,7 +247,8 @@ class Window(QWidget):
         self.drawing.fit(scene.beam, scene.beam_note)
         ending = scene.ending.lines()
         facts = (Line("gross load", board.gross), *board.facts)
-        self.side.say(ending or [fact for fact in facts if fact.text != "-"], chief=bool(ending))
+        rows = ending or [fact for fact in facts if fact.text != "-"]
+        self.side.say(rows, chief=bool(ending), faint=not (ending or board.believed))
         self.strip.say(
             cells_of(scene.sitting, self.orders.notebook.verdicts, hide=scene.unjudged()),
             self.orders.notebook.figures(),

@@ -178,6 +178,25 @@ def test_silence_is_grey_and_says_not_current_and_comes_back(rig: WindowRig, qtb
     assert board_of(presenter, presenter._heard_s).current
 
 
+def test_numbers_of_a_lost_signal_are_grey_and_said_to_be_worthless(rig: WindowRig, qtbot: QtBot) -> None:
+    from monitor.board import board_of
+
+    presenter = rig.window.scene.presenter
+    for state, believed in (("loading", True), ("signal lost", False), ("stopped", True)):
+        rig.be(state, 210.0)
+        board = board_of(presenter, presenter._heard_s)
+        assert board.current and board.believed is believed
+        assert ("do not trust the numbers" in board.word_rest) is not believed
+
+
+def test_the_break_is_marked_at_the_last_sample_that_was_the_bars() -> None:
+    """The onset lies between two samples; the later one is after the drop, outside the axes."""
+    from monitor.traceplot import mark_of
+
+    mark = mark_of({"event": "fracture", "last_good_s": 7.928, "onset_s": 7.9286, "time_s": 7.938})
+    assert mark is not None and mark.time_s == 7.928
+
+
 def test_the_station_that_was_started_again_is_asked_for_everything(rig: WindowRig, qtbot: QtBot) -> None:
     rig.load(100.0)
     rig.desk.asked.clear()
