@@ -155,7 +155,8 @@ class Presenter:
         lines.append(self._data_line(now_s))
         lines += self._bar_lines()
         lines += self._warnings()
-        lines.append(Line("do now", NOT_CURRENT if old else self._instruction()))
+        do_now = Line("do now", NOT_CURRENT, Tone.CAUTION) if old else Line("do now", self._instruction())
+        lines.append(do_now)
         return lines
 
     def _frame_line(self) -> Line:

@@ -11,8 +11,8 @@ LAG_TOLD_S = 2.0  # of the recorder; it syncs ten times a second
 ENDED = "midspan has ended"  # the station's last word in an orderly end
 
 INSTRUCTIONS: Mapping[str, str] = {
-    "at rest": "mount the next bar, shut the shield, then call it",
-    "ready": "hands off; start when the shield is shut and eyes are protected",
+    "at rest": "mount the next bar, shut the shield, then press m",
+    "ready": "hands off; shield shut, eyes protected? start: hold g, or G O",
     "approaching": "approaching; hands off",
     "in contact": "in contact; hands off",
     "seating": "seating; hands off",
@@ -20,14 +20,14 @@ INSTRUCTIONS: Mapping[str, str] = {
     "holding": "holding; stand clear",
     "broken - unloaded": "broken; wait for standstill, keep the pieces together",
     "broken? - still loaded": "LOAD STILL ON THE BAR - keep the shield shut",
-    "stopped": "stopped; look at the frame, then reset",
+    "stopped": "stopped; look at the frame, then reset: r",
     "unloading": "unloading; hands off",
     "returning": "returning; hands off",
     "signal lost": "no signal - the bar may be loaded; keep the shield shut",
     "overload": "overload - check zero and a check weight before going on",
-    "shield open": "shield open; shut it, then reset",
-    "emergency stop": "emergency stop; release it at the machine, then reset",
-    "unknown - look at the frame": "look at the frame: is a bar mounted or loaded? then reset with your word on it",
+    "shield open": "shield open; shut it, then reset: r",
+    "emergency stop": "emergency stop; release it at the machine, then reset: r",
+    "unknown - look at the frame": "look at the frame: is a bar mounted or loaded? then reset: L",
     ENDED: "the daemon was ended in order; start `midspan serve` again",
     "bench process does not answer": "midspan cannot see or stop the frame - USE THE EMERGENCY STOP AT THE MACHINE",
 }
