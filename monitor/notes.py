@@ -46,6 +46,12 @@ class NoteForm(Form):
         self.say(f"verdict: {VERDICT_TOLD}")
         self.begin()
 
+    def begin(self, name: str = "") -> None:
+        """What the figures of the verdict mean stands there when they are asked for."""
+        super().begin(name)
+        if name == VERDICT and VERDICT_TOLD not in self.wrong.text():
+            self.say(f"verdict: {VERDICT_TOLD}")
+
     def _words(self) -> tuple[FieldWords, ...]:
         end = "left end" if self.beam is None or self.beam.length_known else "left end, length assumed"
         return (
