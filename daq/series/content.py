@@ -18,6 +18,8 @@ from daq.series.leaf import Series
 from daq.series.required import missing_fields
 from daq.series.words import NONE, chance, digits, listed, number, one_or_range, span, stress
 
+FEW = 10  # bars: from here on k = 2 covers 92 % and more
+
 SIMULATED, INCOMPLETE = "SIMULATED DATA", "INCOMPLETE"
 
 
@@ -145,9 +147,20 @@ def _of_mean(series: Series) -> str:
     assert mean is not None
     parts = f"s/√N {digits(mean.scatter_mpa, 3)} MPa; force and spans, common to all, {digits(mean.common_mpa, 3)} MPa"
     total = mean.total_k2_mpa
-    return (
-        f"± {digits(total, 2)} MPa (k = 2), from {parts}" if total is not None else f"not complete: {parts}"
-    )
+    if total is None:
+        return f"not complete: {parts}"
+    return f"± {digits(total, 2)} MPa (k = 2), from {parts}{_of_few(series)}"
+
+
+def _of_few(series: Series) -> str:
+    """What k = 2 covers where the scatter is known from few bars: Student's t, N - 1 (GUM JCGM 100, annex G.3)."""
+    from scipy.special import stdtr
+
+    summary = series.analysis.summary
+    if summary is None or not 2 <= summary.n < FEW:
+        return ""
+    covered = 1.0 - 2.0 * float(stdtr(summary.n - 1, -2.0))
+    return f"; with N = {summary.n} that covers about {100.0 * covered:.0f} %, not 95 %"
 
 
 def _estimate_row(one: Estimate) -> tuple[str, ...]:
