@@ -11,9 +11,8 @@ from dataclasses import dataclass
 from typing import Any
 
 from monitor.presenter import Line, Presenter, Tone
-from monitor.wording import number
+from monitor.wording import SILENT, number
 
-NO_CONTACT = "no contact"
 SIGNAL_LOST = "signal lost"
 UNBELIEVED = "do not trust the numbers"
 DECIMALS_MAX = 3
@@ -49,9 +48,9 @@ def board_of(presenter: Presenter, now_s: float) -> Board:
     """Everything the window shows but traces and drawing."""
     lines = {line.label: line for line in presenter.lines(now_s)}
     summary, state = presenter.summary, presenter.state_body
-    word, rest = split_word(lines["state"].text if "load" in lines else NO_CONTACT)
+    word, rest = split_word(lines["state"].text if "load" in lines else SILENT)
     if "load" not in lines:
-        rest = lines["state"].text.removeprefix("NO CONTACT ").removeprefix("no contact yet")
+        rest = lines["state"].text.removeprefix(SILENT).lstrip(", ")
     tone = lines["state"].tone
     current = tone is not Tone.OLD and "load" in lines
     lost = current and word == SIGNAL_LOST

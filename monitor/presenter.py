@@ -17,6 +17,7 @@ from monitor.wording import (
     ENDED,
     NOT_CURRENT,
     REPLAYED,
+    SILENT,
     expected_text,
     fault_text,
     instruction,
@@ -146,8 +147,14 @@ class Presenter:
         """The view in the order in which it is read from 2 m: state, load, percent, bar, instruction or fault."""
         age_s = 0.0 if self.state == ENDED else now_s - self._heard_s
         if age_s > NO_CONTACT_S:
-            told = f"NO CONTACT with the station for {age_s:.0f} s" if self.frame else "no contact yet"
-            return [self._frame_line(), Line("state", told, Tone.STOP)]
+            if not self.frame:
+                return [self._frame_line(), Line("state", f"{SILENT}, not heard yet", Tone.STOP)]
+            told = f"{SILENT} for {age_s:.0f} s"
+            return [
+                self._frame_line(),
+                Line("state", told, Tone.STOP),
+                Line("do now", NOT_CURRENT, Tone.STOP),
+            ]
         old = age_s > STALE_S
         tone = Tone.OLD if old else state_tone(self.state)
         lines = [self._frame_line(), Line("state", self.state + (" (not current)" if old else ""), tone)]

@@ -31,11 +31,12 @@ INSTRUCTIONS: Mapping[str, str] = {
     ENDED: "the daemon was ended in order; start `midspan serve` again",
     "bench process does not answer": "midspan cannot see or stop the frame - USE THE EMERGENCY STOP AT THE MACHINE",
 }
+SILENT = "station silent"  # not "no contact": at a frame that is a roller without a bar
 NOT_CURRENT = "nothing heard from midspan: look at the frame; if it moves, stop it at the machine"
 TARING = "measuring the tare; touch nothing"
 ALL_DONE = "every bar of the series is broken; collect the pieces"
 BACK_OFF_FIRST = "first back the crosshead off (hold b, or B O), then mount the next bar"
-REPLAYED = "the record ends here: bar and frame were at rest"
+REPLAYED = "the record ends here; p plays it again"
 READY_MONITOR_ONLY = "start the machine by its own controls; midspan can NOT stop it"
 
 Numbers = Mapping[str, Any]

@@ -103,7 +103,8 @@ def test_nothing_heard_is_not_an_instruction_to_load() -> None:
     presenter = Presenter()
     presenter.take(update("state", {"state": "loading"}), 0.0)
     assert "stop it at the machine" in text_of(presenter, "do now", 5.0)[0]
-    assert "NO CONTACT with the station for 60 s" in text_of(presenter, "state", 60.0)[0]
+    assert text_of(presenter, "state", 60.0)[0] == "station silent for 60 s"
+    assert "stop it at the machine" in text_of(presenter, "do now", 60.0)[0]
     assert not presenter.is_current(5.0) and presenter.is_current(1.0)
 
 

@@ -173,7 +173,7 @@ def test_silence_is_grey_and_says_not_current_and_comes_back(rig: WindowRig, qtb
     assert board_of(presenter, now_s + 2.9).current
     old = board_of(presenter, now_s + 3.1)
     assert not old.current and "not current" in old.word_rest and old.tone is Tone.OLD
-    assert board_of(presenter, now_s + 11.0).word == "no contact"
+    assert board_of(presenter, now_s + 11.0).word == "station silent"
     rig.be("loading", 210.0)
     assert board_of(presenter, presenter._heard_s).current
 
