@@ -19,6 +19,7 @@ from monitor.posture import Posture
 from monitor.presenter import Tone
 
 WIDE_SHARE = 0.86  # of the widget that bar and overhangs may take
+ARROW_SHARE_MIN = 0.02  # of the expected load: below, the arrow is shorter than its head
 MOMENT_SHARE_MAX = 1.25  # of the expected break load at which the diagram is cut
 ROLLER_PX_MIN = 10.0
 
@@ -202,7 +203,7 @@ class _Sketch:
     def _loads(self) -> None:
         """An arrow on each loading roller, as long as the load."""
         radius = max(ROLLER_PX_MIN, self.beam.roller_mm * self.scale.px_mm) / 2.0
-        if self.posture.broken or self.posture.share <= 0.0:
+        if self.posture.broken or self.posture.share < ARROW_SHARE_MIN:
             return
         pen = QPen(QColor(self.theme.trace), max(3.0, 0.16 * radius))
         self.painter.setPen(pen)

@@ -127,7 +127,7 @@ class Ending:
             tone = Tone.CAUTION if self.verdict in ("not counted", "interrupted") else Tone.GOOD
             return Line("verdict", self.verdict, tone)
         rules = str((self.result or {}).get("verdict") or "")
-        return Line("verdict", f"by the rules: {rules}" if rules else "not given yet")
+        return Line("verdict", f"rules: {rules}" if rules else "not given yet")
 
     def _remarks(self) -> list[str]:
         result = self.result or {}
