@@ -2,9 +2,8 @@
 
 Pure: it owns no descriptor, clock, file or socket, so that the bench process, the virtual clock and a replay run the
 same lines. The shell must write what a call returns before it takes the entries: stop first, then tell; and it says
-with `sent` what has left. `at_once`,
-where the shell gives it, writes a STOP the moment it is decided: what follows from it (states, events, the rest of
-the block) takes longer than all that came before it.
+with `sent` what has left. `at_once`, where the shell gives it, writes a STOP the moment it is decided: what follows
+from it (states, events, the rest of the block) takes longer than all that came before it.
 """
 
 from __future__ import annotations
@@ -147,21 +146,23 @@ class BenchCore:
     def received(self, link: int, data: bytes, now_ns: int) -> list[Write]:
         """Bytes arrived on a link. Returns what must be written now."""
         holding = self._holding
+        stops = False
         forces_n = holding.forces_n(data) if holding.able else None
         if forces_n is not None:
-            stops = max(forces_n) > self.pipeline.limit_n and self._stop_early(forces_n)
+            stops = max(forces_n) > self.pipeline.limit_n and self._will_stop(forces_n)
             if not stops and self._band is not None and holding.keeps(data, forces_n, now_ns, self._band):
                 return []
         if holding.waits:
             data = holding.take()[0] + data
+        if stops:
+            self._write_stop()
         return self._feed(link, data, now_ns)
 
-    def _stop_early(self, forces_n: list[float]) -> bool:
-        """Rows just read, one at least beyond a limit: where that will stop the machine, STOP leaves now."""
+    def _will_stop(self, forces_n: list[float]) -> bool:
+        """Rows just read, one at least beyond a limit: does judging them end in a Stop?"""
         beyond = self._holding.beyond
         for force_n in forces_n:
             if self.pipeline.would_stop(force_n, beyond):
-                self._write_stop()
                 return True
             beyond = beyond + 1 if force_n > self.pipeline.limit_n else 0
         return False

@@ -111,3 +111,14 @@ def test_a_limit_stops_on_the_row_that_passes_it_before_that_row_is_numbered_and
     (limit,) = early.named("limit")
     touch_s, limit_s = early.judged_s[:2]
     assert touch_s < limit_s < limit["time_s"]
+
+
+@pytest.mark.slow
+def test_rows_that_waited_are_told_in_the_order_of_time_when_a_limit_ends_the_wait() -> None:
+    """Above 2 kHz the first row beyond a limit waits for the second."""
+    card = frame()
+    link = card.links[0].model_copy(update={"rate_hz": 4000.0, "speed_baud": 2_000_000})
+    early = loaded_to_a_limit(VirtualBench(card.model_copy(update={"links": (link,)}), machine()))
+    assert [event["row"] for event in early.named("limit")] == [0]
+    times_ns = [entry.monotonic_ns for entry in early.entries]
+    assert times_ns == sorted(times_ns)

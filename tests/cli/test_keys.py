@@ -144,3 +144,4 @@ def test_a_full_queue_holds_nobody(keyboard: tuple[Keyboard, int, list[str]]) ->
         os.write(terminal, b" ")
         until(lambda count=count: len(stopped) >= count)  # type: ignore[misc]
     os.close(terminal)
+    assert stopped[:200] == ["operator's key"] * 200
